@@ -1,0 +1,1 @@
+"""What a person writes: study, catalogue, load profile; read, checked and resolved."""

@@ -1,0 +1,1 @@
+"""Decision space, loss tables, voltage schedule, limits and the whole-board evaluator."""

@@ -1,0 +1,1 @@
+"""Ground floor: pure functions on numpy arrays, SI units, one topic a module."""
