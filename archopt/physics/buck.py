@@ -1,0 +1,273 @@
+"""Losses of one phase of a synchronous buck stage in forced conduction, by mechanism.
+
+Valid for continuous and forced negative inductor current, with edges and dead time short against the period.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from archopt.physics.arrays import FloatArray, FloatLike
+from archopt.physics.parameters import Gatherable
+from archopt.physics.thermal import fixed_point
+
+#: Temperature the resistances are stated at.
+REFERENCE_DEGC = 25.0
+#: Temperature of switches and winding when duty and ripple are computed.
+WARM_DEGC = 85.0
+#: Part of the input voltage that is left at least after the drop of the high side, so that duty stays finite.
+LEAST_SPAN = 1e-3
+LEAST_DUTY = 1e-3
+#: Least relative resistance of cold switches and windings; keeps extrapolated coefficients positive.
+LEAST_RESISTANCE_FACTOR = 0.2
+TINY = 1e-30
+
+
+@dataclass(frozen=True, slots=True)
+class BuckParameters(Gatherable):
+    """One phase of each buck stage; every field broadcasts against the operating point.
+
+    core_w is the core loss at the stage's own frequency and a ripple of core_ripple_a peak to peak;
+    switch_per_k and winding_per_k are relative to the resistance at 25 degC; dead_s is both edges of a cycle;
+    gate_from_input is 1 where the gate supply is derived from the stage input, 0 with a separate bias;
+    the output charges are stated at output_charge_v, recovery_c at recovery_a; thermal_k_per_w holds at the
+    air speed of the study. max_duty, min_on_s and min_off_s are carried for the limits.
+    """
+
+    frequency_hz: FloatArray
+    inductance_h: FloatArray
+    winding_ohm: FloatArray
+    core_w: FloatArray
+    core_ripple_a: FloatArray
+    core_exponent: FloatArray
+    high_side_ohm: FloatArray
+    low_side_ohm: FloatArray
+    switch_per_k: FloatArray
+    winding_per_k: FloatArray
+    rise_s: FloatArray
+    fall_s: FloatArray
+    dead_s: FloatArray
+    diode_v: FloatArray
+    high_side_gate_c: FloatArray
+    low_side_gate_c: FloatArray
+    gate_v: FloatArray
+    gate_from_input: FloatArray
+    high_side_output_c: FloatArray
+    low_side_output_c: FloatArray
+    output_charge_v: FloatArray
+    recovery_c: FloatArray
+    recovery_a: FloatArray
+    input_capacitor_ohm: FloatArray
+    quiescent_a: FloatArray
+    thermal_k_per_w: FloatArray
+    max_duty: FloatArray
+    min_on_s: FloatArray
+    min_off_s: FloatArray
+
+
+MECHANISMS = (
+    "high_side_conduction_w",
+    "low_side_conduction_w",
+    "winding_w",
+    "core_w",
+    "overlap_w",
+    "dead_time_w",
+    "output_charge_w",
+    "recovery_w",
+    "input_capacitor_w",
+    "gate_w",
+    "controller_w",
+)
+
+
+@dataclass(frozen=True, slots=True)
+class BuckLosses:
+    """Watts per phase by mechanism, in the broadcast shape of the operating point (some are read-only views).
+
+    The fields named in MECHANISMS come from the stage input; bias_w is what the separate bias supply delivers
+    besides. duty is what the operating point asks for and may exceed 1; on_s follows it. ripple_a is peak to
+    peak. thermal_gain of 1 or more is thermal runaway; losses are then those of a gain of 0.95.
+    """
+
+    high_side_conduction_w: FloatArray
+    low_side_conduction_w: FloatArray
+    winding_w: FloatArray
+    core_w: FloatArray
+    overlap_w: FloatArray
+    dead_time_w: FloatArray
+    output_charge_w: FloatArray
+    recovery_w: FloatArray
+    input_capacitor_w: FloatArray
+    gate_w: FloatArray
+    controller_w: FloatArray
+    bias_w: FloatArray
+    duty: FloatArray
+    ripple_a: FloatArray
+    on_s: FloatArray
+    temperature_degc: FloatArray
+    thermal_gain: FloatArray
+
+    @property
+    def total_w(self) -> FloatArray:
+        """Sum of what the stage input delivers (W), without the separate bias."""
+        total = self.high_side_conduction_w + self.low_side_conduction_w
+        for name in MECHANISMS[2:]:
+            total = total + getattr(self, name)
+        return total
+
+
+def _duty_and_off_voltage(
+    p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike
+) -> tuple[FloatArray, FloatArray]:
+    """Duty asked for and the voltage across the inductance while the low side conducts (V), warm."""
+    warm_switch = 1.0 + p.switch_per_k * (WARM_DEGC - REFERENCE_DEGC)
+    warm_winding = 1.0 + p.winding_per_k * (WARM_DEGC - REFERENCE_DEGC)
+    low_ohm = p.low_side_ohm * warm_switch
+    off_v = output_v + current_a * (low_ohm + p.winding_ohm * warm_winding)
+    span_v = input_v + current_a * (low_ohm - p.high_side_ohm * warm_switch)
+    asked = np.maximum(off_v, 0.0) / np.maximum(span_v, LEAST_SPAN * np.asarray(input_v))
+    return asked, off_v
+
+
+def duty(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike) -> FloatArray:
+    """Duty the operating point asks for, with resistive drops at 85 degC; above 1 where the input is too low.
+
+    Parameters
+    ----------
+    p : parameters per phase
+    input_v, output_v : stage input (above 0) and output voltage (V)
+    current_a : output current of one phase (A); all broadcast
+
+    Notes
+    -----
+    Volt-second balance: D (Vin - I Rhigh - Vo - I Rw) = (1 - D)(Vo + I (Rlow + Rw)), so
+    D = (Vo + I (Rlow + Rw)) / (Vin + I (Rlow - Rhigh)). Closed form; the application note RC5051 AN50 p. 9
+    has the same with a diode for the low side.
+    """
+    return _duty_and_off_voltage(p, input_v, output_v, current_a)[0]
+
+
+def ripple_a(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike) -> FloatArray:
+    """Peak-to-peak inductor ripple (A) per phase; 0 where the duty reaches 1. Parameters as for :func:`duty`.
+
+    Notes
+    -----
+    (Vo + I (Rlow + Rw)) (1 - D) / (L f): the falling slope over the off-time. Closed form.
+    """
+    asked, off_v = _duty_and_off_voltage(p, input_v, output_v, current_a)
+    off_share = 1.0 - np.clip(asked, LEAST_DUTY, 1.0)
+    return np.maximum(off_v, 0.0) * off_share / (p.inductance_h * p.frequency_hz)
+
+
+def output_charge_energy_j(
+    high_side_c: FloatLike, low_side_c: FloatLike, charge_v: FloatLike, input_v: FloatLike
+) -> FloatArray:
+    """Energy lost a cycle (J) when the high side turns on hard into both output capacitances.
+
+    Parameters
+    ----------
+    high_side_c, low_side_c : output charge of the switches (C) at charge_v
+    charge_v, input_v : voltage of the statement and of the stage input (V); all broadcast
+
+    Notes
+    -----
+    The input delivers V Qlow(V), of which Elow(V) is stored; the high side burns Ehigh(V):
+    V Qlow + Ehigh - Elow. With charge growing as the root of voltage, Q(v) = Q0 sqrt(v / v0), the stored
+    energy, the integral of v dQ, is Q V / 3, and the sum V (2 Qlow + Qhigh) / 3. Closed form.
+    """
+    root = np.sqrt(input_v / np.maximum(charge_v, TINY))
+    energy: FloatArray = np.asarray(input_v) * root * ((2.0 * low_side_c + high_side_c) * (1.0 / 3.0))
+    return energy
+
+
+def hard_switched_share(p: BuckParameters, input_v: FloatLike, valley_a: FloatLike) -> FloatArray:
+    """Share (0 to 1) of the output-charge loss that remains at a valley current (A, negative where reversed).
+
+    A reversed valley current swings the switch node during one dead time (half of dead_s), moving the charge
+    |valley| dead/2 of the total; what is left to be switched hard is a voltage smaller in proportion, and the
+    loss of a linear capacitance falls with its square. Continuous through zero valley current. Closed form.
+    """
+    root = np.sqrt(input_v / np.maximum(p.output_charge_v, TINY))
+    charge_c = np.maximum((p.high_side_output_c + p.low_side_output_c) * root, TINY)
+    moved_c = np.maximum(-np.asarray(valley_a), 0.0) * (0.5 * p.dead_s)
+    left = np.maximum(1.0 - np.minimum(moved_c / charge_c, 1.0), 0.0)
+    share: FloatArray = left * left
+    return share
+
+
+def losses(
+    p: BuckParameters,
+    input_v: FloatLike,
+    output_v: FloatLike,
+    current_a: FloatLike,
+    ambient_degc: FloatLike,
+) -> BuckLosses:
+    """Losses of one phase in forced conduction, with switches and winding at their own temperature.
+
+    Finite on every finite input with input_v above 0. All heat of the phase counts against thermal_k_per_w,
+    the gate power of a separate bias included.
+
+    Parameters
+    ----------
+    p : parameters per phase
+    input_v, output_v : stage input (above 0) and output voltage (V)
+    current_a : output current of one phase (A), not negative
+    ambient_degc : local air (degC); all broadcast
+
+    Notes
+    -----
+    rms^2 = I^2 + ripple^2 / 12; overlap V f (t_rise max(valley, 0) + t_fall peak) / 2; dead time
+    Vd f dead (|valley| + peak) / 2; recovery V f Q max(valley, 0) / rated; core by the power of ripple that
+    Steinmetz found (1892); input capacitor D (1 - D) I^2 + D ripple^2 / 12. Textbook forms, checked against
+    SNVS276G p. 26 and two ROHM notes.
+    """
+    v, i = np.asarray(input_v), np.asarray(current_a)
+    asked, off_v = _duty_and_off_voltage(p, v, output_v, i)
+    d = np.clip(asked, LEAST_DUTY, 1.0)
+    ripple = np.maximum(off_v, 0.0) * (1.0 - d) / (p.inductance_h * p.frequency_hz)
+    valley, peak = i - 0.5 * ripple, np.maximum(i + 0.5 * ripple, 0.0)
+    carried = np.maximum(valley, 0.0)
+    ripple_square = ripple * ripple * (1.0 / 12.0)
+    rms_square = i * i + ripple_square
+    vf = v * p.frequency_hz
+
+    high_w = p.high_side_ohm * d * rms_square
+    low_w = p.low_side_ohm * np.maximum(1.0 - d - p.dead_s * p.frequency_hz, 0.0) * rms_square
+    winding_w = p.winding_ohm * rms_square
+    core_w = p.core_w * (ripple / np.maximum(p.core_ripple_a, TINY)) ** p.core_exponent
+    overlap_w = vf * (0.5 * p.rise_s * carried + 0.5 * p.fall_s * peak)
+    dead_w = (0.5 * p.diode_v * p.dead_s * p.frequency_hz) * (np.abs(valley) + peak)
+    output_w = p.frequency_hz * output_charge_energy_j(
+        p.high_side_output_c, p.low_side_output_c, p.output_charge_v, v
+    ) * hard_switched_share(p, v, valley)  # fmt: skip
+    recovery_w = vf * carried * (p.recovery_c / np.maximum(p.recovery_a, TINY))
+    input_w = p.input_capacitor_ohm * d * ((1.0 - d) * i * i + ripple_square)
+    gate_c = p.high_side_gate_c + p.low_side_gate_c
+    gate_w = vf * (gate_c * p.gate_from_input)
+    bias_w = (1.0 - p.gate_from_input) * gate_c * p.gate_v * p.frequency_hz
+    controller_w = p.quiescent_a * v
+
+    edge_w = overlap_w + dead_w + output_w + recovery_w + gate_w + bias_w
+    switch_w = high_w + low_w
+    at_reference = switch_w + winding_w + core_w + edge_w + input_w + controller_w
+    per_k = p.switch_per_k * switch_w + p.winding_per_k * winding_w
+    _, temperature, gain = fixed_point(
+        at_reference,
+        at_reference + per_k,
+        REFERENCE_DEGC,
+        REFERENCE_DEGC + 1.0,
+        ambient_degc,
+        p.thermal_k_per_w,
+    )
+    rise_k = temperature - REFERENCE_DEGC
+    switch_factor = np.maximum(1.0 + p.switch_per_k * rise_k, LEAST_RESISTANCE_FACTOR)
+    winding_factor = np.maximum(1.0 + p.winding_per_k * rise_k, LEAST_RESISTANCE_FACTOR)
+    results = (
+        high_w * switch_factor, low_w * switch_factor, winding_w * winding_factor, core_w, overlap_w, dead_w,
+        output_w, recovery_w, input_w, gate_w, controller_w, bias_w,
+        asked, ripple, asked / p.frequency_hz, temperature, gain,
+    )  # fmt: skip
+    shape = np.shape(temperature)
+    return BuckLosses(*(np.broadcast_to(result, shape) for result in results))
