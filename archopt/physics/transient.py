@@ -1,0 +1,279 @@
+"""Voltage deviation of a rail or bus when its load changes suddenly.
+
+The controller is averaged: for a dead time after the load begins to change its current stands still, then it
+follows the load at the rate min(slew, w (load - current)), w = 2 pi crossover. The output capacitor is C with
+ESR. For this controller the results are exact (piecewise closed form), for step and for ramped loads.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+from archopt.physics.arrays import FloatArray, FloatLike
+
+#: Bounds that keep every quotient finite: slews in A/s, capacitance in F, bandwidth in rad/s.
+LEAST_SLEW = 1e-3
+LARGEST_SLEW = 1e15
+LEAST_CAPACITANCE_F = 1e-12
+LEAST_BANDWIDTH = 1e-3
+#: Voltage (V) across the inductance that is counted at least when the input is too low to raise the current.
+LEAST_HEADROOM_V = 1e-3
+LEAST_INDUCTANCE_H = 1e-12
+#: Largest dip of a bus that is reported, as a share of its voltage.
+LARGEST_DIP = 0.9
+
+
+class _Loop(NamedTuple):
+    """Controller and capacitor with their bounds applied."""
+
+    slew: FloatArray
+    bandwidth: FloatArray
+    delay: FloatArray
+    capacitance: FloatArray
+    esr: FloatArray
+
+    def deviation(self, missing_a: FloatArray, charge_c: FloatArray) -> FloatArray:
+        """Deviation (V) when a current (A) is missing and a charge (C) has been taken."""
+        return self.esr * missing_a + charge_c / self.capacitance
+
+
+def _loop(
+    slew_a_per_s: FloatLike,
+    bandwidth_rad_s: FloatLike,
+    delay_s: FloatLike,
+    capacitance_f: FloatLike,
+    esr_ohm: FloatLike,
+) -> _Loop:
+    return _Loop(
+        np.clip(slew_a_per_s, LEAST_SLEW, LARGEST_SLEW),
+        np.maximum(bandwidth_rad_s, LEAST_BANDWIDTH),
+        np.maximum(delay_s, 0.0),
+        np.maximum(capacitance_f, LEAST_CAPACITANCE_F),
+        np.asarray(esr_ohm, dtype=np.float64),
+    )
+
+
+def _recovery(loop: _Loop, missing_a: FloatArray, charge_c: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Largest deviation (V) from here on at a steady load, and the charge (C) taken in the end.
+
+    First the current rises at the slew until what is missing is down to slew/w, then exponentially. On the
+    slewed part the deviation peaks where the missing current is ESR C slew, if that lies on it.
+    """
+    knee_a = np.minimum(missing_a, loop.slew / loop.bandwidth)
+    half_per_slew = 0.5 / loop.slew
+    square = missing_a * missing_a
+    crest_a = np.clip(loop.esr * loop.capacitance * loop.slew, knee_a, missing_a)
+    at_crest = loop.deviation(crest_a, charge_c + (square - crest_a * crest_a) * half_per_slew)
+    at_knee_c = charge_c + (square - knee_a * knee_a) * half_per_slew
+    end_c = at_knee_c + knee_a / loop.bandwidth
+    largest = np.maximum(at_crest, np.maximum(loop.deviation(knee_a, at_knee_c), end_c / loop.capacitance))
+    return largest, end_c
+
+
+def step_droop_v(
+    step_a: FloatLike,
+    slew_a_per_s: FloatLike,
+    bandwidth_rad_s: FloatLike,
+    delay_s: FloatLike,
+    capacitance_f: FloatLike,
+    esr_ohm: FloatLike,
+) -> FloatArray:
+    """Deviation (V) after a load step of infinite slew.
+
+    Parameters
+    ----------
+    step_a : size of the step (A), not negative
+    slew_a_per_s : fastest rise of the converter's current (A/s); may be infinite
+    bandwidth_rad_s : 2 pi times the crossover frequency (rad/s)
+    delay_s : dead time before the current moves (s)
+    capacitance_f, esr_ohm : output capacitor; all broadcast
+
+    Notes
+    -----
+    The largest of ESR dI + dI td / C at the end of the dead time, the crest of the slewed rise, its end, and
+    (q + e0/w)/C at the end. Closed form, exact for the controller described above.
+    """
+    loop = _loop(slew_a_per_s, bandwidth_rad_s, delay_s, capacitance_f, esr_ohm)
+    missing_a = np.maximum(step_a, 0.0)
+    return _recovery(loop, missing_a, missing_a * loop.delay)[0]
+
+
+def _ramp(
+    loop: _Loop, step_a: FloatArray, load_slew: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Missing current (A), charge (C) and largest deviation (V) by the end of the load's ramp and the dead time.
+
+    While the load ramps at Sl the missing current e obeys de/dt = Sl - min(S, w e): a stretch at the slew
+    while e > S/w, an exponential towards Sl/w while e < S/w. With Sl <= S it can only pass from the first to
+    the second, with Sl > S only from the second to the first; slewed, exponential, slewed covers both.
+    On a slewed stretch that falls the deviation has its crest where e = ESR C (S - Sl); elsewhere it is
+    largest at the end of a stretch.
+    """
+    slew, w = loop.slew, loop.bandwidth
+    knee_a, settled_a = slew / w, load_slew / w
+    missing = np.minimum(load_slew * loop.delay, step_a)
+    charge = missing * loop.delay - missing * missing / (2.0 * load_slew)
+    largest = loop.deviation(missing, charge)
+    left_s = np.maximum(step_a / load_slew - loop.delay, 0.0)
+    slow = load_slew <= slew
+
+    fall = np.maximum(slew - load_slew, LEAST_SLEW)
+    first_s = np.where(slow, np.clip((missing - knee_a) / fall, 0.0, left_s), 0.0)
+    after = missing - fall * first_s
+    crest = np.clip(loop.esr * loop.capacitance * fall, np.minimum(after, missing), missing)
+    at_crest = loop.deviation(crest, charge + (missing * missing - crest * crest) / (2.0 * fall))
+    largest = np.maximum(largest, np.where(first_s > 0.0, at_crest, 0.0))
+    charge = charge + 0.5 * (missing + after) * first_s
+    missing = after
+    largest = np.maximum(largest, loop.deviation(missing, charge))
+
+    left_s = left_s - first_s
+    gap = np.maximum(load_slew - slew, LEAST_SLEW) / w
+    reach_s = np.log1p(np.maximum(knee_a - missing, 0.0) / gap) / w
+    second_s = np.where(slow, left_s, np.minimum(reach_s, left_s))
+    gone = -np.expm1(-w * second_s)
+    charge = charge + settled_a * second_s + (missing - settled_a) * gone / w
+    missing = missing + (settled_a - missing) * gone
+    largest = np.maximum(largest, loop.deviation(missing, charge))
+
+    third_s = left_s - second_s
+    grown = missing + np.maximum(load_slew - slew, 0.0) * third_s
+    charge = charge + 0.5 * (missing + grown) * third_s
+    largest = np.maximum(largest, loop.deviation(grown, charge))
+    return grown, charge, largest
+
+
+def rail_droop_v(
+    step_a: FloatLike,
+    slew_a_per_s: FloatLike,
+    bandwidth_rad_s: FloatLike,
+    delay_s: FloatLike,
+    capacitance_f: FloatLike,
+    esr_ohm: FloatLike,
+    load_slew_a_per_s: FloatLike,
+    deficit_a: FloatLike = 0.0,
+    wakeup_s: FloatLike = 0.0,
+) -> FloatArray:
+    """Deviation (V) of a rail when its load rises by a step at a given slew.
+
+    Parameters
+    ----------
+    step_a, slew_a_per_s, bandwidth_rad_s, delay_s, capacitance_f, esr_ohm : as for :func:`step_droop_v`
+    load_slew_a_per_s : rate at which the load rises (A/s); may be infinite
+    deficit_a : load after the step beyond what the running phases can carry (A); 0 where they can
+    wakeup_s : delay from the step until added phases carry current (s); all broadcast
+
+    Notes
+    -----
+    Exact without a deficit. With one, the current waits at the limit of the running phases until the wake-up
+    is over: what follows is a step of the size of the deficit, on top of the charge taken before it and of
+    deficit x wake-up. The charge before it is what the whole rise takes less what the last part, of the size
+    of the deficit, takes. That is an upper bound: the wait is counted from the step on.
+    """
+    loop = _loop(slew_a_per_s, bandwidth_rad_s, delay_s, capacitance_f, esr_ohm)
+    step = np.maximum(step_a, 0.0)
+    missing, charge, on_ramp = _ramp(loop, step, np.clip(load_slew_a_per_s, LEAST_SLEW, LARGEST_SLEW))
+    after_ramp, end_c = _recovery(loop, missing, charge)
+    largest = np.maximum(on_ramp, after_ramp)
+    deficit = np.maximum(deficit_a, 0.0)
+    if not np.any(deficit):
+        return largest
+    last_part, last_c = _recovery(loop, deficit, np.zeros_like(deficit))
+    before_c = np.maximum(end_c - last_c, 0.0) + deficit * np.maximum(wakeup_s, 0.0)
+    waited = last_part + before_c / loop.capacitance
+    return np.maximum(largest, np.where(deficit > 0.0, waited, 0.0))
+
+
+def buck_slew_a_per_s(
+    phases: FloatLike, max_duty: FloatLike, input_v: FloatLike, output_v: FloatLike, inductance_h: FloatLike
+) -> FloatArray:
+    """Fastest rise (A/s) of the summed current of running phases: phases (Dmax Vin - Vo) / L.
+
+    Never below that of 1 mV across the inductance: a stage without headroom droops a lot but finitely.
+
+    Parameters
+    ----------
+    phases : running phases
+    max_duty : largest duty (1)
+    input_v, output_v : stage input at its dip and output voltage (V)
+    inductance_h : inductance of one phase (H); all broadcast
+    """
+    headroom_v = np.maximum(np.asarray(max_duty) * input_v - output_v, LEAST_HEADROOM_V)
+    slew: FloatArray = phases * headroom_v / np.maximum(inductance_h, LEAST_INDUCTANCE_H)
+    return slew
+
+
+def release_v(
+    step_a: FloatLike,
+    phases: FloatLike,
+    output_v: FloatLike,
+    inductance_h: FloatLike,
+    bandwidth_rad_s: FloatLike,
+    delay_s: FloatLike,
+    capacitance_f: FloatLike,
+    esr_ohm: FloatLike,
+    load_slew_a_per_s: FloatLike,
+) -> FloatArray:
+    """Overshoot (V) of a rail when its load falls by a step: the current can fall at phases Vo / L at most.
+
+    The same deviation as :func:`rail_droop_v` with the sign turned; it does not depend on the bus.
+
+    Parameters
+    ----------
+    step_a : size of the release (A), not negative
+    phases : running phases
+    output_v : rail voltage (V)
+    inductance_h : inductance of one phase (H)
+    bandwidth_rad_s, delay_s, capacitance_f, esr_ohm, load_slew_a_per_s : as for :func:`rail_droop_v`
+    """
+    slew = phases * np.asarray(output_v) / np.maximum(inductance_h, LEAST_INDUCTANCE_H)
+    return rail_droop_v(step_a, slew, bandwidth_rad_s, delay_s, capacitance_f, esr_ohm, load_slew_a_per_s)
+
+
+def bus_dip_v(
+    step_w: FloatLike,
+    bus_v: FloatLike,
+    bandwidth_rad_s: FloatLike,
+    delay_s: FloatLike,
+    capacitance_f: FloatLike,
+    esr_ohm: FloatLike,
+) -> FloatArray:
+    """Dip (V) of a bus at a step of constant power behind it, its converter following without a slew limit.
+
+    Where the step is too large to be carried at any voltage (the bus collapses) the dip goes on growing with
+    the step, from half the bus voltage to at most 0.9 of it, so that the violation has a size.
+
+    Parameters
+    ----------
+    step_w : rise of power drawn from the bus (W), not negative
+    bus_v : bus voltage before the step (V), above 0
+    bandwidth_rad_s, delay_s : of the bus converter, as for :func:`step_droop_v`
+    capacitance_f, esr_ohm : of everything that holds the bus up; all broadcast
+
+    Notes
+    -----
+    An unlimited slew makes the deviation of a current step proportional to it, dip = Z dI with
+    Z = max(ESR + td/C, (td + 1/w)/C). The step draws dI = dP / (V - dip) at the dipped voltage, so that
+    dip (V - dip) = Z dP, whose smaller root the iteration of the two would reach. Closed form.
+    """
+    capacitance = np.maximum(capacitance_f, LEAST_CAPACITANCE_F)
+    delay = np.maximum(delay_s, 0.0)
+    followed_s = delay + 1.0 / np.maximum(bandwidth_rad_s, LEAST_BANDWIDTH)
+    impedance_ohm = np.maximum(esr_ohm + delay / capacitance, followed_s / capacitance)
+    voltage = np.maximum(bus_v, LEAST_HEADROOM_V)
+    share = 4.0 * impedance_ohm * np.maximum(step_w, 0.0) / (voltage * voltage)
+    carried = 0.5 * (1.0 - np.sqrt(np.maximum(1.0 - share, 0.0)))
+    collapsed = np.minimum(0.5 * share, LARGEST_DIP)
+    dip: FloatArray = voltage * np.where(share > 1.0, collapsed, carried)
+    return dip
+
+
+def transition_energy_j(capacitance_f: FloatLike, from_v: FloatLike, to_v: FloatLike) -> FloatArray:
+    """Energy (J) stored or given up when a bus capacitance (F) moves between two voltages (V).
+
+    C |V2^2 - V1^2| / 2. Arguments broadcast.
+    """
+    energy: FloatArray = 0.5 * np.asarray(capacitance_f) * np.abs(np.square(to_v) - np.square(from_v))
+    return energy
