@@ -51,21 +51,29 @@ class BuckStage(Part):
     frequency_khz: float = Field(ge=50, le=5000)
     high_side_mohm: Positive = Field(description="at 25 degC")
     low_side_mohm: Positive = Field(description="at 25 degC")
-    resistance_per_k: NotNegative = Field(le=0.02, description="relative rise of switch resistance per kelvin")
+    resistance_per_k: NotNegative = Field(
+        le=0.02, description="relative rise of switch resistance per kelvin"
+    )
     edge_rise_ns: NotNegative = Field(le=500, description="turn-on overlap of current and voltage")
     edge_fall_ns: NotNegative = Field(le=500, description="turn-off overlap of current and voltage")
     dead_time_ns: NotNegative = Field(le=500, description="both edges together, a cycle")
     diode_v: NotNegative = Field(le=2)
     high_side_gate_nc: NotNegative
     low_side_gate_nc: NotNegative
-    gate_supply: Literal["input", "bias"] = Field(description="gate drive derived from the stage input or from a 5 V bias")
+    gate_supply: Literal["input", "bias"] = Field(
+        description="gate drive derived from the stage input or from a 5 V bias"
+    )
     gate_v: Positive = Field(le=20)
     high_side_output_nc: NotNegative = Field(description="output charge at output_charge_at_v")
     low_side_output_nc: NotNegative = Field(description="output charge at output_charge_at_v")
     output_charge_at_v: Positive
     recovery_nc: NotNegative = Field(description="reverse recovery charge at rated phase current")
-    input_capacitor_mohm: NotNegative = Field(description="equivalent series resistance of the stage's own input capacitor")
-    input_capacitance_uf: NotNegative = Field(description="the stage's own input capacitance under bias, per phase")
+    input_capacitor_mohm: NotNegative = Field(
+        description="equivalent series resistance of the stage's own input capacitor"
+    )
+    input_capacitance_uf: NotNegative = Field(
+        description="the stage's own input capacitance under bias, per phase"
+    )
     quiescent_ma: NotNegative = Field(description="controller and driver current, per running phase")
     max_duty: float = Field(gt=0, le=1)
     min_on_ns: NotNegative = Field(le=1000)
@@ -87,7 +95,9 @@ class Inductor(Part):
     inductance_nh: Positive
     winding_mohm: Positive = Field(description="at 25 degC, copper")
     saturation_a: Positive
-    core_loss_mw: NotNegative = Field(description="core loss at core_ripple_a peak to peak and core_frequency_khz")
+    core_loss_mw: NotNegative = Field(
+        description="core loss at core_ripple_a peak to peak and core_frequency_khz"
+    )
     core_ripple_a: Positive
     core_frequency_khz: Positive
     core_frequency_exponent: float = Field(ge=1, le=3, description="Steinmetz exponent of frequency")
@@ -126,7 +136,9 @@ class BusConverter(Part):
     slew_v_per_ms: NotNegative
     crossover_khz: Positive
     delay_us: NotNegative
-    output_mohm: NotNegative = Field(description="closed-loop output impedance (regulated) or droop resistance (fixed ratio)")
+    output_mohm: NotNegative = Field(
+        description="closed-loop output impedance (regulated) or droop resistance (fixed ratio)"
+    )
     startup_max_uf: Positive = Field(description="largest output capacitance it starts into, per unit")
     wakeup_ms: NotNegative = Field(description="delay until a paralleled unit that was off carries current")
     max_parallel: int = Field(ge=1, le=8)
@@ -196,7 +208,9 @@ class Capacitor(Part):
     capacitance_uf: Positive
     rated_v: Positive
     esr_mohm: Positive
-    half_capacitance_v: Positive = Field(description="bias at which half the capacitance is left; very large where bias does nothing")
+    half_capacitance_v: Positive = Field(
+        description="bias at which half the capacitance is left; very large where bias does nothing"
+    )
     tolerance_percent: NotNegative = Field(le=50)
     ripple_a: Positive = Field(description="permitted ripple current, rms")
 
@@ -206,7 +220,9 @@ class Supervisor(Part):
 
     family = "supervisors"
 
-    control: Literal["two_levels", "follow_load"] = Field(description="the most it can do; follow_load includes two_levels")
+    control: Literal["two_levels", "follow_load"] = Field(
+        description="the most it can do; follow_load includes two_levels"
+    )
     power_mw: NotNegative
     buses: int = Field(ge=1, le=4, description="how many buses it can set")
 
