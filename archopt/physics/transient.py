@@ -21,6 +21,7 @@ LEAST_BANDWIDTH = 1e-3
 #: Voltage (V) across the inductance that is counted at least when the input is too low to raise the current.
 LEAST_HEADROOM_V = 1e-3
 LEAST_INDUCTANCE_H = 1e-12
+LEAST_DEFICIT_A = 1e-12
 #: Largest dip of a bus that is reported, as a share of its voltage.
 LARGEST_DIP = 0.9
 
@@ -102,8 +103,8 @@ def step_droop_v(
 
 def _ramp(
     loop: _Loop, step_a: FloatArray, load_slew: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Missing current (A), charge (C) and largest deviation (V) by the end of the load's ramp and the dead time.
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Missing current, its peak (A), charge (C) and largest deviation (V) when ramp and dead time are over.
 
     While the load ramps at Sl the missing current e obeys de/dt = Sl - min(S, w e): a stretch at the slew
     while e > S/w, an exponential towards Sl/w while e < S/w. With Sl <= S it can only pass from the first to
@@ -114,6 +115,7 @@ def _ramp(
     slew, w = loop.slew, loop.bandwidth
     knee_a, settled_a = slew / w, load_slew / w
     missing = np.minimum(load_slew * loop.delay, step_a)
+    peak = missing
     charge = missing * loop.delay - missing * missing / (2.0 * load_slew)
     largest = loop.deviation(missing, charge)
     left_s = np.maximum(step_a / load_slew - loop.delay, 0.0)
@@ -142,7 +144,35 @@ def _ramp(
     grown = missing + np.maximum(load_slew - slew, 0.0) * third_s
     charge = charge + 0.5 * (missing + grown) * third_s
     largest = np.maximum(largest, loop.deviation(grown, charge))
-    return grown, charge, largest
+    return grown, np.maximum(peak, grown), charge, largest
+
+
+def _waiting(
+    loop: _Loop,
+    step_a: FloatArray,
+    load_slew: FloatArray,
+    peak_a: FloatArray,
+    end_c: FloatArray,
+    deficit_a: FloatArray,
+    wakeup_s: FloatArray,
+) -> FloatArray:
+    """Upper bound of the deviation (V) when the current has to wait at the limit of the phases running, else 0.
+
+    The current cannot be at the limit before a step of the whole size would have brought it there, nor
+    before the load is; if the added phases are awake by then nothing changes. From there on the rest of the
+    wait takes the deficit. The charge taken before is at most that of the whole rise less that of its last
+    part, of the size of the deficit; all of it where the current follows so closely that less is missing.
+    """
+    knee_a = np.minimum(step_a, loop.slew / loop.bandwidth)
+    slewed_s = np.maximum(step_a - np.maximum(knee_a, deficit_a), 0.0) / loop.slew
+    settling_s = np.log(np.maximum(knee_a / np.maximum(deficit_a, LEAST_DEFICIT_A), 1.0)) / loop.bandwidth
+    early_s = np.maximum(loop.delay + slewed_s + settling_s, (step_a - deficit_a) / load_slew)
+    early_s = np.where(deficit_a < step_a, early_s, 0.0)
+    last_part, last_c = _recovery(loop, deficit_a, np.zeros_like(deficit_a))
+    before_c = np.where(deficit_a < peak_a, np.maximum(end_c - last_c, 0.0), end_c)
+    waited_c = before_c + deficit_a * (wakeup_s - early_s)
+    waits = (deficit_a > 0.0) & (wakeup_s > early_s)
+    return np.where(waits, last_part + waited_c / loop.capacitance, 0.0)
 
 
 def rail_droop_v(
@@ -168,22 +198,20 @@ def rail_droop_v(
     Notes
     -----
     Exact without a deficit. With one, the current waits at the limit of the running phases until the wake-up
-    is over: what follows is a step of the size of the deficit, on top of the charge taken before it and of
-    deficit x wake-up. The charge before it is what the whole rise takes less what the last part, of the size
-    of the deficit, takes. That is an upper bound: the wait is counted from the step on.
+    is over; what follows is a step of the size of the deficit, on top of the charge taken before and during
+    the wait. That is exact after a step and an upper bound after a ramp.
     """
     loop = _loop(slew_a_per_s, bandwidth_rad_s, delay_s, capacitance_f, esr_ohm)
     step = np.maximum(step_a, 0.0)
-    missing, charge, on_ramp = _ramp(loop, step, np.clip(load_slew_a_per_s, LEAST_SLEW, LARGEST_SLEW))
+    load_slew = np.clip(load_slew_a_per_s, LEAST_SLEW, LARGEST_SLEW)
+    missing, peak, charge, on_ramp = _ramp(loop, step, load_slew)
     after_ramp, end_c = _recovery(loop, missing, charge)
     largest = np.maximum(on_ramp, after_ramp)
     deficit = np.maximum(deficit_a, 0.0)
     if not np.any(deficit):
         return largest
-    last_part, last_c = _recovery(loop, deficit, np.zeros_like(deficit))
-    before_c = np.maximum(end_c - last_c, 0.0) + deficit * np.maximum(wakeup_s, 0.0)
-    waited = last_part + before_c / loop.capacitance
-    return np.maximum(largest, np.where(deficit > 0.0, waited, 0.0))
+    waited = _waiting(loop, step, load_slew, peak, end_c, deficit, np.asarray(wakeup_s, dtype=np.float64))
+    return np.maximum(largest, waited)
 
 
 def buck_slew_a_per_s(
