@@ -1,0 +1,292 @@
+"""The command line: thin words around the workflow; every error leaves as a sentence and an exit code.
+
+Exit codes: 0 fine; 1 a fault of archopt; 2 bad input, bad usage or an unusable directory; 3 no design meets
+every limit; 130 interrupted, with what was found kept.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import signal
+import sys
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from types import FrameType
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from archopt.errors import ArchoptError, InfeasibleError, InputError, OutputError
+
+if TYPE_CHECKING:
+    from archopt.present.front import Front
+
+FINE, FAULT, BAD_INPUT, INFEASIBLE, INTERRUPTED = 0, 1, 2, 3, 130
+DEBUG_VARIABLE = "ARCHOPT_DEBUG"
+RUNS = Path("runs")
+STOPPING = b"\nStopping; what was found so far is kept. Interrupt again to end at once.\n"
+
+app = typer.Typer(
+    name="archopt",
+    add_completion=False,
+    no_args_is_help=True,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+
+StudyArgument = Annotated[
+    Path, typer.Argument(metavar="STUDY", help="Study file (TOML).", show_default=False)
+]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON for a machine instead of tables.")]
+
+
+class StopRequest:
+    """Asked by the search between generations; answers why to stop, or nothing.
+
+    Parameters
+    ----------
+    seconds : time the search may take, None for no limit
+    """
+
+    def __init__(self, seconds: float | None = None) -> None:
+        self.interrupted = False
+        self._ends_s = None if seconds is None else time.monotonic() + seconds
+
+    def __call__(self) -> str:
+        """``interrupted``, ``time is up``, or nothing."""
+        if self.interrupted:
+            return "interrupted"
+        if self._ends_s is not None and time.monotonic() >= self._ends_s:
+            return "time is up"
+        return ""
+
+    @contextmanager
+    def on_interrupt(self) -> Iterator[None]:
+        """Take the first interrupt as a wish to stop and keep what there is; a second one ends at once."""
+
+        def ask(number: int, frame: FrameType | None) -> None:
+            if self.interrupted:
+                raise KeyboardInterrupt
+            self.interrupted = True
+            os.write(2, STOPPING)  # not print: the handler may run in the middle of one
+
+        try:
+            before = signal.signal(signal.SIGINT, ask)
+        except ValueError:  # not the main thread: whoever runs us there handles interrupts
+            yield
+            return
+        try:
+            yield
+        finally:
+            signal.signal(signal.SIGINT, before)
+
+
+def print_version(wanted: bool) -> None:
+    """Print the version and stop, when asked."""
+    if wanted:
+        import archopt
+
+        typer.echo(f"archopt {archopt.__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def start(
+    version: Annotated[
+        bool,
+        typer.Option("--version", help="Print the version and stop.", callback=print_version, is_eager=True),
+    ] = False,
+) -> None:
+    """Settle how one supply becomes all the rails of a board.
+
+    Bus topology, converters, bus voltage, copper and capacitance are chosen together and shown as a Pareto
+    front of energy, cost and droop.
+    """
+
+
+@app.command("new")
+def new_command(
+    directory: Annotated[
+        Path, typer.Argument(metavar="DIR", help="Directory to create.", show_default=False)
+    ],
+) -> None:
+    """Write a starter study to edit: a study file and a load profile."""
+    from archopt.inputs import starter
+
+    for path in starter.write(directory):
+        typer.echo(str(path))
+
+
+@app.command("check")
+def check_command(study: StudyArgument, as_json: JsonOption = False) -> None:
+    """Print how a study is understood; search nothing.
+
+    Rails, load states, economics, every assumed value, the size of the space, cautions.
+    """
+    from archopt import workflow
+    from archopt.present.plain import plain
+    from archopt.present.tables import console_for
+    from archopt.present.terminal import print_check
+
+    result = workflow.check(workflow.load(study))
+    if as_json:
+        print_json(plain(result))
+    else:
+        print_check(console_for(), result)
+
+
+@app.command("solve")
+def solve_command(
+    study: StudyArgument,
+    out: Annotated[
+        Path | None,
+        typer.Option("--out", "-o", metavar="DIR", help="Where the result goes. [default: runs/NAME]"),
+    ] = None,
+    seed: Annotated[
+        int | None, typer.Option(min=0, metavar="N", help="Seed of the search. [default: the study's]")
+    ] = None,
+    evaluations: Annotated[
+        int | None, typer.Option(min=1, metavar="N", help="Designs to try. [default: the study's]")
+    ] = None,
+    seconds: Annotated[
+        float | None, typer.Option(min=1.0, metavar="S", help="End the search after S seconds.")
+    ] = None,
+    quiet: Annotated[
+        bool, typer.Option("--quiet", "-q", help="No progress, no tables; only the files.")
+    ] = False,
+    replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier result in DIR.")] = False,
+    as_json: JsonOption = False,
+) -> None:
+    """Search all choices at once; print and write the front."""
+    from archopt import workflow
+    from archopt.present import files
+    from archopt.present.front import Front
+    from archopt.present.progress import SearchProgress
+    from archopt.present.tables import console_for
+    from archopt.present.terminal import print_front
+
+    loaded = workflow.load(study)
+    place = RUNS / loaded.study.name if out is None else out
+    files.check_target(place, replace=replace)
+    stop = StopRequest(seconds)
+    planned = evaluations if evaluations is not None else loaded.study.search.evaluations
+    progress = SearchProgress(console_for(sys.stderr), evaluations=planned, seconds=seconds, quiet=quiet)
+    with stop.on_interrupt(), progress:
+        front = workflow.solve(loaded, seed=seed, evaluations=evaluations, progress=progress, stop=stop)
+    place = write_or_aside(front, place, replace=replace)
+    if as_json:
+        print_json({**Front(front.record, place).summary(), "directory": str(place)})
+    elif quiet:
+        typer.echo(str(place))
+    else:
+        print_front(console_for(), front.record, place)
+    if front.record.run.get("interrupted"):
+        raise typer.Exit(INTERRUPTED)
+
+
+@app.command("show")
+def show_command(
+    directory: Annotated[
+        Path, typer.Argument(metavar="DIR", help="Directory of a result.", show_default=False)
+    ],
+    design: Annotated[
+        str | None,
+        typer.Argument(metavar="DESIGN", help="Name (D007), number, mark (knee) or incumbent."),
+    ] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Print a result again, or explain one design of it."""
+    from archopt.present import files
+    from archopt.present.front import Front
+    from archopt.present.tables import console_for, put
+    from archopt.present.terminal import print_front
+
+    front = Front(files.read(directory, archive=design is None), directory)
+    if design is None:
+        if as_json:
+            print_json(front.summary())
+        else:
+            print_front(console_for(), front.record, directory)
+        return
+    chosen = front.design(design)
+    if as_json:
+        print_json(chosen.as_dict())
+    else:
+        put(console_for(), [chosen])
+
+
+def write_or_aside(front: Front, place: Path, *, replace: bool) -> Path:
+    """Write a result; if its place was taken while the search ran, write beside it rather than lose it."""
+    from archopt.present import files
+
+    try:
+        return files.write(front.record, place, replace=replace)
+    except OutputError as error:
+        beside = files.free_sibling(place)
+        print(f"{error}\nWriting the result to {beside} instead.", file=sys.stderr)
+        return files.write(front.record, beside)
+
+
+def print_json(value: object) -> None:
+    """Print plain data as JSON on standard output."""
+    typer.echo(json.dumps(value, ensure_ascii=False, allow_nan=False, indent=1))
+
+
+def main(arguments: list[str] | None = None) -> None:
+    """Run the command line and leave with its exit code.
+
+    Parameters
+    ----------
+    arguments : words after the program's name; those of the process when None
+    """
+    sys.exit(guarded(lambda: app(args=arguments, prog_name="archopt", standalone_mode=False)))
+
+
+def guarded(work: Callable[[], Any]) -> int:
+    """Run and turn whatever happens into an exit code, with sentences on standard error."""
+    try:
+        code = work()
+        sys.stdout.flush()
+    except InputError as error:
+        count = len(error.problems)
+        print("\n".join(str(problem) for problem in error.problems), file=sys.stderr)
+        print(f"{count} problem{'' if count == 1 else 's'} found; nothing was done.", file=sys.stderr)
+        return error.exit_code
+    except InfeasibleError as error:
+        print(error, file=sys.stderr)
+        for limit in error.limits:
+            print(f"- {limit}", file=sys.stderr)
+        return error.exit_code
+    except ArchoptError as error:
+        print(error, file=sys.stderr)
+        return error.exit_code
+    except (KeyboardInterrupt, typer.Abort):
+        print("Interrupted.", file=sys.stderr)
+        return INTERRUPTED
+    except BrokenPipeError:
+        # The reader has seen enough; keep the interpreter from complaining when it closes the stream.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return FINE
+    except Exception as error:
+        if isinstance(error, typer.BadParameter.__mro__[1]) and hasattr(error, "show"):
+            error.show()
+            return BAD_INPUT
+        return report_fault(error)
+    return code if isinstance(code, int) else FINE
+
+
+def report_fault(error: Exception) -> int:
+    """Say that the fault is ours and how to report it; the traceback only when asked for."""
+    if os.environ.get(DEBUG_VARIABLE) == "1":
+        raise error
+    print(
+        f"A fault in archopt, not in your study: {type(error).__name__}: {error}\n"
+        f"Please report it to the maintainers of archopt with the study file; {DEBUG_VARIABLE}=1 prints"
+        " the details to send along.",
+        file=sys.stderr,
+    )
+    return FAULT

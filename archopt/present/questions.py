@@ -1,0 +1,151 @@
+"""What is printed beside a front: today's design, fixed buses, what lost, the numbers that matter."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+from rich.console import RenderableType
+from rich.text import Text
+
+from archopt.present.amounts import NONE, fixed, mechanism_word, money, number, real, signed
+from archopt.present.explanation import binding_text
+from archopt.present.overview import bus_text
+from archopt.present.record import Data, FrontRecord
+from archopt.present.tables import section, table
+
+MOST_MECHANISMS = 6
+MOST_LEVERAGE = 5
+
+
+def question_sections(record: FrontRecord) -> Iterable[RenderableType]:
+    """The sections that follow the front."""
+    if record.incumbent is not None:
+        yield from section("Today's design", *incumbent_body(record.incumbent, record.currency))
+    if record.baselines:
+        yield from section("The same hardware with another bus voltage", *baseline_body(record))
+    if record.losing:
+        yield from section("Topologies that lost", *losing_body(record.losing, record.currency))
+    if record.leverage:
+        yield from section("Catalogue numbers with the most leverage on the knee", *leverage_body(record))
+
+
+def incumbent_body(incumbent: Data, currency: str) -> Iterable[RenderableType]:
+    """The objectives of today's design and the limits it does not meet."""
+    objectives = incumbent["objectives"]
+    yield Text(
+        f"{fixed(objectives['energy_loss_kwh_per_year'], 2)} kWh a year,"
+        f" {money(objectives['cost_per_board'], currency)},"
+        f" droop {fixed(objectives['worst_droop_percent'], 0)} %"
+        f" of its budget; {incumbent.get('topology') or 'topology unknown'}, bus {bus_text(incumbent)} V"
+    )
+    violated = incumbent.get("violated") or []
+    if violated:
+        yield Text("It does not meet:", style="red")
+        for limit in violated:
+            yield Text(f"- {binding_text(limit) if isinstance(limit, dict) else limit}")
+
+
+def baseline_body(record: FrontRecord) -> Iterable[RenderableType]:
+    """Fixed and adaptive buses on the same hardware, and the gain against the best feasible fixed bus."""
+    rows = [
+        [
+            str(row.get("baseline", NONE)), str(row.get("of") or NONE), volts_text(row.get("volts")),
+            fixed(row.get("energy_loss_kwh_per_year"), 2), fixed(row.get("cost_per_board"), 2),
+            fixed(row.get("worst_droop_percent"), 0), "yes" if row.get("feasible") else "no",
+            str(row.get("note") or ""),
+        ]
+        for row in record.baselines
+    ]  # fmt: skip
+    words = ["bus", "hardware of", "bus V", "meets limits", "remark"]
+    headings = ["bus", "hardware of", "bus V", "kWh a year", "cost", "droop %", "meets limits", "remark"]
+    yield table(headings, rows, left=words)
+    yield from gain_lines(record.baselines, record.designs)
+
+
+def volts_text(volts: object) -> str:
+    """One voltage, or the lowest and highest of a list or of each bus."""
+    if isinstance(volts, dict):
+        return ", ".join(volts_text(value) for value in volts.values()) or NONE
+    if isinstance(volts, list):
+        numbers = [real(value) for value in volts if value is not None]
+        if not numbers:
+            return NONE
+        low, high = min(numbers), max(numbers)
+        return number(low) if low == high else f"{number(low)} to {number(high)}"
+    return number(volts)
+
+
+def gain_lines(baselines: list[Data], designs: list[Data]) -> Iterable[Text]:
+    """What following the load gains against the best feasible fixed bus, never against a habit."""
+    knee = next((d for d in designs if "knee" in (d.get("roles") or [])), None)
+    fixed_rows = [
+        row for row in baselines
+        if row.get("of") == "knee" and row.get("feasible") and "best" in str(row.get("baseline"))
+        and "fixed" in str(row.get("baseline")) and row.get("energy_loss_kwh_per_year") is not None
+    ]  # fmt: skip
+    if knee is None or not fixed_rows:
+        return
+    best = min(real(row["energy_loss_kwh_per_year"]) for row in fixed_rows)
+    own = real(knee["objectives"]["energy_loss_kwh_per_year"])
+    gain = best - own
+    yield Text(
+        f"Against the best feasible fixed bus the knee {'saves' if gain >= 0 else 'loses'}"
+        f" {number(abs(gain), 3)} kWh a year ({number(100 * abs(gain) / best, 2)} % of the loss)."
+    )
+
+
+def losing_body(losing: list[Data], currency: str) -> Iterable[RenderableType]:
+    """The best of each topology that does not win; for the nearest one the difference by mechanism."""
+    ordered = sorted(losing, key=lambda row: real(row.get("behind_by"), 1e300))
+    rows = [
+        [
+            str(row.get("topology", NONE)), _name_of(row.get("best_design")),
+            fixed(row.get("lifetime_cost"), 2), signed(row.get("behind_by"), 2), limit_text(row.get("limit")),
+        ]
+        for row in ordered
+    ]  # fmt: skip
+    words = ["topology", "best design", "limit it cannot meet"]
+    unit = f", {currency}" if currency else ""
+    headings = ["topology", "best design", f"life cost{unit}", "behind by", "limit it cannot meet"]
+    yield table(headings, rows, left=words)
+    nearest = ordered[0]
+    terms = nearest.get("difference_by_mechanism") or {}
+    if terms:
+        largest = sorted(terms.items(), key=lambda term: -abs(real(term[1], 0.0)))
+        said = ", ".join(
+            f"{mechanism_word(word)} {signed(value, 2)}" for word, value in largest[:MOST_MECHANISMS]
+        )
+        rest = ""
+        if len(largest) > MOST_MECHANISMS:
+            left = largest[MOST_MECHANISMS:]
+            rest = f", {signed(sum(real(value, 0.0) for _, value in left), 2)} in {len(left)} more"
+        yield Text(f"Nearest, {nearest.get('topology')}, against the winner, kWh a year: {said}{rest}.")
+
+
+def limit_text(limit: object) -> str:
+    """A limit given whole or as words."""
+    return binding_text(limit) if isinstance(limit, dict) else str(limit or NONE)
+
+
+def leverage_body(record: FrontRecord) -> Iterable[RenderableType]:
+    """The numbers whose spread moves the knee most, nothing chosen anew, and where they come from."""
+    ordered = sorted(record.leverage, key=lambda row: -abs(real(row.get("energy_change_kwh"), 0.0)))
+    rows = [
+        [
+            str(row.get("part", NONE)), str(row.get("column") or row.get("number") or NONE),
+            number(row.get("value")), f"+-{number(row.get('spread_percent'))} %",
+            signed(row.get("energy_change_kwh"), 2), signed(row.get("cost_change"), 2),
+            str(row.get("source") or NONE),
+        ]
+        for row in ordered[:MOST_LEVERAGE]
+    ]  # fmt: skip
+    words = ["part", "number", "source"]
+    yield table(
+        ["part", "number", "value", "spread", "kWh a year", "cost", "source"], rows, left=words
+    )
+
+
+def _name_of(design: object) -> str:
+    if isinstance(design, dict):
+        return str(design.get("design") or NONE)
+    return str(design or NONE)

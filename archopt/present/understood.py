@@ -1,0 +1,221 @@
+"""What was understood of a study: supply, rails, load, money, and every value nobody stated."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+
+from rich.console import RenderableType
+from rich.table import Table
+from rich.text import Text
+
+from archopt.present.amounts import NONE, counted, fixed, money, number, of, real, with_unit
+from archopt.present.record import CheckResult, Data
+from archopt.present.tables import WordTable, pairs, section, table
+
+HOURS_OF_A_YEAR = 8760.0
+
+
+def understood(problem: Data) -> Table:
+    """The study in a few lines: supply, rails, load, control, economics, parts."""
+    study: Data = problem.get("study") or {}
+    rows = [
+        ("study", " - ".join(str(study[key]) for key in ("name", "title") if study.get(key)) or NONE),
+        ("input", supply_text(study.get("supply") or {})),
+        ("rails", rails_text(study)),
+        ("load", load_text(problem)),
+        ("bus control", control_text(study.get("control") or {})),
+        ("money", money_text(study.get("economics") or {})),
+        ("surroundings", air_text(study.get("supply") or {})),
+        ("today's design", "given; it seeds the search" if study.get("incumbent") else "not given"),
+        ("assumed", assumed_text(problem)),
+    ]
+    return pairs((word, value) for word, value in rows if value != NONE)
+
+
+def supply_text(supply: Data) -> str:
+    """The range of the input and the levels it spends its hours at."""
+    if not supply:
+        return NONE
+    text = f"{number(supply.get('low_v'))} to {number(supply.get('high_v'))} V"
+    levels = supply.get("levels") or []
+    if levels:
+        shares = (f"{number(row['voltage_v'])} V for {number(100 * row['share'], 3)} %" for row in levels)
+        text += f"; {', '.join(shares)} of the hours"
+    text += "; isolation required" if supply.get("isolation") else "; no isolation required"
+    return text + (f"; through {supply['path']}" if supply.get("path") else "")
+
+
+def rails_text(study: Data) -> str:
+    """How many rails, their voltages, and growth and coincidence."""
+    rails = study.get("rails") or []
+    if not rails:
+        return NONE
+    volts = [real(rail.get("voltage_v")) for rail in rails]
+    text = f"{counted(len(rails), 'rail')} from {number(min(volts))} to {number(max(volts))} V"
+    taps = sum(1 for rail in rails if rail.get("tap_of"))
+    text += f", {counted(taps, 'tap')}" if taps else ""
+    growth = real(study.get("growth"))
+    text += f"; coincidence {number(study.get('coincidence'))}"
+    return text + (f"; growth {number(100 * (growth - 1), 3)} %" if math.isfinite(growth) else "")
+
+
+def load_text(problem: Data) -> str:
+    """States, their hours, and the mean and largest load."""
+    states = [state for state in problem.get("states") or [] if real(state.get("hours"), 0.0) > 0]
+    if not states:
+        return NONE
+    hours = sum(real(state["hours"]) for state in states)
+    text = f"{counted(len(states), 'state')} covering {number(hours)} hours of the year"
+    loads = [real(state.get("load_w")) for state in states]
+    if all(math.isfinite(load) for load in loads):
+        mean = sum(real(s["hours"]) * load for s, load in zip(states, loads, strict=True)) / hours
+        text += f"; mean load {number(mean)} W, highest of a state {number(max(loads))} W"
+    bands = problem.get("bands") or []
+    return text + (f"; {counted(len(bands), 'band')} of load" if bands else "")
+
+
+def control_text(control: Data) -> str:
+    """What the bus voltage may do and what it must survive."""
+    if not control:
+        return NONE
+    words = {"fixed": "fixed", "two_levels": "two levels", "follow_load": "following the load"}
+    kinds = ", ".join(words.get(str(kind), str(kind)) for kind in control.get("kinds") or [])
+    text = f"{kinds}; {number(control.get('bus_min_v'))} to {number(control.get('bus_max_v'))} V"
+    text += f" in steps of {number(control.get('grid_v'))} V"
+    return text + (
+        f"; survives an unannounced jump of {number(control.get('jump_percent'))} % of rated load"
+        f" within {number(control.get('response_ms'))} ms"
+    )
+
+
+def money_text(economics: Data) -> str:
+    """Volume, energy price and life."""
+    if not economics:
+        return NONE
+    currency = str(economics.get("currency") or "")
+    return (
+        f"{number(economics.get('boards_per_year'), 6)} boards a year; a new part number"
+        f" {money(economics.get('new_part_cost'), currency, 0)};"
+        f" energy {number(economics.get('energy_price_per_kwh'))} {currency} a kWh, cooling"
+        f" x{number(economics.get('cooling_overhead'))}, upstream"
+        f" {number(economics.get('upstream_efficiency'))}; {number(economics.get('life_years'))} years"
+    )
+
+
+def air_text(supply: Data) -> str:
+    """Air at the inlet and at the parts."""
+    if not supply:
+        return NONE
+    return (
+        f"inlet {number(supply.get('inlet_degc'))} degC,"
+        f" hottest {number(supply.get('hottest_inlet_degc'))} degC,"
+        f" {number(supply.get('local_rise_k'))} K warmer at the parts,"
+        f" air {number(supply.get('air_speed_m_s'))} m/s"
+    )
+
+
+def assumed_text(problem: Data) -> str:
+    """How many values nobody stated, and where to read them."""
+    count = len(problem.get("assumed") or [])
+    return f"{counted(count, 'value')} nobody stated (archopt check lists them)" if count else "nothing"
+
+
+def rails_table(rails: list[Data]) -> WordTable:
+    """Every rail as it will be solved."""
+    rows = [
+        [
+            str(rail.get("name", NONE)), number(rail.get("voltage_v")), number(rail.get("max_current_a")),
+            number(rail.get("typical_current_a")), number(rail.get("tolerance_percent")),
+            number(rail.get("step_a")), number(rail.get("slew_a_per_us")),
+            number(1000 * real(rail.get("droop_budget_v"))), number(rail.get("squares")),
+            "sensed at the load" if rail.get("remote_sense") else "", _feeds(rail),
+        ]
+        for rail in rails
+    ]  # fmt: skip
+    words = ["rail", "sense", "fed from"]
+    columns = ["rail", "V", "max A", "typical A", "+- %", "step A", "A/us", "droop mV", "squares", *words[1:]]
+    return table(columns, rows, left=words)
+
+
+def states_table(states: list[Data]) -> WordTable:
+    """The load states: those of the year, then those looked at for limits and printed watts."""
+    rows = [
+        [
+            str(state.get("state", NONE)), fixed(state.get("hours"), 0),
+            fixed(100 * real(state.get("hours")) / HOURS_OF_A_YEAR, 1), fixed(state.get("input_v"), 1),
+            fixed(state.get("load_w"), 1),
+        ]
+        for state in states
+    ]  # fmt: skip
+    return table(["state", "hours", "% of a year", "input V", "load W"], rows, left=["state"])
+
+
+def assumed_table(assumed: list[Data]) -> WordTable:
+    """Every value nobody stated: where it belongs in the study file, the value taken, and why."""
+    rows = [[str(row.get(key, NONE)) for key in ("place", "value", "reason")] for row in assumed]
+    return table(["place", "value", "why"], rows, left=["place", "value", "why"])
+
+
+def space_rows(space: Data) -> Iterable[tuple[str, str]]:
+    """Size of the space and what is on offer."""
+    if space.get("choices") is not None:
+        yield "choices", number(space["choices"], 6)
+    if space.get("designs_log10") is not None:
+        yield "designs", f"about 10^{fixed(space['designs_log10'], 0)}"
+    for row in space.get("parts") or []:
+        yield str(row.get("family", "")).replace("_", " "), f"{number(row.get('offered'), 6)} offered"
+
+
+def power_rows(power: Data) -> Iterable[tuple[str, str]]:
+    """The sum of the rails' maxima beside what they draw at one time."""
+    words = {
+        "sum_of_maxima_w": "sum of the rails' maxima", "coincident_w": "most drawn at one time",
+        "rated_w": "that with growth: the rated load", "mean_w": "mean over the hours",
+    }  # fmt: skip
+    for key, word in words.items():
+        if power.get(key) is not None:
+            yield word, with_unit(power[key], "W")
+
+
+def check_sections(result: CheckResult) -> Iterable[RenderableType]:
+    """All that ``check`` prints."""
+    problem = result.problem
+    study: Data = problem.get("study") or {}
+    yield from section("Understood", understood(problem))
+    if study.get("rails"):
+        yield from section("Rails", rails_table(study["rails"]))
+    if problem.get("states"):
+        yield from section("States", states_table(problem["states"]))
+    if result.power:
+        yield from section("Load power", pairs(power_rows(result.power)))
+    assumed = problem.get("assumed") or []
+    yield from section(
+        "Assumed, because the study does not say", assumed_table(assumed) if assumed else Text("nothing")
+    )
+    if result.space:
+        yield from section("Space to search", pairs(space_rows(result.space)))
+        options = result.space.get("options") or []
+        if options:
+            rows = [[str(row.get("choice", NONE)), number(row.get("values"), 6)] for row in options]
+            yield from section("Values of each choice", table(["choice", "values"], rows, left=["choice"]))
+    yield from cautions_section(result.cautions)
+
+
+def cautions_section(cautions: list[str]) -> Iterable[RenderableType]:
+    """Sentences to read before trusting a number."""
+    if cautions:
+        yield from section("Cautions", bullets(cautions))
+
+
+def bullets(sentences: Iterable[str]) -> Text:
+    """Sentences, one a line."""
+    return Text("\n".join(f"- {sentence}" for sentence in sentences))
+
+
+def _feeds(rail: Data) -> str:
+    if rail.get("tap_of"):
+        return f"tap of {rail['tap_of']}"
+    parents = of(rail, "parents")
+    names = [str(name) for name in parents] if isinstance(parents, list) else []
+    return "or ".join(["bus or input ", *(f"{name} " for name in names)]).strip() if names else "bus or input"
