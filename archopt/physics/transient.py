@@ -156,7 +156,7 @@ def _waiting(
     deficit_a: FloatArray,
     wakeup_s: FloatArray,
 ) -> FloatArray:
-    """Upper bound of the deviation (V) when the current has to wait at the limit of the phases running, else 0.
+    """Upper bound of the deviation (V) when the current has to wait at the limit of the phases, else 0.
 
     The current cannot be at the limit before a step of the whole size would have brought it there, nor
     before the load is; if the added phases are awake by then nothing changes. From there on the rest of the
@@ -267,34 +267,39 @@ def bus_dip_v(
     delay_s: FloatLike,
     capacitance_f: FloatLike,
     esr_ohm: FloatLike,
+    standing_w: FloatLike = 0.0,
 ) -> FloatArray:
     """Dip (V) of a bus at a step of constant power behind it, its converter following without a slew limit.
 
     Where the step is too large to be carried at any voltage (the bus collapses) the dip goes on growing with
-    the step, from half the bus voltage to at most 0.9 of it, so that the violation has a size.
+    the step, to at most 0.9 of the bus voltage, so that the violation has a size.
 
     Parameters
     ----------
     step_w : rise of power drawn from the bus (W), not negative
     bus_v : bus voltage before the step (V), above 0
     bandwidth_rad_s, delay_s : of the bus converter, as for :func:`step_droop_v`
-    capacitance_f, esr_ohm : of everything that holds the bus up; all broadcast
+    capacitance_f, esr_ohm : of everything that holds the bus up
+    standing_w : constant power drawn before the step (W); it too draws more current as the bus dips, which
+        may double the dip of a small step; all broadcast
 
     Notes
     -----
     An unlimited slew makes the deviation of a current step proportional to it, dip = Z dI with
-    Z = max(ESR + td/C, (td + 1/w)/C). The step draws dI = dP / (V - dip) at the dipped voltage, so that
-    dip (V - dip) = Z dP, whose smaller root the iteration of the two would reach. Closed form.
+    Z = max(ESR + td/C, (td + 1/w)/C). At the dipped voltage dI = (P0 + dP)/(V - dip) - P0/V; the smaller root
+    of dip^2 - dip (V - Z P0/V) + Z dP = 0 is where iterating the two would end. Closed form; an upper bound,
+    as the current grows during the dip.
     """
     capacitance = np.maximum(capacitance_f, LEAST_CAPACITANCE_F)
     delay = np.maximum(delay_s, 0.0)
     followed_s = delay + 1.0 / np.maximum(bandwidth_rad_s, LEAST_BANDWIDTH)
     impedance_ohm = np.maximum(esr_ohm + delay / capacitance, followed_s / capacitance)
     voltage = np.maximum(bus_v, LEAST_HEADROOM_V)
-    share = 4.0 * impedance_ohm * np.maximum(step_w, 0.0) / (voltage * voltage)
-    carried = 0.5 * (1.0 - np.sqrt(np.maximum(1.0 - share, 0.0)))
-    collapsed = np.minimum(0.5 * share, LARGEST_DIP)
-    dip: FloatArray = voltage * np.where(share > 1.0, collapsed, carried)
+    per_watt = impedance_ohm / (voltage * voltage)
+    left = np.maximum(1.0 - per_watt * np.maximum(standing_w, 0.0), 0.0)
+    missing = 4.0 * per_watt * np.maximum(step_w, 0.0) - left * left
+    share = 0.5 * (left - np.sqrt(np.maximum(-missing, 0.0))) + 2.0 * np.maximum(missing, 0.0)
+    dip: FloatArray = voltage * np.minimum(share, LARGEST_DIP)
     return dip
 
 
