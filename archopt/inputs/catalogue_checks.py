@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from itertools import pairwise
 
 from archopt.inputs.parts import BuckStage, BusConverter, Capacitor, Part, SingleStage, Stack
 from archopt.inputs.problems import Notebook, nearest, unit_of
@@ -21,7 +22,7 @@ def check_family(part: Part, file: str, line: int, notebook: Notebook) -> None:
     def note(column: str, message: str) -> None:
         notebook.problem(f"row {line}, column {column}", message, file)
 
-    for fewer, more in zip(PRICES, PRICES[1:], strict=False):
+    for fewer, more in pairwise(PRICES):
         if values[more] > values[fewer]:
             note(
                 more, f"{values[more]:g} is above {fewer} {values[fewer]:g}; more pieces never cost more each"

@@ -13,7 +13,8 @@ STAGE_FAMILIES = ("buck_stages", "single_stages", "linear_regulators")
 BUSES = ("bus_a", "bus_b")
 RAIL_KEYS = ("feed", "stage", "phases", "fewest", "bank", "bank_count", "pairs")
 BUS_KEYS = (
-    "converter", "count", "fewest", "nominal_v", "control", "lower_v", "upper_v", "bulk", "bulk_count", "pairs",
+    "converter", "count", "fewest", "nominal_v", "control", "lower_v", "upper_v", "bulk",
+    "bulk_count", "pairs",
 )  # fmt: skip
 BOARD_KEYS = ("stack", "bias", "bias_feed", "supervisor")
 

@@ -31,8 +31,8 @@ from archopt.inputs.text_files import cell_values, read_csv
 class Draft:
     """The tables of a study as far as they could be read.
 
-    supply and board are None when a value they cannot do without is wrong. ``rail_names`` holds every name that
-    was written, those of rails with faults among them, so that faults are not told twice.
+    supply and board are None when a value they cannot do without is wrong. ``rail_names`` holds every name
+    that was written, those of rails with faults among them, so that faults are not told twice.
     """
 
     file: str

@@ -18,8 +18,9 @@ def overlay(loaded: LoadedStudy, changes: Mapping[str, object]) -> LoadedStudy:
     Parameters
     ----------
     loaded : the study to start from; it is left as it is
-    changes : place -> value, e.g. ``economics.energy_price_per_kwh`` -> 0.3, ``rails.core.max_current_a`` -> 80,
-        ``load.states.idle.hours`` -> 2000; ``rails.*.key`` changes every rail. None takes a stated value away.
+    changes : place -> value, e.g. ``economics.energy_price_per_kwh`` -> 0.3, ``rails.core.max_current_a``
+        -> 80, ``load.states.idle.hours`` -> 2000; ``rails.*.key`` changes every rail. None takes a stated
+        value away.
 
     Raises
     ------

@@ -17,8 +17,8 @@ NotNegative = Annotated[float, Field(ge=0)]
 class Part(BaseModel):
     """Columns every family has.
 
-    Unit prices are steps: ``price_100`` holds below 1,000 pieces a year, ``price_1k`` from 1,000, ``price_10k``
-    from 10,000 and ``price_100k`` from 100,000 pieces.
+    Unit prices are steps: ``price_100`` holds below 1,000 pieces a year, ``price_1k`` from 1,000,
+    ``price_10k`` from 10,000 and ``price_100k`` from 100,000 pieces.
     """
 
     model_config = ConfigDict(frozen=True, extra="forbid")

@@ -18,10 +18,10 @@ Locate = Callable[[str], tuple[str, str]]
 """From a key to the file and the place in it, as the person wrote them."""
 
 UNITS = {
-    "a_per_us": "A/us", "v_per_ms": "V/ms", "m_s": "m/s", "k_per_w": "K/W", "per_kwh": "a kWh", "per_year": "a year",
-    "percent": "%", "degc": "degC", "cm2": "cm2", "mm2": "mm2", "mm": "mm", "mohm": "mohm", "uf": "uF", "nh": "nH",
-    "uh": "uH", "khz": "kHz", "ns": "ns", "us": "us", "ms": "ms", "ma": "mA", "mw": "mW", "nc": "nC", "oz": "oz",
-    "v": "V", "a": "A", "w": "W", "k": "K",
+    "a_per_us": "A/us", "v_per_ms": "V/ms", "m_s": "m/s", "k_per_w": "K/W", "per_kwh": "a kWh",
+    "per_year": "a year", "percent": "%", "degc": "degC", "cm2": "cm2", "mm2": "mm2", "mm": "mm",
+    "mohm": "mohm", "uf": "uF", "nh": "nH", "uh": "uH", "khz": "kHz", "ns": "ns", "us": "us", "ms": "ms",
+    "ma": "mA", "mw": "mW", "nc": "nC", "oz": "oz", "v": "V", "a": "A", "w": "W", "k": "K",
 }  # fmt: skip
 THOUSANDTH = {"V": "mV", "A": "mA", "W": "mW"}
 

@@ -1,6 +1,6 @@
 """The load profile: a time series in a CSV file.
 
-Columns are ``hours``, then either one ``utilisation`` or ``<rail>_a`` for each rail, and optionally ``input_v``
+Columns are ``hours``, then either one ``utilisation`` or ``<rail>_a`` for each rail, and perhaps ``input_v``
 and ``inlet_degc``. An empty cell of a rail means that the rail is off, which is not the same as 0 A.
 """
 
@@ -38,7 +38,7 @@ class ProfileLimits:
 
 @dataclass(frozen=True)
 class Profile:
-    """Moments of the load as read: hours (M,), current_a (M, R), off (M, R), input_v (M,) and inlet_degc (M,).
+    """Moments of the load as read: hours (M,), current_a (M, R), off (M, R), input_v (M,), inlet_degc (M,).
 
     input_v and inlet_degc hold nan where the file says nothing; line (M,) is the row in the file.
     """

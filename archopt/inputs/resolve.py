@@ -5,13 +5,9 @@ from __future__ import annotations
 from archopt.inputs.choice_names import ChoiceChecker
 from archopt.inputs.draft import Draft, content_hash
 from archopt.inputs.feasibility import check_feasible
+from archopt.inputs.incumbent import resolve_incumbent
 from archopt.inputs.problems import Notebook
-from archopt.inputs.resolve_choices import (
-    allowed_families,
-    forbidden_parts,
-    resolve_choices,
-    resolve_incumbent,
-)
+from archopt.inputs.resolve_choices import allowed_families, forbidden_parts, resolve_choices
 from archopt.inputs.resolve_load import resolve_load
 from archopt.inputs.resolve_rails import resolve_rails
 from archopt.inputs.resolve_supply import (
@@ -45,7 +41,9 @@ def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedS
     search = resolve_search(draft, notebook)
     checker = ChoiceChecker(rails, draft.rail_names, catalogue, board)
     choices = resolve_choices(draft, families, forbidden, checker, notebook)
-    incumbent = resolve_incumbent(draft, rails, catalogue, board, control, derating, checker, notebook)
+    incumbent = resolve_incumbent(
+        draft, rails, catalogue, board, supply, control, derating, checker, notebook
+    )
     check_feasible(
         draft, rails, supply, control, derating, choices, catalogue, load.coincidence * load.growth, notebook
     )

@@ -11,7 +11,7 @@ import numpy as np
 from archopt.inputs.draft import Draft
 from archopt.inputs.problems import Notebook, nearest, shown
 from archopt.inputs.profile import ProfileLimits, read_profile
-from archopt.inputs.resolved import LoadTable, Rail
+from archopt.inputs.resolved import FloatArray, LoadTable, Rail
 from archopt.inputs.study_load import StateRow
 
 YEAR_HOURS = 8760.0
@@ -45,7 +45,7 @@ def resolve_load(draft: Draft, rails: Sequence[Rail], notebook: Notebook) -> Res
         return ResolvedLoad(None, coincidence, growth, math.nan)
     if draft.load.profile is not None:
         table = _from_profile(draft, draft.load.profile, rails, coincidence, notebook)
-    elif "states" in draft.content.get("load", {}) and draft.load.states is not None:
+    elif draft.load.states is not None:
         table = _from_states(draft, draft.load.states, rails, coincidence, notebook)
     else:
         table = _default(draft, rails, coincidence, notebook)
@@ -107,7 +107,8 @@ def _from_states(
 ) -> LoadTable | None:
     """Return listed states as moments. Hours may be fewer than a year's: the board is off for the rest."""
     if not states:
-        notebook.problem("load.states", "there is no state")
+        if not draft.content["load"]["states"]:
+            notebook.problem("load.states", "there is no state")
         return None
     seen: set[str] = set()
     for state in states:
@@ -167,7 +168,7 @@ def _check_state(draft: Draft, state: StateRow, notebook: Notebook) -> None:
 
 
 def _check_currents(
-    states: Sequence[StateRow], rails: Sequence[Rail], current_a: np.ndarray[tuple[int, ...], np.dtype[np.float64]],
+    states: Sequence[StateRow], rails: Sequence[Rail], current_a: FloatArray,
     notebook: Notebook,
 ) -> None:  # fmt: skip
     """Note currents below zero or above what the rail draws at most."""
@@ -182,9 +183,9 @@ def _check_currents(
 
 
 def _hours_of_year(
-    draft: Draft, hours: np.ndarray[tuple[int, ...], np.dtype[np.float64]], covers: str | None, series: bool,
+    draft: Draft, hours: FloatArray, covers: str | None, series: bool,
     shown_path: str, notebook: Notebook,
-) -> np.ndarray[tuple[int, ...], np.dtype[np.float64]] | None:  # fmt: skip
+) -> FloatArray | None:  # fmt: skip
     """Return the hours of a year (M,), or None after noting a sum that is none."""
     total = float(hours.sum())
     place, file = ("column hours", shown_path) if series else ("load.states", None)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 from archopt.inputs.catalogue_checks import voltage_fits
+from archopt.inputs.choice_names import flatten
 from archopt.inputs.draft import Draft
 from archopt.inputs.parts import Capacitor
 from archopt.inputs.problems import Notebook, nearest
@@ -13,9 +14,10 @@ from archopt.inputs.study_load import RailRow
 
 LEAST_BUDGET_PERCENT = 0.2
 WIDTH_MM_PER_A = 1.5
+LEAST_WIDTH_MM = 5.0
 LARGEST_POUR_SHARE = 1 / 8
 LARGEST_RATED = 4.0  # rated voltage over rail voltage of the capacitors taken by default
-LEAST_RATED_V = 6.3
+LEAST_RATED_V = 10.0
 
 
 def is_core(row: RailRow) -> bool:
@@ -143,8 +145,8 @@ def _copper(draft: Draft, row: RailRow, core: bool, notebook: Notebook) -> tuple
         width_mm = width_mm or math.sqrt(area_cm2 * 100 / squares)
         return squares, area_cm2, width_mm
     if width_mm is None:
-        width_mm = WIDTH_MM_PER_A * row.max_current_a
-        reason = f"{WIDTH_MM_PER_A:g} mm an ampere"
+        width_mm = max(LEAST_WIDTH_MM, WIDTH_MM_PER_A * row.max_current_a)
+        reason = f"{WIDTH_MM_PER_A:g} mm an ampere, at least {LEAST_WIDTH_MM:g} mm"
         if draft.board is not None:
             most_mm = math.sqrt(draft.board.area_cm2 * 100 * LARGEST_POUR_SHARE / squares)
             if width_mm > most_mm:
@@ -188,18 +190,31 @@ def _capacitors(
         return tuple(dict.fromkeys(row.capacitors))
     fitting = {name: part for name, part in offered.items() if voltage_fits(part, row.voltage_v, derating)}
     most_v = max(LEAST_RATED_V, LARGEST_RATED * row.voltage_v)
-    suited = [name for name, part in fitting.items() if part.kind != "electrolytic" and part.rated_v <= most_v]
-    chosen = suited or list(fitting)
+    suited = [
+        name for name, part in fitting.items() if part.kind != "electrolytic" and part.rated_v <= most_v
+    ]
+    named = _named_banks(draft, row.name)
+    chosen = [name for name in fitting if name in suited or name in named] or list(fitting)
     if not chosen:
         highest = max((part.rated_v for part in offered.values()), default=0.0)
         place, file = draft.place(row.name, "voltage_v")
         message = (
-            f"no capacitor of the catalogue stands {row.voltage_v:g} V: the highest is rated for {highest:g} V, "
+            f"no capacitor offered stands {row.voltage_v:g} V: the highest is rated for {highest:g} V, "
             f"with derating {highest * derating:g} V"
         )
         notebook.problem(place, message, file)
         return ()
-    return notebook.take(f"rails.{row.name}.capacitors", None, tuple(chosen), f"ceramic and polymer rated up to {most_v:g} V")
+    return notebook.take(
+        f"rails.{row.name}.capacitors", None, tuple(chosen), f"ceramic and polymer rated up to {most_v:g} V"
+    )
+
+
+def _named_banks(draft: Draft, rail: str) -> frozenset[str]:
+    """Return the capacitors that pins and today's design name for a rail, which its bank may then use."""
+    unread = Notebook(draft.file)
+    pinned = flatten(draft.choices.pin or {}, "", unread)
+    stated = flatten(draft.incumbent or {}, "", unread)
+    return frozenset(name for choices in (pinned, stated) for name in choices.get(f"{rail}.bank", ()))
 
 
 def _check_relations(draft: Draft, rails: dict[str, Rail], notebook: Notebook) -> None:
@@ -235,7 +250,7 @@ def _check_tap(draft: Draft, row: RailRow, rails: dict[str, Rail], notebook: Not
     elif name in rails and rails[name].tap_of:
         notebook.problem(place, f"'{name}' is itself a tap; tap {rails[name].tap_of}", file)
     elif name in rails and abs(rails[name].voltage_v / row.voltage_v - 1) > 1e-6:
-        message = f"'{name}' has {rails[name].voltage_v:g} V, this rail {row.voltage_v:g} V; a tap has equal voltage"
+        message = f"'{name}' has {rails[name].voltage_v:g} V, this rail {row.voltage_v:g} V; a tap's is equal"
         notebook.problem(place, message, file)
     if row.parents:
         notebook.problem(place, "a tap has no parents of its own", file)

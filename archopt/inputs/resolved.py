@@ -163,9 +163,9 @@ class Economics:
 class Choices:
     """What the person allows, forbids, prefers and pins.
 
-    ``families`` are the families allowed; ``parts`` when not empty are the only parts allowed of their family;
-    ``pins`` maps a choice name (model.space names them, e.g. ``core.stage``, ``bus_a.converter``) to the tuple
-    of values it may take.
+    ``families`` are the families allowed; ``forbidden_parts`` are all parts that may not be used, for
+    whatever reason (by name, by family, or because only others of their family are listed); ``pins`` maps a
+    choice name (e.g. ``core.stage``, ``bus_a.converter``) to the tuple of values it may take.
     """
 
     families: tuple[str, ...]
@@ -212,7 +212,7 @@ class ResolvedStudy:
 
 @dataclass(frozen=True)
 class Catalogue:
-    """Every part offered, by family and name; sources by key; ``file_of`` says which file a part came from."""
+    """Every part offered, by family and name; sources by key; ``file_of`` says where a part came from."""
 
     families: dict[str, dict[str, Part]]
     sources: dict[str, Source]

@@ -1,7 +1,7 @@
 """The study file as a person writes it: one frozen model a table of the TOML file, unknown keys refused.
 
-Every dimensional key ends in its unit; bounds catch a wrong magnitude. What may be left out has a default that
-``archopt.inputs.resolve`` fills in and records as assumed. The rails and the load are in ``study_load``.
+Every dimensional key ends in its unit; bounds catch a wrong magnitude. What may be left out has a default
+that ``archopt.inputs.resolve`` fills in and records as assumed. The rails and the load are in ``study_load``.
 """
 
 from __future__ import annotations
@@ -211,6 +211,7 @@ class Study(Table):
 
 
 TABLES: dict[str, type[BaseModel]] = {
-    "input": InputTable, "board": BoardTable, "load": LoadTable, "control": ControlTable, "limits": LimitsTable,
-    "derating": DeratingTable, "choices": ChoicesTable, "economics": EconomicsTable, "search": SearchTable,
+    "input": InputTable, "board": BoardTable, "load": LoadTable, "control": ControlTable,
+    "limits": LimitsTable, "derating": DeratingTable, "choices": ChoicesTable,
+    "economics": EconomicsTable, "search": SearchTable,
 }  # fmt: skip

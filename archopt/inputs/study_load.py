@@ -49,7 +49,7 @@ class RailRow(Row):
         None, gt=0, le=3000, description="region of its pour; default from width"
     )
     copper_width_mm: float | None = Field(
-        None, gt=0, le=600, description="narrowest width of its pour; default 1.5 mm an ampere"
+        None, gt=0, le=600, description="narrowest width of its pour; default 1.5 mm an ampere, 5 at least"
     )
     copper_length_mm: float | None = Field(
         None, gt=0, le=1000, description="stage to load; default from squares"
