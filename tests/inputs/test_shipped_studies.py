@@ -100,13 +100,7 @@ def stages(loaded: LoadedStudy) -> list[BuckStage | SingleStage | LinearRegulato
 
 
 def deviation_percent(
-    loaded: LoadedStudy,
-    rail: Rail,
-    stage: BuckStage,
-    phases: int,
-    bank: Capacitor,
-    count: int,
-    input_v: float,
+    loaded: LoadedStudy, rail: Rail, stage: BuckStage, phases: int, bank: Capacitor, count: int, at_v: float
 ) -> float:
     """Return the larger of droop and release with all phases running, % of the rail's budget."""
     study = loaded.study
