@@ -47,10 +47,15 @@ def own_rails(loaded: LoadedStudy) -> list[Rail]:
 
 
 def rated_a(loaded: LoadedStudy, rail: Rail) -> float:
-    """Return what the rail's stage must carry, with its taps, coincidence and growth, A."""
+    """Return what the rail's stage must carry alone, with its taps and growth, A."""
     study = loaded.study
     taps = sum(other.max_current_a for other in study.rails if other.tap_of == rail.name)
-    return (rail.max_current_a + taps) * study.coincidence * study.growth
+    return (rail.max_current_a + taps) * study.growth
+
+
+def rated_w(loaded: LoadedStudy) -> float:
+    """Return the power of all rails at their coincident maximum, with growth, W."""
+    return loaded.study.coincidence * sum(r.voltage_v * rated_a(loaded, r) for r in own_rails(loaded))
 
 
 def feeds_v(loaded: LoadedStudy, rail: Rail, stage: Part) -> list[tuple[float, float]]:
@@ -136,9 +141,8 @@ def test_telecom_study_is_in_the_class_of_its_module(shipped: Shipped) -> None:
     study = loaded.study
     assert max(rail.voltage_v for rail in study.rails) <= 3.3
     module = cast(BusConverter, loaded.catalogue.families["bus_converters"]["wide_bus_150w"])
-    rated_w = sum(rail.voltage_v * rated_a(loaded, rail) for rail in study.rails)
     usable_w = module.max_power_w * study.derating.current
-    assert 0.8 < rated_w / usable_w < 0.92  # the rest is lost in the stages
+    assert 0.8 < rated_w(loaded) / usable_w < 0.92  # the rest is lost in the stages
 
 
 def test_industrial_study_has_a_tap_a_parent_and_a_rail_off(shipped: Shipped) -> None:
@@ -194,7 +198,7 @@ def test_every_bus_has_converters_to_choose_from(shipped: Shipped, name: str) ->
         if part.input_min_v <= supply.low_v and part.input_max_v >= supply.high_v
         and (part.isolated or not supply.isolation)
     ]  # fmt: skip
-    needed_w = sum(rail.voltage_v * rated_a(loaded, rail) for rail in own_rails(loaded)) / 0.85
+    needed_w = rated_w(loaded) / 0.85
     derated = loaded.study.derating.current
     strong = [part for part in fit if part.max_power_w * part.max_parallel * derated > needed_w]
     assert any(part.output_min_v <= 5 for part in strong)
