@@ -31,11 +31,10 @@ def significant(values: FloatArray, digits: int = RANKING_DIGITS) -> FloatArray:
     usable = np.isfinite(result) & (np.abs(result) > 1e-290)
     chosen = result[usable]
     places = digits - 1 - np.floor(np.log10(np.abs(chosen))).astype(np.int64)
-    # scaling by an exact power and back: multiply for positive places, divide for negative ones
-    scale = _POWER_OF_TEN[np.minimum(np.abs(places), 300)]
-    up = places >= 0
-    whole = np.rint(np.where(up, chosen * scale, chosen / scale))
-    result[usable] = np.where(up, whole / scale, whole * scale)
+    power = _POWER_OF_TEN[np.minimum(np.abs(places), 300)]
+    # an exact power, above or below the line: a product with 1e-3 would add an error of its own
+    above, below = np.where(places >= 0, power, 1.0), np.where(places >= 0, 1.0, power)
+    result[usable] = np.rint(chosen * above / below) / above * below
     return result
 
 
