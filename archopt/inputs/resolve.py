@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
+import numpy as np
+
 from archopt.inputs.choice_names import ChoiceChecker
 from archopt.inputs.draft import Draft, content_hash
 from archopt.inputs.feasibility import check_feasible
@@ -18,7 +22,7 @@ from archopt.inputs.resolve_supply import (
     resolve_search,
     resolve_supply,
 )
-from archopt.inputs.resolved import Catalogue, ResolvedStudy
+from archopt.inputs.resolved import Catalogue, LoadTable, ResolvedStudy
 
 
 def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedStudy | None:
@@ -56,7 +60,7 @@ def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedS
         supply=supply,
         board=board,
         rails=rails,
-        load=load.table,
+        load=_with_inlet(load.table, supply.inlet_degc),
         coincidence=load.coincidence,
         growth=load.growth,
         control=control,
@@ -69,6 +73,11 @@ def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedS
         stated=draft.content,
         study_hash=content_hash(draft.content, _profile_bytes(draft)),
     )
+
+
+def _with_inlet(load: LoadTable, inlet_degc: float) -> LoadTable:
+    """Return the load with the study's inlet air (degC) in every moment that states none."""
+    return replace(load, inlet_degc=np.where(np.isnan(load.inlet_degc), inlet_degc, load.inlet_degc))
 
 
 def _profile_bytes(draft: Draft) -> bytes:
