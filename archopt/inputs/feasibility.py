@@ -79,7 +79,7 @@ def _check_rail(
         message = f"no {which} stage makes {rail.voltage_v:g} V; their output ranges are {reach}"
         notebook.problem(place, message, file)
         return
-    tapped_a = sum(other.max_current_a for other in rails if other.tap_of == rail.name)
+    tapped_a = sum(other.max_current_a for other in _taps(rail, rails))
     needed_a = (rail.max_current_a + tapped_a) * demand.factor
     strongest = max(fitting, key=lambda part: carried_a(part, demand.derating_current))
     most_a = carried_a(strongest, demand.derating_current)
@@ -91,6 +91,11 @@ def _check_rail(
             f"the strongest {which} stage, {strongest.name}, carries {most_a:.4g} A after derating"
         )
         notebook.problem(place, message, file)
+
+
+def _taps(rail: Rail, rails: Sequence[Rail]) -> list[Rail]:
+    """Return the taps a rail carries; one of another voltage is a fault told elsewhere."""
+    return [other for other in rails if other.tap_of == rail.name and other.voltage_v == rail.voltage_v]
 
 
 def _check_input(
@@ -111,6 +116,8 @@ def _check_input(
         *(buses if choices.max_buses > 0 else []),
         *(direct if choices.direct else []),
     ]
+    if choices.max_buses == 0 and not choices.direct:
+        return  # told with the choices
     span = f"{supply.low_v:g} to {supply.high_v:g} V"
     standing = [
         part for part in first if part.input_min_v <= supply.low_v and part.input_max_v >= supply.high_v

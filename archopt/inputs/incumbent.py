@@ -22,7 +22,8 @@ from archopt.inputs.resolved import Board, Catalogue, Control, Derating, InputSu
 
 def resolve_incumbent(
     draft: Draft, rails: Sequence[Rail], catalogue: Catalogue, board: Board | None,
-    supply: InputSupply | None, control: Control, derating: Derating, checker: ChoiceChecker, notebook: Notebook,
+    supply: InputSupply | None, control: Control, derating: Derating, checker: ChoiceChecker,
+    notebook: Notebook,
 ) -> dict[str, str] | None:  # fmt: skip
     """Return today's design with every choice given; gaps are filled plainly and noted as assumed."""
     if draft.incumbent is None:

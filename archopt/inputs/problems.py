@@ -155,8 +155,11 @@ def _note(errors: list[Any], model: type[BaseModel], locate: Locate, notebook: N
     """Note errors; on the second round a key that is missing was left out by us and is known already."""
     if not first:
         return
+    deep = {error["loc"][0] for error in errors if len(error["loc"]) > 1}
     for error in errors:
         loc = [str(item) for item in error["loc"]]
+        if len(loc) == 1 and loc[0] in deep:
+            continue  # follows from a fault inside it, which is told
         key = loc[0] if loc else ""
         file, place = locate(".".join(loc))
         notebook.problem(place, explain(error, key if len(loc) == 1 else loc[-1], model), file)

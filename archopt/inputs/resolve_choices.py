@@ -23,6 +23,8 @@ def allowed_families(draft: Draft, notebook: Notebook) -> tuple[str, ...]:
                 notebook.problem(f"choices.{key}", f"'{name}' is no family to allow or forbid; {hint}")
     allowed = notebook.take("choices.families", table.families, CHOOSABLE, "all")
     forbidden = table.forbidden_families or ()
+    if not set(allowed) <= set(CHOOSABLE):
+        allowed = CHOOSABLE  # so that nothing else is missed for want of parts
     return tuple(name for name in CHOOSABLE if name in allowed and name not in forbidden) + INFRASTRUCTURE
 
 
