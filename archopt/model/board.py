@@ -1,0 +1,280 @@
+"""The whole board in every state: constant-power rails, planes, bus converters and the shared input path.
+
+One fixed point for a batch of designs; the loss of a stage comes from a provider, either the physics itself
+or the tables made from it, so that both paths share every other line.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+
+from archopt.model.hardware import Hardware
+from archopt.model.parameters import FloatArray
+from archopt.model.problem import Problem
+from archopt.model.space import INPUT
+from archopt.model.stages import operate, ripple_a
+from archopt.model.states import JUMP, MIX, StateTable
+from archopt.physics import bus_converter
+from archopt.physics.transient import bus_dip_v
+
+FAST_PASSES = 3
+EXACT_PASSES = 60
+EXACT_TOLERANCE = 1e-13
+LEAST_STAGE_SHARE = 0.3  # of the set bus voltage: below it the plane has collapsed and a limit says so
+STEP_POWER_RATIO = 1.2  # stage input over output power where the worst mix has the rail off
+
+
+class StageLoss(Protocol):
+    """Returns the loss of every stage in every state, (P, S, R) W."""
+
+    def __call__(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
+        """Return losses at the given stage inputs (V) and stage output currents (A)."""
+        ...
+
+
+@dataclass
+class Solution:
+    """The solved board: P designs, S states, R rails, two buses.
+
+    stage_v, stage_in_w, stage_loss_w, current_a, pour_w (P, S, R); bus_v, bus_a, bus_w, converter_loss_w,
+    plane_w (P, S, 2); node_v (after the input path), input_a, input_w, loss_w, bias_in_w, bias_out_w,
+    supervisor_w, path_w, missing_w (power beyond what the path can deliver), deliverable_w (P, S);
+    dip_v, step_w (P, 2, B).
+    """
+
+    stage_v: FloatArray
+    stage_in_w: FloatArray
+    stage_loss_w: FloatArray
+    current_a: FloatArray
+    pour_w: FloatArray
+    bus_v: FloatArray
+    bus_a: FloatArray
+    bus_w: FloatArray
+    converter_loss_w: FloatArray
+    converter_degc: FloatArray
+    plane_w: FloatArray
+    node_v: FloatArray
+    input_a: FloatArray
+    input_w: FloatArray
+    loss_w: FloatArray
+    bias_in_w: FloatArray
+    bias_out_w: FloatArray
+    supervisor_w: FloatArray
+    path_w: FloatArray
+    missing_w: FloatArray
+    dip_v: FloatArray
+    step_w: FloatArray
+
+
+class DirectStages:
+    """Stage losses by the physics itself."""
+
+    def __init__(self, problem: Problem, states: StateTable) -> None:
+        self.problem = problem
+        self.states = states
+
+    def __call__(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
+        """Return losses by evaluating every stage."""
+        problem = self.problem
+        point = operate(
+            problem.stages,
+            np.broadcast_to(hardware.stage[:, None, :], stage_v.shape),
+            hardware.running,
+            stage_v,
+            problem.rails.voltage_v,
+            current_a,
+            self.states.ambient_degc[:, None],
+        )
+        return np.where(
+            self.states.off, 0.0, point.loss_w + bank_loss_w(problem, hardware, stage_v, current_a)
+        )
+
+
+def bank_loss_w(
+    problem: Problem, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray
+) -> FloatArray:
+    """Return the loss of the output banks in their series resistance, (P, S, R) W; phases add no cancelling."""
+    ripple = ripple_a(
+        problem.stages,
+        np.broadcast_to(hardware.stage[:, None, :], stage_v.shape),
+        stage_v,
+        problem.rails.voltage_v,
+        current_a / hardware.running,
+    )
+    return hardware.bank_esr_ohm[:, None, :] * hardware.running * ripple**2 / 12.0
+
+
+def children_current_a(problem: Problem, hardware: Hardware, stage_in_w: FloatArray) -> FloatArray:
+    """Return the current children draw from each parent rail, (P, S, R) A."""
+    extra = np.zeros_like(stage_in_w)
+    rows, rails = np.nonzero(hardware.parent >= 0)
+    for p, r in zip(rows, rails, strict=True):
+        j = hardware.parent[p, r]
+        extra[p, :, j] += stage_in_w[p, :, r] / problem.rails.voltage_v[j]
+    return extra
+
+
+def bias_power_w(problem: Problem, states: StateTable, hardware: Hardware) -> tuple[FloatArray, FloatArray]:
+    """Return what the bias supply delivers to gates and what it draws, (P, S) W."""
+    delivered = np.where(states.off, 0.0, hardware.running * hardware.bias_w[:, None, :]).sum(axis=2)
+    if not len(problem.biases.names):
+        return delivered, delivered
+    index = np.maximum(hardware.bias, 0)
+    drawn = problem.biases.no_load_w[index][:, None] + delivered / problem.biases.efficiency[index][:, None]
+    return delivered, np.where(hardware.bias[:, None] >= 0, drawn, 0.0)
+
+
+def worst_step_w(problem: Problem, hardware: Hardware, ratio: FloatArray) -> FloatArray:
+    """Return the largest coincident step of bus power in each band, (P, 2, B) W; ratio (P, B, R) in over out."""
+    rails = problem.rails
+    step_w = rails.step_a * rails.voltage_v * ratio
+    groups = int(rails.step_group.max()) + 1
+    out = np.zeros((ratio.shape[0], 2, ratio.shape[1]))
+    for bus in range(2):
+        here = step_w * hardware.on_bus[:, bus, None, :]
+        for group in range(groups):
+            out[:, bus] = np.maximum(out[:, bus], here[:, :, rails.step_group == group].sum(axis=2))
+    return out
+
+
+def solve(
+    problem: Problem, states: StateTable, hardware: Hardware, stage_loss: StageLoss, *, exact: bool
+) -> Solution:
+    """Solve the board for a batch of designs.
+
+    With ``exact`` the fixed point is iterated until nothing moves by more than 1e-13 relative, else a fixed
+    number of passes is made. Never raises on a collapsing design: ``missing_w`` and low voltages say so.
+    """
+    rails, converters, path = problem.rails, problem.converters, problem.path
+    off = states.off
+    base_a = np.broadcast_to(states.current_a, (len(hardware.stage), *states.current_a.shape))
+    has_parent = hardware.parent >= 0
+    with_children = bool(has_parent.any())
+    parent_v = rails.voltage_v[np.maximum(hardware.parent, 0)]
+    direct = hardware.feed == INPUT
+    node_v = np.broadcast_to(states.input_v, (len(hardware.stage), len(states.hours))).copy()
+    index = np.maximum(hardware.converter, 0)
+    has_converter = hardware.converter >= 0
+    loss_of = converters.loss.take(index[:, None, :])
+    on_bus = hardware.on_bus[:, None, :, :]
+    alive = (on_bus & ~off[None, :, None, :]).any(axis=3) & has_converter[:, None, :]
+    ratio = converters.ratio[index][:, None, :]
+    droop_ohm = converters.output_ohm[index][:, None, :] / hardware.units_running
+    set_v = hardware.set_v
+    bus_v = np.where(hardware.fixed_ratio[:, None, :], node_v[..., None] * ratio, set_v)
+    supervisor_w = np.where(
+        hardware.supervisor >= 0, problem.supervisors.power_w[np.maximum(hardware.supervisor, 0)], 0.0
+    ) if len(problem.supervisors.names) else np.zeros(len(hardware.stage))  # fmt: skip
+    bias_out, bias_in = bias_power_w(problem, states, hardware)
+    bias_bus = np.where(hardware.bias_on_bus[:, None], bias_in, 0.0)
+    bias_node = bias_in - bias_bus
+    dip_v = np.zeros(hardware.band_v.shape)
+    step_w = np.zeros(hardware.band_v.shape)
+    jump_index, jump_band = states.of_kind(JUMP), states.band[states.of_kind(JUMP)]
+    current = base_a
+    drop = np.zeros((*node_v.shape, len(rails.names)))
+    previous = np.full_like(node_v, np.inf)
+    passes = EXACT_PASSES if exact else FAST_PASSES
+    for turn in range(passes):
+        feed_v = np.where(on_bus[:, :, 0], bus_v[..., 0:1], np.where(on_bus[:, :, 1], bus_v[..., 1:2], 0.0))
+        stage_v = np.maximum(feed_v - drop, LEAST_STAGE_SHARE * feed_v)
+        stage_v = np.where(direct[:, None, :], node_v[..., None], stage_v)
+        stage_v = np.maximum(np.where(has_parent[:, None, :], parent_v[:, None, :], stage_v), 1e-3)
+        stage_loss_w = stage_loss(hardware, stage_v, current)
+        pour_w = current**2 * hardware.pour_ohm[:, None, :]
+        delivered = current * rails.voltage_v + np.where(rails.remote_sense, pour_w, 0.0)
+        stage_in = delivered + stage_loss_w
+        if with_children and (turn == 0 or exact):
+            current = base_a + children_current_a(problem, hardware, stage_in)
+            stage_loss_w = stage_loss(hardware, stage_v, current)
+            pour_w = current**2 * hardware.pour_ohm[:, None, :]
+            delivered = current * rails.voltage_v + np.where(rails.remote_sense, pour_w, 0.0)
+            stage_in = delivered + stage_loss_w
+        if turn == 0:
+            mix = states.of_kind(MIX)[0::2]
+            output_w = current[:, mix] * rails.voltage_v
+            in_over_out = np.where(
+                output_w > 0, stage_in[:, mix] / np.maximum(output_w, 1e-12), STEP_POWER_RATIO
+            )
+            step_w = worst_step_w(problem, hardware, np.minimum(in_over_out, 3.0))
+            band_volts = np.where(
+                hardware.fixed_ratio[..., None], (ratio[:, 0] * problem.study.supply.low_v)[..., None],
+                hardware.band_v,
+            )  # fmt: skip
+            dip_v = bus_dip_v(
+                step_w,
+                band_volts,
+                converters.bandwidth_rad_s[index][..., None],
+                converters.delay_s[index][..., None],
+                hardware.bulk_f[..., None],
+                hardware.bulk_esr_ohm[..., None],
+            )
+            dip_v = np.where(has_converter[..., None], dip_v, 0.0)
+        rail_a = stage_in / stage_v
+        on_a = rail_a[:, :, None, :] * on_bus
+        fresh_drop = np.zeros_like(drop)
+        plane_w = np.empty((*node_v.shape, 2))
+        for bus in range(2):
+            part = np.einsum("psq,rq->psr", on_a[:, :, bus], problem.bus_squares)
+            part = part * hardware.plane_ohm[:, bus, None, None] * on_bus[:, :, bus]
+            plane_w[..., bus] = (part * on_a[:, :, bus]).sum(axis=2)
+            fresh_drop += part
+        drop = fresh_drop
+        bias_a = np.where(alive[..., 0], bias_bus / np.maximum(bus_v[..., 0], 1e-3), 0.0)
+        bus_a = on_a.sum(axis=3)
+        bus_a[..., 0] += bias_a
+        bus_w = (stage_in[:, :, None, :] * on_bus).sum(axis=3) + plane_w
+        bus_w[..., 0] += np.where(alive[..., 0], bias_bus, 0.0)
+        per_unit = bus_a / hardware.units_running
+        converter = bus_converter.losses(
+            loss_of, node_v[..., None], np.maximum(bus_v, 1e-3), per_unit, states.ambient_degc[:, None]
+        )
+        converter_loss = np.where(alive, converter.total_w * hardware.units_running, 0.0)
+        converter_in = np.where(alive, bus_w + converter_loss, 0.0)
+        node_w = converter_in.sum(axis=2) + (stage_in * direct[:, None, :]).sum(axis=2)
+        node_w += bias_node + supervisor_w[:, None]
+        most = states.input_v**2 / (4.0 * max(path.resistance_ohm, 1e-12))
+        missing = np.maximum(node_w - most, 0.0)
+        root = np.sqrt(np.maximum(states.input_v**2 - 4.0 * path.resistance_ohm * node_w, 0.0))
+        node_v = 0.5 * (states.input_v + root)
+        input_a = (node_w - missing) / node_v
+        moving = np.where(
+            hardware.fixed_ratio[:, None, :], node_v[..., None] * ratio - droop_ohm * bus_a, set_v
+        )
+        moving[:, jump_index] -= dip_v.transpose(0, 2, 1)[:, jump_band]
+        bus_v = np.maximum(moving, LEAST_STAGE_SHARE * np.where(np.isfinite(set_v), set_v, 1.0))
+        input_w = node_w + path.resistance_ohm * input_a**2 + path.power_w
+        if exact:
+            change = np.abs(input_w - previous) / np.maximum(np.abs(input_w), 1e-12)
+            previous = input_w
+            if turn > 2 and float(change.max(initial=0.0)) <= EXACT_TOLERANCE:
+                break
+    unsensed = np.where(rails.remote_sense, 0.0, pour_w).sum(axis=2)
+    loss_w = input_w - (states.useful_w - unsensed - states.tap_w)
+    return Solution(
+        stage_v=stage_v,
+        stage_in_w=stage_in,
+        stage_loss_w=stage_loss_w,
+        current_a=current,
+        pour_w=pour_w,
+        bus_v=bus_v,
+        bus_a=bus_a,
+        bus_w=bus_w,
+        converter_loss_w=converter_loss,
+        converter_degc=np.asarray(converter.temperature_degc),
+        plane_w=plane_w,
+        node_v=node_v,
+        input_a=input_a,
+        input_w=input_w,
+        loss_w=loss_w,
+        bias_in_w=bias_in,
+        bias_out_w=bias_out,
+        supervisor_w=np.broadcast_to(supervisor_w[:, None], node_v.shape),
+        path_w=path.resistance_ohm * input_a**2 + path.power_w,
+        missing_w=missing,
+        dip_v=dip_v,
+        step_w=step_w,
+    )

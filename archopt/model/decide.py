@@ -1,0 +1,363 @@
+"""Decisions stored with a design: running converters and phases of each band, and the bus voltage schedule.
+
+The schedule is a non-decreasing function of the band on the study's grid, within the adaptive limits, chosen
+to waste least over the year among the voltages legal for the band. It reads tables only, each bus alone and
+at its undropped input; it is never chosen again by the evaluation.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from archopt.model.canonical import canonical
+from archopt.model.hardware import Hardware, unpack
+from archopt.model.options import Options, option_index
+from archopt.model.parameters import BoolArray, FloatArray, IntArray
+from archopt.model.problem import Problem
+from archopt.model.space import FIXED, FOLLOW, TWO_LEVELS, Designs
+from archopt.model.states import ENERGY, StateTable
+from archopt.physics import bus_converter
+from archopt.physics.stability import least_capacitance_f, regulated_source_h
+from archopt.physics.transient import bus_dip_v
+
+ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
+SAFETY_V = 0.01
+
+
+@dataclass(frozen=True)
+class BandLoad:
+    """What each bus carries in each band over the grid: (P, 2, B, G)."""
+
+    energy_kwh: FloatArray
+    mix_w: FloatArray
+    jump_w: FloatArray
+    legal: BoolArray
+
+
+def band_hours(states: StateTable) -> FloatArray:
+    """Return the hours a year in each band, (B,)."""
+    hours = np.zeros(states.bands)
+    energy = states.of_kind(ENERGY)
+    np.add.at(hours, states.band[energy], states.hours[energy])
+    return hours
+
+
+def rail_windows(
+    problem: Problem, options: Options, designs: Designs, option: IntArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return (P, R, B) least steady, least after-jump (with droop) and highest stage input, V."""
+    rows = options.rows
+    row = options.row[option]  # (P, R, B)
+    band = np.arange(row.shape[2])
+    bank, count = designs.rail("bank")[..., None], designs.rail("bank_count")[..., None]
+    percent = rows.droop_percent[row, bank, count, band]  # (P, R, B, nodes)
+    nodes = rows.droop_nodes_v[designs.rail("stage")][:, :, None, :]
+    return (
+        rows.need_v[row, band],
+        np.maximum(rows.jump_v[row, band], crossing(nodes, percent, 100.0)),
+        rows.high_v[row, band],
+    )
+
+
+def crossing(nodes_v: FloatArray, percent: FloatArray, bound: float) -> FloatArray:
+    """Return the least voltage from which a falling curve (..., nodes) stays at or below the bound; inf if never."""
+    above = percent > bound
+    count = above.shape[-1]
+    last = count - 1 - np.argmax(above[..., ::-1], axis=-1)  # last node above
+    any_above = above.any(axis=-1)
+    upper = np.minimum(last + 1, count - 1)
+    high = np.take_along_axis(percent, upper[..., None], -1)[..., 0].astype(np.float64)
+    low = np.take_along_axis(percent, last[..., None], -1)[..., 0].astype(np.float64)
+    shape = (*percent.shape[:-1], count)
+    spread = np.broadcast_to(nodes_v, shape)
+    v_high = np.take_along_axis(spread, upper[..., None], -1)[..., 0]
+    v_low = np.take_along_axis(spread, last[..., None], -1)[..., 0]
+    share = (low - bound) / np.maximum(low - high, 1e-9)
+    found = np.where(last >= count - 1, np.inf, v_low + share * (v_high - v_low))
+    return np.where(any_above, found, 0.0)
+
+
+def bus_sums(
+    options: Options, option: IntArray, hardware: Hardware
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return energy, mix and jump power of each bus's rails, (P, 2, B, G)."""
+    rows = options.rows
+    row = options.row[option]
+    shape = (len(row), 2, row.shape[2], rows.energy_kwh.shape[2])
+    sums = tuple(np.zeros(shape) for _ in range(3))
+    band = np.arange(row.shape[2])
+    for r in range(row.shape[1]):
+        for bus in range(2):
+            here = np.flatnonzero(hardware.on_bus[:, bus, r])
+            if not len(here):
+                continue
+            index = row[here, r]
+            for target, source in zip(sums, (rows.energy_kwh, rows.mix_w, rows.jump_w), strict=True):
+                target[here, bus] += source[index, band]
+    return sums
+
+
+def legal_voltages(
+    problem: Problem, designs: Designs, option: IntArray, options: Options, hardware: Hardware,
+    mix_w: FloatArray, jump_w: FloatArray, dip_v: FloatArray,
+) -> BoolArray:  # fmt: skip
+    """Return where a bus voltage is legal for a band, (P, 2, B, G)."""
+    converters, study = problem.converters, problem.study
+    grid = problem.grid_v
+    index = np.maximum(hardware.converter, 0)[..., None, None]
+    units = hardware.units_band[..., None]
+    spare = np.maximum(units - study.derating.spare_converters, 0.5)
+    legal = (grid >= converters.output_min_v[index] - 1e-9) & (grid <= converters.output_max_v[index] + 1e-9)
+    legal = legal & (mix_w <= spare * converters.limit_w[index])
+    legal &= mix_w / grid <= spare * converters.limit_a[index]
+    dipped = np.maximum(grid - dip_v, 0.1)
+    legal &= dip_v <= study.control.bus_dip_percent * 0.01 * grid
+    moving = (designs.bus("control") != FIXED)[..., None, None]
+    charge = np.where(moving, hardware.bulk_nominal_f[..., None, None] * converters.slew_v_per_s[index], 0.0)
+    short = np.maximum(converters.overload_a[index], converters.limit_a[index])
+    legal &= jump_w / dipped + charge <= units * short
+    ohm = np.maximum(converters.output_ohm[index] / units, 1e-6)
+    henry = regulated_source_h(ohm, converters.bandwidth_rad_s[index] / (2.0 * np.pi))
+    least = least_capacitance_f(ohm, henry, jump_w, dipped)
+    legal &= hardware.bulk_f[..., None, None] >= study.control.stability_margin * least
+    need, jump, high = rail_windows(problem, options, designs, option)
+    middle = len(grid) // 2
+    on = hardware.on_bus
+    rail_w = options.rows.jump_w[options.row[option], np.arange(need.shape[2]), middle]  # (P, R, B)
+    for bus in range(2):
+        here = np.flatnonzero(on[:, bus].any(axis=1))
+        if not len(here):
+            continue
+        on_here = on[here, bus]
+        # volts times drop: the drop of a constant power falls with the bus voltage
+        drop_v2 = np.einsum("pqb,rq->prb", rail_w[here] * on_here[..., None], problem.bus_squares)
+        drop_v2 *= hardware.plane_ohm[here, bus, None, None]
+        for r in np.flatnonzero(on_here.any(axis=0)):
+            drop = drop_v2[:, r, :, None] / grid
+            at_stage = grid - drop - SAFETY_V
+            ok = (at_stage >= need[here, r, :, None]) & (grid <= high[here, r, :, None])
+            ok &= at_stage - dip_v[here, bus] >= jump[here, r, :, None]
+            legal[here, bus] &= ok | ~on_here[:, r, None, None]
+    return legal
+
+
+def running_units(
+    problem: Problem, states: StateTable, designs: Designs, hardware: Hardware, energy_kwh: FloatArray,
+    mix_w: FloatArray, jump_w: FloatArray,
+) -> IntArray:  # fmt: skip
+    """Return the converters running in each band, (P, 2, B): least loss that carries mix and jump."""
+    converters = problem.converters
+    index = np.maximum(hardware.converter, 0)
+    units = designs.bus("count")
+    nominal = designs.bus("nominal_v")
+    volts = problem.grid_v[nominal][..., None]
+    at = nominal[..., None, None]
+    mean_w = np.take_along_axis(energy_kwh, np.broadcast_to(at, (*energy_kwh.shape[:3], 1)), 3)[..., 0]
+    hours = np.maximum(band_hours(states), 1e-6)
+    mean_w = mean_w * 1e3 / hours
+    mix = np.take_along_axis(mix_w, np.broadcast_to(at, (*mix_w.shape[:3], 1)), 3)[..., 0]
+    jump = np.take_along_axis(jump_w, np.broadcast_to(at, (*jump_w.shape[:3], 1)), 3)[..., 0]
+    input_v = np.full(1, problem.study.supply.nominal_v)
+    best = np.broadcast_to(units[..., None], mean_w.shape).copy()
+    best_w = np.full(mean_w.shape, np.inf)
+    spare = problem.study.derating.spare_converters
+    loss_of = converters.loss.take(index[..., None])
+    ambient = problem.study.supply.inlet_degc + problem.study.supply.local_rise_k
+    for running in range(int(units.max(initial=1)), 0, -1):
+        carry = max(running - spare, 0.5)
+        fits = (mix <= carry * converters.limit_w[index][..., None]) & (
+            mix / volts <= carry * converters.limit_a[index][..., None]
+        )
+        fits &= jump / (0.9 * volts) <= running * converters.overload_a[index][..., None]
+        can = (running == units[..., None]) | (
+            fits & (running < units[..., None]) & (designs.bus("fewest") == 0)[..., None]
+        )
+        loss = bus_converter.losses(loss_of, input_v, volts, mean_w / volts / running, np.asarray(ambient))
+        total = np.where(can, loss.total_w * running, np.inf)
+        better = total < best_w
+        best = np.where(better, running, best)
+        best_w = np.where(better, total, best_w)
+    return best
+
+
+def converter_energy(
+    problem: Problem, states: StateTable, hardware: Hardware, energy_kwh: FloatArray
+) -> FloatArray:
+    """Return the converters' own loss over each band on the grid, (P, 2, B, G) kWh, at the band's mean power."""
+    hours = np.maximum(band_hours(states), 1e-6)[:, None]
+    units = hardware.units_band[..., None]
+    current = energy_kwh * 1e3 / hours / problem.grid_v / units
+    index = np.maximum(hardware.converter, 0)[..., None, None]
+    supply = problem.study.supply
+    ambient = np.asarray(supply.inlet_degc + supply.local_rise_k)
+    mean_v = np.asarray(sum(level.voltage_v * level.share for level in supply.levels) or supply.nominal_v)
+    loss = bus_converter.losses(problem.converters.loss.take(index), mean_v, problem.grid_v, current, ambient)
+    return loss.total_w * units * hours * 1e-3
+
+
+def choose_schedule(
+    energy_kwh: FloatArray, legal: BoolArray, lower: IntArray, upper: IntArray, nominal: IntArray,
+    control: IntArray,
+) -> IntArray:  # fmt: skip
+    """Return the schedule, (M, B) grid indices, of M buses from (M, B, G) energies and legal voltages."""
+    grid = np.arange(energy_kwh.shape[2])
+    price = energy_kwh + np.where(legal, 0.0, ILLEGAL_KWH)
+    inside = (grid >= lower[:, None]) & (grid <= upper[:, None])
+    held = np.where(inside[:, None, :], price, np.inf)
+    follow = climb(held)
+    return np.where(
+        (control == FIXED)[:, None],
+        nominal[:, None],
+        np.where((control == TWO_LEVELS)[:, None], two_levels(price, lower, upper), follow),
+    )
+
+
+def climb(price: FloatArray) -> IntArray:
+    """Return the cheapest non-decreasing path through (M, B, G), first on ties, (M, B)."""
+    count, bands, width = price.shape
+    total = price[:, 0].copy()
+    came = np.zeros((count, bands, width), dtype=np.int64)
+    grid = np.arange(width)
+    for band in range(1, bands):
+        least = np.minimum.accumulate(total, axis=1)
+        fresh = np.concatenate([np.ones((count, 1), dtype=bool), total[:, 1:] < least[:, :-1]], axis=1)
+        came[:, band] = np.maximum.accumulate(np.where(fresh, grid, 0), axis=1)
+        total = price[:, band] + least
+    path = np.zeros((count, bands), dtype=np.int64)
+    path[:, -1] = total.argmin(axis=1)
+    for band in range(bands - 1, 0, -1):
+        path[:, band - 1] = came[np.arange(count), band, path[:, band]]
+    return path
+
+
+def two_levels(price: FloatArray, lower: IntArray, upper: IntArray) -> IntArray:
+    """Return the cheapest schedule of lower limit below one threshold and upper limit above, (M, B)."""
+    rows = np.arange(len(price))
+    low = price[rows, :, lower]
+    high = price[rows, :, upper]
+    bands = price.shape[1]
+    below = np.concatenate([np.zeros((len(price), 1)), np.cumsum(low, axis=1)], axis=1)
+    above = np.concatenate([np.zeros((len(price), 1)), np.cumsum(high[:, ::-1], axis=1)], axis=1)[:, ::-1]
+    threshold = (below + above).argmin(axis=1)
+    return np.where(np.arange(bands) < threshold[:, None], lower[:, None], upper[:, None])
+
+
+def raise_for_children(
+    problem: Problem, options: Options, designs: Designs, option: IntArray, running: IntArray
+) -> IntArray:
+    """Return running phases raised so that parents carry their children too, (P, R, B)."""
+    feed = designs.rail("feed")
+    p, r = np.nonzero(feed >= 3)
+    if not len(p):
+        return running
+    parent = feed[p, r] - 3
+    power = options.rows.mix_w[options.row[option[p, r]], np.arange(running.shape[2]), -1]
+    extra = np.zeros(running.shape)
+    np.add.at(extra, (p, parent), power / problem.rails.voltage_v[parent][:, None])
+    stage = designs.rail("stage")
+    total = problem.states.mix_a.T + extra
+    needed = np.ceil(total / problem.stages.phase_limit_a[stage][..., None] - 1e-9).astype(np.int64)
+    raised = np.maximum(running, np.minimum(needed, designs.rail("phases")[..., None]))
+    return np.where(extra > 0, raised, running)
+
+
+def decide(problem: Problem, states: StateTable, options: Options, designs: Designs) -> Designs:
+    """Return the designs in canonical form with running counts and schedule decided."""
+    designs = canonical(problem, designs)
+    layout = designs.layout
+    option = option_index(
+        options, designs.rail("stage"), designs.rail("phases"), designs.rail("fewest"), problem.phases_high
+    )
+    running = raise_for_children(problem, options, designs, option, options.run[option])
+    designs.rows[:, layout.running_phases] = running.reshape(len(designs), -1)
+    hardware = unpack(problem, designs, states)
+    energy, mix_w, jump_w = bus_sums(options, option, hardware)
+    units = running_units(problem, states, designs, hardware, energy, mix_w, jump_w)
+    units = np.where(hardware.converter[..., None] >= 0, units, 0)
+    designs.rows[:, layout.running_converters] = units.reshape(len(designs), -1)
+    hardware = unpack(problem, designs, states)
+    step_w = step_power(problem, designs, mix_w, hardware)
+    index = np.maximum(hardware.converter, 0)[..., None, None]
+    dip = bus_dip_v(
+        step_w,
+        problem.grid_v,
+        problem.converters.bandwidth_rad_s[index],
+        problem.converters.delay_s[index],
+        hardware.bulk_f[..., None, None],
+        hardware.bulk_esr_ohm[..., None, None],
+    )
+    legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip)
+    total = energy + converter_energy(problem, states, hardware, energy)
+    count, bands, width = len(designs), states.bands, len(problem.grid_v)
+    flat = lambda name: designs.bus(name).reshape(-1)  # noqa: E731
+    volts = choose_schedule(
+        total.reshape(2 * count, bands, width), legal.reshape(2 * count, bands, width), flat("lower_v"),
+        flat("upper_v"), flat("nominal_v"), flat("control"),
+    ).reshape(count, 2, bands)  # fmt: skip
+    idle = (hardware.converter < 0) | hardware.fixed_ratio
+    volts = np.where(idle[..., None], 0, volts)
+    designs.rows[:, layout.volts] = volts.reshape(count, -1)
+    snap_limits(problem, designs, volts, idle)
+    return designs
+
+
+def step_power(problem: Problem, designs: Designs, mix_w: FloatArray, hardware: Hardware) -> FloatArray:
+    """Return the largest coincident step of bus power, (P, 2, B, 1) W, at the mix's mean in-over-out ratio."""
+    rails = problem.rails
+    volts_amps = rails.voltage_v * problem.states.mix_a  # (B, R)
+    output = np.einsum("pkr,br->pkb", hardware.on_bus.astype(np.float64), volts_amps)
+    middle = mix_w[..., mix_w.shape[3] // 2]
+    ratio = np.where(output > 0, middle / np.maximum(output, 1e-9), 1.2)
+    step = rails.step_a * rails.voltage_v
+    groups = int(rails.step_group.max()) + 1
+    largest = np.zeros(hardware.on_bus.shape[:2])
+    for group in range(groups):
+        here = np.where(rails.step_group == group, step, 0.0)
+        largest = np.maximum(largest, (hardware.on_bus * here).sum(axis=2))
+    return (largest[..., None] * np.clip(ratio, 1.0, 3.0))[..., None]
+
+
+def snap_limits(problem: Problem, designs: Designs, volts: IntArray, idle: BoolArray) -> None:
+    """Snap limits the schedule never reaches to the used ones; a bus that never moves is a fixed one."""
+    layout = designs.layout
+    allowed_control = [problem.space.allowed[layout.bus("control").start + bus] for bus in range(2)]
+    control, nominal = designs.bus("control"), designs.bus("nominal_v")
+    low, high = volts.min(axis=2), volts.max(axis=2)
+    for bus in range(2):
+        still = (low[:, bus] == high[:, bus]) & (control[:, bus] != FIXED) & ~idle[:, bus]
+        if FIXED in allowed_control[bus]:
+            nominal_ok = np.isin(low[:, bus], problem.space.allowed[layout.bus("nominal_v").start + bus])
+            still &= nominal_ok
+            control[still, bus] = FIXED
+            nominal[still, bus] = low[still, bus]
+    fixed = (control == FIXED) & ~idle
+    follow = (control == FOLLOW) & ~idle
+    lower, upper = designs.bus("lower_v"), designs.bus("upper_v")
+    lower[:] = np.where(follow, np.minimum(low, nominal), np.where(fixed, nominal, lower))
+    upper[:] = np.where(follow, np.maximum(high, nominal), np.where(fixed, nominal, upper))
+    resupervise(problem, designs)
+
+
+def resupervise(problem: Problem, designs: Designs) -> None:
+    """Drop a supervisor nobody needs and take the first that suffices where the chosen one does not."""
+    feed = designs.rail("feed")
+    used = np.stack([(feed == 1).any(axis=1), (feed == 2).any(axis=1)], axis=1)
+    level = np.where(used, designs.bus("control"), 0)
+    needed, buses = level.max(axis=1), (level > 0).sum(axis=1)
+    column = designs.layout.board("supervisor")
+    chosen = designs.rows[:, column]
+    table = problem.supervisors
+    if not len(table.names):
+        designs.rows[:, column] = 0
+        return
+    index = np.maximum(chosen - 1, 0)
+    fits = (chosen > 0) & (table.level[index] >= needed) & (table.buses[index] >= buses)
+    options = problem.space.allowed[column]
+    first = np.zeros(len(designs), dtype=np.int64)
+    for value in options[::-1]:
+        if value > 0:
+            good = (table.level[value - 1] >= needed) & (table.buses[value - 1] >= buses)
+            first = np.where(good, value, first)
+    designs.rows[:, column] = np.where(needed == 0, 0, np.where(fits, chosen, first))

@@ -1,0 +1,142 @@
+"""A batch of design rows unpacked into the physical quantities the board solution reads."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from archopt.model.parameters import FIXED_RATIO, BoolArray, FloatArray, IntArray
+from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
+from archopt.model.space import BUS_A, PARENT, Designs
+from archopt.model.states import FALLBACK, StateTable
+
+
+@dataclass(frozen=True)
+class Hardware:
+    """P designs over S states, R rails, two buses, B bands.
+
+    Rails (P, R): stage, phases, feed, parent (-1 none), bank_f, bank_esr_ohm, pour_ohm (loop), bank_count.
+    Buses (P, 2): converter (-1 none), units, plane_ohm (loop, a square), bulk_f (with stage inputs), esr_ohm,
+    bulk_nominal_f. on_bus (P, 2, R). running (P, S, R) phases, units_running (P, S, 2), set_v (P, S, 2) bus
+    voltage set point (nan for fixed ratio), band_v (P, 2, B). bias, bias_on_bus, supervisor, stack: (P,).
+    """
+
+    stage: IntArray
+    phases: IntArray
+    feed: IntArray
+    parent: IntArray
+    children: BoolArray
+    bank_f: FloatArray
+    bank_esr_ohm: FloatArray
+    pour_ohm: FloatArray
+    converter: IntArray
+    units: IntArray
+    plane_ohm: FloatArray
+    bulk_f: FloatArray
+    bulk_nominal_f: FloatArray
+    bulk_esr_ohm: FloatArray
+    on_bus: BoolArray
+    running: IntArray
+    running_band: IntArray
+    units_running: IntArray
+    units_band: IntArray
+    set_v: FloatArray
+    band_v: FloatArray
+    fixed_ratio: BoolArray
+    bias: IntArray
+    bias_on_bus: BoolArray
+    bias_w: FloatArray
+    supervisor: IntArray
+    stack: IntArray
+
+
+def bias_per_phase_w(problem: Problem) -> FloatArray:
+    """Return the gate power each stage draws from the separate bias, W a running phase, (N,)."""
+    buck = problem.stages.buck
+    charge = buck.high_side_gate_c + buck.low_side_gate_c
+    power = charge * buck.gate_v * buck.frequency_hz * (1.0 - buck.gate_from_input)
+    return np.where(problem.stages.bias_fed, power, 0.0)
+
+
+def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
+    """Return the physical quantities of a batch of canonical designs with their decisions."""
+    stage, phases, feed = designs.rail("stage"), designs.rail("phases"), designs.rail("feed")
+    parent = np.where(feed >= PARENT, feed - PARENT, -1)
+    rails = problem.rails
+    count = len(designs)
+    capacitors = problem.capacitors
+    stack = designs.board("stack")
+    sheet = problem.sheet_ohm[stack]
+    bank = designs.rail("bank")
+    pieces = problem.bank_counts[designs.rail("bank_count")]
+    effective = bank_effective_f(problem.study, capacitors, rails.voltage_v[:, None])  # (R, K)
+    esr = bank_esr_ohm(problem.study, capacitors)
+    rail_index = np.arange(len(rails.names))
+    on_bus = np.stack([feed == BUS_A, feed == BUS_A + 1], axis=1)
+    converter = designs.bus("converter") - 1
+    used = on_bus.any(axis=2)
+    bias = designs.board("bias") - 1
+    bias_on_bus = (designs.board("bias_feed") == 1) & (bias >= 0)
+    converter = np.where(used, converter, -1)
+    fixed_ratio = (converter >= 0) & (problem.converters.kind[np.maximum(converter, 0)] == FIXED_RATIO)
+    band_v = problem.grid_v[designs.volts]
+    nominal_v = problem.grid_v[designs.bus("nominal_v")]
+    fallback = states.kind == FALLBACK
+    set_v = np.where(
+        fallback[None, :, None], nominal_v[:, None, :], band_v.transpose(0, 2, 1)[:, states.band]
+    )
+    running_band = designs.running_phases
+    running = np.where(
+        fallback[None, :, None], phases[:, None, :], running_band.transpose(0, 2, 1)[:, states.band]
+    )
+    units_band = designs.running_converters
+    units = designs.bus("count")
+    units_running = np.where(
+        fallback[None, :, None], units[:, None, :], units_band.transpose(0, 2, 1)[:, states.band]
+    )
+    bulk = designs.bus("bulk")
+    bulk_pieces = problem.bank_counts[designs.bus("bulk_count")]
+    reference_v = np.where(fixed_ratio, bus_ratio_v(problem, converter), nominal_v)
+    bulk_piece_f = bank_effective_f(problem.study, capacitors, reference_v[..., None])
+    bulk_piece_f = np.take_along_axis(bulk_piece_f, bulk[..., None], axis=2)[..., 0]
+    stage_input_f = problem.stages.input_capacitance_f[stage] * phases
+    input_f = (on_bus * stage_input_f[:, None, :]).sum(axis=2)
+    children = np.zeros((count, len(rails.names)), dtype=bool)
+    where, which = np.nonzero(parent >= 0)
+    children[where, parent[where, which]] = True
+    nominal_f = capacitors.capacitance_f * (1.0 + capacitors.tolerance)
+    return Hardware(
+        stage=stage,
+        phases=phases,
+        feed=feed,
+        parent=parent,
+        children=children,
+        bank_f=effective[rail_index[None, :], bank] * pieces,
+        bank_esr_ohm=esr[bank] / pieces,
+        pour_ohm=2.0 * rails.squares * sheet[:, None] / np.maximum(designs.rail("pairs"), 1),
+        converter=converter,
+        units=units,
+        plane_ohm=2.0 * sheet[:, None] / np.maximum(designs.bus("pairs"), 1),
+        bulk_f=bulk_piece_f * bulk_pieces + input_f,
+        bulk_nominal_f=nominal_f[bulk] * bulk_pieces + input_f,
+        bulk_esr_ohm=esr[bulk] / bulk_pieces,
+        on_bus=on_bus,
+        running=np.maximum(running, 1),
+        running_band=np.maximum(running_band, 1),
+        units_running=np.maximum(units_running, 1),
+        units_band=np.maximum(units_band, 1),
+        set_v=set_v,
+        band_v=band_v,
+        fixed_ratio=fixed_ratio,
+        bias=bias,
+        bias_on_bus=bias_on_bus,
+        bias_w=bias_per_phase_w(problem)[stage],
+        supervisor=designs.board("supervisor") - 1,
+        stack=stack,
+    )
+
+
+def bus_ratio_v(problem: Problem, converter: IntArray) -> FloatArray:
+    """Return the unloaded bus voltage of fixed-ratio converters at the highest input, V."""
+    return problem.converters.ratio[np.maximum(converter, 0)] * problem.study.supply.high_v

@@ -1,0 +1,276 @@
+"""What each rail option does in each band: the sums and windows the schedule and the completion read.
+
+An option is a stage, its phase count and the fewest phases left running. Its running phases in a band are
+decided here once: the count that loses least over the band among those that carry the band's worst mix.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from archopt.model.parameters import BUCK, LINEAR, FloatArray, IntArray
+from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
+from archopt.model.space import BANK_COUNTS
+from archopt.model.stages import conduction_ratio, slew_down_a_per_s, slew_up_a_per_s
+from archopt.model.states import ENERGY, JUMP, MIX, StateTable
+from archopt.model.tables import NODES, LossTables, cubic_weights
+from archopt.physics.transient import rail_droop_v
+
+DROOP_NODES = 8
+IDLE_HOURS = 1e-6  # weight of a band's worst mix, so that a band without hours still has a preference
+
+
+@dataclass(frozen=True)
+class RowTables:
+    """Per table row (rail, stage, running count): kWh and W over the bus grid, and legal windows.
+
+    energy_kwh (rows, B, G) and input_kwh (rows, B): stage input energy a year; mix_w, jump_w (rows, B, G);
+    need_v, jump_v, high_v (rows, B): window of stage input voltage; droop_percent (rows, K, counts, B, nodes)
+    float32 over droop_v nodes (N, nodes) of the stage.
+    """
+
+    energy_kwh: FloatArray
+    input_kwh: FloatArray
+    mix_w: FloatArray
+    jump_w: FloatArray
+    need_v: FloatArray
+    jump_v: FloatArray
+    high_v: FloatArray
+    droop_percent: FloatArray
+    droop_nodes_v: FloatArray
+
+
+@dataclass(frozen=True)
+class Options:
+    """Options of all rails: O rows.
+
+    first (R, N): first option of a rail's stage, -1 where none; option = first + 2 (phases - 1) + fewest.
+    run (O, B) running phases; row (O, B) table row.
+    """
+
+    first: IntArray
+    rail: IntArray
+    stage: IntArray
+    phases: IntArray
+    fewest: IntArray
+    run: IntArray
+    row: IntArray
+    rows: RowTables
+
+
+def at_grid(tables: LossTables, values: FloatArray, volts: FloatArray) -> FloatArray:
+    """Interpolate (rows, B, K) nodes to grid voltages, (rows, B, G); held beyond the nodes."""
+    start = tables.start_v[tables.row_stage][:, None]
+    step = tables.step_v[tables.row_stage][:, None]
+    place = (volts[None, :] - start) / step
+    node = np.clip(np.floor(place).astype(np.int64), 1, NODES - 3)
+    t = np.clip(place - node, -1.0, 2.0)
+    weights = cubic_weights(t)
+    out = np.zeros((*values.shape[:2], len(volts)))
+    for shift, weight in zip((-1, 0, 1, 2), weights, strict=True):
+        out += np.take_along_axis(values, (node + shift)[:, None, :], axis=2) * weight[:, None, :]
+    return out
+
+
+def band_energy(problem: Problem, states: StateTable, tables: LossTables) -> tuple[FloatArray, FloatArray]:
+    """Return (rows, B, K) and, at each state's own input, (rows, B) stage input energy, kWh a year."""
+    bands = states.bands
+    rows = len(tables.row_stage)
+    energy = np.zeros((rows, bands, NODES))
+    direct = np.zeros((rows, bands))
+    voltage = problem.rails.voltage_v[tables.row_rail]
+    start, step = tables.start_v[tables.row_stage], tables.step_v[tables.row_stage]
+    mix_low = states.of_kind(MIX)[0::2]
+    weights = states.hours.copy()
+    weights[mix_low] = IDLE_HOURS
+    for s in np.concatenate([states.of_kind(ENERGY), mix_low]):
+        on = ~states.off[s][tables.row_rail]
+        useful = voltage * states.current_a[s][tables.row_rail]
+        scale = np.where(on, weights[s] * 1e-3, 0.0)
+        energy[:, states.band[s]] += scale[:, None] * (tables.loss_w[:, s] + useful[:, None])
+        place = np.clip((states.input_v[s] - start) / step, 0.0, NODES - 1.001)
+        node = place.astype(np.int64)
+        t = place - node
+        every = np.arange(rows)
+        loss = tables.loss_w[every, s, node] * (1.0 - t) + tables.loss_w[every, s, node + 1] * t
+        direct[:, states.band[s]] += scale * (loss + useful)
+    return energy, direct
+
+
+def windows(
+    problem: Problem, states: StateTable, tables: LossTables
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return the least steady, least after-jump and highest legal stage input of each row, (rows, B) V."""
+    stages, rails = problem.stages, problem.rails
+    stage = np.broadcast_to(tables.row_stage[:, None], (len(tables.row_stage), states.bands))
+    rail, running = tables.row_rail, tables.row_running[:, None]
+    output = rails.voltage_v[rail][:, None] * (
+        1.0 + np.where(rails.remote_sense, 0.5 * rails.drop_budget, 0.0)[rail][:, None]
+    )
+    limit = stages.phase_limit_a[stage]
+
+    def least(current_a: FloatArray) -> FloatArray:
+        per_phase = np.minimum(current_a.T[rail] / running, limit)
+        volts = np.broadcast_to(output * 1.5, stage.shape)
+        for _ in range(8):
+            duty = conduction_ratio(stages, stage, volts, output, per_phase)
+            volts = np.clip(volts * duty / stages.max_duty[stage], 0.2 * output, 1e3)
+        dropout = output + stages.linear.dropout_v[stage] * per_phase / stages.linear.rated_a[stage]
+        return np.where(stages.kind[stage] == LINEAR, dropout, volts)
+
+    need = np.maximum(least(states.mix_a), stages.input_min_v[stage])
+    jump = np.maximum(least(states.after_a), stages.input_min_v[stage])
+    high = stages.input_max_v[stage].copy()
+    light = states.mix_a.T[rail] / running
+    volts = high.copy()
+    least_duty = np.maximum(stages.min_on_s[stage] * stages.frequency_hz[stage], 1e-4)
+    for _ in range(8):
+        duty = conduction_ratio(stages, stage, volts, output, light)
+        volts = np.minimum(volts * duty / least_duty, 1e3)
+    high = np.where(stages.kind[stage] == BUCK, np.minimum(high, volts), high)
+    return need, jump, np.minimum(high, hottest(problem, states, tables))
+
+
+def hottest(problem: Problem, states: StateTable, tables: LossTables) -> FloatArray:
+    """Return the highest node voltage at which each row stays within its junction limit, (rows, B) V."""
+    stages = problem.stages
+    mix_high = states.of_kind(MIX)[1::2]
+    loss = tables.loss_w[:, mix_high] / tables.row_running[:, None, None]  # (rows, B, K)
+    stage = tables.row_stage
+    buck = stages.buck
+    bias = ((buck.high_side_gate_c + buck.low_side_gate_c) * buck.gate_v * buck.frequency_hz)[stage]
+    bias = np.where(stages.bias_fed[stage], bias, 0.0)[:, None, None]
+    ambient = states.ambient_degc[mix_high][:, None]
+    degc = ambient + stages.thermal_k_per_w[stage][:, None, None] * (loss + bias)
+    ok = degc <= problem.study.derating.junction_degc
+    volts = tables.start_v[stage][:, None] + tables.step_v[stage][:, None] * np.arange(NODES)
+    return np.where(ok, volts[:, None, :], 0.0).max(axis=2) + np.where(ok[:, :, -1], 1e3, 0.0)
+
+
+def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tuple[FloatArray, FloatArray]:
+    """Return the worse of droop and release in percent of budget for every row and bank, and its nodes.
+
+    (rows, K, counts, B, nodes) float32 and (N, nodes) V.
+    """
+    stages, rails = problem.stages, problem.rails
+    capacitors = problem.capacitors
+    counts = np.array(BANK_COUNTS)
+    top = tables.start_v + tables.step_v * (NODES - 1)
+    node = np.linspace(0.0, 1.0, DROOP_NODES)
+    nodes_v = tables.start_v[:, None] * (top / tables.start_v)[:, None] ** node
+    out = np.full(
+        (len(tables.row_stage), len(capacitors.names), len(counts), states.bands, DROOP_NODES),
+        1e6,
+        np.float32,
+    )
+    esr_piece = bank_esr_ohm(problem.study, capacitors)
+    for r in range(problem.layout.rails):
+        rows = np.flatnonzero(tables.row_rail == r)
+        banks = np.flatnonzero(problem.capacitor_ok[r])
+        if not len(rows):
+            continue
+        volts_r = float(rails.voltage_v[r])
+        piece_f = bank_effective_f(problem.study, capacitors, volts_r)[banks]
+        stage = tables.row_stage[rows]
+        running = tables.row_running[rows]
+        shape = (len(rows), len(banks), len(counts), states.bands, DROOP_NODES)
+        bank_f = (piece_f[:, None] * counts)[None, :, :, None, None]
+        esr = (esr_piece[banks][:, None] / counts)[None, :, :, None, None]
+
+        def spread(values: FloatArray) -> FloatArray:
+            return values[:, None, None, None, None]
+
+        mix = states.mix_a[:, r]
+        after = np.minimum(mix + rails.step_a[r], max(float(rails.max_a[r]), float(mix.max())))
+        carried = running * stages.phase_limit_a[stage]
+        deficit = np.maximum(after[None, :] - carried[:, None], 0.0)[:, None, None, :, None]
+        up = slew_up_a_per_s(stages, stage[:, None], running[:, None], nodes_v[stage], np.array(volts_r))
+        down = slew_down_a_per_s(stages, stage, running, np.array(volts_r))
+        loop = (spread(stages.bandwidth_rad_s[stage]), spread(stages.delay_s[stage]), bank_f, esr)
+        slew = rails.load_slew_a_per_s[r]
+        wakeup = spread(stages.wakeup_s[stage])
+        droop = rail_droop_v(rails.step_a[r], up[:, None, None, None, :], *loop, slew, deficit, wakeup)
+        release = rail_droop_v(rails.step_a[r], spread(down), *loop, slew)
+        worst = np.broadcast_to(np.maximum(droop, release), shape) * (100.0 / rails.budget_v[r])
+        effective = bank_f[0, :, :, 0, 0][None]
+        inside = (effective >= stages.loop_min_f[stage][:, None, None]) & (
+            effective <= stages.loop_max_f[stage][:, None, None]
+        )
+        worst = np.where(inside[..., None, None], worst, 1e6)
+        worst = np.where(states.mix_off[:, r][:, None], 0.0, worst)
+        out[rows[:, None], banks[None, :]] = worst
+    return out, nodes_v
+
+
+def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Options:
+    """Return every rail's options with their band sums and windows."""
+    energy, direct = band_energy(problem, states, tables)
+    mix_low, jump = states.of_kind(MIX)[0::2], states.of_kind(JUMP)
+    voltage = problem.rails.voltage_v[tables.row_rail]
+    useful_mix = (voltage[:, None] * states.mix_a.T[tables.row_rail])[..., None]
+    useful_jump = (voltage[:, None] * states.after_a.T[tables.row_rail])[..., None]
+    off_mix = states.mix_off.T[tables.row_rail][..., None]
+    need, jump_v, high = windows(problem, states, tables)
+    droop, nodes = droop_tables(problem, states, tables)
+    rows = RowTables(
+        energy_kwh=at_grid(tables, energy, problem.grid_v),
+        input_kwh=direct,
+        mix_w=np.where(off_mix, 0.0, at_grid(tables, tables.loss_w[:, mix_low] + useful_mix, problem.grid_v)),
+        jump_w=at_grid(tables, tables.loss_w[:, jump] + useful_jump, problem.grid_v),
+        need_v=need,
+        jump_v=jump_v,
+        high_v=high,
+        droop_percent=droop,
+        droop_nodes_v=nodes,
+    )
+    first = np.full(tables.base.shape, -1, dtype=np.int64)
+    columns: list[tuple[int, int, int, int]] = []
+    for r, s in zip(*np.nonzero(tables.base >= 0), strict=True):
+        first[r, s] = len(columns)
+        for phases in range(1, int(problem.phases_high[r, s]) + 1):
+            columns += [(int(r), int(s), phases, 0), (int(r), int(s), phases, 1)]
+    table = np.array(columns, dtype=np.int64).reshape(-1, 4)
+    rail, stage, phases, fewest = table.T
+    run = running_phases(problem, states, tables, energy, table)
+    return Options(
+        first=first,
+        rail=rail,
+        stage=stage,
+        phases=phases,
+        fewest=fewest,
+        run=run,
+        row=tables.base[rail, stage][:, None] + run - 1,
+        rows=rows,
+    )
+
+
+def running_phases(
+    problem: Problem, states: StateTable, tables: LossTables, energy: FloatArray, table: IntArray
+) -> IntArray:
+    """Return the running phases of each option in each band, (O, B): least energy that carries the mix."""
+    rail, stage, phases, fewest = table.T
+    mean = energy.mean(axis=2)  # (rows, B) over the stage's voltages
+    needed = np.ceil(states.mix_a.T[rail] / problem.stages.phase_limit_a[stage][:, None] - 1e-9)
+    needed = np.clip(needed, 1, phases[:, None]).astype(np.int64)
+    best = np.broadcast_to(phases[:, None], needed.shape).copy()
+    best_kwh = mean[tables.base[rail, stage] + phases - 1].copy()
+    for running in range(1, int(phases.max(initial=1))):
+        row = tables.base[rail, stage] + running - 1
+        can = (running >= needed) & (running < phases[:, None]) & (fewest == 0)[:, None]
+        value = mean[np.minimum(row, len(mean) - 1)]
+        better = can & (value < best_kwh)
+        best = np.where(better, running, best)
+        best_kwh = np.where(better, value, best_kwh)
+    off = states.mix_off.T[rail]
+    return np.where(off, phases[:, None], best)
+
+
+def option_index(
+    options: Options, stage: IntArray, phases: IntArray, fewest: IntArray, most: IntArray
+) -> IntArray:
+    """Return option rows of (P, R) choices; phases beyond the offer count as the most offered."""
+    rail = np.arange(stage.shape[1])
+    held = np.minimum(phases, most[rail, stage])
+    return np.maximum(options.first[rail, stage], 0) + 2 * (held - 1) + fewest

@@ -1,0 +1,208 @@
+"""One rail stage at an operating point, whatever its kind: the physics of each kind behind one call.
+
+Index, running count and operating point broadcast against each other; results have the broadcast shape.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray, StageTable
+from archopt.physics import buck, bus_converter, linear
+from archopt.physics.transient import buck_slew_a_per_s
+
+LINEAR_SLEW_A_PER_S = 1e12  # a linear regulator has no inductor: only its loop limits it
+
+
+@dataclass(frozen=True)
+class StagePoint:
+    """A whole stage (all running phases) at an operating point; arrays of one shape.
+
+    loss_w : what the stage input delivers beyond the output power, W
+    bias_w : power drawn from the separate gate bias, W
+    temperature_degc, gain : of one phase; a gain of 1 or more is thermal runaway
+    """
+
+    loss_w: FloatArray
+    bias_w: FloatArray
+    temperature_degc: FloatArray
+    gain: FloatArray
+
+
+def operate(
+    stages: StageTable,
+    index: IntArray,
+    running: NDArray[Any],
+    input_v: FloatArray,
+    output_v: FloatArray,
+    current_a: FloatArray,
+    ambient_degc: FloatArray,
+) -> StagePoint:
+    """Return losses of whole stages at their operating points.
+
+    Parameters
+    ----------
+    index : rows of ``stages``
+    running : phases running, at least 1
+    input_v, output_v, current_a, ambient_degc : stage input, stage output, whole current, local air
+    """
+    shape = np.broadcast_shapes(
+        *(np.shape(x) for x in (index, running, input_v, output_v, current_a, ambient_degc))
+    )
+    kinds = np.unique(stages.kind[index])
+    if len(kinds) == 1:
+        return operate_kind(
+            stages, int(kinds[0]), index, running, input_v, output_v, current_a, ambient_degc, shape
+        )
+    flat = [
+        np.broadcast_to(x, shape).ravel()
+        for x in (index, running, input_v, output_v, current_a, ambient_degc)
+    ]
+    out = [np.empty(flat[0].size) for _ in range(4)]
+    kind_of = stages.kind[flat[0]]
+    for kind in kinds:
+        pick = np.flatnonzero(kind_of == kind)
+        picked = [x[pick] for x in flat]
+        point = operate_kind(stages, int(kind), *picked, pick.shape)
+        for target, values in zip(
+            out, (point.loss_w, point.bias_w, point.temperature_degc, point.gain), strict=True
+        ):
+            target[pick] = values
+    return StagePoint(*(x.reshape(shape) for x in out))
+
+
+def operate_kind(
+    stages: StageTable,
+    kind: int,
+    index: IntArray,
+    running: NDArray[Any],
+    input_v: FloatArray,
+    output_v: FloatArray,
+    current_a: FloatArray,
+    ambient_degc: FloatArray,
+    shape: tuple[int, ...],
+) -> StagePoint:
+    """Return losses where every stage is of one kind."""
+    per_phase_a = current_a / running
+    bias: FloatArray = np.zeros(())
+    gain: FloatArray = np.zeros(())
+    if kind == BUCK:
+        result = buck.losses(stages.buck.take(index), input_v, output_v, per_phase_a, ambient_degc)
+        loss, temperature, gain, bias = (
+            result.total_w, result.temperature_degc, result.thermal_gain, result.bias_w,
+        )  # fmt: skip
+    elif kind == SINGLE:
+        unit = bus_converter.losses(stages.single.take(index), input_v, output_v, per_phase_a, ambient_degc)
+        loss, temperature, gain = unit.total_w, unit.temperature_degc, unit.thermal_gain
+    else:
+        series = linear.losses(stages.linear.take(index), input_v, output_v, per_phase_a, ambient_degc)
+        loss, temperature = series.total_w, series.temperature_degc
+    return StagePoint(
+        loss_w=np.broadcast_to(loss * running, shape),
+        bias_w=np.broadcast_to(bias * running, shape),
+        temperature_degc=np.broadcast_to(temperature, shape),
+        gain=np.broadcast_to(gain, shape),
+    )
+
+
+def mechanisms(
+    stages: StageTable,
+    index: int,
+    running: int,
+    input_v: float,
+    output_v: float,
+    current_a: float,
+    ambient_degc: float,
+) -> dict[str, float]:
+    """Return one stage's losses by mechanism, W, all running phases together."""
+    kind = int(stages.kind[index])
+    rows = np.array([index])
+    point = tuple(np.array([x]) for x in (input_v, output_v, current_a / running, ambient_degc))
+    result: Any
+    if kind == BUCK:
+        result = buck.losses(stages.buck.take(rows), *point)
+        names = buck.MECHANISMS
+    elif kind == SINGLE:
+        result = bus_converter.losses(stages.single.take(rows), *point)
+        names = bus_converter.MECHANISMS
+    else:
+        result = linear.losses(stages.linear.take(rows), *point)
+        names = linear.MECHANISMS
+    return {
+        name.removesuffix("_w").replace("_", " "): float(np.ravel(getattr(result, name))[0]) * running
+        for name in names
+    }
+
+
+def conduction_ratio(
+    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
+) -> FloatArray:
+    """Return the duty a stage needs, with its drops; 0 for a linear regulator (its headroom is separate)."""
+    kind = stages.kind[index]
+    duty = np.zeros(np.broadcast_shapes(kind.shape, np.shape(input_v), np.shape(per_phase_a)))
+    if np.any(kind == BUCK):
+        value = buck.duty(stages.buck.take(index), input_v, output_v, per_phase_a)
+        duty = np.where(kind == BUCK, value, duty)
+    if np.any(kind == SINGLE):
+        resistance = stages.single.resistance_ohm[index]
+        value = (output_v + per_phase_a * resistance) * stages.turns[index] / np.maximum(input_v, 1e-3)
+        duty = np.where(kind == SINGLE, value, duty)
+    return duty
+
+
+def headroom_v(
+    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, current_a: FloatArray
+) -> FloatArray:
+    """Return the headroom of linear regulators above their dropout, V; inf for other kinds."""
+    kind = stages.kind[index]
+    value = linear.headroom_v(stages.linear.take(index), input_v, output_v, current_a)
+    return np.where(kind == LINEAR, value, np.inf)
+
+
+def slew_up_a_per_s(
+    stages: StageTable, index: IntArray, running: NDArray[Any], input_v: FloatArray, output_v: FloatArray
+) -> FloatArray:
+    """Return how fast the running phases can raise their current, A/s."""
+    inductance = stages.inductance_h[index]
+    free = np.isnan(inductance)
+    value = buck_slew_a_per_s(
+        running,
+        stages.max_duty[index],
+        input_v / stages.turns[index],
+        output_v,
+        np.where(free, 1.0, inductance),
+    )
+    return np.where(free, LINEAR_SLEW_A_PER_S, value)
+
+
+def slew_down_a_per_s(
+    stages: StageTable, index: IntArray, running: NDArray[Any], output_v: FloatArray
+) -> FloatArray:
+    """Return how fast the running phases can lower their current, A/s."""
+    inductance = stages.inductance_h[index]
+    free = np.isnan(inductance)
+    return np.where(free, LINEAR_SLEW_A_PER_S, running * output_v / np.where(free, 1.0, inductance))
+
+
+def ripple_a(
+    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
+) -> FloatArray:
+    """Return the peak-to-peak output ripple current of one phase, A."""
+    kind = stages.kind[index]
+    out = np.zeros(np.broadcast_shapes(kind.shape, np.shape(input_v), np.shape(per_phase_a)))
+    if np.any(kind == BUCK):
+        value = buck.ripple_a(stages.buck.take(index), input_v, output_v, per_phase_a)
+        out = np.where(kind == BUCK, value, out)
+    if np.any(kind == SINGLE):
+        duty = np.clip(output_v * stages.turns[index] / np.maximum(input_v, 1e-3), 0.0, 1.0)
+        single = (
+            output_v
+            * (1.0 - duty)
+            / (np.nan_to_num(stages.inductance_h[index], nan=1.0) * stages.frequency_hz[index])
+        )
+        out = np.where(kind == SINGLE, single, out)
+    return out

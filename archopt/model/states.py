@@ -1,0 +1,398 @@
+"""Operating states: bands of load power, clusters of moments, and the zero-hour states limits are checked in."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from archopt.inputs.resolved import LoadTable, Rail, ResolvedStudy
+from archopt.model.parameters import BoolArray, FloatArray, IntArray
+
+ENERGY, MIX, JUMP, FALLBACK, PRINT = 0, 1, 2, 3, 4
+KIND_NAMES = ("energy", "worst mix", "after jump", "rated at nominal", "shown load")
+MAX_BANDS = 8
+MAX_CLUSTERS = 24
+CLUSTER_TOLERANCE = 0.005
+SHOWN_SHARES = (0.3, 0.5, 1.0)
+
+
+@dataclass(frozen=True)
+class StateTable:
+    """S states of R rails in B bands.
+
+    hours (S,), input_v (S,), ambient_degc (S,) local air, current_a (S, R), off (S, R), band (S,), kind (S,),
+    tap_w (S,) loss in taps, useful_w (S,) rail voltage times current with taps, edges_w (B + 1,) load power,
+    mix_a (B, R) and after_a (B, R) worst mix and currents after a jump (both grown), rated_a (R,) grown,
+    mix_off (B, R), transitions_per_year (B, B), cluster_error : share of the plain design's annual loss.
+    """
+
+    name: tuple[str, ...]
+    kind: IntArray
+    hours: FloatArray
+    input_v: FloatArray
+    ambient_degc: FloatArray
+    current_a: FloatArray
+    off: BoolArray
+    band: IntArray
+    tap_w: FloatArray
+    useful_w: FloatArray
+    edges_w: FloatArray
+    mix_a: FloatArray
+    after_a: FloatArray
+    mix_off: BoolArray
+    rated_a: FloatArray
+    transitions_per_year: FloatArray
+    cluster_error: float
+
+    def of_kind(self, kind: int) -> IntArray:
+        """Return the indices of the states of one kind, in order."""
+        return np.flatnonzero(self.kind == kind)
+
+    @property
+    def bands(self) -> int:
+        """Number of bands."""
+        return len(self.edges_w) - 1
+
+
+@dataclass(frozen=True)
+class Moments:
+    """The load table folded onto the rails that have stages of their own: M moments, R rails."""
+
+    hours: FloatArray
+    current_a: FloatArray
+    off: BoolArray
+    input_v: FloatArray
+    inlet_degc: FloatArray
+    tap_w: FloatArray
+    useful_w: FloatArray
+    label: tuple[str, ...]
+
+
+def own_rails(study: ResolvedStudy) -> tuple[Rail, ...]:
+    """Return the rails with a stage of their own (taps are carried by the rail they tap)."""
+    return tuple(rail for rail in study.rails if not rail.tap_of)
+
+
+def fold_taps(study: ResolvedStudy, current_a: FloatArray, off: BoolArray) -> tuple[FloatArray, FloatArray]:
+    """Return currents of the rails with stages, taps added to what they tap, and the loss in taps, W.
+
+    ``current_a`` and ``off`` are (M, all rails); results (M, R) and (M,).
+    """
+    rails = own_rails(study)
+    place = {rail.name: k for k, rail in enumerate(rails)}
+    all_place = {rail.name: k for k, rail in enumerate(study.rails)}
+    amps = np.where(off, 0.0, current_a)
+    out = np.zeros((len(amps), len(rails)))
+    tap_w = np.zeros(len(amps))
+    for rail in study.rails:
+        column = amps[:, all_place[rail.name]]
+        if rail.tap_of:
+            out[:, place[rail.tap_of]] += column
+            tap_w += column**2 * rail.tap_mohm * 1e-3
+        else:
+            out[:, place[rail.name]] += column
+    return out, tap_w
+
+
+def fold_off(study: ResolvedStudy, off: BoolArray) -> BoolArray:
+    """Return which stages are off: a rail is off when it and all its taps are."""
+    rails = own_rails(study)
+    out = np.ones((len(off), len(rails)), dtype=bool)
+    place = {rail.name: k for k, rail in enumerate(rails)}
+    for column, rail in enumerate(study.rails):
+        out[:, place[rail.tap_of or rail.name]] &= off[:, column]
+    return out
+
+
+def moments_of(study: ResolvedStudy, load: LoadTable) -> Moments:
+    """Return the load table folded onto rails with stages."""
+    current, tap_w = fold_taps(study, load.current_a, load.off)
+    voltage = np.array([rail.voltage_v for rail in study.rails])
+    return Moments(
+        hours=load.hours,
+        current_a=current,
+        off=fold_off(study, load.off),
+        input_v=load.input_v,
+        inlet_degc=load.inlet_degc,
+        tap_w=tap_w,
+        useful_w=np.where(load.off, 0.0, load.current_a) @ voltage,
+        label=load.label,
+    )
+
+
+def coincident_maximum(study: ResolvedStudy) -> tuple[FloatArray, float, float]:
+    """Return (R,) currents, tap loss and useful power at the coincident maximum, before growth."""
+    amps = np.array([[rail.max_current_a * study.coincidence for rail in study.rails]])
+    current, tap_w = fold_taps(study, amps, np.zeros_like(amps, dtype=bool))
+    useful = float(amps[0] @ np.array([rail.voltage_v for rail in study.rails]))
+    return current[0], float(tap_w[0]), useful
+
+
+def band_edges(power_w: FloatArray) -> FloatArray:
+    """Return the edges of at most eight equal steps of load power that hold at least one moment each.
+
+    Steps without a moment join the next higher one, whose voltage is legal for them.
+    """
+    low, high = float(power_w.min()), float(power_w.max())
+    if high - low <= 1e-9 * max(high, 1e-12):
+        return np.array([low, high])
+    edges = np.linspace(low, high, MAX_BANDS + 1)
+    step = np.clip(np.searchsorted(edges, power_w, side="left") - 1, 0, MAX_BANDS - 1)
+    filled = np.unique(step)
+    return np.concatenate([[low], edges[filled + 1]])
+
+
+def band_of(power_w: FloatArray, edges_w: FloatArray) -> IntArray:
+    """Return the band each load power lies in; an edge belongs to the band below it."""
+    return np.clip(np.searchsorted(edges_w, power_w, side="left") - 1, 0, len(edges_w) - 2).astype(np.int64)
+
+
+def split_groups(band: IntArray, off: BoolArray) -> list[IntArray]:
+    """Return the moments that may share a cluster: same band, same rails off."""
+    keys = np.column_stack([band, off.astype(np.int64)])
+    _, inverse = np.unique(keys, axis=0, return_inverse=True)
+    inverse = inverse.ravel()
+    return [np.flatnonzero(inverse == k) for k in range(int(inverse.max()) + 1)]
+
+
+def scatter(members: IntArray, hours: FloatArray, feature: FloatArray) -> tuple[float, int, float]:
+    """Return the hour-weighted scatter of a cluster, the dimension that scatters most and its mean there."""
+    weight = hours[members]
+    total = weight.sum()
+    if total <= 0 or len(members) < 2:
+        return 0.0, 0, 0.0
+    values = feature[members]
+    mean = weight @ values / total
+    spread = weight @ (values - mean) ** 2
+    axis = int(np.argmax(spread))
+    return float(spread.sum()), axis, float(mean[axis])
+
+
+def cluster(groups: list[IntArray], hours: FloatArray, feature: FloatArray, count: int) -> list[IntArray]:
+    """Return clusters of moments, splitting the one with the largest scatter at its mean until ``count``."""
+    clusters = list(groups)
+    measures = [scatter(members, hours, feature) for members in clusters]
+    while len(clusters) < count:
+        worst = int(np.argmax([m[0] for m in measures]))
+        spread, axis, mean = measures[worst]
+        if spread <= 0:
+            break
+        members = clusters[worst]
+        upper = feature[members, axis] > mean
+        if not upper.any() or upper.all():
+            measures[worst] = (0.0, 0, 0.0)
+            continue
+        clusters[worst], fresh = members[~upper], members[upper]
+        clusters.append(fresh)
+        measures[worst] = scatter(clusters[worst], hours, feature)
+        measures.append(scatter(fresh, hours, feature))
+    return clusters
+
+
+@dataclass(frozen=True)
+class EnergyStates:
+    """Representative states with hours: N rows."""
+
+    name: tuple[str, ...]
+    hours: FloatArray
+    current_a: FloatArray
+    off: BoolArray
+    input_v: FloatArray
+    inlet_degc: FloatArray
+    tap_w: FloatArray
+    useful_w: FloatArray
+    band: IntArray
+
+
+def means(study: ResolvedStudy, moments: Moments, band: IntArray, clusters: list[IntArray]) -> EnergyStates:
+    """Return one state a cluster and input level, at its hour-weighted means."""
+    names: list[str] = []
+    rows: list[tuple[float, FloatArray, BoolArray, float, float, float, float, int]] = []
+    for number, members in enumerate(clusters):
+        weight = moments.hours[members]
+        total = float(weight.sum())
+        if total <= 0:
+            continue
+        share = weight / total
+        stated = np.isfinite(moments.input_v[members])
+        label = moments.label[members[0]] if len(members) == 1 and moments.label else f"load {number + 1}"
+        levels: list[tuple[float, float, FloatArray]] = []  # volts, share of the hours, weights of members
+        part = float(share[stated].sum())
+        if part > 0:
+            inside = np.where(stated, share, 0.0)
+            volts = float(inside[stated] @ moments.input_v[members][stated] / part)
+            levels.append((volts, part, inside / part))
+        if part < 1:
+            outside = np.where(stated, 0.0, share)
+            levels += [
+                (level.voltage_v, level.share * (1 - part), outside / (1 - part))
+                for level in study.supply.levels
+                if level.share > 0
+            ]
+        for volts, fraction, weights in levels:
+            names.append(label if len(levels) == 1 else f"{label} at {volts:g} V")
+            rows.append(
+                (
+                    total * fraction,
+                    weights @ moments.current_a[members],
+                    moments.off[members[0]],
+                    volts,
+                    float(weights @ moments.inlet_degc[members]),
+                    float(weights @ moments.tap_w[members]),
+                    float(weights @ moments.useful_w[members]),
+                    int(band[members[0]]),
+                )
+            )
+    columns = list(zip(*rows, strict=True))
+    return EnergyStates(
+        name=tuple(names),
+        hours=np.array(columns[0]),
+        current_a=np.array(columns[1]),
+        off=np.array(columns[2]),
+        input_v=np.array(columns[3]),
+        inlet_degc=np.array(columns[4]),
+        tap_w=np.array(columns[5]),
+        useful_w=np.array(columns[6]),
+        band=np.array(columns[7], dtype=np.int64),
+    )
+
+
+def worst_mix(moments: Moments, band: IntArray, bands: int) -> tuple[FloatArray, BoolArray]:
+    """Return (B, R) the highest current each rail has in any moment of a band, and rails off throughout it."""
+    mix = np.array(
+        [np.where(moments.off, 0.0, moments.current_a)[band == k].max(axis=0) for k in range(bands)]
+    )
+    off = np.array([moments.off[band == k].all(axis=0) for k in range(bands)])
+    return mix, off
+
+
+def transitions(study: ResolvedStudy, load: LoadTable, band: IntArray, bands: int) -> FloatArray:
+    """Return (B, B) transitions a year from band to band, from the series or as the study states them."""
+    table = np.zeros((bands, bands))
+    stated = study.control.transitions_per_day
+    if np.isfinite(stated):
+        if bands > 1:
+            table[0, -1] = table[-1, 0] = 365.0 * stated / 2
+        return table
+    if load.series and len(load.hours) > 1:
+        moment_band = band[: len(load.hours)]
+        np.add.at(table, (moment_band[:-1], moment_band[1:]), 1.0)
+        np.fill_diagonal(table, 0.0)
+        covered = float(load.hours.sum())
+        return table if covered <= 0 else table * min(1.0, 8784.0 / covered)
+    return table
+
+
+def with_maximum(study: ResolvedStudy, moments: Moments) -> Moments:
+    """Return the moments with the coincident maximum added for no hours: it is always present."""
+    current, tap_w, useful = coincident_maximum(study)
+    return Moments(
+        hours=np.append(moments.hours, 0.0),
+        current_a=np.vstack([moments.current_a, current]),
+        off=np.vstack([moments.off, np.zeros((1, len(current)), dtype=bool)]),
+        input_v=np.append(moments.input_v, np.nan),
+        inlet_degc=np.append(moments.inlet_degc, study.supply.hottest_inlet_degc),
+        tap_w=np.append(moments.tap_w, tap_w),
+        useful_w=np.append(moments.useful_w, useful),
+        label=(*moments.label, "coincident maximum"),
+    )
+
+
+def reduce_load(
+    study: ResolvedStudy, annual_loss: Callable[[EnergyStates], float] | None = None
+) -> StateTable:
+    """Reduce the study's load to representative states and add the zero-hour ones.
+
+    ``annual_loss`` returns the loss of a plain design over given states, kWh; clusters are added until it is
+    within 0.5 % of the whole series. Without it the largest number of clusters is taken.
+    """
+    moments = with_maximum(study, moments_of(study, study.load))
+    edges = band_edges(moments.useful_w)
+    band = band_of(moments.useful_w, edges)
+    feature = moments.current_a * np.array([rail.voltage_v for rail in own_rails(study)])
+    with_hours = np.flatnonzero(moments.hours > 0)
+    groups = [with_hours[g] for g in split_groups(band[with_hours], moments.off[with_hours])]
+    error = 0.0
+    if len(with_hours) <= MAX_CLUSTERS:
+        clusters = [np.array([k]) for k in with_hours]
+    elif annual_loss is None:
+        clusters = cluster(groups, moments.hours, feature, MAX_CLUSTERS)
+    else:
+        exact = annual_loss(means(study, moments, band, [np.array([k]) for k in with_hours]))
+        for count in (8, 12, 16, 20, MAX_CLUSTERS):
+            clusters = cluster(groups, moments.hours, feature, count)
+            error = abs(annual_loss(means(study, moments, band, clusters)) - exact) / max(exact, 1e-12)
+            if error <= CLUSTER_TOLERANCE:
+                break
+    energy = means(study, moments, band, clusters)
+    return assemble(study, moments, band, edges, energy, error)
+
+
+def jump_currents(study: ResolvedStudy, mix_a: FloatArray, rated_a: FloatArray) -> FloatArray:
+    """Return (B, R) currents after the largest unannounced jump from each band."""
+    jumped = mix_a + study.control.jump_percent / 100.0 * rated_a
+    return np.minimum(jumped, np.maximum(rated_a, mix_a))
+
+
+def assemble(
+    study: ResolvedStudy,
+    moments: Moments,
+    band: IntArray,
+    edges: FloatArray,
+    energy: EnergyStates,
+    error: float,
+) -> StateTable:
+    """Return the energy states followed by the zero-hour states."""
+    bands = len(edges) - 1
+    supply = study.supply
+    grown = study.growth
+    mix, mix_off = worst_mix(moments, band, bands)
+    mix = mix * grown
+    maximum, maximum_tap_w, _ = coincident_maximum(study)
+    rated = maximum * grown
+    after = jump_currents(study, mix, rated)
+    voltage = np.array([rail.voltage_v for rail in own_rails(study)])
+    inlet_hot = supply.hottest_inlet_degc
+    mean_inlet = supply.inlet_degc
+    nothing_off = np.zeros(len(rated), dtype=bool)
+    extra: list[tuple[str, int, float, float, FloatArray, BoolArray, int]] = []
+    for k in range(bands):
+        for label, volts in (("low", supply.low_v), ("high", supply.high_v)):
+            name = f"band {k + 1} worst mix, {label} input"
+            extra.append((name, MIX, volts, inlet_hot, mix[k], mix_off[k], k))
+    for k in range(bands):
+        name = f"band {k + 1} after jump, low input"
+        extra.append((name, JUMP, supply.low_v, inlet_hot, after[k], mix_off[k] & (after[k] <= 0), k))
+    for label, volts in (("low", supply.low_v), ("high", supply.high_v)):
+        name = f"rated load at nominal bus, {label} input"
+        extra.append((name, FALLBACK, volts, inlet_hot, rated, nothing_off, bands - 1))
+    shown_band = band_of(np.array([share * float(maximum @ voltage) for share in SHOWN_SHARES]), edges)
+    for share, where in zip(SHOWN_SHARES, shown_band, strict=True):
+        name = f"{share:.0%} load".replace("%", " %")
+        extra.append((name, PRINT, supply.nominal_v, mean_inlet, maximum * share, nothing_off, int(where)))
+    count = len(extra)
+    extra_tap = np.zeros(count)
+    extra_tap[-5:] = maximum_tap_w * np.array([grown, grown, *SHOWN_SHARES]) ** 2
+    extra_current = np.array([row[4] for row in extra])
+    return StateTable(
+        name=(*energy.name, *(row[0] for row in extra)),
+        kind=np.concatenate([np.full(len(energy.name), ENERGY), np.array([row[1] for row in extra])]),
+        hours=np.concatenate([energy.hours, np.zeros(count)]),
+        input_v=np.concatenate([energy.input_v, np.array([row[2] for row in extra])]),
+        ambient_degc=np.concatenate([energy.inlet_degc, np.array([row[3] for row in extra])])
+        + supply.local_rise_k,
+        current_a=np.vstack([energy.current_a, extra_current]),
+        off=np.vstack([energy.off, np.array([row[5] for row in extra])]),
+        band=np.concatenate([energy.band, np.array([row[6] for row in extra], dtype=np.int64)]),
+        tap_w=np.concatenate([energy.tap_w, extra_tap]),
+        useful_w=np.concatenate([energy.useful_w, extra_current @ voltage]),
+        edges_w=edges,
+        mix_a=mix,
+        after_a=after,
+        mix_off=mix_off,
+        rated_a=rated,
+        transitions_per_year=transitions(study, study.load, band, bands),
+        cluster_error=error,
+    )
