@@ -24,11 +24,11 @@ ENERGY, COST, DROOP = 0, 1, 2
 def significant(values: FloatArray, digits: int = RANKING_DIGITS) -> FloatArray:
     """Values rounded to significant decimal digits, same shape.
 
-    Values that are not finite pass through, -0.0 becomes 0.0, and what is smaller than 1e-290 stays as it is.
+    Values that are not finite pass through, -0.0 becomes 0.0, and what is smaller than 1e-280 stays as it is.
     Ranking compares rounded values, so that a last bit that differs between machines decides nothing.
     """
     result = np.array(values, dtype=np.float64) + 0.0
-    usable = np.isfinite(result) & (np.abs(result) > 1e-290)
+    usable = np.isfinite(result) & (np.abs(result) > 1e-280)
     chosen = result[usable]
     places = digits - 1 - np.floor(np.log10(np.abs(chosen))).astype(np.int64)
     power = _POWER_OF_TEN[np.minimum(np.abs(places), 300)]

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 from pymoo.algorithms.moo.nsga2 import NSGA2
 from pymoo.algorithms.moo.sms import SMSEMOA, LeastHypervolumeContributionSurvival
+from pymoo.config import Config
 from pymoo.core.duplicate import NoDuplicateElimination
 from pymoo.core.evaluator import Evaluator
 from pymoo.core.individual import Individual, default_config
@@ -24,12 +25,16 @@ from pymoo.core.problem import Problem
 from pymoo.core.termination import NoTermination
 from pymoo.operators.selection.tournament import TournamentSelection
 from pymoo.operators.survival.rank_and_crowding import RankAndCrowding
+from pymoo.operators.survival.rank_and_crowding.metrics import CrowdingDiversity, get_crowding_function
 
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.archive import significant
 from archopt.search.operators import UNRANKED, Gene, Operators, tell_apart, tournament
 
 Method = Literal["crowding", "hypervolume"]
+
+# Where its compiled parts are missing pymoo would say so on standard output, in the middle of what we print.
+Config.warnings["not_compiled"] = False
 
 # What pymoo keeps as attributes of an individual; everything else goes to its data.
 _FIELDS = frozenset({"X", "F", "G", "H", "CV"})
@@ -97,7 +102,7 @@ class Engine:
             "save_history": False,
         }
         algorithm: Any = (
-            NSGA2(survival=RankAndCrowding(crowding_func="mnn"), **shared)
+            NSGA2(survival=RankAndCrowding(crowding_func=_NearestNeighbours()), **shared)
             if self.method == "crowding"
             else SMSEMOA(survival=LeastHypervolumeContributionSurvival(), **shared)
         )
@@ -252,16 +257,30 @@ class _TypedMating(InfillCriterion):  # type: ignore[misc]  # pymoo is untyped
         known = {row.tobytes() for row in parents}
         children = np.zeros((0, self._operators.width))
         for _ in range(_MATING_ROUNDS):
-            chosen = self._selection.do(
-                problem, pop, n_offsprings, 2, to_pop=False, random_state=random_state
-            )
+            missing = n_offsprings - len(children)
+            chosen = self._selection.do(problem, pop, missing, 2, to_pop=False, random_state=random_state)
             crossed = self._operators.crossover(parents[chosen[:, 0]], parents[chosen[:, 1]], random_state)
             mutated = self._operators.mutate(crossed, random_state)
             children = np.concatenate([children, mutated])
-            children = children[tell_apart(children, known)][:n_offsprings]
+            children = children[tell_apart(children, known)]
             if len(children) == n_offsprings:
                 break
         return _born(_filled(self._operators, children, known, n_offsprings, random_state))
+
+
+class _NearestNeighbours(CrowdingDiversity):  # type: ignore[misc]  # pymoo is untyped
+    """pymoo's nearest-neighbour crowding over the objectives that differ at all.
+
+    A front often has one droop only; pymoo's uncompiled version then divides nothing by nothing.
+    """
+
+    def __init__(self) -> None:
+        self._measure = get_crowding_function("mnn")
+
+    def _do(self, front: FloatArray, n_remove: int = 0) -> Any:
+        differs = np.ptp(front, axis=0) > 0.0
+        # fewer than two differing objectives leave one design of a front, whatever its columns
+        return self._measure.do(front[:, differs] if differs.sum() >= 2 else front, n_remove=n_remove)
 
 
 def _no_optimum() -> None:

@@ -123,12 +123,12 @@ class Stagnation:
 
     def state(self) -> dict[str, NDArray[Any]]:
         """What has been recorded, as plain arrays for :meth:`restore`."""
-        fixed = self.scale is not None
+        scale = self.scale or Scale(np.zeros(0), np.zeros(0))
         return {
             "seen": np.array([self._seen], dtype=np.int64),
             "history": self.history,
-            "ideal": self.scale.ideal.copy() if fixed and self.scale else np.zeros(0),
-            "nadir": self.scale.nadir.copy() if fixed and self.scale else np.zeros(0),
+            "ideal": scale.ideal.copy(),
+            "nadir": scale.nadir.copy(),
         }
 
     def restore(self, state: Mapping[str, NDArray[Any]]) -> None:

@@ -158,6 +158,7 @@ def test_rounding_to_significant_digits_is_close_and_final(value: float) -> None
     rounded = significant(np.array([value]))
     assert significant(rounded).tobytes() == rounded.tobytes()
     assert rounded[0] == pytest.approx(value, rel=5.01e-12, abs=0.0)
+    assert abs(value) > 1e-280 or rounded[0] == value
     assert not np.signbit(significant(np.array([-0.0]))[0])
 
 

@@ -10,6 +10,7 @@ import sys
 
 import numpy as np
 import pytest
+from pymoo.functions import FunctionLoader
 from pymoo.operators.survival.rank_and_crowding import RankAndCrowding
 
 from archopt.search.archive import significant
@@ -223,6 +224,23 @@ def test_nothing_in_the_library_ends_the_search() -> None:
         assert engine.ask().shape == (4, 1)
         engine.tell(np.ones((4, 2)), np.zeros(4))
     assert engine.generation == 1200
+
+
+def test_pymoo_without_its_compiled_parts_works_and_stays_silent(
+    monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Also on a front with one droop only, where its own fallback would divide by zero."""
+    monkeypatch.setattr("pymoo.functions.is_compiled", lambda: False)
+    monkeypatch.setattr(FunctionLoader, "_FunctionLoader__instance", None)
+    engine = Engine(GENES, 20, 4)
+    for _ in range(10):
+        objectives, violation = evaluate(engine.ask())
+        engine.tell(objectives * [1.0, 1.0, 0.0] + [0.0, 0.0, 60.0], violation)
+    crowding = engine.state()["crowding"]
+    assert not FunctionLoader.get_instance().is_compiled
+    assert not np.isnan(crowding).any()
+    assert (np.isfinite(crowding) & (crowding > 0.0)).any()
+    assert capsys.readouterr().out == ""
 
 
 @pytest.mark.parametrize("method", METHODS)
