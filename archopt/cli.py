@@ -13,9 +13,10 @@ import sys
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from functools import wraps
 from pathlib import Path
 from types import FrameType
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated, Any, ParamSpec
 
 import typer
 
@@ -23,6 +24,8 @@ from archopt.errors import ArchoptError, InfeasibleError, InputError, OutputErro
 
 if TYPE_CHECKING:
     from archopt.present.front import Front
+
+Words = ParamSpec("Words")
 
 FINE, FAULT, BAD_INPUT, INFEASIBLE, INTERRUPTED = 0, 1, 2, 3, 130
 DEBUG_VARIABLE = "ARCHOPT_DEBUG"
@@ -85,6 +88,26 @@ class StopRequest:
             signal.signal(signal.SIGINT, before)
 
 
+class ReaderGoneError(Exception):
+    """Whoever read our output has seen enough, e.g. ``archopt show DIR | head``."""
+
+
+def in_own_words(command: Callable[Words, None]) -> Callable[Words, None]:
+    """Keep interrupts and closed pipes from the command-line library, which has codes of its own."""
+
+    @wraps(command)
+    def run(*arguments: Words.args, **options: Words.kwargs) -> None:
+        try:
+            command(*arguments, **options)
+            sys.stdout.flush()
+        except KeyboardInterrupt:
+            raise typer.Abort from None
+        except (ReaderGoneError, BrokenPipeError):
+            raise ReaderGoneError from None
+
+    return run
+
+
 def print_version(wanted: bool) -> None:
     """Print the version and stop, when asked."""
     if wanted:
@@ -109,19 +132,23 @@ def start(
 
 
 @app.command("new")
+@in_own_words
 def new_command(
     directory: Annotated[
         Path, typer.Argument(metavar="DIR", help="Directory to create.", show_default=False)
     ],
 ) -> None:
     """Write a starter study to edit: a study file and a load profile."""
-    from archopt.inputs import starter
+    from archopt.inputs.starter import write_starter
 
-    for path in starter.write(directory):
-        typer.echo(str(path))
+    paths = write_starter(directory)
+    for path in paths:
+        typer.echo(f"wrote {path}")
+    typer.echo(f"next: archopt check {paths[0]}")
 
 
 @app.command("check")
+@in_own_words
 def check_command(study: StudyArgument, as_json: JsonOption = False) -> None:
     """Print how a study is understood; search nothing.
 
@@ -140,6 +167,7 @@ def check_command(study: StudyArgument, as_json: JsonOption = False) -> None:
 
 
 @app.command("solve")
+@in_own_words
 def solve_command(
     study: StudyArgument,
     out: Annotated[
@@ -189,6 +217,7 @@ def solve_command(
 
 
 @app.command("show")
+@in_own_words
 def show_command(
     directory: Annotated[
         Path, typer.Argument(metavar="DIR", help="Directory of a result.", show_default=False)
@@ -267,7 +296,7 @@ def guarded(work: Callable[[], Any]) -> int:
     except (KeyboardInterrupt, typer.Abort):
         print("Interrupted.", file=sys.stderr)
         return INTERRUPTED
-    except BrokenPipeError:
+    except (ReaderGoneError, BrokenPipeError):
         # The reader has seen enough; keep the interpreter from complaining when it closes the stream.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return FINE

@@ -127,6 +127,8 @@ class Front:
         """The front as a data frame, one design a row, the columns of ``front.csv``, indexed by name."""
         import pandas as pd  # noqa: PLC0415 - a second to load, and most uses never ask for it
 
+        if not self.record.designs:
+            return pd.DataFrame(index=pd.Index([], name="design"))
         return pd.DataFrame(self.record.front).set_index("design")
 
     def design(self, wanted: int | str) -> Design:

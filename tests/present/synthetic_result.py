@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from archopt.present.plain import plain_dict
 from archopt.present.record import Data, FrontRecord
 
 HOURS = 8760.0
@@ -40,7 +41,7 @@ def design(
         "limit": "rail droop", "where": "core", "state": "band 2 worst mix, low input", "value": droop,
         "bound": 100.0, "slack": 100.0 - droop, "unit": "%", "normalised": (100.0 - droop) / 5,
     }  # fmt: skip
-    return {
+    whole = {
         "design": name, "roles": list(roles), "topology": topology,
         "choices": {
             "core.feed": "bus_a", "core.stage": "STAGE-40", "core.phases": 2, "core.fewest": "one",
@@ -103,13 +104,14 @@ def design(
         ],
         "input_current_low_line_a": 3.71,
     }  # fmt: skip
+    return dict(plain_dict(whole))  # twelve digits, as read back
 
 
 def record() -> FrontRecord:
     """A front of five designs, two of them near twins."""
     designs = [
         design("D001", scale=1.0, cost=100.0, droop=72.0, roles=("least loss",)),
-        design("D002", scale=1.01, cost=98.0, droop=80.0),
+        design("D002", scale=1.015, cost=98.0, droop=80.0),
         design("D003", scale=1.2, cost=80.0, droop=84.0, roles=("knee",)),
         design("D004", scale=1.3, cost=90.0, droop=60.0, roles=("most margin",)),
         design("D005", scale=1.8, cost=60.0, droop=98.0, roles=("least cost",), topology="one bus, fixed",

@@ -1,0 +1,266 @@
+"""What is printed, as fixed-width text; totals in the text agree with the objectives."""
+
+from __future__ import annotations
+
+import dataclasses
+from io import StringIO
+
+import pytest
+from rich.console import Console
+
+from archopt.present.amounts import counted, fixed, mechanism_word, money, number, place_word, signed, times
+from archopt.present.front import Front
+from archopt.present.losses import loss_table, mechanism_kwh, state_at, year_kwh
+from archopt.present.overview import flat_band, front_sections
+from archopt.present.power_tree import tree_lines
+from archopt.present.questions import gain_lines, volts_text
+from archopt.present.record import CheckResult, FrontRecord
+from archopt.present.tables import console_for, plain_text, put, table
+from archopt.present.terminal import print_check, print_front
+
+
+def printed(record: FrontRecord, width: int | None = None) -> str:
+    """The result as printed on a pipe, or on a terminal so many columns wide."""
+    buffer = StringIO()
+    console = console_for(buffer) if width is None else Console(file=buffer, width=width, force_terminal=True)
+    print_front(console, record)
+    return buffer.getvalue()
+
+
+def block(text: str, title: str) -> list[str]:
+    """The lines of one section, without its heading."""
+    lines = text.splitlines()
+    start = lines.index(title) + 1
+    return lines[start : lines.index("", start)]
+
+
+@pytest.mark.parametrize(
+    ("value", "expected"),
+    [(53.5, "53.5"), (8760.0, "8,760"), (0.00012346, "0.0001235"), (None, "-"), (float("nan"), "-"), (0, "0"),
+     (12345.6, "12,346"), (-0.25, "-0.25"), (1e-15, "0")],
+)  # fmt: skip
+def test_number(value: object, expected: str) -> None:
+    assert number(value) == expected
+
+
+def test_other_amounts() -> None:
+    assert fixed(-0.001, 2) == "0.00"
+    assert signed(3.14159, 2) == "+3.14"
+    assert signed(-3.0) == "-3.0"
+    assert signed(None) == "-"
+    assert money(1234.5, "EUR") == "1,234.50 EUR"
+    assert times("2", "BRICK") == "2 x BRICK"
+    assert times(1, "BRICK") == "BRICK"
+    assert counted(1, "rail") == "1 rail"
+    assert counted(12, "rail") == "12 rails"
+    assert mechanism_word("dead_time_w") == "dead time"
+    assert place_word("bus_a plane") == "bus A plane"
+
+
+def test_energy_cost_front_comes_first_and_is_pinned(record: FrontRecord) -> None:
+    text = printed(record)
+    order = [
+        "Understood", "Search", "Energy against cost, every rail's droop within its budget",
+        "Beside it: designs that give way in energy or cost for something else", "What droop margin costs",
+        "Which limit binds", "Today's design", "The same hardware with another bus voltage",
+        "Topologies that lost", "Catalogue numbers with the most leverage on the knee", "Remarks", "Cautions",
+        "Not modelled",
+    ]  # fmt: skip
+    titles = [line for line in text.splitlines() if line and not line.startswith(" ")]
+    assert titles == order
+    assert block(text, order[2]) == [
+        "  design  kWh a year  cost, EUR  droop %  life cost, EUR  W at 30 %  W at 50 %  W at 100 %"
+        "  topology               bus V    bus converter  stack      marked as",
+        "  D001         52.56     100.00       72          180.94        3.0        6.0        12.0"
+        "  one bus, follows load  8 to 12  2 x BRICK-8    S12-2x2oz  least loss",
+        "  D003         63.07      80.00       84          177.13        3.6        7.2        14.4"
+        "  one bus, follows load  8 to 12  2 x BRICK-8    S12-2x2oz  knee",
+        "  D005         94.61      60.00       98          205.70        5.4       10.8        21.6"
+        "  one bus, fixed         10       2 x BRICK-8    S12-2x2oz  least cost",
+        "  4 of 5 designs printed; 1 other within 2 % of loss and 5 % of cost of these.",
+    ]
+
+
+def test_droop_margin_is_priced(record: FrontRecord) -> None:
+    assert block(printed(record), "What droop margin costs") == [
+        "  droop at most %  design  droop %  kWh a year  cost, EUR  kWh more  cost more  life cost more",
+        "              100  D003         84       63.07      80.00     +0.00      +0.00           +0.00",
+        "               90  D003         84       63.07      80.00     +0.00      +0.00           +0.00",
+        "               80  D002         80       53.35      98.00     -9.72     +18.00           +3.03",
+        "               70  D004         60       68.33      90.00     +5.26     +10.00          +18.09",
+        "               60  D004         60       68.33      90.00     +5.26     +10.00          +18.09",
+    ]
+
+
+def test_few_droop_values_are_said_not_to_discriminate(record: FrontRecord) -> None:
+    assert "does not discriminate" not in printed(record)
+    for design in record.designs:
+        design["objectives"]["worst_droop_percent"] = 60.0
+    assert "Droop does not discriminate here: the front holds 1 value of it (60 %)." in printed(record)
+
+
+def test_binding_limits_with_slack_and_violations_in_trade_units(record: FrontRecord) -> None:
+    text = printed(record)
+    assert "  D003    rail droop  core   16 % left  band 2 worst mix, low input" in text.splitlines()
+    assert "  - rail droop at core, band 2 worst mix, low input: over by 12 %" in text.splitlines()
+
+
+def test_the_gain_is_quoted_against_the_best_feasible_fixed_bus(record: FrontRecord) -> None:
+    said = "Against the best feasible fixed bus the knee saves 1.93 kWh a year (3 % of the loss)."
+    assert f"  {said}" in printed(record).splitlines()
+    record.baselines[1]["feasible"] = False
+    assert not list(gain_lines(record.baselines, record.designs))
+
+
+def test_the_nearest_losing_topology_says_why(record: FrontRecord) -> None:
+    lines = block(printed(record), "Topologies that lost")
+    assert lines[1].split() == ["two", "buses", "two", "buses", "180.00", "+14.50", "-"]
+    assert lines[2].endswith("on-time at core, over by 20 ns")
+    assert lines[3] == "  Nearest, two buses, against the winner, kWh a year: fixed +9.00, overlap -4.00."
+
+
+def test_only_the_five_strongest_numbers_are_printed(record: FrontRecord) -> None:
+    many = [{**record.leverage[0], "part": f"PART-{k}", "energy_change_kwh": -float(k)} for k in range(8)]
+    text = printed(dataclasses.replace(record, leverage=many))
+    assert "PART-7" in text
+    assert "PART-3" in text
+    assert "PART-2" not in text
+
+
+def test_piped_text_is_plain(record: FrontRecord) -> None:
+    text = printed(record)
+    assert text.isascii()
+    assert "\x1b" not in text
+    assert all(line == line.rstrip() for line in text.splitlines())
+
+
+@pytest.mark.parametrize("width", [80, 100, 160])
+def test_a_terminal_is_never_overrun_and_numbers_stay_whole(record: FrontRecord, width: int) -> None:
+    plain = plain_text(Front(record), width)
+    assert max(map(len, plain.splitlines())) <= width
+    for whole in ("52.56", "100.00", "94.61", "+18.09", "least loss"):
+        assert whole in plain
+
+
+def test_a_flat_optimum_is_given_as_a_band(record: FrontRecord) -> None:
+    assert flat_band(record.designs) == ""
+    record.designs[1]["choices"]["bus_a.nominal_v"] = 11.0
+    record.designs[1]["objectives"]["energy_loss_kwh_per_year"] = 52.8
+    assert flat_band(record.designs) == (
+        "2 designs within 1 % of the least loss; nominal bus A from 10 to 11 V."
+    )
+
+
+def test_an_interrupted_search_says_so(record: FrontRecord) -> None:
+    run = record.run | {"interrupted": True, "stop_reason": "interrupted"}
+    assert "interrupted; what was found until then is kept" in printed(dataclasses.replace(record, run=run))
+
+
+def test_an_empty_front_prints_without_a_table(record: FrontRecord) -> None:
+    assert not list(front_sections(dataclasses.replace(record, designs=[]), 200))
+
+
+def test_the_power_tree_is_pinned(record: FrontRecord) -> None:
+    assert tree_lines(record.designs[2], record.study) == [
+        "input 36 to 75 V, through PATH-10",
+        "  bus A: 2 x BRICK-8 (down to one at light load); 10 V nominal, follows the load between 8 and 12 V;"
+        " 4 x POLY-100; copper on 1 pair",
+        "    core 0.9 V 60 A: 2 x STAGE-40 (down to one at light load); 6 x POLY-470; copper on 2 pairs",
+        "    io 3.3 V 10 A: STAGE-10; 4 x CER-47; copper on 1 pair",
+        "      pll 1.8 V 0.5 A: LIN-1; CER-10; copper on 1 pair",
+        "  stack: S12-2x2oz",
+        "  gate bias: BIAS-5, from input",
+        "  supervisor: SUP-1",
+    ]
+
+
+def test_a_rail_straight_from_the_input_and_a_tap(record: FrontRecord) -> None:
+    design = record.designs[0]
+    design["choices"] |= {"core.feed": "input", "pll.feed": "core"}
+    record.problem["study"]["rails"][2]["tap_of"] = "core"
+    lines = tree_lines(design, record.study)
+    assert lines[1].startswith("  core 0.9 V 60 A: 2 x STAGE-40")
+    assert lines[2] == "    pll 1.8 V 0.5 A: tap of core"
+
+
+def test_losses_of_the_year_add_up_to_the_objective(record: FrontRecord) -> None:
+    for design in record.designs:
+        energy = design["objectives"]["energy_loss_kwh_per_year"]
+        assert sum(year_kwh(design).values()) == pytest.approx(energy, rel=1e-12)
+        assert sum(mechanism_kwh(design).values()) == pytest.approx(energy, rel=1e-12)
+
+
+def test_energy_beyond_the_states_has_a_line_of_its_own(record: FrontRecord) -> None:
+    design = record.designs[0]
+    assert "changes of bus voltage" not in plain_text(loss_table(design))
+    design["objectives"]["energy_loss_kwh_per_year"] += 1.5
+    line = next(li for li in plain_text(loss_table(design)).splitlines() if "changes of bus voltage" in li)
+    assert line.split()[-5] == "1.50"
+
+
+def test_a_printed_load_is_found_by_name_kind_or_watts(record: FrontRecord) -> None:
+    design = record.designs[0]
+    states = design["states"]
+    assert state_at(design, "50 %") is states[2]
+    states[2]["state"], states[2]["kind"] = "half", "50 %"
+    assert state_at(design, "50 %") is states[2]
+    states[2]["kind"] = "share"
+    assert state_at(design, "50 %") is states[2]  # the only one without hours that loses the printed watts
+
+
+def test_an_explained_design_says_everything(record: FrontRecord) -> None:
+    text = plain_text(Front(record).design("knee"))
+    titles = [line for line in text.splitlines() if line and not line.startswith(" ")]
+    assert titles == [
+        "Design D003 (knee): one bus, follows load", "Power tree",
+        "Bus voltage by load (thresholds are power at the board input)", "Losses by part and mechanism",
+        "States", "Heat in the hottest case", "Tolerance of each rail, mV", "Limits, the worst place of each",
+        "Cost of one board, EUR",
+    ]  # fmt: skip
+    for said in (
+        "input current at low line         3.71 A",
+        "worst rail's droop or release     84 % of its budget (exactly 83.45 %)",
+        "pays back against today's design  after 1.25 years",
+        "     1           20    60             66             -     8.00           1",
+        "  core                 1       2",
+        "  bus A converter, fixed       21.02       1.20       2.40        4.80       6.00",
+        "  core          45.0        9.0     4.5   0.0    31.5   26.3     20.0   5.2",
+        "  one board in all  80.00",
+        "  Input power equals load plus listed losses within 2e-12 of itself.",
+    ):
+        assert said in text
+    hottest = [line.split()[0] for line in block(text, "Heat in the hottest case")[1:]]
+    assert hottest == ["bus", "core"]  # least kelvin left first
+
+
+def test_check_prints_assumptions_space_and_power(record: FrontRecord) -> None:
+    result = CheckResult(
+        record.problem,
+        space={"choices": 31, "designs_log10": 23.4, "parts": [{"family": "buck_stages", "offered": 24}]},
+        power={"sum_of_maxima_w": 121.5, "coincident_w": 103.0},
+        cautions=["io: the droop budget is small"],
+    )
+    buffer = StringIO()
+    print_check(console_for(buffer), result)
+    text = buffer.getvalue()
+    assert "  economics.cooling_overhead  1.4    common practice" in text.splitlines()
+    assert "  sum of the rails' maxima  121.5 W" in text.splitlines()
+    assert "  most drawn at one time    103 W" in text.splitlines()
+    assert "  designs      about 10^23" in text.splitlines()
+    assert "  - io: the droop budget is small" in text.splitlines()
+    assert [line.split()[0] for line in block(text, "Rails")[1:]] == ["core", "io", "pll"]
+
+
+@pytest.mark.parametrize(
+    ("volts", "expected"),
+    [(12.0, "12"), ([8.0, 9.5, 12.0], "8 to 12"), ([12.0, 12.0], "12"), (None, "-"),
+     ({"bus_a": 10.0, "bus_b": [5.0, 6.0]}, "10, 5 to 6")],
+)  # fmt: skip
+def test_volts_of_a_baseline(volts: object, expected: str) -> None:
+    assert volts_text(volts) == expected
+
+
+def test_markup_in_names_is_printed_as_written() -> None:
+    buffer = StringIO()
+    put(console_for(buffer), [table(["part", "value"], [["[bold]X[/bold] :smile:", "1"]], left=["part"])])
+    assert "[bold]X[/bold] :smile:" in buffer.getvalue()
