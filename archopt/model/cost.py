@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from archopt.model.parameters import PRICE_STEPS, BoolArray, FloatArray, IntArray, PartTable
 from archopt.model.problem import Problem
@@ -63,7 +65,7 @@ def count_pieces(problem: Problem, designs: Designs) -> IntArray:
     return flat.reshape(count, width).astype(np.int64)
 
 
-def unit_price(parts: PartTable, quantity: FloatArray) -> FloatArray:
+def unit_price(parts: PartTable, quantity: NDArray[Any]) -> FloatArray:
     """Return unit prices at yearly quantities (..., parts), by step."""
     step = np.searchsorted(np.array(PRICE_STEPS), quantity, side="right")
     return parts.price[np.arange(len(parts.names)), step]
@@ -93,4 +95,4 @@ def copper_area_m2(problem: Problem, designs: Designs) -> FloatArray:
     pours = (designs.rail("pairs") * problem.rails.copper_area_m2).sum(axis=1)
     used = np.stack([(feed == 1).any(axis=1), (feed == 2).any(axis=1)], axis=1)
     planes = (designs.bus("pairs") * used).sum(axis=1) * problem.study.board.bus_area_cm2 * 1e-4
-    return pours + planes
+    return np.asarray(pours + planes)

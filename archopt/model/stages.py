@@ -67,7 +67,9 @@ def operate(
     for kind in kinds:
         pick = np.flatnonzero(kind_of == kind)
         picked = [x[pick] for x in flat]
-        point = operate_kind(stages, int(kind), *picked, pick.shape)
+        point = operate_kind(
+            stages, int(kind), picked[0], picked[1], picked[2], picked[3], picked[4], picked[5], pick.shape
+        )
         for target, values in zip(
             out, (point.loss_w, point.bias_w, point.temperature_degc, point.gain), strict=True
         ):
@@ -123,6 +125,7 @@ def mechanisms(
     rows = np.array([index])
     point = tuple(np.array([x]) for x in (input_v, output_v, current_a / running, ambient_degc))
     result: Any
+    names: tuple[str, ...]
     if kind == BUCK:
         result = buck.losses(stages.buck.take(rows), *point)
         names = buck.MECHANISMS

@@ -1,0 +1,57 @@
+"""The rails that have a stage of their own, as SI arrays."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from archopt.inputs.resolved import ResolvedStudy
+from archopt.model.parameters import BoolArray, FloatArray, IntArray
+from archopt.model.states import own_rails
+
+
+@dataclass(frozen=True)
+class RailArrays:
+    """Per rail with a stage of its own, (R,)."""
+
+    names: tuple[str, ...]
+    voltage_v: FloatArray
+    max_a: FloatArray  # own maximum with its taps, grown
+    step_a: FloatArray
+    load_slew_a_per_s: FloatArray
+    budget_v: FloatArray
+    remote_sense: BoolArray
+    squares: FloatArray
+    copper_area_m2: FloatArray
+    copper_width_m: FloatArray
+    drop_budget: FloatArray  # share of the rail voltage
+    step_group: IntArray
+
+
+def rail_arrays(study: ResolvedStudy) -> RailArrays:
+    """Return the study's rails as SI arrays; taps are added to the rail they tap."""
+    rails = own_rails(study)
+    place = {rail.name: k for k, rail in enumerate(rails)}
+    maximum = np.array([rail.max_current_a for rail in rails])
+    step = np.array([rail.step_a for rail in rails])
+    for rail in study.rails:
+        if rail.tap_of:
+            maximum[place[rail.tap_of]] += rail.max_current_a
+            step[place[rail.tap_of]] = max(step[place[rail.tap_of]], rail.step_a)
+    groups: dict[str, int] = {}
+    group = [groups.setdefault(rail.step_group or f" {rail.name}", len(groups)) for rail in rails]
+    return RailArrays(
+        names=tuple(rail.name for rail in rails),
+        voltage_v=np.array([rail.voltage_v for rail in rails]),
+        max_a=maximum * study.growth,
+        step_a=step,
+        load_slew_a_per_s=np.array([rail.slew_a_per_us * 1e6 for rail in rails]),
+        budget_v=np.array([rail.droop_budget_v for rail in rails]),
+        remote_sense=np.array([rail.remote_sense for rail in rails], dtype=bool),
+        squares=np.array([rail.squares for rail in rails]),
+        copper_area_m2=np.array([rail.copper_area_cm2 * 1e-4 for rail in rails]),
+        copper_width_m=np.array([rail.copper_width_mm * 1e-3 for rail in rails]),
+        drop_budget=np.array([rail.drop_budget_percent * 0.01 for rail in rails]),
+        step_group=np.array(group, dtype=np.int64),
+    )
