@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import signal
 import sys
 import time
@@ -198,7 +199,7 @@ def solve_command(
     from archopt.present.terminal import print_front
 
     loaded = workflow.load(study)
-    place = RUNS / loaded.study.name if out is None else out
+    place = default_place(loaded.study.name) if out is None else out
     files.check_target(place, replace=replace)
     stop = StopRequest(seconds)
     planned = evaluations if evaluations is not None else loaded.study.search.evaluations
@@ -246,6 +247,11 @@ def show_command(
         print_json(chosen.as_dict())
     else:
         put(console_for(), [chosen])
+
+
+def default_place(name: str) -> Path:
+    """``runs/NAME``, the name made fit for a directory: a study may be called anything."""
+    return RUNS / (re.sub(r"[^\w.+-]+", "-", name).strip("-.") or "study")
 
 
 def write_or_aside(front: Front, place: Path, *, replace: bool) -> Path:

@@ -10,6 +10,7 @@ from rich.table import Table
 from rich.text import Text
 
 from archopt.present.amounts import NONE, counted, fixed, money, number, of, real, with_unit
+from archopt.present.assumed import assumed_table
 from archopt.present.record import CheckResult, Data
 from archopt.present.tables import WordTable, pairs, section, table
 
@@ -151,12 +152,6 @@ def states_table(states: list[Data]) -> WordTable:
     return table(["state", "hours", "% of a year", "input V", "load W"], rows, left=["state"])
 
 
-def assumed_table(assumed: list[Data]) -> WordTable:
-    """Every value nobody stated: where it belongs in the study file, the value taken, and why."""
-    rows = [[str(row.get(key, NONE)) for key in ("place", "value", "reason")] for row in assumed]
-    return table(["place", "value", "why"], rows, left=["place", "value", "why"])
-
-
 def space_rows(space: Data) -> Iterable[tuple[str, str]]:
     """Size of the space and what is on offer."""
     if space.get("choices") is not None:
@@ -190,8 +185,9 @@ def check_sections(result: CheckResult) -> Iterable[RenderableType]:
     if result.power:
         yield from section("Load power", pairs(power_rows(result.power)))
     assumed = problem.get("assumed") or []
+    names = [str(rail.get("name")) for rail in study.get("rails") or []]
     yield from section(
-        "Assumed, because the study does not say", assumed_table(assumed) if assumed else Text("nothing")
+        "Assumed, because the study does not say", assumed_table(assumed, names) if assumed else "nothing"
     )
     if result.space:
         yield from section("Space to search", pairs(space_rows(result.space)))

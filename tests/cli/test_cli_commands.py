@@ -12,7 +12,7 @@ from typing import Any
 
 import pytest
 
-from archopt.cli import StopRequest
+from archopt.cli import StopRequest, default_place
 from archopt.errors import InfeasibleError, InputError, Problem
 from archopt.present import files
 from archopt.present.record import FrontRecord
@@ -154,6 +154,14 @@ def test_a_second_interrupt_ends_at_once(workflow: Workflow, run: Run) -> None:
     assert not Path("runs").exists()
 
 
+@pytest.mark.parametrize(
+    ("name", "expected"),
+    [("board_7", "board_7"), ("../../etc", "etc"), ("a board / rev. B", "a-board-rev.-B"), ("..", "study")],
+)  # fmt: skip
+def test_the_default_directory_stays_below_runs(name: str, expected: str) -> None:
+    assert default_place(name) == Path("runs") / expected
+
+
 def test_time_ends_a_search() -> None:
     assert StopRequest()() == ""
     assert StopRequest(3600.0)() == ""
@@ -175,7 +183,7 @@ def test_bad_usage_is_exit_code_two(workflow: Workflow, run: Run, words: tuple[s
 def test_check_prints_what_was_understood(workflow: Workflow, run: Run) -> None:
     code, out, err = run("check", "board.toml")
     assert (code, err) == (0, "")
-    assert "economics.cooling_overhead  1.4    common practice" in out
+    assert "economics.cooling_overhead      1.4    common practice" in out
     code, out, _ = run("check", "board.toml", "--json")
     assert json.loads(out)["space"]["choices"] == 31
 

@@ -9,6 +9,7 @@ import pytest
 from rich.console import Console
 
 from archopt.present.amounts import counted, fixed, mechanism_word, money, number, place_word, signed, times
+from archopt.present.assumed import assumed_rows
 from archopt.present.front import Front
 from archopt.present.losses import loss_table, mechanism_kwh, state_at, year_kwh
 from archopt.present.overview import flat_band, front_sections
@@ -243,7 +244,7 @@ def test_check_prints_assumptions_space_and_power(record: FrontRecord) -> None:
     buffer = StringIO()
     print_check(console_for(buffer), result)
     text = buffer.getvalue()
-    assert "  economics.cooling_overhead  1.4    common practice" in text.splitlines()
+    assert "  economics.cooling_overhead      1.4    common practice" in text.splitlines()
     assert "  sum of the rails' maxima  121.5 W" in text.splitlines()
     assert "  most drawn at one time    103 W" in text.splitlines()
     assert "  designs      about 10^23" in text.splitlines()
@@ -264,3 +265,22 @@ def test_markup_in_names_is_printed_as_written() -> None:
     buffer = StringIO()
     put(console_for(buffer), [table(["part", "value"], [["[bold]X[/bold] :smile:", "1"]], left=["part"])])
     assert "[bold]X[/bold] :smile:" in buffer.getvalue()
+
+
+def test_assumptions_that_rails_share_take_one_line() -> None:
+    rails = ["core", "core_2", "io"]
+    assumed = [
+        *({"place": f"rails.{r}.ripple_percent", "value": "0.5", "reason": "plain default"} for r in rails),
+        {"place": "rails.core.step_a", "value": "30", "reason": "half"},
+        {"place": "rails.core_2.step_a", "value": "20", "reason": "half"},
+        {"place": "rails.core.capacitors", "value": "polymer_1, polymer_2", "reason": "rated"},
+        {"place": "rails.io.capacitors", "value": "ceramic_1, ceramic_2", "reason": "rated"},
+        {"place": "growth_percent", "value": "15", "reason": "plain default"},
+    ]
+    assert assumed_rows(assumed, rails) == [
+        ["rails: ripple_percent", "all rails", "0.5", "plain default"],
+        ["rails: step_a", "core, core_2", "core 30, core_2 20", "half"],
+        ["rails: capacitors", "core", "polymer_1, polymer_2", "rated"],
+        ["rails: capacitors", "io", "ceramic_1, ceramic_2", "rated"],
+        ["growth_percent", "", "15", "plain default"],
+    ]
