@@ -40,7 +40,7 @@ def test_output_ripple_rms(duty: float) -> None:
 
 @pytest.mark.parametrize(("duty", "ripple_a"), [(0.1, 0.0), (0.1, 8.0), (0.45, 5.0), (0.9, 3.0)])
 def test_input_ripple_rms(duty: float, ripple_a: float) -> None:
-    drawn = np.where(SAMPLES < duty, 20.0 + triangle(ripple_a, duty), 0.0)
+    drawn = np.where(duty > SAMPLES, 20.0 + triangle(ripple_a, duty), 0.0)
     assert capacitor.buck_input_ripple_rms_a(duty, 20.0, ripple_a) == pytest.approx(
         float(drawn.std()), rel=1e-4
     )

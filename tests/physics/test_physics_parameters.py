@@ -8,8 +8,9 @@ import numpy as np
 import pytest
 
 from archopt.physics import buck, bus_converter, linear
-from archopt.physics.bus_converter import ConverterParameters
-from archopt.physics.linear import LinearParameters
+from archopt.physics.bus_converter import ConverterLosses, ConverterParameters
+from archopt.physics.linear import LinearLosses, LinearParameters
+from archopt.physics.parameters import Gatherable
 
 TWO_UNITS = ConverterParameters(
     fixed_w=np.array([1.0, 2.0]),
@@ -29,6 +30,7 @@ def test_take_gathers_every_field_and_keeps_plain_numbers() -> None:
     index = np.array([[1, 0, 1], [0, 0, 1]])
     taken = TWO_UNITS.take(index)
     assert isinstance(taken, ConverterParameters)
+    assert isinstance(taken, Gatherable)
     for field in fields(ConverterParameters):
         given = getattr(TWO_UNITS, field.name)
         expected = given if given.ndim == 0 else given[index]
@@ -45,6 +47,7 @@ def test_converter_by_hand() -> None:
     p = ConverterParameters(*(getattr(TWO_UNITS, f.name) for f in fields(TWO_UNITS)))
     cold = p.take(np.array([1]))
     result = bus_converter.losses(cold, 60.0, 8.0, 20.0, 40.0)
+    assert isinstance(result, ConverterLosses)
     assert result.switching_w == pytest.approx(np.array([3.0 * (60 / 48) ** 2 * (8 / 10) ** -1]), rel=1e-12)
     assert result.linear_w == pytest.approx(np.array([2.0]), rel=1e-12)
     heated = 5e-3 * 400.0 * (1.0 + 0.004 * (result.temperature_degc - 25.0))
@@ -82,6 +85,7 @@ def test_linear_by_hand() -> None:
     # closed form: (3.3 - 2.5) V x 2 A + 5 mA x 3.3 V; dropout 300 mV at 3 A is 200 mV at 2 A
     p = LinearParameters(*(np.asarray(value) for value in (5e-3, 0.3, 3.0, 20.0)))
     result = linear.losses(p, 3.3, 2.5, 2.0, 50.0)
+    assert isinstance(result, LinearLosses)
     assert result.total_w == pytest.approx(1.6 + 0.0165, rel=1e-12)
     assert result.temperature_degc == pytest.approx(50.0 + 20.0 * 1.6165, rel=1e-12)
     assert linear.headroom_v(p, 3.3, 2.5, 2.0) == pytest.approx(0.6, rel=1e-12)

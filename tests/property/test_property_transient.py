@@ -149,7 +149,8 @@ def test_longer_wake_up_never_droops_less_after_a_step() -> None:
 @given(
     st.tuples(
         st.floats(0.0, 1e3), st.floats(0.0, 1e12), st.floats(0.0, 1e8), st.floats(0.0, 1e-2),
-        st.floats(0.0, 1.0), st.floats(0.0, 1.0), st.floats(0.0, 1e12), st.floats(0.0, 1e3), st.floats(0.0, 1e-2),
+        st.floats(0.0, 1.0), st.floats(0.0, 1.0), st.floats(0.0, 1e12), st.floats(0.0, 1e3),
+        st.floats(0.0, 1e-2),
     )
 )  # fmt: skip
 def test_always_finite(values: tuple[float, ...]) -> None:

@@ -1,0 +1,108 @@
+"""Every public function and class of the physics room is claimed by a test that names its source."""
+
+from __future__ import annotations
+
+import ast
+import importlib
+import inspect
+import pkgutil
+from functools import cache
+from pathlib import Path
+
+import pytest
+
+import archopt.physics
+
+TESTS = Path(__file__).parent.parent
+BUCK = "published/test_published_buck.py"
+COPPER = "published/test_published_copper.py"
+DROOP = "published/test_published_transient.py"
+IN_TIME = "property/test_property_transient.py"
+CAPACITOR = "physics/test_physics_capacitor.py"
+PARAMETERS = "physics/test_physics_parameters.py"
+THERMAL = "physics/test_physics_thermal.py"
+
+# what is claimed: (test file, test, source of the expected value)
+CLAIMS = {
+    "ampacity.current_limit_a": (COPPER, "test_one_ampere_for_ten_kelvin", "IPC-2221 form"),
+    "ampacity.temperature_rise_k": (COPPER, "test_one_ampere_for_ten_kelvin", "IPC-2221 form"),
+    "buck.BuckLosses": (BUCK, "test_total_1_31_w", "ROHM AEK59-D1-0065-2"),
+    "buck.BuckParameters": (BUCK, "test_rc5051_duty_with_drops", "RC5051 AN50 p. 9"),
+    "buck.duty": (BUCK, "test_rc5051_duty_with_drops", "RC5051 AN50 p. 9"),
+    "buck.hard_switched_share": (BUCK, "test_reversed_valley_current_swings_the_node", "closed form"),
+    "buck.losses": (BUCK, "test_overlap_61_mw", "SNVS276G p. 26"),
+    "buck.output_charge_energy_j": (BUCK, "test_output_charge_against_integrals", "numerical integration"),
+    "buck.ripple_a": (BUCK, "test_ripple_of_data_sheet_examples", "SLUS973 p. 21, RT6263A p. 17"),
+    "bus_converter.ConverterLosses": (PARAMETERS, "test_converter_by_hand", "closed form"),
+    "bus_converter.ConverterParameters": (PARAMETERS, "test_converter_by_hand", "closed form"),
+    "bus_converter.losses": (PARAMETERS, "test_converter_by_hand", "closed form"),
+    "capacitor.buck_input_ripple_rms_a": (BUCK, "test_input_capacitor_1_92_a_and_88_8_mw", "SNVS276G p. 26"),
+    "capacitor.buck_output_ripple_rms_a": (CAPACITOR, "test_output_ripple_rms", "sampled waveform"),
+    "capacitor.effective_capacitance_f": (CAPACITOR, "test_bias_halves_at_its_voltage", "closed form"),
+    "capacitor.esr_loss_w": (BUCK, "test_input_capacitor_1_92_a_and_88_8_mw", "SNVS276G p. 26"),
+    "capacitor.interleaved_ripple_a": (CAPACITOR, "test_interleaved_ripple", "sampled waveform"),
+    "copper.conductor_resistance_ohm": (COPPER, "test_wire_table", "HyperPhysics after Floyd; NEC chapter 9"),
+    "copper.foil_thickness_m": (COPPER, "test_finished_thickness", "IPC-6012 minima as quoted"),
+    "copper.resistivity_ohm_m": (COPPER, "test_annealed_copper", "IEC 60028, NBS Handbook 100"),
+    "copper.sheet_resistance_ohm": (COPPER, "test_one_ounce_is_34_3_um_and_half_a_milliohm", "IEC 60028"),
+    "copper.squares_matrix": (COPPER, "test_squares_matrix_gives_drop_and_loss", "closed form"),
+    "copper.trace_resistance_ohm": (COPPER, "test_trace_of_100_mm", "seen, recomputed with IEC 60028"),
+    "copper.via_resistance_ohm": (COPPER, "test_via_barrel", "seen for a thin wall; closed form"),
+    "linear.LinearLosses": (PARAMETERS, "test_linear_by_hand", "closed form"),
+    "linear.LinearParameters": (PARAMETERS, "test_linear_by_hand", "closed form"),
+    "linear.headroom_v": (PARAMETERS, "test_linear_by_hand", "closed form"),
+    "linear.losses": (PARAMETERS, "test_linear_by_hand", "closed form"),
+    "parameters.Gatherable": (PARAMETERS, "test_take_gathers_every_field_and_keeps_plain_numbers", "numpy"),
+    "stability.damped_peak": (DROOP, "test_damped_peak_against_a_minimax_search", "from memory; searched"),
+    "stability.deliverable_power_w": (
+        DROOP, "test_deliverable_power_is_where_the_operating_point_vanishes", "closed form",
+    ),
+    "stability.least_capacitance_f": (DROOP, "test_stability_against_eigenvalues", "eigenvalues"),
+    "stability.regulated_source_h": (
+        DROOP, "test_source_inductance_meets_its_resistance_at_the_bandwidth", "closed form",
+    ),
+    "stability.resistance_limit_ohm": (DROOP, "test_stability_against_eigenvalues", "eigenvalues"),
+    "thermal.fixed_point": (THERMAL, "test_fixed_point_is_where_iteration_ends", "iteration"),
+    "thermal.thermal_resistance_at": (THERMAL, "test_air_speed", "textbook, laminar flat plate"),
+    "transient.buck_slew_a_per_s": (DROOP, "test_slew_of_running_phases", "closed form"),
+    "transient.bus_dip_v": (IN_TIME, "test_bus_dip_is_never_optimistic", "integration in time"),
+    "transient.rail_droop_v": (IN_TIME, "test_ramped_form_is_exact", "integration in time"),
+    "transient.release_v": (DROOP, "test_release_against_the_energy_form", "SLUS659F p. 24, SGLS371A p. 22"),
+    "transient.step_droop_v": (DROOP, "test_undershoot_of_slus659f", "SLUS659F p. 24"),
+    "transient.transition_energy_j": (DROOP, "test_transition_energy", "closed form"),
+}  # fmt: skip
+
+
+def public_names() -> set[str]:
+    found = set()
+    for module_info in pkgutil.iter_modules(archopt.physics.__path__):
+        module = importlib.import_module(f"archopt.physics.{module_info.name}")
+        for name, value in vars(module).items():
+            own = getattr(value, "__module__", None) == module.__name__
+            if own and not name.startswith("_") and (inspect.isfunction(value) or inspect.isclass(value)):
+                found.add(f"{module_info.name}.{name}")
+    return found
+
+
+@cache
+def parsed(file: str) -> ast.Module:
+    return ast.parse((TESTS / file).read_text(encoding="utf-8"))
+
+
+def names_used(tree: ast.AST) -> set[str]:
+    used = {node.id for node in ast.walk(tree) if isinstance(node, ast.Name)}
+    return used | {node.attr for node in ast.walk(tree) if isinstance(node, ast.Attribute)}
+
+
+def test_everything_public_is_claimed_and_nothing_else() -> None:
+    assert public_names() == set(CLAIMS)
+
+
+@pytest.mark.parametrize("claimed", sorted(CLAIMS))
+def test_the_claiming_test_exists_and_uses_what_it_claims(claimed: str) -> None:
+    file, test, source = CLAIMS[claimed]
+    tests = {node.name for node in ast.walk(parsed(file)) if isinstance(node, ast.FunctionDef)}
+    assert test in tests
+    # by the file and not the one test: a class may reach its test by way of a fixture
+    assert claimed.split(".")[1] in names_used(parsed(file))
+    assert source
