@@ -203,14 +203,17 @@ def test_thinning_fits_the_limit_keeps_extremes_and_every_droop() -> None:
 
 
 def test_thinning_prefers_what_stays_on_the_front_when_more_droop_is_admitted() -> None:
-    """Two designs share a box: the one beaten in energy and cost by a droopier design goes."""
+    """Two designs share a box: the one beaten in energy and cost by a droopier design goes.
+
+    It goes although it is the nearer to the corner of the box.
+    """
     archive = Archive(1)
     rows = np.arange(5)[:, None]
     objectives = np.array(
         [
             [50.0, 300.0, 80.0],
             [300.0, 20.0, 80.0],
-            [100.000, 100.100, 60.0],
+            [100.000, 100.150, 60.0],
             [100.010, 100.090, 60.0],
             [100.005, 100.085, 70.0],
         ]

@@ -169,6 +169,21 @@ def test_survival_is_the_librarys_own(monkeypatch: pytest.MonkeyPatch) -> None:
     assert calls == [8, 16, 16]
 
 
+def test_crowding_is_the_product_of_the_nearest_neighbours_distances() -> None:
+    """From the definition: squared distances to as many neighbours as objectives, extremes infinite."""
+    engine = Engine([Gene(f"x{i}", "real", 0, 1) for i in range(3)], 40, 1)
+    directions = np.abs(np.random.default_rng(1).standard_normal((40, 3)))
+    front = directions / np.linalg.norm(directions, axis=1)[:, None] * [1.0, 30.0, 500.0]
+    engine.ask()
+    engine.tell(front, np.zeros(40))
+    objectives, crowding = engine.objectives(), engine.state()["crowding"]
+    scaled = (objectives - objectives.min(axis=0)) / np.ptp(objectives, axis=0)
+    squared = np.sort(((scaled[:, None] - scaled[None]) ** 2).sum(axis=2), axis=1)
+    expected = squared[:, 1:4].prod(axis=1)
+    expected[np.concatenate([objectives.argmin(axis=0), objectives.argmax(axis=0)])] = np.inf
+    assert crowding == pytest.approx(expected, rel=1e-9)
+
+
 def test_seeds_come_first_repaired_and_once() -> None:
     seeds = np.array([[1.0] * 20, [1.0] * 20, [9.4] * 20])
     first = Engine(GENES, 10, 1, seeds=seeds).ask()
