@@ -6,6 +6,7 @@ Valid for continuous and forced negative inductor current, with edges and dead t
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -197,6 +198,69 @@ def hard_switched_share(p: BuckParameters, input_v: FloatLike, valley_a: FloatLi
     return share
 
 
+class _Point(NamedTuple):
+    """Inductor current of one operating point: duty within its bounds, ripple and what follows from it."""
+
+    input_v: FloatArray
+    current_a: FloatArray
+    asked: FloatArray
+    duty: FloatArray
+    ripple_a: FloatArray
+    valley_a: FloatArray
+    carried_a: FloatArray  # the valley current where it is not reversed
+    peak_a: FloatArray
+    ripple_square: FloatArray
+    rms_square: FloatArray
+
+
+def _point(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike) -> _Point:
+    current = np.asarray(current_a, dtype=np.float64)
+    asked, off_v = _duty_and_off_voltage(p, input_v, output_v, current_a)
+    d = np.clip(asked, LEAST_DUTY, 1.0)
+    ripple = np.maximum(off_v, 0.0) * (1.0 - d) / (p.inductance_h * p.frequency_hz)
+    half = 0.5 * ripple
+    valley = current - half
+    ripple_square = ripple * ripple * (1.0 / 12.0)
+    return _Point(
+        np.asarray(input_v, dtype=np.float64),
+        current,
+        asked,
+        d,
+        ripple,
+        valley,
+        np.maximum(valley, 0.0),
+        np.maximum(current + half, 0.0),
+        ripple_square,
+        current * current + ripple_square,
+    )
+
+
+def _conduction(p: BuckParameters, at: _Point) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Loss (W) of high side, low side and winding at 25 degC."""
+    off_share = np.maximum(1.0 - at.duty - p.dead_s * p.frequency_hz, 0.0)
+    high_w = p.high_side_ohm * at.duty * at.rms_square
+    return high_w, p.low_side_ohm * off_share * at.rms_square, p.winding_ohm * at.rms_square
+
+
+def _constant(p: BuckParameters, at: _Point) -> tuple[FloatArray, ...]:
+    """Losses (W) that do not depend on temperature, in the order of MECHANISMS from core_w, then bias_w."""
+    v, frequency = at.input_v, p.frequency_hz
+    vf = v * frequency
+    charge_j = output_charge_energy_j(p.high_side_output_c, p.low_side_output_c, p.output_charge_v, v)
+    gate_c = p.high_side_gate_c + p.low_side_gate_c
+    return (
+        p.core_w * (at.ripple_a / np.maximum(p.core_ripple_a, TINY)) ** p.core_exponent,
+        vf * (0.5 * p.rise_s * at.carried_a + 0.5 * p.fall_s * at.peak_a),
+        0.5 * p.diode_v * p.dead_s * frequency * (np.abs(at.valley_a) + at.peak_a),
+        frequency * charge_j * hard_switched_share(p, v, at.valley_a),
+        vf * (p.recovery_c / np.maximum(p.recovery_a, TINY)) * at.carried_a,
+        p.input_capacitor_ohm * at.duty * ((1.0 - at.duty) * at.current_a * at.current_a + at.ripple_square),
+        vf * (gate_c * p.gate_from_input),
+        p.quiescent_a * v,
+        (1.0 - p.gate_from_input) * gate_c * p.gate_v * frequency,
+    )
+
+
 def losses(
     p: BuckParameters,
     input_v: FloatLike,
@@ -223,35 +287,13 @@ def losses(
     Steinmetz found (1892); input capacitor D (1 - D) I^2 + D ripple^2 / 12. Textbook forms, checked against
     SNVS276G p. 26 and two ROHM notes.
     """
-    v, i = np.asarray(input_v), np.asarray(current_a)
-    asked, off_v = _duty_and_off_voltage(p, v, output_v, i)
-    d = np.clip(asked, LEAST_DUTY, 1.0)
-    ripple = np.maximum(off_v, 0.0) * (1.0 - d) / (p.inductance_h * p.frequency_hz)
-    valley, peak = i - 0.5 * ripple, np.maximum(i + 0.5 * ripple, 0.0)
-    carried = np.maximum(valley, 0.0)
-    ripple_square = ripple * ripple * (1.0 / 12.0)
-    rms_square = i * i + ripple_square
-    vf = v * p.frequency_hz
-
-    high_w = p.high_side_ohm * d * rms_square
-    low_w = p.low_side_ohm * np.maximum(1.0 - d - p.dead_s * p.frequency_hz, 0.0) * rms_square
-    winding_w = p.winding_ohm * rms_square
-    core_w = p.core_w * (ripple / np.maximum(p.core_ripple_a, TINY)) ** p.core_exponent
-    overlap_w = vf * (0.5 * p.rise_s * carried + 0.5 * p.fall_s * peak)
-    dead_w = (0.5 * p.diode_v * p.dead_s * p.frequency_hz) * (np.abs(valley) + peak)
-    output_w = p.frequency_hz * output_charge_energy_j(
-        p.high_side_output_c, p.low_side_output_c, p.output_charge_v, v
-    ) * hard_switched_share(p, v, valley)  # fmt: skip
-    recovery_w = vf * carried * (p.recovery_c / np.maximum(p.recovery_a, TINY))
-    input_w = p.input_capacitor_ohm * d * ((1.0 - d) * i * i + ripple_square)
-    gate_c = p.high_side_gate_c + p.low_side_gate_c
-    gate_w = vf * (gate_c * p.gate_from_input)
-    bias_w = (1.0 - p.gate_from_input) * gate_c * p.gate_v * p.frequency_hz
-    controller_w = p.quiescent_a * v
-
-    edge_w = overlap_w + dead_w + output_w + recovery_w + gate_w + bias_w
+    at = _point(p, input_v, output_v, current_a)
+    high_w, low_w, winding_w = _conduction(p, at)
+    constant = _constant(p, at)
     switch_w = high_w + low_w
-    at_reference = switch_w + winding_w + core_w + edge_w + input_w + controller_w
+    at_reference = switch_w + winding_w
+    for loss_w in constant:
+        at_reference = at_reference + loss_w
     per_k = p.switch_per_k * switch_w + p.winding_per_k * winding_w
     _, temperature, gain = fixed_point(
         at_reference,
@@ -264,10 +306,7 @@ def losses(
     rise_k = temperature - REFERENCE_DEGC
     switch_factor = np.maximum(1.0 + p.switch_per_k * rise_k, LEAST_RESISTANCE_FACTOR)
     winding_factor = np.maximum(1.0 + p.winding_per_k * rise_k, LEAST_RESISTANCE_FACTOR)
-    results = (
-        high_w * switch_factor, low_w * switch_factor, winding_w * winding_factor, core_w, overlap_w, dead_w,
-        output_w, recovery_w, input_w, gate_w, controller_w, bias_w,
-        asked, ripple, asked / p.frequency_hz, temperature, gain,
-    )  # fmt: skip
+    conduction = (high_w * switch_factor, low_w * switch_factor, winding_w * winding_factor)
+    state = (at.asked, at.ripple_a, at.asked / p.frequency_hz, temperature, gain)
     shape = np.shape(temperature)
-    return BuckLosses(*(np.broadcast_to(result, shape) for result in results))
+    return BuckLosses(*(np.broadcast_to(result, shape) for result in (*conduction, *constant, *state)))
