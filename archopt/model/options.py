@@ -19,6 +19,7 @@ from archopt.model.tables import NODES, LossTables, cubic_weights
 from archopt.physics.transient import rail_droop_v
 
 DROOP_NODES = 8
+LEAST_V = 1e-3  # keeps the search for the highest voltage finite where a stage has no duty
 IDLE_HOURS = 1e-6  # weight of a band's worst mix, so that a band without hours still has a preference
 
 
@@ -128,7 +129,7 @@ def windows(
     least_duty = np.maximum(stages.min_on_s[stage] * stages.frequency_hz[stage], 1e-4)
     for _ in range(8):
         duty = conduction_ratio(stages, stage, volts, output, light)
-        volts = np.minimum(volts * duty / least_duty, 1e3)
+        volts = np.clip(volts * duty / least_duty, LEAST_V, 1e3)
     high = np.where(stages.kind[stage] == BUCK, np.minimum(high, volts), high)
     return need, jump, np.minimum(high, hottest(problem, states, tables))
 
