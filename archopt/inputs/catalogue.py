@@ -63,7 +63,7 @@ def load_catalogue(root: Path | None, own: Path | None, own_shown: str, notebook
     before = len(notebook.problems)
     _read_folder(base, str(base) if root is not None else "catalog", reading, notebook, override=False)
     if own is not None:
-        if own.is_dir():
+        if _is_folder(own):
             _read_folder(own, own_shown, reading, notebook, override=True)
         else:
             notebook.problem("catalogue", f"there is no folder {own_shown}")
@@ -76,12 +76,12 @@ def load_catalogue(root: Path | None, own: Path | None, own_shown: str, notebook
 
 def _read_folder(root: Path, shown: str, reading: _Reading, notebook: Notebook, override: bool) -> None:
     """Read every family of one catalogue folder; rows of a second folder may override those of the first."""
-    if not root.is_dir():
+    if not _is_folder(root):
         notebook.problem("", "there is no such folder (the catalogue of parts)", shown)
         return
     _read_sources(root, shown, reading, notebook, required=not override)
     seen: set[str] = set()
-    for entry in sorted(root.iterdir()):
+    for entry in _entries(root, shown, notebook):
         if entry.name.startswith((".", "_")) or entry.name == SOURCES:
             continue
         family = entry.name if entry.is_dir() else entry.stem
@@ -92,10 +92,27 @@ def _read_folder(root: Path, shown: str, reading: _Reading, notebook: Notebook, 
                 "", f"is no family of parts; {nearest(family, FAMILIES, 20)}", f"{shown}/{entry.name}"
             )
             continue
-        files = sorted(entry.glob("*.csv")) if entry.is_dir() else [entry]
-        for file in files:
+        files = _entries(entry, shown, notebook) if entry.is_dir() else [entry]
+        for file in (file for file in files if file.suffix == ".csv"):
             shown_file = f"{shown}/{file.relative_to(root).as_posix()}"
             _read_family(FAMILIES[family], file, shown_file, reading, seen, notebook)
+
+
+def _is_folder(path: Path) -> bool:
+    """Return whether there is such a folder; a name no file system takes is none."""
+    try:
+        return path.is_dir()
+    except OSError:
+        return False
+
+
+def _entries(root: Path, shown: str, notebook: Notebook) -> list[Path]:
+    """Return what is in a folder, sorted; a folder that may not be listed is noted."""
+    try:
+        return sorted(root.iterdir())
+    except OSError as error:
+        notebook.problem("", f"cannot be listed: {error.strerror}", shown)
+        return []
 
 
 def _read_rows(

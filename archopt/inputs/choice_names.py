@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from archopt.inputs.problems import Notebook, nearest, shown
+from archopt.inputs.problems import Notebook, brief, nearest, shown
 from archopt.inputs.resolved import Board, Catalogue, Rail
 
 BANK_COUNTS = (1, 2, 3, 4, 6, 8, 10, 12, 16, 20, 24, 32)
@@ -32,7 +32,7 @@ def flatten(raw: Mapping[str, Any], place: str, notebook: Notebook) -> dict[str,
         if not values:
             notebook.problem(f"{place}.{name}", "is an empty list")
         elif any(isinstance(item, bool) or not isinstance(item, (str, int, float)) for item in values):
-            notebook.problem(f"{place}.{name}", f"needs a name or a number, found {value!r}")
+            notebook.problem(f"{place}.{name}", f"needs a name or a number, found {brief(value)}")
         elif name in flat:
             notebook.problem(f"{place}.{name}", "is there twice")
         else:
@@ -63,9 +63,12 @@ class ChoiceChecker:
             **dict.fromkeys(BUSES, BUS_KEYS),
             "board": BOARD_KEYS,
         }
+        if not key or not owner:
+            notebook.problem(f"{place}.{name}", f"is no choice; write {name or 'core'}.stage or the like")
+            return False
         if owner not in owners:
-            hint = nearest(owner or name, list(owners))
-            notebook.problem(f"{place}.{name}", f"there is no rail or bus '{owner or name}'; {hint}")
+            hint = nearest(owner, list(owners))
+            notebook.problem(f"{place}.{name}", f"there is no rail or bus '{owner}'; {hint}")
             return False
         if key not in owners[owner]:
             notebook.problem(
@@ -100,7 +103,7 @@ class ChoiceChecker:
         try:
             number = float(value)
         except ValueError:
-            return f"needs a number, found {value!r}"
+            return f"needs a number, found {brief(value)}"
         if key in {"nominal_v", "lower_v", "upper_v"}:
             return (
                 ""

@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from archopt.inputs.problems import Notebook, nearest, validated
+from archopt.inputs.problems import Notebook, brief, nearest, validated
 from archopt.inputs.study import (
     TABLES,
     BoardTable,
@@ -116,7 +116,7 @@ def _text(content: Mapping[str, Any], key: str, notebook: Notebook) -> str | Non
     value = content.get(key)
     if value is None or (isinstance(value, str) and value.strip()):
         return value
-    notebook.problem(key, f"needs text in quotes, found {value!r}")
+    notebook.problem(key, f"needs text in quotes, found {brief(value)}")
     return None
 
 
@@ -125,7 +125,7 @@ def _mapping(content: Mapping[str, Any], key: str, notebook: Notebook) -> dict[s
     value = content.get(key)
     if value is None or isinstance(value, dict):
         return value
-    notebook.problem(key, f"needs a table [{key}], found {value!r}")
+    notebook.problem(key, f"needs a table [{key}], found {brief(value)}")
     return None
 
 
@@ -137,7 +137,7 @@ def _table(name: str, content: Mapping[str, Any], notebook: Notebook) -> Any:
             notebook.problem(name, f"the table [{name}] is missing")
         return None
     if not isinstance(raw, dict):
-        notebook.problem(name, f"needs a table [{name}], found {raw!r}")
+        notebook.problem(name, f"needs a table [{name}], found {brief(raw)}")
         return None
     raw = dict(raw)
     if name == "input" and isinstance(raw.get("levels"), list):
@@ -152,7 +152,7 @@ def _rows(raw: list[Any], place: str, model: type[Any], notebook: Notebook) -> l
     rows: list[Any] = []
     for number, item in enumerate(raw, start=1):
         if not isinstance(item, dict):
-            notebook.problem(f"{place}[{number}]", f"needs a table, found {item!r}")
+            notebook.problem(f"{place}[{number}]", f"needs a table, found {brief(item)}")
             continue
         label = item.get("name")
         here = f"{place}.{label}" if isinstance(label, str) and label else f"{place}[{number}]"
@@ -172,13 +172,13 @@ def _read_rails(draft: Draft, raw: Any, notebook: Notebook) -> None:
     elif isinstance(raw, list):
         for number, item in enumerate(raw, start=1):
             if not isinstance(item, dict):
-                notebook.problem(f"rails[{number}]", f"needs a table, found {item!r}")
+                notebook.problem(f"rails[{number}]", f"needs a table, found {brief(item)}")
                 continue
             name = item.get("name")
             start = f"rails.{name}" if isinstance(name, str) and name else f"rails[{number}]"
             _add_rail(draft, item, draft.file, start, notebook)
     else:
-        notebook.problem("rails", f"needs [[rails]] tables or the name of a CSV file, found {raw!r}")
+        notebook.problem("rails", f"needs [[rails]] tables or the name of a CSV file, found {brief(raw)}")
         return
     if not draft.rail_names and not notebook.problems:
         notebook.problem("rails", "there is no rail")

@@ -8,7 +8,15 @@ from typing import TypeAlias
 
 from archopt.inputs.choice_names import STAGE_FAMILIES
 from archopt.inputs.draft import Draft
-from archopt.inputs.parts import BuckStage, BusConverter, LinearRegulator, Part, SingleStage, Supervisor
+from archopt.inputs.parts import (
+    BuckStage,
+    BusConverter,
+    Capacitor,
+    LinearRegulator,
+    Part,
+    SingleStage,
+    Supervisor,
+)
 from archopt.inputs.problems import Notebook
 from archopt.inputs.resolved import Catalogue, Choices, Control, Derating, InputSupply, Rail
 
@@ -43,6 +51,8 @@ def check_feasible(
             _check_rail(draft, rail, rails, allowed, choices, demand, notebook)
     if supply is not None:
         _check_input(supply, allowed, choices, notebook)
+    if choices.max_buses > 0:
+        _check_bulk(control, derating, allowed["capacitors"], notebook)
     if "fixed" not in control.kinds:
         _check_supervisor(control, allowed["supervisors"], notebook)
 
@@ -73,9 +83,12 @@ def _check_rail(
     which = "pinned" if pinned else "linear" if rail.linear_only else "allowed"
     place, file = draft.place(rail.name, "voltage_v")
     fitting = [part for part in stages if part.output_min_v <= rail.voltage_v <= part.output_max_v]
+    if not stages:
+        notebook.problem(place, f"no {which} stage is left to make {rail.voltage_v:g} V", file)
+        return
     if not fitting:
         ranges = sorted({(part.output_min_v, part.output_max_v) for part in stages})
-        reach = ", ".join(f"{low:g} to {high:g} V" for low, high in ranges) or "none"
+        reach = ", ".join(f"{low:g} to {high:g} V" for low, high in ranges)
         message = f"no {which} stage makes {rail.voltage_v:g} V; their output ranges are {reach}"
         notebook.problem(place, message, file)
         return
@@ -122,15 +135,29 @@ def _check_input(
     standing = [
         part for part in first if part.input_min_v <= supply.low_v and part.input_max_v >= supply.high_v
     ]
+    if not first:
+        notebook.problem("input", f"no allowed converter is left to stand {span}")
+        return
     if not standing:
         ranges = sorted({(part.input_min_v, part.input_max_v) for part in first})
-        reach = ", ".join(f"{low:g} to {high:g}" for low, high in ranges[-8:]) or "none"
+        reach = ", ".join(f"{low:g} to {high:g}" for low, high in ranges[-8:])
         notebook.problem("input", f"no allowed converter stands {span}; input ranges are {reach} V")
         return
     isolating = [part for part in standing if isinstance(part, (BusConverter, SingleStage)) and part.isolated]
     if supply.isolation and not isolating:
         message = f"isolation is required and no allowed converter that stands {span} isolates"
         notebook.problem("input.isolation", message)
+
+
+def _check_bulk(control: Control, derating: Derating, capacitors: Sequence[Part], notebook: Notebook) -> None:
+    """Note buses that no allowed capacitor stands at their lowest voltage."""
+    highest = max((part.rated_v for part in capacitors if isinstance(part, Capacitor)), default=0.0)
+    if highest * derating.voltage < control.bus_min_v:
+        message = (
+            f"no allowed capacitor stands a bus of {control.bus_min_v:g} V: the highest is rated for "
+            f"{highest:g} V, with derating {highest * derating.voltage:g} V; allow others or no bus"
+        )
+        notebook.problem("control.bus_min_v", message)
 
 
 def _check_supervisor(control: Control, supervisors: Sequence[Part], notebook: Notebook) -> None:

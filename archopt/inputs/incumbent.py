@@ -29,8 +29,10 @@ def resolve_incumbent(
     if draft.incumbent is None:
         return None
     stated: dict[str, str] = {}
-    fine = True
-    for name, values in flatten(draft.incumbent, "incumbent", notebook).items():
+    before = len(notebook.problems)
+    flat = flatten(draft.incumbent, "incumbent", notebook)
+    fine = len(notebook.problems) == before
+    for name, values in flat.items():
         if len(values) > 1:
             notebook.problem(f"incumbent.{name}", "is a list; today's design has one value")
             fine = False

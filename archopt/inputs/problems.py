@@ -89,6 +89,15 @@ def shown(value: object) -> str:
     return str(value)
 
 
+def brief(value: object) -> str:
+    """Return a value as it was written, cut where it would fill the screen."""
+    try:
+        text = repr(value)
+    except ValueError:  # whole numbers beyond what Python prints
+        return "a number of thousands of digits"
+    return text if len(text) <= 60 else f"{text[:50]}..."
+
+
 def explain(error: Mapping[str, Any], key: str, model: type[BaseModel]) -> str:
     """Return one pydantic error in plain words: what is wrong and what would be right."""
     kind, given, context = error["type"], error["input"], error.get("ctx", {})
@@ -99,6 +108,8 @@ def explain(error: Mapping[str, Any], key: str, model: type[BaseModel]) -> str:
         return f"missing; it is the {described}" if described else "missing"
     if kind == "extra_forbidden":
         return f"unknown; {nearest(key, list(model.model_fields), many=40)}"
+    if kind == "finite_number" or shown(given).strip().lower().lstrip("+-") in {"nan", "inf", "infinity"}:
+        return f"{amount} is not a finite number"
     if kind in {"greater_than", "greater_than_equal", "less_than", "less_than_equal"}:
         symbol = next(name for name in ("gt", "ge", "lt", "le") if name in context)
         words = {"gt": "above", "ge": "at least", "lt": "below", "le": "at most"}[symbol]
@@ -108,29 +119,27 @@ def explain(error: Mapping[str, Any], key: str, model: type[BaseModel]) -> str:
             in_range = given / 1000 <= context[symbol]
             text += f"; if {given:g} {smaller} was meant, write {given / 1000:g}" if in_range else ""
         return text
-    if kind == "finite_number":
-        return f"{amount} is not a finite number"
     if kind in {"float_type", "float_parsing", "int_type", "int_parsing", "int_from_float"}:
         whole = "whole " if kind.startswith("int") else ""
-        return f"needs a {whole}number{f' in {unit}' if unit else ''}, found {given!r}"
+        return f"needs a {whole}number{f' in {unit}' if unit else ''}, found {brief(given)}"
     if kind in {"bool_type", "bool_parsing"}:
-        return f"needs true or false, found {given!r}"
+        return f"needs true or false, found {brief(given)}"
     if kind == "string_type":
-        return f"needs text in quotes, found {given!r}"
+        return f"needs text in quotes, found {brief(given)}"
     if kind in {"tuple_type", "list_type"}:
-        return f"needs a list in square brackets, found {given!r}"
+        return f"needs a list in square brackets, found {brief(given)}"
     if kind in {"model_type", "model_attributes_type", "dict_type"}:
-        return f"needs a table, found {given!r}"
+        return f"needs a table, found {brief(given)}"
     if kind == "literal_error":
         allowed = context["expected"].replace("'", "")
-        return f"{given!r} is not one of {allowed}"
+        return f"{brief(given)} is not one of {allowed}"
     if kind == "value_error":
         return str(context["error"])
     if kind == "string_too_short":
         return "is empty"
     if kind == "string_pattern_mismatch":
-        return f"{given!r} does not have the form {context['pattern']}"
-    return f"{error['msg'][:1].lower()}{error['msg'][1:]}, found {given!r}"
+        return f"{brief(given)} does not have the form {context['pattern']}"
+    return f"{error['msg'][:1].lower()}{error['msg'][1:]}, found {brief(given)}"
 
 
 def validated(model: type[Model], raw: Mapping[str, Any], locate: Locate, notebook: Notebook) -> Model | None:

@@ -14,7 +14,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from archopt.inputs.problems import Notebook, nearest
+from archopt.inputs.problems import Notebook, brief, nearest
 from archopt.inputs.resolved import FloatArray
 from archopt.inputs.text_files import CsvRows, read_csv
 
@@ -84,12 +84,12 @@ def read_profile(
     known : names a column may carry, those of rails with faults of their own among them
     limits : what the cells may hold
     """
+    before = len(notebook.problems)
     table = read_csv(path, shown_path, "the load profile", notebook)
     if table is None:
         return None
-    before = len(notebook.problems)
     _check_header(table, known, notebook)
-    if not table.rows:
+    if not table.rows and len(notebook.problems) == before:
         notebook.problem("", "has no rows", shown_path)
     if len(notebook.problems) > before and "hours" not in table.header:
         return None
@@ -170,7 +170,7 @@ def _numbers(
         try:
             value = float(cell)
         except ValueError:
-            faults.add(line, name, f"needs a number, found {cell!r}")
+            faults.add(line, name, f"needs a number, found {brief(cell)}")
             continue
         if not math.isfinite(value):
             faults.add(line, name, f"{cell} is not a finite number")

@@ -13,6 +13,7 @@ from archopt.inputs.problems import Notebook, nearest, shown
 from archopt.inputs.profile import ProfileLimits, read_profile
 from archopt.inputs.resolved import FloatArray, LoadTable, Rail
 from archopt.inputs.study_load import StateRow
+from archopt.inputs.text_files import read_csv
 
 YEAR_HOURS = 8760.0
 LEAP_YEAR_HOURS = 8784.0
@@ -77,6 +78,9 @@ def _from_profile(
     draft: Draft, shown_path: str, rails: Sequence[Rail], coincidence: float, notebook: Notebook
 ) -> LoadTable | None:
     """Return the moments of the profile, hours scaled to the year where it is a sample."""
+    if not draft.rail_names:  # told with the rails; the file itself can still be checked
+        read_csv(draft.folder / shown_path, shown_path, "the load profile", notebook)
+        return None
     supply = draft.supply
     limits = ProfileLimits(
         rail_max_a={rail.name: rail.max_current_a for rail in rails},

@@ -39,7 +39,8 @@ ROWS: dict[str, list[dict[str, Any]]] = {
     ],
     "inductors": [
         {
-            "name": "coil", "inductance_nh": 200, "winding_mohm": 0.3, "saturation_a": 60, "core_loss_mw": 200,
+            "name": "coil", "inductance_nh": 200, "winding_mohm": 0.3, "saturation_a": 60,
+            "core_loss_mw": 200,
             "core_ripple_a": 10, "core_frequency_khz": 500, "core_frequency_exponent": 1.5,
             "core_ripple_exponent": 2.4,
         },
@@ -63,7 +64,8 @@ ROWS: dict[str, list[dict[str, Any]]] = {
     "linear_regulators": [
         {
             "name": "linear_1", "input_min_v": 1.5, "input_max_v": 6, "output_min_v": 0.8, "output_max_v": 5,
-            "dropout_mv": 200, "phase_current_a": 1, "quiescent_ma": 0.1, "crossover_khz": 200, "delay_ns": 200,
+            "dropout_mv": 200, "phase_current_a": 1, "quiescent_ma": 0.1, "crossover_khz": 200,
+            "delay_ns": 200,
             "loop_min_uf": 4, "loop_max_uf": 500, "thermal_k_per_w": 60, "air_speed_m_s": 1.5,
         },
     ],
@@ -94,11 +96,13 @@ ROWS: dict[str, list[dict[str, Any]]] = {
     ],
     "input_paths": [
         {
-            "name": "path_80", "input_max_v": 80, "resistance_mohm": 30, "inductance_uh": 1, "max_current_a": 10,
+            "name": "path_80", "input_max_v": 80, "resistance_mohm": 30, "inductance_uh": 1,
+            "max_current_a": 10,
             "power_mw": 100,
         },
         {
-            "name": "path_40", "input_max_v": 40, "resistance_mohm": 20, "inductance_uh": 1, "max_current_a": 10,
+            "name": "path_40", "input_max_v": 40, "resistance_mohm": 20, "inductance_uh": 1,
+            "max_current_a": 10,
             "power_mw": 80, "price_1k": 1.2,
         },
     ],
