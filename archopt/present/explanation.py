@@ -14,6 +14,8 @@ from archopt.present.power_tree import BUS_WORD, tree_lines
 from archopt.present.record import Data
 from archopt.present.tables import HangingLines, WordTable, heading, indented, pairs, section, table
 
+UNITLESS = ("ratio", "choices")
+
 
 def explanation(design: Data, problem: Data) -> Iterable[RenderableType]:
     """The sections of one explained design.
@@ -36,7 +38,7 @@ def explanation(design: Data, problem: Data) -> Iterable[RenderableType]:
             *phases_body(design["bands"]),
         )
     yield from section("Losses by part and mechanism", loss_table(design))
-    yield from section("States", state_table(design), balance_line(design))
+    yield from section("States of the year, and the shown loads", state_table(design), balance_line(design))
     if design.get("heat"):
         yield from section("Heat in the hottest case", heat_table(design["heat"]))
     if design.get("tolerance"):
@@ -90,6 +92,7 @@ def slack_text(limit: object) -> str:
     """The slack of a limit in trade units, with a word for a limit that is not met."""
     slack = of(limit, "slack")
     unit = str(of(limit, "unit") or "")
+    unit = "" if unit in UNITLESS else unit
     if not isinstance(slack, int | float):
         return NONE
     return f"over by {with_unit(-slack, unit, 3)}" if slack < 0 else f"{with_unit(slack, unit, 3)} left"

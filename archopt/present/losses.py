@@ -3,12 +3,15 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable
 
 from archopt.present.amounts import NONE, fixed, mechanism_word, place_word, real
 from archopt.present.record import WATT_COLUMNS, Data
 from archopt.present.tables import WordTable, table
 
 LOADS = tuple(WATT_COLUMNS)
+SMALL_SHARE = 0.002
+"""Mechanisms below this share of the year's loss are summed within their part."""
 
 
 def state_at(design: Data, load: str) -> Data | None:
@@ -19,11 +22,8 @@ def state_at(design: Data, load: str) -> Data | None:
     states: list[Data] = design.get("states") or []
     for key in ("state", "kind"):
         for state in states:
-            if str(state.get(key)) == load:
+            if str(state.get(key)) in (load, f"{load} load"):
                 return state
-    for state in states:
-        if str(state.get("state", "")).startswith(load):
-            return state
     printed = real((design.get("watts") or {}).get(load))
     for state in states:
         if not state.get("hours") and math.isclose(real(state.get("loss_w")), printed, rel_tol=1e-9):
@@ -54,27 +54,32 @@ def mechanism_kwh(design: Data) -> dict[str, float]:
 def loss_table(design: Data) -> WordTable:
     """Losses by part and mechanism: kWh a year, and watts at each load; parts in order of their energy.
 
-    A part's own line is the sum of its mechanisms below it. What the year's total holds beyond the states,
-    the charging of buses that change voltage, has a line of its own.
+    A part's own line is the sum of its mechanisms below it; small ones share a line. What the year's total
+    holds beyond the states, the charging of buses that change voltage, has a line of its own.
     """
     energy = year_kwh(design)
-    at_load = {load: (state_at(design, load) or {}).get("losses") or {} for load in LOADS}
+    at_load = [(state_at(design, load) or {}).get("losses") for load in LOADS]
     parts = sorted({part for part, _ in energy}, key=lambda part: -_part_kwh(energy, part))
+    least = SMALL_SHARE * sum(energy.values())
     rows: list[list[str]] = []
     for part in parts:
-        mechanisms = sorted((m for p, m in energy if p == part), key=lambda m: (-energy[part, m], m))
-        sums = [sum(real(w, 0.0) for w in at_load[load].get(part, {}).values()) for load in LOADS]
-        label = place_word(part)
-        label += f", {mechanism_word(mechanisms[0])}" if len(mechanisms) == 1 else ""
-        shown = [fixed(w, 2) if at_load[load] else NONE for w, load in zip(sums, LOADS, strict=True)]
-        rows.append([label, fixed(_part_kwh(energy, part), 2), *shown])
-        if len(mechanisms) > 1:
-            rows += [
-                [f"  {mechanism_word(m)}", fixed(energy[part, m], 2)]
-                + [fixed(real(at_load[load].get(part, {}).get(m)), 2) for load in LOADS]
-                for m in mechanisms
-                if energy[part, m] > 0 or any(real(at_load[load].get(part, {}).get(m), 0.0) for load in LOADS)
-            ]
+        names = [mechanism for owner, mechanism in energy if owner == part]
+        terms = {m: [energy[part, m], *(_watts(losses, part, m) for losses in at_load)] for m in names}
+        large = sorted((m for m in terms if terms[m][0] >= least), key=lambda m: (-terms[m][0], m))
+        small = [m for m in terms if m not in large and any(terms[m])]
+        if len(small) == 1:
+            large, small = [*large, *small], []
+        whole = [math.fsum(column) for column in zip(*terms.values(), strict=True)]
+        if len(large) == 1 and not small:
+            rows.append([f"{place_word(part)}, {mechanism_word(large[0])}", *_cells(whole)])
+            continue
+        rows.append([place_word(part), *_cells(whole)])
+        if not large:
+            continue
+        rows += [[f"  {mechanism_word(m)}", *_cells(terms[m])] for m in large]
+        if small:
+            rest = [math.fsum(column) for column in zip(*(terms[m] for m in small), strict=True)]
+            rows.append([f"  {len(small)} smaller ones", *_cells(rest)])
     stated = real((design.get("objectives") or {}).get("energy_loss_kwh_per_year"))
     beyond = stated - sum(energy.values())
     if math.isfinite(beyond) and abs(beyond) > 5e-3:
@@ -86,9 +91,12 @@ def loss_table(design: Data) -> WordTable:
 
 
 def state_table(design: Data) -> WordTable:
-    """Every state: hours, input, bus voltages, load, loss, and how far powers are from balance."""
+    """States with hours and those of the printed loads: input, bus voltages, load, loss, efficiency."""
+    shown = [state_at(design, load) for load in LOADS]
     rows = []
     for state in design.get("states") or []:
+        if not state.get("hours") and not any(state is other for other in shown):
+            continue
         volts = ", ".join(fixed(v, 2) for v in (state.get("volts") or {}).values() if v is not None)
         rows.append([
             str(state.get("state", NONE)), fixed(state.get("hours"), 0), fixed(state.get("input_v"), 1),
@@ -108,6 +116,17 @@ def worst_balance(design: Data) -> float:
 def _efficiency(state: Data) -> str:
     load, drawn = real(state.get("load_w")), real(state.get("input_w"))
     return fixed(100.0 * load / drawn, 1) if drawn > 0 else NONE
+
+
+def _watts(losses: object, part: str, mechanism: str) -> float:
+    """Watts of a mechanism in a state; nan where there is no such state."""
+    if not isinstance(losses, dict):
+        return math.nan
+    return real((losses.get(part) or {}).get(mechanism), 0.0)
+
+
+def _cells(values: Iterable[float]) -> list[str]:
+    return [fixed(value, 2) for value in values]
 
 
 def _part_kwh(energy: dict[tuple[str, str], float], part: str) -> float:

@@ -10,7 +10,7 @@ from rich.text import Text
 from archopt.present.amounts import NONE, counted, fixed, number, of, place_word, real, signed
 from archopt.present.explanation import slack_text
 from archopt.present.power_tree import BUS_WORD
-from archopt.present.record import BUSES, Data, FrontRecord
+from archopt.present.record import BUSES, Data, FrontRecord, choice_number
 from archopt.present.tables import WordTable, section, table
 from archopt.present.telling import COST_CLOSE, LOSS_CLOSE, MarginStep, Telling, margin_steps, telling
 
@@ -100,8 +100,9 @@ def bus_text(design: Data) -> str:
     for bus in BUSES:
         if str(choices.get(f"{bus}.converter", "none")) == "none":
             continue
-        nominal = number(choices.get(f"{bus}.nominal_v"))
-        lower, upper = number(choices.get(f"{bus}.lower_v")), number(choices.get(f"{bus}.upper_v"))
+        nominal, lower, upper = (
+            number(choice_number(choices.get(f"{bus}.{end}_v"))) for end in ("nominal", "lower", "upper")
+        )
         moves = str(choices.get(f"{bus}.control", "fixed")) != "fixed" and lower != upper
         texts.append(f"{lower} to {upper}" if moves else nominal)
     return ", ".join(texts) or NONE
@@ -160,7 +161,7 @@ def flat_band(designs: Sequence[Data]) -> str:
     for design in near:
         choices = design.get("choices") or {}
         if str(choices.get("bus_a.converter", "none")) != "none":
-            volts.append(real(choices.get("bus_a.nominal_v")))
+            volts.append(real(choice_number(choices.get("bus_a.nominal_v"))))
     if not volts or len(near) < 2:
         return ""
     return (

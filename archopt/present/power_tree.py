@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 
 from archopt.present.amounts import NONE, counted, number, of, times, with_unit
-from archopt.present.record import BUSES, Data
+from archopt.present.record import BUSES, Data, choice_number
 
 BUS_WORD = {"bus_a": "bus A", "bus_b": "bus B"}
 CONTROL_WORD = {"fixed": "fixed", "two_levels": "two levels", "follow_load": "follows the load"}
@@ -21,13 +21,18 @@ def tree_lines(design: Data, study: Data) -> list[str]:
     """
     choices: Data = design.get("choices") or {}
     rails = {str(rail.get("name")): rail for rail in study.get("rails") or []}
-    names = [choice.removesuffix(".feed") for choice in choices if choice.endswith(".feed")]
+    feeds = {
+        choice.removesuffix(".feed"): str(feed)
+        for choice, feed in choices.items()
+        if choice.endswith(".feed") and not choice.startswith("board.")
+    }
+    feeds |= {name: str(rail["tap_of"]) for name, rail in rails.items() if rail.get("tap_of")}
     lines = [input_line(study)]
-    lines += fed_from("input", 1, choices, names, rails)
+    lines += fed_from("input", 1, choices, feeds, rails)
     for bus in BUSES:
         if str(choices.get(f"{bus}.converter", "none")) != "none":
             lines.append(f"  {bus_line(bus, choices)}")
-            lines += fed_from(bus, 2, choices, names, rails)
+            lines += fed_from(bus, 2, choices, feeds, rails)
     lines += board_lines(choices)
     return lines
 
@@ -43,13 +48,14 @@ def input_line(study: Data) -> str:
     return text
 
 
-def fed_from(feed: str, level: int, choices: Data, names: list[str], rails: dict[str, Data]) -> Iterable[str]:
-    """Lines of the rails on one feed and, below each, of the rails fed from it."""
-    for name in names:
-        if choices.get(f"{name}.feed") != feed or name == feed:
-            continue
+def fed_from(
+    feed: str, level: int, choices: Data, feeds: dict[str, str], rails: dict[str, Data]
+) -> Iterable[str]:
+    """Lines of the rails on one feed and, below each, of the rails and taps fed from it."""
+    for name in [name for name, source in feeds.items() if source == feed]:
         yield "  " * level + rail_line(name, choices, rails.get(name))
-        yield from fed_from(name, level + 1, choices, [other for other in names if other != name], rails)
+        others = {other: source for other, source in feeds.items() if other != name}
+        yield from fed_from(name, level + 1, choices, others, rails)
 
 
 def bus_line(bus: str, choices: Data) -> str:
@@ -57,11 +63,11 @@ def bus_line(bus: str, choices: Data) -> str:
     control = str(choices.get(f"{bus}.control", "fixed"))
     text = f"{BUS_WORD[bus]}: {times(choices.get(f'{bus}.count'), choices.get(f'{bus}.converter'))}"
     text += fewest(choices, bus, "count")
-    text += f"; {with_unit(choices.get(f'{bus}.nominal_v'), 'V')} nominal"
+    text += f"; {with_unit(choice_number(choices.get(f'{bus}.nominal_v')), 'V')} nominal"
     text += f", {CONTROL_WORD.get(control, control)}"
     if control != "fixed":
         word = "between" if control == "follow_load" else "of"
-        lower, upper = choices.get(f"{bus}.lower_v"), choices.get(f"{bus}.upper_v")
+        lower, upper = (choice_number(choices.get(f"{bus}.{end}_v")) for end in ("lower", "upper"))
         text += f" {word} {number(lower)} and {number(upper)} V"
     return text + capacitors(choices, f"{bus}.bulk") + copper(choices, bus)
 

@@ -15,6 +15,7 @@ Data = dict[str, Any]
 
 BUSES = ("bus_a", "bus_b")
 WATT_COLUMNS = {"30 %": "loss_30_w", "50 %": "loss_50_w", "100 %": "loss_100_w", "hottest": "loss_hottest_w"}
+NUMBER_CHOICES = ("count", "nominal_v", "lower_v", "upper_v")
 LONGEST_LISTED_LOAD = 200
 """Rows of a load table kept whole in the problem record; a longer series is kept as its means."""
 
@@ -159,7 +160,8 @@ def front_row(design: Data) -> Data:
             ("converter", "converter"), ("count", "count"), ("nominal_v", "nominal_v"),
             ("control", "control"), ("lower_v", "lower_v"), ("upper_v", "upper_v"),
         ):  # fmt: skip
-            row[f"{bus}_{column}"] = choices.get(f"{bus}.{choice}") if present else None
+            value = choices.get(f"{bus}.{choice}") if present else None
+            row[f"{bus}_{column}"] = choice_number(value) if column in NUMBER_CHOICES else value
     row["stack"] = choices.get("board.stack")
     row["roles"] = "; ".join(str(role) for role in design.get("roles") or [])
     row["binding_limit"] = binding.get("limit")
@@ -174,6 +176,17 @@ def front_row(design: Data) -> Data:
     row["payback_years"] = beside.get("payback_years")
     row["area_mm2"] = beside.get("area_mm2")
     return row
+
+
+def choice_number(value: object) -> int | float | None:
+    """The number a choice stands for; choices are named by text, ``"9.5"``."""
+    if isinstance(value, int | float) or value is None:
+        return value
+    try:
+        number = float(str(value))
+    except ValueError:
+        return None
+    return int(number) if number.is_integer() else number
 
 
 def find_design(designs: list[Data], incumbent: Data | None, wanted: int | str) -> Data | None:

@@ -10,6 +10,7 @@ from rich.console import Console
 
 from archopt.present.amounts import counted, fixed, mechanism_word, money, number, place_word, signed, times
 from archopt.present.assumed import assumed_rows
+from archopt.present.explanation import slack_text
 from archopt.present.front import Front
 from archopt.present.losses import loss_table, mechanism_kwh, state_at, year_kwh
 from archopt.present.overview import flat_band, front_sections
@@ -177,11 +178,37 @@ def test_the_power_tree_is_pinned(record: FrontRecord) -> None:
 
 def test_a_rail_straight_from_the_input_and_a_tap(record: FrontRecord) -> None:
     design = record.designs[0]
-    design["choices"] |= {"core.feed": "input", "pll.feed": "core"}
+    design["choices"]["core.feed"] = "input"
+    for choice in [choice for choice in design["choices"] if choice.startswith("pll.")]:
+        del design["choices"][choice]
     record.problem["study"]["rails"][2]["tap_of"] = "core"
     lines = tree_lines(design, record.study)
     assert lines[1].startswith("  core 0.9 V 60 A: 2 x STAGE-40")
     assert lines[2] == "    pll 1.8 V 0.5 A: tap of core"
+    assert len(lines) == 8
+
+
+def test_small_mechanisms_share_a_line_and_the_sum_stays(record: FrontRecord) -> None:
+    design = record.designs[0]
+    for state in design["states"]:
+        state["losses"]["core stage"] |= {"gate": 1e-3, "core": 2e-3}
+    text = plain_text(loss_table(design))
+    stage = next(line for line in text.splitlines() if line.startswith("core stage"))
+    small = next(line for line in text.splitlines() if "2 smaller ones" in line)
+    assert stage.split()[2] == "35.07"  # 4.003 W over 8760 h
+    assert small.split()[3] == "0.03"  # 3 mW over 8760 h
+    assert "gate" not in text
+
+
+def test_a_design_that_lost_its_states_still_prints(record: FrontRecord) -> None:
+    design = record.designs[0]
+    design["states"] = []
+    assert "all losses" in plain_text(loss_table(design))
+
+
+@pytest.mark.parametrize(("unit", "said"), [("% of bus", "3 % of bus left"), ("ratio", "3 left")])
+def test_slack_in_its_unit(unit: str, said: str) -> None:
+    assert slack_text({"slack": 3.0, "unit": unit}) == said
 
 
 def test_losses_of_the_year_add_up_to_the_objective(record: FrontRecord) -> None:
@@ -215,8 +242,8 @@ def test_an_explained_design_says_everything(record: FrontRecord) -> None:
     assert titles == [
         "Design D003 (knee): one bus, follows load", "Power tree",
         "Bus voltage by load (thresholds are power at the board input)", "Losses by part and mechanism",
-        "States", "Heat in the hottest case", "Tolerance of each rail, mV", "Limits, the worst place of each",
-        "Cost of one board, EUR",
+        "States of the year, and the shown loads", "Heat in the hottest case", "Tolerance of each rail, mV",
+        "Limits, the worst place of each", "Cost of one board, EUR",
     ]  # fmt: skip
     for said in (
         "input current at low line         3.71 A",
