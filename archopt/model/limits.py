@@ -95,6 +95,7 @@ class Ledger:
 
     count: int
     explain: bool = False
+    states: frozenset[str] = frozenset()  # state names, so that a place reads part first, state last
     worst: dict[str, Worst] = field(default_factory=dict)
 
     def add(
@@ -124,7 +125,7 @@ class Ledger:
             normalised=flat[rows, place],
         )
         if self.explain:
-            found.where = [text_of(axes, int(k)) for k in place]
+            found.where = [text_of(axes, int(k), self.states) for k in place]
         self.keep(name, found)
 
     def keep(self, name: str, found: Worst) -> None:
@@ -147,12 +148,15 @@ class Ledger:
         return out
 
 
-def text_of(axes: tuple[tuple[str, ...], ...], place: int) -> str:
-    """Return the labels of a flat place."""
+def text_of(axes: tuple[tuple[str, ...], ...], place: int, states: frozenset[str]) -> str:
+    """Return the labels of a flat place, ``part; state``."""
     if not axes:
-        return ""
+        return "board; "
     where = np.unravel_index(place, tuple(len(labels) for labels in axes))
-    return "; ".join(labels[int(k)] for labels, k in zip(axes, where, strict=True) if labels[int(k)])
+    labels = [names[int(k)] for names, k in zip(axes, where, strict=True)]
+    if labels[0] in states:
+        labels = [*(labels[1:] or ["board"]), labels[0]]
+    return "; ".join(labels)
 
 
 @dataclass(frozen=True)
@@ -472,7 +476,8 @@ def check_board(situation: Situation, ledger: Ledger) -> None:
     ledger.add("input current", solution.input_a[:, steady], problem.path.limit_a, at_most=True, axes=axes)
     every = (states.name,)
     most = states.input_v**2 / (4.0 * max(problem.path.resistance_ohm, 1e-12))
-    ledger.add("deliverable power", most + solution.missing_w, most, at_most=True, axes=every)
+    wanted = solution.input_w - solution.path_w + solution.missing_w
+    ledger.add("deliverable power", wanted, most, at_most=True, axes=every)
     needs_bias = (hardware.bias_w > 0).any(axis=1)
     if len(problem.biases.names):
         bound = problem.biases.max_power_w[np.maximum(hardware.bias, 0)]
@@ -548,7 +553,7 @@ def supervisor_misfits(situation: Situation, used: BoolArray) -> IntArray:
 
 def check_all(situation: Situation, droop: Droop, *, explain: bool = False) -> Ledger:
     """Check every limit of a batch of solved designs."""
-    ledger = Ledger(len(situation.designs), explain=explain)
+    ledger = Ledger(len(situation.designs), explain=explain, states=frozenset(situation.states.name))
     check_rails(situation, droop, ledger)
     check_jump(situation, ledger)
     check_buses(situation, ledger)

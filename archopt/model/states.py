@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 
@@ -151,9 +151,9 @@ def band_of(power_w: FloatArray, edges_w: FloatArray) -> IntArray:
 
 def split_groups(band: IntArray, off: BoolArray) -> list[IntArray]:
     """Return the moments that may share a cluster: same band, same rails off."""
-    keys = np.column_stack([band, off.astype(np.int64)])
-    _, inverse = np.unique(keys, axis=0, return_inverse=True)
-    inverse = inverse.ravel()
+    pattern = off @ (0.5 ** np.arange(1, off.shape[1] + 1))  # a binary fraction: exact up to 52 rails
+    _, kind = np.unique(pattern, return_inverse=True)
+    _, inverse = np.unique(band * (int(kind.max()) + 1) + kind, return_inverse=True)
     return [np.flatnonzero(inverse == k) for k in range(int(inverse.max()) + 1)]
 
 
@@ -204,6 +204,13 @@ class EnergyStates:
     tap_w: FloatArray
     useful_w: FloatArray
     band: IntArray
+
+    def take(self, index: IntArray) -> EnergyStates:
+        """Return some of the states."""
+        picked = {
+            field.name: getattr(self, field.name)[index] for field in fields(self) if field.name != "name"
+        }
+        return EnergyStates(name=tuple(self.name[int(k)] for k in index), **picked)
 
 
 def means(study: ResolvedStudy, moments: Moments, band: IntArray, clusters: list[IntArray]) -> EnergyStates:
@@ -256,6 +263,30 @@ def means(study: ResolvedStudy, moments: Moments, band: IntArray, clusters: list
         tap_w=np.array(columns[5]),
         useful_w=np.array(columns[6]),
         band=np.array(columns[7], dtype=np.int64),
+    )
+
+
+def every_moment(study: ResolvedStudy, moments: Moments, band: IntArray, index: IntArray) -> EnergyStates:
+    """Return one state a moment and input level: the whole series, not reduced."""
+    stated = np.isfinite(moments.input_v[index])
+    parts = [(index[stated], moments.input_v[index[stated]], 1.0)]
+    free = index[~stated]
+    parts += [
+        (free, np.full(len(free), level.voltage_v), level.share)
+        for level in study.supply.levels
+        if level.share > 0
+    ]
+    where = np.concatenate([part[0] for part in parts])
+    return EnergyStates(
+        name=("moment",) * len(where),
+        hours=np.concatenate([moments.hours[rows] * share for rows, _, share in parts]),
+        current_a=moments.current_a[where],
+        off=moments.off[where],
+        input_v=np.concatenate([part[1] for part in parts]),
+        inlet_degc=moments.inlet_degc[where],
+        tap_w=moments.tap_w[where],
+        useful_w=moments.useful_w[where],
+        band=band[where],
     )
 
 
@@ -320,7 +351,7 @@ def reduce_load(
     elif annual_loss is None:
         clusters = cluster(groups, moments.hours, feature, MAX_CLUSTERS)
     else:
-        exact = annual_loss(means(study, moments, band, [np.array([k]) for k in with_hours]))
+        exact = annual_loss(every_moment(study, moments, band, with_hours))
         for count in (8, 12, 16, 20, MAX_CLUSTERS):
             clusters = cluster(groups, moments.hours, feature, count)
             error = abs(annual_loss(means(study, moments, band, clusters)) - exact) / max(exact, 1e-12)
