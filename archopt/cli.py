@@ -6,6 +6,7 @@ every limit; 130 interrupted, with what was found kept.
 
 from __future__ import annotations
 
+import io
 import json
 import os
 import re
@@ -268,7 +269,7 @@ def write_or_aside(front: Front, place: Path, *, replace: bool) -> Path:
 
 def print_json(value: object) -> None:
     """Print plain data as JSON on standard output."""
-    typer.echo(json.dumps(value, ensure_ascii=False, allow_nan=False, indent=1))
+    typer.echo(json.dumps(value, allow_nan=False, indent=1))
 
 
 def main(arguments: list[str] | None = None) -> None:
@@ -278,6 +279,9 @@ def main(arguments: list[str] | None = None) -> None:
     ----------
     arguments : words after the program's name; those of the process when None
     """
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")  # a name the terminal cannot show is no reason to fail
     sys.exit(guarded(lambda: app(args=arguments, prog_name="archopt", standalone_mode=False)))
 
 

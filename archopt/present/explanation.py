@@ -165,7 +165,11 @@ def tolerance_table(rows: list[Data]) -> WordTable:
 
 def limits_body(design: Data) -> Iterable[RenderableType]:
     """The limits that are not met, if any, and every limit with its slack, the nearest first."""
-    limits = sorted(design.get("limits") or [], key=lambda row: real(row.get("normalised"), 1e9))
+    limits = [
+        row for row in design.get("limits") or []
+        if row.get("unit") != "choices" or real(row.get("slack"), 0.0) < 0  # says nothing once it is met
+    ]  # fmt: skip
+    limits.sort(key=lambda row: real(row.get("normalised"), 1e9))
     broken = [row for row in limits if real(row.get("slack"), 0.0) < 0]
     if broken:
         yield Text(f"Not met: {'; '.join(binding_text(row) for row in broken)}", style="red")

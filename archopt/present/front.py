@@ -12,6 +12,7 @@ from rich.console import Console, ConsoleOptions, RenderableType
 
 from archopt.errors import OutputError
 from archopt.present.explanation import explanation
+from archopt.present.files import write
 from archopt.present.overview import telling_of
 from archopt.present.plain import plain_dict
 from archopt.present.record import Data, FrontRecord, find_design, front_row, front_rows, summary
@@ -146,6 +147,16 @@ class Front:
     def telling(self, at_most: int = 12) -> tuple[Design, ...]:
         """The designs worth a look first: the marked ones and an even spread, near twins left out."""
         return tuple(self.designs[position] for position in telling_of(self.record.designs, at_most).index)
+
+    def write(self, directory: str | Path, *, replace: bool = False) -> Path:
+        """Write the result to a directory, whole or not at all; an earlier result only with ``replace``.
+
+        Raises
+        ------
+        OutputError : the directory cannot be written or holds something else.
+        """
+        self.directory = write(self.record, Path(directory), replace=replace)
+        return self.directory
 
     def summary(self) -> dict[str, object]:
         """The result for a machine, without the states of each design."""

@@ -34,6 +34,11 @@ def plain(value: object) -> Plain:
     ------
     TypeError : the value has no plain form; a fault of ours, never of the study.
     """
+    kind = type(value)
+    if kind is float:  # first what a result holds millions of
+        return float(f"{value:.{DIGITS}g}") + 0.0 if math.isfinite(value) else None  # type: ignore[arg-type]
+    if kind is dict:
+        return {str(key): plain(entry) for key, entry in value.items()}  # type: ignore[attr-defined]
     if value is None or isinstance(value, bool | int | str):
         return value
     if isinstance(value, float):

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import json
+import os
 import subprocess
 import sys
 from pathlib import Path
@@ -59,6 +61,21 @@ def test_a_reader_that_stops_early_is_no_fault(record: FrontRecord, tmp_path: Pa
         process.stdout.close()
         assert process.stderr.read() == b""
     assert process.returncode == 0
+
+
+def test_names_the_terminal_cannot_show_are_no_fault(record: FrontRecord, tmp_path: Path) -> None:
+    record.problem["study"]["title"] = "Gr\u00fcne Karte \u20ac"
+    files.write(record, tmp_path / "a")
+    for words in (["show", str(tmp_path / "a")], ["show", str(tmp_path / "a"), "--json"]):
+        done = subprocess.run(
+            [sys.executable, "-m", "archopt", *words],
+            capture_output=True,
+            text=True,
+            check=False,
+            env={**os.environ, "PYTHONIOENCODING": "ascii"},
+        )
+        assert (done.returncode, done.stderr) == (0, "")
+    assert json.loads(done.stdout)["study"]["title"] == "Gr\u00fcne Karte \u20ac"
 
 
 def test_public_names_are_imported_on_first_use(record: FrontRecord, tmp_path: Path) -> None:

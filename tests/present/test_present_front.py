@@ -108,3 +108,12 @@ def test_progress_share_is_of_the_nearer_end() -> None:
     assert said_line(3, 250, 200, 0.8125, 90.4) == (
         "generation 3, 250 designs tried, 200 feasible, hypervolume 0.8125, 1:30 left"
     )
+
+
+def test_a_front_writes_itself(record: FrontRecord, tmp_path: Path) -> None:
+    front = Front(record)
+    assert front.write(tmp_path / "a") == front.directory == tmp_path / "a"
+    assert (tmp_path / "a" / "designs.json").is_file()
+    with pytest.raises(OutputError, match="earlier result"):
+        front.write(tmp_path / "a")
+    front.write(tmp_path / "a", replace=True)
