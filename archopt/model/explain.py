@@ -11,7 +11,7 @@ from archopt.model.canonical import buses_used
 from archopt.model.cost import unit_price
 from archopt.model.evaluator import Detail, Evaluator
 from archopt.model.limits import INDEX, LIMITS, ROOM
-from archopt.model.parameters import IntArray
+from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, PARENT, TWO_LEVELS, Designs
 from archopt.model.stages import mechanisms
@@ -46,84 +46,114 @@ def topology(problem: Problem, rows: IntArray) -> list[str]:
     return out
 
 
-def state_losses(problem: Problem, detail: Detail, p: int, s: int) -> dict[str, dict[str, float]]:
-    """Return one state's losses by part and mechanism, W; their sum closes the balance."""
+def stage_mechanisms(problem: Problem, detail: Detail) -> list[dict[str, FloatArray]]:
+    """Return each stage kind's losses by mechanism over the batch, (P, S, R) W, zero where another kind is."""
     states, hardware, solution = problem.states, detail.hardware, detail.solution
-    out: dict[str, dict[str, float]] = {}
-    for r, name in enumerate(problem.rails.names):
-        if states.off[s, r]:
-            continue
-        parts = mechanisms(
-            problem.stages,
-            int(hardware.stage[p, r]),
-            int(hardware.running[p, s, r]),
-            float(solution.stage_v[p, s, r]),
-            float(problem.rails.voltage_v[r]),
-            float(solution.current_a[p, s, r]),
-            float(states.ambient_degc[s]),
-        )
-        parts["output bank"] = float(solution.stage_loss_w[p, s, r]) - sum(parts.values())
-        out[f"{name} stage"] = parts
-        out[f"{name} pour"] = {"copper": float(solution.pour_w[p, s, r])}
-    for bus in range(2):
-        index = int(hardware.converter[p, bus])
-        if index < 0 or solution.bus_a[p, s, bus] <= 0:
-            continue
-        units = int(hardware.units_running[p, s, bus])
-        loss = bus_converter.losses(
-            problem.converters.loss.take(np.array([index])),
-            np.array([solution.node_v[p, s]]),
-            np.array([solution.bus_v[p, s, bus]]),
-            np.array([solution.bus_a[p, s, bus] / units]),
-            np.array([states.ambient_degc[s]]),
-        )
-        out[f"{BUS_NAMES[bus]} converter"] = {
-            key.removesuffix("_w").replace("_", " "): float(np.ravel(getattr(loss, key))[0]) * units
-            for key in bus_converter.MECHANISMS
-        }
-        out[f"{BUS_NAMES[bus]} plane"] = {"copper": float(solution.plane_w[p, s, bus])}
-    if solution.bias_in_w[p, s] > 0:
-        delivered = float(solution.bias_out_w[p, s])
-        out["bias supply"] = {
-            "gates it drives": delivered,
-            "its own": float(solution.bias_in_w[p, s]) - delivered,
-        }
-    if solution.supervisor_w[p, s] > 0:
-        out["supervisor"] = {"supply": float(solution.supervisor_w[p, s])}
-    out["input path"] = {
-        "resistance": float(solution.path_w[p, s]) - problem.path.power_w,
-        "supply": problem.path.power_w,
-    }
-    if states.tap_w[s] > 0:
-        out["taps"] = {"series resistance": float(states.tap_w[s])}
+    shape = solution.stage_v.shape
+    stage = np.broadcast_to(hardware.stage[:, None, :], shape)
+    ambient = np.broadcast_to(states.ambient_degc[:, None], shape)
+    output_v = np.broadcast_to(problem.rails.voltage_v, shape)
+    on = np.broadcast_to(~states.off, shape)
+    out = []
+    for kind in (BUCK, SINGLE, LINEAR):
+        here = on & (problem.stages.kind[stage] == kind)
+        index = np.nonzero(here)
+        arrays: dict[str, FloatArray] = {}
+        if len(index[0]):
+            found = mechanisms(
+                problem.stages, kind, stage[index], hardware.running[index], solution.stage_v[index],
+                output_v[index], solution.current_a[index], ambient[index],
+            )  # fmt: skip
+            for name, values in found.items():
+                arrays[name] = np.zeros(shape)
+                arrays[name][index] = values
+            arrays["output bank"] = np.where(here, solution.stage_loss_w - sum(arrays.values()), 0.0)
+        out.append(arrays)
     return out
 
 
-def state_record(problem: Problem, detail: Detail, p: int, s: int) -> dict[str, Any]:
-    """Return one state of one design."""
+def converter_mechanisms(problem: Problem, detail: Detail) -> dict[str, FloatArray]:
+    """Return the bus converters' losses by mechanism, (P, S, 2) W."""
+    states, hardware, solution = problem.states, detail.hardware, detail.solution
+    if not len(problem.converters.names):
+        return {}
+    index = np.maximum(hardware.converter, 0)[:, None, :]
+    loss = bus_converter.losses(
+        problem.converters.loss.take(index),
+        solution.node_v[..., None],
+        np.maximum(solution.bus_v, 1e-3),
+        solution.bus_a / hardware.units_running,
+        states.ambient_degc[:, None],
+    )
+    running = np.where(solution.bus_a > 0, hardware.units_running, 0)
+    return {word(key): getattr(loss, key) * running for key in bus_converter.MECHANISMS}
+
+
+def word(field: str) -> str:
+    """Return a mechanism's name in words."""
+    return field.removesuffix("_w").replace("_", " ")
+
+
+def all_losses(problem: Problem, detail: Detail) -> list[dict[str, dict[str, FloatArray]]]:
+    """Return every loss of each design by part and mechanism over the states, (S,) W; together they balance."""
+    states, hardware, solution = problem.states, detail.hardware, detail.solution
+    by_kind = stage_mechanisms(problem, detail)
+    converters = converter_mechanisms(problem, detail)
+    out = []
+    for p in range(len(detail.designs)):
+        parts: dict[str, dict[str, FloatArray]] = {}
+        for r, name in enumerate(problem.rails.names):
+            kind = int(problem.stages.kind[hardware.stage[p, r]])
+            parts[f"{name} stage"] = {key: values[p, :, r] for key, values in by_kind[kind].items()}
+            parts[f"{name} pour"] = {"copper": solution.pour_w[p, :, r]}
+        for bus in np.flatnonzero(hardware.converter[p] >= 0):
+            parts[f"{BUS_NAMES[bus]} converter"] = {key: w[p, :, bus] for key, w in converters.items()}
+            parts[f"{BUS_NAMES[bus]} plane"] = {"copper": solution.plane_w[p, :, bus]}
+        if hardware.bias[p] >= 0:
+            delivered = solution.bias_out_w[p]
+            parts["bias supply"] = {"gates": delivered, "conversion": solution.bias_in_w[p] - delivered}
+        if hardware.supervisor[p] >= 0:
+            parts["supervisor"] = {"supply": solution.supervisor_w[p]}
+        own = np.full(len(states.name), problem.path.power_w)
+        parts["input path"] = {"resistance": solution.path_w[p] - own, "supply": own}
+        if states.tap_w.any():
+            parts["taps"] = {"series resistance": states.tap_w}
+        out.append(parts)
+    return out
+
+
+def state_records(
+    problem: Problem, detail: Detail, p: int, losses: dict[str, dict[str, FloatArray]]
+) -> list[dict[str, Any]]:
+    """Return every state of one design; shown and hottest ones with losses by part and mechanism."""
     states, solution = problem.states, detail.solution
-    losses = state_losses(problem, detail, p, s)
     listed = sum(sum(parts.values()) for parts in losses.values())
-    loss = float(solution.loss_w[p, s])
-    volts = {
-        BUS_NAMES[bus]: float(solution.bus_v[p, s, bus])
-        for bus in range(2)
-        if detail.hardware.converter[p, bus] >= 0
-    }
-    return {
-        "state": states.name[s],
-        "kind": KIND_NAMES[int(states.kind[s])],
-        "band": int(states.band[s]) + 1,
-        "hours": float(states.hours[s]),
-        "input_v": float(states.input_v[s]),
-        "volts": volts,
-        "load_w": float(solution.input_w[p, s]) - loss,
-        "input_w": float(solution.input_w[p, s]),
-        "input_a": float(solution.input_a[p, s]),
-        "loss_w": loss,
-        "balance": (loss - listed) / max(float(solution.input_w[p, s]), 1e-12),
-        "losses": losses,
-    }
+    balance = (solution.loss_w[p] - listed) / np.maximum(solution.input_w[p], 1e-12)
+    steady = states.of_kind(MIX)
+    hottest = steady[int(solution.loss_w[p, steady].argmax())]
+    buses = np.flatnonzero(detail.hardware.converter[p] >= 0)
+    out = []
+    for s, name in enumerate(states.name):
+        record: dict[str, Any] = {
+            "state": name,
+            "kind": KIND_NAMES[int(states.kind[s])],
+            "band": int(states.band[s]) + 1,
+            "hours": float(states.hours[s]),
+            "input_v": float(states.input_v[s]),
+            "volts": {BUS_NAMES[bus]: float(solution.bus_v[p, s, bus]) for bus in buses},
+            "load_w": float(solution.input_w[p, s] - solution.loss_w[p, s]),
+            "input_w": float(solution.input_w[p, s]),
+            "input_a": float(solution.input_a[p, s]),
+            "loss_w": float(solution.loss_w[p, s]),
+            "balance": float(balance[s]),
+        }
+        if states.kind[s] == PRINT or s == hottest:
+            record["losses"] = {
+                part: {key: float(values[s]) for key, values in parts.items()}
+                for part, parts in losses.items()
+            }
+        out.append(record)
+    return out
 
 
 def band_records(problem: Problem, detail: Detail, p: int) -> list[dict[str, Any]]:
@@ -328,14 +358,16 @@ def beside(problem: Problem, energy_kwh: float, cost: float, states: StateTable)
     }
 
 
-def year_by_mechanism(records: list[dict[str, Any]]) -> dict[str, float]:
-    """Return annual losses by part and mechanism, kWh."""
-    out: dict[str, float] = {}
-    for record in records:
-        for part, losses in record["losses"].items():
-            for mechanism, watts in losses.items():
-                key = f"{part}: {mechanism}"
-                out[key] = out.get(key, 0.0) + watts * record["hours"] * 1e-3
+def year_by_mechanism(
+    losses: dict[str, dict[str, FloatArray]], hours: FloatArray, transition_kwh: float
+) -> dict[str, dict[str, float]]:
+    """Return annual losses by part and mechanism, kWh; bus transitions are a part of their own."""
+    out = {
+        part: {key: float((values * hours).sum()) * 1e-3 for key, values in parts.items()}
+        for part, parts in losses.items()
+    }
+    if transition_kwh > 0:
+        out["bus transitions"] = {"charging": transition_kwh}
     return out
 
 
@@ -347,14 +379,17 @@ def explain(evaluator: Evaluator, row: IntArray) -> dict[str, Any]:
 def explain_many(evaluator: Evaluator, rows: IntArray) -> list[dict[str, Any]]:
     """Return decided design rows explained by direct physics."""
     detail = evaluator.detail(rows, exact=True, explain=True)
-    return [explain_one(evaluator.problem, detail, p) for p in range(len(rows))]
+    losses = all_losses(evaluator.problem, detail)
+    return [explain_one(evaluator.problem, detail, p, losses[p]) for p in range(len(rows))]
 
 
-def explain_one(problem: Problem, detail: Detail, p: int) -> dict[str, Any]:
+def explain_one(
+    problem: Problem, detail: Detail, p: int, losses: dict[str, dict[str, FloatArray]]
+) -> dict[str, Any]:
     """Return one design of an explained batch."""
     states = problem.states
     energy, cost, droop = (float(x) for x in detail.evaluation.objectives[p])
-    records = [state_record(problem, detail, p, s) for s in range(len(states.name))]
+    records = state_records(problem, detail, p, losses)
     limits = limit_records(detail, p)
     shown = {
         states.name[s].replace(" load", ""): float(detail.solution.loss_w[p, s]) for s in states.of_kind(PRINT)
@@ -397,7 +432,7 @@ def explain_one(problem: Problem, detail: Detail, p: int) -> dict[str, Any]:
             "board": float(detail.bill.board[p]),
         },
         "states": records,
-        "year_kwh": year_by_mechanism(records),
+        "year_kwh": year_by_mechanism(losses, states.hours, float(detail.transition_kwh[p])),
         "heat": heat_records(problem, detail, p),
         "tolerance": tolerance_records(problem, detail, p),
         "input_current_low_line_a": float(detail.solution.input_a[p, low_line].max()),

@@ -113,32 +113,28 @@ def operate_kind(
 
 def mechanisms(
     stages: StageTable,
-    index: int,
-    running: int,
-    input_v: float,
-    output_v: float,
-    current_a: float,
-    ambient_degc: float,
-) -> dict[str, float]:
-    """Return one stage's losses by mechanism, W, all running phases together."""
-    kind = int(stages.kind[index])
-    rows = np.array([index])
-    point = tuple(np.array([x]) for x in (input_v, output_v, current_a / running, ambient_degc))
+    kind: int,
+    index: IntArray,
+    running: NDArray[Any],
+    input_v: FloatArray,
+    output_v: FloatArray,
+    current_a: FloatArray,
+    ambient_degc: FloatArray,
+) -> dict[str, FloatArray]:
+    """Return whole stages' losses by mechanism in words, W, where every stage is of one kind (flat arrays)."""
+    per_phase_a = current_a / running
     result: Any
     names: tuple[str, ...]
     if kind == BUCK:
-        result = buck.losses(stages.buck.take(rows), *point)
+        result = buck.losses(stages.buck.take(index), input_v, output_v, per_phase_a, ambient_degc)
         names = buck.MECHANISMS
     elif kind == SINGLE:
-        result = bus_converter.losses(stages.single.take(rows), *point)
+        result = bus_converter.losses(stages.single.take(index), input_v, output_v, per_phase_a, ambient_degc)
         names = bus_converter.MECHANISMS
     else:
-        result = linear.losses(stages.linear.take(rows), *point)
+        result = linear.losses(stages.linear.take(index), input_v, output_v, per_phase_a, ambient_degc)
         names = linear.MECHANISMS
-    return {
-        name.removesuffix("_w").replace("_", " "): float(np.ravel(getattr(result, name))[0]) * running
-        for name in names
-    }
+    return {name.removesuffix("_w").replace("_", " "): getattr(result, name) * running for name in names}
 
 
 def conduction_ratio(
