@@ -149,6 +149,15 @@ def _moments(table: CsvRows, rails: Sequence[str], limits: ProfileLimits, faults
     return Profile(hours, np.where(off, 0.0, current_a), off, input_v, inlet_degc, line)
 
 
+def _all_plain(cells: list[str], low: float, high: float) -> FloatArray | None:
+    """Return a column (M,) whose cells are all numbers in range, else None: most columns, read at once."""
+    try:
+        values = np.array([float(cell) for cell in cells])
+    except ValueError:
+        return None
+    return values if bool(np.all((values >= low) & (values <= high))) else None
+
+
 def _numbers(
     table: CsvRows,
     at: int,
@@ -160,6 +169,9 @@ def _numbers(
 ) -> FloatArray:
     """Return one column (M,) as numbers, nan where the cell is empty or at fault."""
     low, high = bounds
+    plain = _all_plain([cells[at] for _, cells in table.rows], low, high)
+    if plain is not None:
+        return plain
     values = np.full(len(table.rows), math.nan)
     for index, (line, cells) in enumerate(table.rows):
         cell = cells[at]

@@ -49,6 +49,8 @@ def resolve_load(draft: Draft, rails: Sequence[Rail], notebook: Notebook) -> Res
     elif draft.load.states is not None:
         table = _from_states(draft, draft.load.states, rails, coincidence, notebook)
     else:
+        if draft.load.covers is not None:
+            notebook.problem("load.covers", "needs a profile or states beside it")
         table = _default(draft, rails, coincidence, notebook)
     hottest = math.nan
     if table is not None and np.isfinite(table.inlet_degc).any():

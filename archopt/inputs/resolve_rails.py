@@ -108,7 +108,7 @@ def _rail(
         copper_area_cm2=area_cm2,
         copper_width_mm=width_mm,
         drop_budget_percent=drop,
-        step_group=row.step_group or row.name,
+        step_group=notebook.take(f"rails.{row.name}.step_group", row.step_group, row.name, "steps alone"),
         parents=row.parents or (),
         tap_of=tap,
         tap_mohm=take("tap_mohm", 10.0, "ferrite or load switch") if tap else row.tap_mohm or 0.0,

@@ -11,6 +11,17 @@ STUDY = """\
 # printed as "assumed" when the study is read. Units are in the names of the keys.
 title = "Packing line control unit, 24 V, six rails"
 
+# One rail a line; [[rails]] tables or rails = "rails.csv" say the same. step_a is the largest load step,
+# parents are rails it may hang on instead of a bus, remote_sense means sensed at the load.
+rails = [
+    { name = "core", voltage_v = 0.9, max_current_a = 22.0, step_a = 9.0 },
+    { name = "memory", voltage_v = 1.2, max_current_a = 6.0, remote_sense = true },
+    { name = "logic", voltage_v = 1.8, max_current_a = 4.0 },
+    { name = "analog", voltage_v = 2.5, max_current_a = 0.8, parents = ["io"] },
+    { name = "io", voltage_v = 3.3, max_current_a = 5.0 },
+    { name = "drives", voltage_v = 5.0, max_current_a = 3.0 },
+]
+
 [input]
 low_v = 18.0             # lowest and highest voltage the board must work at
 high_v = 32.0
@@ -24,39 +35,11 @@ profile = "profile.csv"  # hours, then one utilisation or <rail>_a for each rail
 covers = "sample"        # one day, scaled to the year
 
 [control]
-largest_unannounced_jump_percent = 60.0  # of rated load, without warning; 100 when it is not known
+largest_unannounced_jump_percent = 60.0  # of rated load, without warning; leave it out where not known
 
 [economics]
 boards_per_year = 2500.0
 energy_price_per_kwh = 0.22
-
-[[rails]]
-name = "core"
-voltage_v = 0.9
-max_current_a = 22.0
-step_a = 9.0
-[[rails]]
-name = "memory"
-voltage_v = 1.2
-max_current_a = 6.0
-remote_sense = true
-[[rails]]
-name = "logic"
-voltage_v = 1.8
-max_current_a = 4.0
-[[rails]]
-name = "analog"
-voltage_v = 2.5
-max_current_a = 0.8
-parents = ["io"]         # may hang on this rail instead of a bus
-[[rails]]
-name = "io"
-voltage_v = 3.3
-max_current_a = 5.0
-[[rails]]
-name = "drives"
-voltage_v = 5.0
-max_current_a = 3.0
 """
 
 PROFILE = """\

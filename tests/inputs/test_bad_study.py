@@ -129,6 +129,7 @@ def test_byte_order_mark_is_no_fault(desk: Desk, study_text: str) -> None:
         ),
         ("[board]", "[incumbent]\n'core.stage' = 'stage_40'\n[board]", ("incumbent.io.stage: missing",)),
         ("[board]", "[control]\nkinds = ['follows']\n[board]", ("control.kinds", "follow_load")),
+        ("[board]", "[load]\ncovers = 'year'\n[board]", ("load.covers: needs a profile or states",)),
         ("[board]", "[load]\nprofile = 'gone.csv'\n[board]", ("gone.csv: no such file",)),
         ("[board]", "catalogue = 'x'\n[board]", ("input.catalogue: unknown",)),
     ],

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -48,11 +49,24 @@ def test_every_key_of_every_table_is_stated_or_assumed(desk: Desk) -> None:
             place = f"{table}.{key}"
             assert (place in places) != (place in silent), place
     rail_silent = {
-        "name", "voltage_v", "max_current_a", "copper_length_mm", "step_group", "parents", "tap_of", 
+        "name", "voltage_v", "max_current_a", "copper_length_mm", "parents", "tap_of",
         "tap_mohm", "linear_only", "core",
     }  # fmt: skip
     for key in RailRow.model_fields:
         assert (f"rails.io.{key}" in places) != (key in rail_silent), key
+
+
+def test_defaults_are_those_the_keys_describe(desk: Desk) -> None:
+    """The description of a key is its documentation: the number it names is the number taken."""
+    assumed = {item.place: item.value for item in desk.load().study.assumed}
+    compared = 0
+    for table, model in TABLES.items():
+        for key, field in model.model_fields.items():
+            found = re.search(r"default (\d+(?:\.\d+)?)$", field.description or "")
+            if found:
+                assert float(assumed[f"{table}.{key}"]) == float(found[1]), key
+                compared += 1
+    assert compared > 25
 
 
 def test_droop_budget(desk: Desk, study_text: str) -> None:
