@@ -11,8 +11,9 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from archopt.inputs.load import LoadedStudy
     from archopt.present.front import Design, Front
-    from archopt.workflow import LoadedStudy, load, solve
+    from archopt.workflow import load, solve
 
     __version__: str
 
@@ -21,7 +22,7 @@ __all__ = ["Design", "Front", "LoadedStudy", "__version__", "load", "read", "sol
 _HOMES = {
     "Design": "archopt.present.front",
     "Front": "archopt.present.front",
-    "LoadedStudy": "archopt.workflow",
+    "LoadedStudy": "archopt.inputs.load",
     "load": "archopt.workflow",
     "solve": "archopt.workflow",
 }

@@ -43,14 +43,6 @@ def year_kwh(design: Data) -> dict[tuple[str, str], float]:
     return energy
 
 
-def mechanism_kwh(design: Data) -> dict[str, float]:
-    """Energy lost over the year by mechanism alone, kWh."""
-    energy: dict[str, float] = {}
-    for (_, mechanism), kwh in year_kwh(design).items():
-        energy[mechanism] = energy.get(mechanism, 0.0) + kwh
-    return energy
-
-
 def loss_table(design: Data) -> WordTable:
     """Losses by part and mechanism: kWh a year, and watts at each load; parts in order of their energy.
 

@@ -140,9 +140,7 @@ def leverage_body(record: FrontRecord) -> Iterable[RenderableType]:
         for row in ordered[:MOST_LEVERAGE]
     ]  # fmt: skip
     words = ["part", "number", "source"]
-    yield table(
-        ["part", "number", "value", "spread", "kWh a year", "cost", "source"], rows, left=words
-    )
+    yield table(["part", "number", "value", "spread", "kWh a year", "cost", "source"], rows, left=words)
 
 
 def _name_of(design: object) -> str:

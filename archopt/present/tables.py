@@ -5,7 +5,6 @@ from __future__ import annotations
 import sys
 import textwrap
 from collections.abc import Iterable, Sequence
-from io import StringIO
 from typing import IO
 
 from rich.cells import cell_len
@@ -142,13 +141,3 @@ def put(console: Console, bodies: Iterable[RenderableType]) -> None:
             console.print(body)
     console.file.write("".join(f"{line.rstrip()}\n" for line in captured.get().splitlines()))
     console.file.flush()
-
-
-def plain_text(body: RenderableType, width: int = PLAIN_WIDTH) -> str:
-    """What a renderable looks like as plain text, without trailing blanks."""
-    buffer = StringIO()
-    Console(
-        file=buffer, width=width, no_color=True, color_system=None, force_terminal=False, highlight=False,
-        emoji=False, markup=False, legacy_windows=False,
-    ).print(body)  # fmt: skip
-    return "\n".join(line.rstrip() for line in buffer.getvalue().splitlines()) + "\n"

@@ -87,4 +87,3 @@ def file_rows(directory: Path) -> Iterable[tuple[str, str]]:
     yield str(directory / "archive.csv"), "every design the search kept"
     yield str(directory / "designs.json"), "each design explained"
     yield f"archopt show {directory} D001", "explains one of them here"
-
