@@ -88,14 +88,10 @@ class DirectStages:
             current_a,
             self.states.ambient_degc[:, None],
         )
-        return np.where(
-            self.states.off, 0.0, point.loss_w + bank_loss_w(problem, hardware, stage_v, current_a)
-        )
+        return np.where(self.states.off, 0.0, point.loss_w + bank_loss_w(problem, hardware, stage_v, current_a))
 
 
-def bank_loss_w(
-    problem: Problem, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray
-) -> FloatArray:
+def bank_loss_w(problem: Problem, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
     """Return the loss of the output banks in their series resistance, (P, S, R) W; phases add no cancelling."""
     ripple = ripple_a(
         problem.stages,
@@ -140,9 +136,7 @@ def worst_step_w(problem: Problem, hardware: Hardware, ratio: FloatArray) -> Flo
     return out
 
 
-def solve(
-    problem: Problem, states: StateTable, hardware: Hardware, stage_loss: StageLoss, *, exact: bool
-) -> Solution:
+def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: StageLoss, *, exact: bool) -> Solution:
     """Solve the board for a batch of designs.
 
     With ``exact`` the fixed point is iterated until nothing moves by more than 1e-13 relative, else a fixed
@@ -196,9 +190,7 @@ def solve(
         if turn == 0:
             mix = states.of_kind(MIX)[0::2]
             output_w = current[:, mix] * rails.voltage_v
-            in_over_out = np.where(
-                output_w > 0, stage_in[:, mix] / np.maximum(output_w, 1e-12), STEP_POWER_RATIO
-            )
+            in_over_out = np.where(output_w > 0, stage_in[:, mix] / np.maximum(output_w, 1e-12), STEP_POWER_RATIO)
             step_w = worst_step_w(problem, hardware, np.minimum(in_over_out, 3.0))
             band_volts = np.where(
                 hardware.fixed_ratio[..., None], (ratio[:, 0] * problem.study.supply.low_v)[..., None],
@@ -241,9 +233,7 @@ def solve(
         root = np.sqrt(np.maximum(states.input_v**2 - 4.0 * path.resistance_ohm * node_w, 0.0))
         node_v = 0.5 * (states.input_v + root)
         input_a = (node_w - missing) / node_v
-        moving = np.where(
-            hardware.fixed_ratio[:, None, :], node_v[..., None] * ratio - droop_ohm * bus_a, set_v
-        )
+        moving = np.where(hardware.fixed_ratio[:, None, :], node_v[..., None] * ratio - droop_ohm * bus_a, set_v)
         moving[:, jump_index] -= dip_v.transpose(0, 2, 1)[:, jump_band]
         bus_v = np.maximum(moving, LEAST_STAGE_SHARE * np.where(np.isfinite(set_v), set_v, 1.0))
         input_w = node_w + path.resistance_ohm * input_a**2 + path.power_w

@@ -8,22 +8,25 @@ at its undropped input; it is never chosen again by the evaluation.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from archopt.model.canonical import canonical
 from archopt.model.hardware import Hardware, unpack
-from archopt.model.options import Options, option_index
+from archopt.model.options import Options, band_hours, option_index
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import FIXED, FOLLOW, TWO_LEVELS, Designs
-from archopt.model.states import ENERGY, StateTable
+from archopt.model.states import StateTable
 from archopt.physics import bus_converter
 from archopt.physics.stability import least_capacitance_f, regulated_source_h
 from archopt.physics.transient import bus_dip_v
 
 ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
 SAFETY_V = 0.01
+SETTLING_PASSES = 3
 
 
 @dataclass(frozen=True)
@@ -34,14 +37,6 @@ class BandLoad:
     mix_w: FloatArray
     jump_w: FloatArray
     legal: BoolArray
-
-
-def band_hours(states: StateTable) -> FloatArray:
-    """Return the hours a year in each band, (B,)."""
-    hours = np.zeros(states.bands)
-    energy = states.of_kind(ENERGY)
-    np.add.at(hours, states.band[energy], states.hours[energy])
-    return hours
 
 
 def rail_windows(
@@ -61,7 +56,7 @@ def rail_windows(
     )
 
 
-def crossing(nodes_v: FloatArray, percent: FloatArray, bound: float) -> FloatArray:
+def crossing(nodes_v: FloatArray, percent: NDArray[Any], bound: float) -> FloatArray:
     """Return the least voltage from which a falling curve (..., nodes) stays at or below the bound; inf if never."""
     above = percent > bound
     count = above.shape[-1]
@@ -79,14 +74,12 @@ def crossing(nodes_v: FloatArray, percent: FloatArray, bound: float) -> FloatArr
     return np.where(any_above, found, 0.0)
 
 
-def bus_sums(
-    options: Options, option: IntArray, hardware: Hardware
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+def bus_sums(options: Options, option: IntArray, hardware: Hardware) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return energy, mix and jump power of each bus's rails, (P, 2, B, G)."""
     rows = options.rows
     row = options.row[option]
     shape = (len(row), 2, row.shape[2], rows.energy_kwh.shape[2])
-    sums = tuple(np.zeros(shape) for _ in range(3))
+    energy, mix, jump = np.zeros(shape), np.zeros(shape), np.zeros(shape)
     band = np.arange(row.shape[2])
     for r in range(row.shape[1]):
         for bus in range(2):
@@ -94,9 +87,10 @@ def bus_sums(
             if not len(here):
                 continue
             index = row[here, r]
-            for target, source in zip(sums, (rows.energy_kwh, rows.mix_w, rows.jump_w), strict=True):
-                target[here, bus] += source[index, band]
-    return sums
+            energy[here, bus] += rows.energy_kwh[index, band]
+            mix[here, bus] += rows.mix_w[index, band]
+            jump[here, bus] += rows.jump_w[index, band]
+    return energy, mix, jump
 
 
 def legal_voltages(
@@ -182,9 +176,7 @@ def running_units(
     return best
 
 
-def converter_energy(
-    problem: Problem, states: StateTable, hardware: Hardware, energy_kwh: FloatArray
-) -> FloatArray:
+def converter_energy(problem: Problem, states: StateTable, hardware: Hardware, energy_kwh: FloatArray) -> FloatArray:
     """Return the converters' own loss over each band on the grid, (P, 2, B, G) kWh, at the band's mean power."""
     hours = np.maximum(band_hours(states), 1e-6)[:, None]
     units = hardware.units_band[..., None]
@@ -264,7 +256,24 @@ def raise_for_children(
 
 
 def decide(problem: Problem, states: StateTable, options: Options, designs: Designs) -> Designs:
-    """Return the designs in canonical form with running counts and schedule decided."""
+    """Return the designs in canonical form with running counts and schedule decided.
+
+    A bus that never moves becomes a fixed one at its voltage: what was decided from the nominal voltage it
+    had before (running converters, bias supply) is then decided again, so that deciding twice changes nothing.
+    """
+    designs, unsettled = decide_once(problem, states, options, designs)
+    for _ in range(SETTLING_PASSES):
+        again = np.flatnonzero(unsettled)
+        if not len(again):
+            break
+        settled, still = decide_once(problem, states, options, designs.take(again))
+        designs.rows[again] = settled.rows
+        unsettled[again] = still
+    return designs
+
+
+def decide_once(problem: Problem, states: StateTable, options: Options, designs: Designs) -> tuple[Designs, BoolArray]:
+    """Return the designs decided, and which of them snapping has changed so that they need another pass."""
     designs = canonical(problem, designs)
     layout = designs.layout
     option = option_index(
@@ -291,16 +300,17 @@ def decide(problem: Problem, states: StateTable, options: Options, designs: Desi
     legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip)
     total = energy + converter_energy(problem, states, hardware, energy)
     count, bands, width = len(designs), states.bands, len(problem.grid_v)
-    flat = lambda name: designs.bus(name).reshape(-1)  # noqa: E731
+    genes = [designs.bus(name).reshape(-1) for name in ("lower_v", "upper_v", "nominal_v", "control")]
     volts = choose_schedule(
-        total.reshape(2 * count, bands, width), legal.reshape(2 * count, bands, width), flat("lower_v"),
-        flat("upper_v"), flat("nominal_v"), flat("control"),
+        total.reshape(2 * count, bands, width), legal.reshape(2 * count, bands, width), *genes
     ).reshape(count, 2, bands)  # fmt: skip
     idle = (hardware.converter < 0) | hardware.fixed_ratio
     volts = np.where(idle[..., None], 0, volts)
     designs.rows[:, layout.volts] = volts.reshape(count, -1)
+    before = designs.bus("nominal_v").copy()
     snap_limits(problem, designs, volts, idle)
-    return designs
+    unsettled = (designs.bus("nominal_v") != before).any(axis=1)
+    return designs, unsettled | (canonical(problem, designs).rows != designs.rows).any(axis=1)
 
 
 def step_power(problem: Problem, designs: Designs, mix_w: FloatArray, hardware: Hardware) -> FloatArray:
@@ -316,7 +326,7 @@ def step_power(problem: Problem, designs: Designs, mix_w: FloatArray, hardware: 
     for group in range(groups):
         here = np.where(rails.step_group == group, step, 0.0)
         largest = np.maximum(largest, (hardware.on_bus * here).sum(axis=2))
-    return (largest[..., None] * np.clip(ratio, 1.0, 3.0))[..., None]
+    return np.asarray((largest[..., None] * np.clip(ratio, 1.0, 3.0))[..., None])
 
 
 def snap_limits(problem: Problem, designs: Designs, volts: IntArray, idle: BoolArray) -> None:

@@ -7,13 +7,15 @@ from dataclasses import dataclass
 import numpy as np
 
 from archopt.model.board import DirectStages, Solution, solve
+from archopt.model.checks import check_all
 from archopt.model.cost import Bill, bill
 from archopt.model.decide import decide
 from archopt.model.hardware import Hardware, unpack
-from archopt.model.limits import Droop, Ledger, Situation, check_all, rail_droop
+from archopt.model.limits import Ledger
 from archopt.model.options import Options, make_options
 from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
+from archopt.model.situation import Droop, Situation, rail_droop
 from archopt.model.space import Designs
 from archopt.model.states import StateTable
 from archopt.model.tables import LossTables, TableStages, make_tables
@@ -71,9 +73,7 @@ def transition_kwh(problem: Problem, states: StateTable, hardware: Hardware) -> 
     if not counts.any():
         return np.zeros(len(hardware.stage))
     volts = hardware.band_v  # (P, 2, B)
-    moved = transition_energy_j(
-        hardware.bulk_nominal_f[..., None, None], volts[..., :, None], volts[..., None, :]
-    )
+    moved = transition_energy_j(hardware.bulk_nominal_f[..., None, None], volts[..., :, None], volts[..., None, :])
     rising = volts[..., None, :] > volts[..., :, None]
     used = (hardware.converter >= 0) & ~hardware.fixed_ratio
     total = np.where(rising & used[..., None, None], moved, 0.0) * counts

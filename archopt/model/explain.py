@@ -149,8 +149,7 @@ def state_records(
         }
         if states.kind[s] == PRINT or s == hottest:
             record["losses"] = {
-                part: {key: float(values[s]) for key, values in parts.items()}
-                for part, parts in losses.items()
+                part: {key: float(values[s]) for key, values in parts.items()} for part, parts in losses.items()
             }
         out.append(record)
     return out
@@ -190,10 +189,7 @@ def band_records(problem: Problem, detail: Detail, p: int) -> list[dict[str, Any
                     for bus in range(2)
                     if hardware.converter[p, bus] >= 0
                 },
-                "phases": {
-                    name: int(hardware.running_band[p, r, band])
-                    for r, name in enumerate(problem.rails.names)
-                },
+                "phases": {name: int(hardware.running_band[p, r, band]) for r, name in enumerate(problem.rails.names)},
             }
         )
     return out
@@ -383,17 +379,13 @@ def explain_many(evaluator: Evaluator, rows: IntArray) -> list[dict[str, Any]]:
     return [explain_one(evaluator.problem, detail, p, losses[p]) for p in range(len(rows))]
 
 
-def explain_one(
-    problem: Problem, detail: Detail, p: int, losses: dict[str, dict[str, FloatArray]]
-) -> dict[str, Any]:
+def explain_one(problem: Problem, detail: Detail, p: int, losses: dict[str, dict[str, FloatArray]]) -> dict[str, Any]:
     """Return one design of an explained batch."""
     states = problem.states
     energy, cost, droop = (float(x) for x in detail.evaluation.objectives[p])
     records = state_records(problem, detail, p, losses)
     limits = limit_records(detail, p)
-    shown = {
-        states.name[s].replace(" load", ""): float(detail.solution.loss_w[p, s]) for s in states.of_kind(PRINT)
-    }
+    shown = {states.name[s].replace(" load", ""): float(detail.solution.loss_w[p, s]) for s in states.of_kind(PRINT)}
     steady = states.of_kind(MIX)
     shown["hottest"] = float(detail.solution.loss_w[p, steady].max())
     low_line = steady[0::2]

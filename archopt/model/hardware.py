@@ -83,18 +83,12 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
     band_v = problem.grid_v[designs.volts]
     nominal_v = problem.grid_v[designs.bus("nominal_v")]
     fallback = states.kind == FALLBACK
-    set_v = np.where(
-        fallback[None, :, None], nominal_v[:, None, :], band_v.transpose(0, 2, 1)[:, states.band]
-    )
+    set_v = np.where(fallback[None, :, None], nominal_v[:, None, :], band_v.transpose(0, 2, 1)[:, states.band])
     running_band = designs.running_phases
-    running = np.where(
-        fallback[None, :, None], phases[:, None, :], running_band.transpose(0, 2, 1)[:, states.band]
-    )
+    running = np.where(fallback[None, :, None], phases[:, None, :], running_band.transpose(0, 2, 1)[:, states.band])
     units_band = designs.running_converters
     units = designs.bus("count")
-    units_running = np.where(
-        fallback[None, :, None], units[:, None, :], units_band.transpose(0, 2, 1)[:, states.band]
-    )
+    units_running = np.where(fallback[None, :, None], units[:, None, :], units_band.transpose(0, 2, 1)[:, states.band])
     bulk = designs.bus("bulk")
     bulk_pieces = problem.bank_counts[designs.bus("bulk_count")]
     reference_v = np.where(fixed_ratio, bus_ratio_v(problem, converter), nominal_v)

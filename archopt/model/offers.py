@@ -110,9 +110,7 @@ def bus_choices(study: ResolvedStudy, offers: Offers) -> dict[str, Choice]:
     volts = {k: f"{value:g}" for k, value in enumerate(offers.grid_v)}
     converters = len(offers.converters.names) + 1 if study.choices.max_buses else 1
     parallel = int(offers.converters.max_parallel.max(initial=1))
-    kinds = np.array(
-        [k for k, name in enumerate(CONTROL_NAMES) if name in study.control.kinds], dtype=np.int64
-    )
+    kinds = np.array([k for k, name in enumerate(CONTROL_NAMES) if name in study.control.kinds], dtype=np.int64)
     return {
         "converter": (counted(converters), with_none(offers.converters.names)),
         "count": (counted(parallel, 1), numbers),

@@ -9,7 +9,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
+from archopt.model.hardware import bias_per_phase_w
 from archopt.model.parameters import BUCK, LINEAR, FloatArray, IntArray
 from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
 from archopt.model.space import BANK_COUNTS
@@ -39,7 +41,7 @@ class RowTables:
     need_v: FloatArray
     jump_v: FloatArray
     high_v: FloatArray
-    droop_percent: FloatArray
+    droop_percent: NDArray[np.float32]
     droop_nodes_v: FloatArray
 
 
@@ -100,9 +102,7 @@ def band_energy(problem: Problem, states: StateTable, tables: LossTables) -> tup
     return energy, direct
 
 
-def windows(
-    problem: Problem, states: StateTable, tables: LossTables
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+def windows(problem: Problem, states: StateTable, tables: LossTables) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return the least steady, least after-jump and highest legal stage input of each row, (rows, B) V."""
     stages, rails = problem.stages, problem.rails
     stage = np.broadcast_to(tables.row_stage[:, None], (len(tables.row_stage), states.bands))
@@ -147,10 +147,10 @@ def hottest(problem: Problem, states: StateTable, tables: LossTables) -> FloatAr
     degc = ambient + stages.thermal_k_per_w[stage][:, None, None] * (loss + bias)
     ok = degc <= problem.study.derating.junction_degc
     volts = tables.start_v[stage][:, None] + tables.step_v[stage][:, None] * np.arange(NODES)
-    return np.where(ok, volts[:, None, :], 0.0).max(axis=2) + np.where(ok[:, :, -1], 1e3, 0.0)
+    return np.asarray(np.where(ok, volts[:, None, :], 0.0).max(axis=2) + np.where(ok[:, :, -1], 1e3, 0.0))
 
 
-def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tuple[FloatArray, FloatArray]:
+def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tuple[NDArray[np.float32], FloatArray]:
     """Return the worse of droop and release in percent of budget for every row and bank, and its nodes.
 
     (rows, K, counts, B, nodes) float32 and (N, nodes) V.
@@ -228,10 +228,10 @@ def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Op
     )
     first = np.full(tables.base.shape, -1, dtype=np.int64)
     columns: list[tuple[int, int, int, int]] = []
-    for r, s in zip(*np.nonzero(tables.base >= 0), strict=True):
+    for r, s in np.argwhere(tables.base >= 0).tolist():
         first[r, s] = len(columns)
-        for phases in range(1, int(problem.phases_high[r, s]) + 1):
-            columns += [(int(r), int(s), phases, 0), (int(r), int(s), phases, 1)]
+        for count in range(1, int(problem.phases_high[r, s]) + 1):
+            columns += [(r, s, count, 0), (r, s, count, 1)]
     table = np.array(columns, dtype=np.int64).reshape(-1, 4)
     rail, stage, phases, fewest = table.T
     run = running_phases(problem, states, tables, energy, table)
@@ -247,12 +247,22 @@ def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Op
     )
 
 
+def band_hours(states: StateTable) -> FloatArray:
+    """Return the hours a year in each band, (B,)."""
+    hours = np.zeros(states.bands)
+    energy = states.of_kind(ENERGY)
+    np.add.at(hours, states.band[energy], states.hours[energy])
+    return hours
+
+
 def running_phases(
     problem: Problem, states: StateTable, tables: LossTables, energy: FloatArray, table: IntArray
 ) -> IntArray:
     """Return the running phases of each option in each band, (O, B): least energy that carries the mix."""
     rail, stage, phases, fewest = table.T
     mean = energy.mean(axis=2)  # (rows, B) over the stage's voltages
+    gates_w = tables.row_running * bias_per_phase_w(problem)[tables.row_stage]
+    mean = mean + gates_w[:, None] * np.maximum(band_hours(states), IDLE_HOURS) * 1e-3
     needed = np.ceil(states.mix_a.T[rail] / problem.stages.phase_limit_a[stage][:, None] - 1e-9)
     needed = np.clip(needed, 1, phases[:, None]).astype(np.int64)
     best = np.broadcast_to(phases[:, None], needed.shape).copy()
@@ -268,10 +278,8 @@ def running_phases(
     return np.where(off, phases[:, None], best)
 
 
-def option_index(
-    options: Options, stage: IntArray, phases: IntArray, fewest: IntArray, most: IntArray
-) -> IntArray:
+def option_index(options: Options, stage: IntArray, phases: IntArray, fewest: IntArray, most: IntArray) -> IntArray:
     """Return option rows of (P, R) choices; phases beyond the offer count as the most offered."""
     rail = np.arange(stage.shape[1])
     held = np.minimum(phases, most[rail, stage])
-    return np.maximum(options.first[rail, stage], 0) + 2 * (held - 1) + fewest
+    return np.asarray(np.maximum(options.first[rail, stage], 0) + 2 * (held - 1) + fewest)

@@ -290,14 +290,10 @@ def part_table(study: ResolvedStudy, catalogue: Catalogue) -> PartTable:
     return PartTable(
         names=tuple(names),
         families=tuple(row.family for row in rows),
-        price=np.stack(
-            [array(rows, step) for step in ("price_100", "price_1k", "price_10k", "price_100k")], axis=1
-        ),
+        price=np.stack([array(rows, step) for step in ("price_100", "price_1k", "price_10k", "price_100k")], axis=1),
         area_mm2=array(rows, "area_mm2"),
         placements=array(rows, "placements"),
-        preferred=np.array(
-            [number in preferred or row.name in preferred for number, row in names.items()], dtype=bool
-        ),
+        preferred=np.array([number in preferred or row.name in preferred for number, row in names.items()], dtype=bool),
     )
 
 
@@ -314,22 +310,16 @@ def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) ->
         *allowed(study, catalogue, "linear_regulators"),
     ]
     kind = np.array(
-        [
-            BUCK if isinstance(r, BuckStage) else SINGLE if isinstance(r, SingleStage) else LINEAR
-            for r in rows
-        ],
+        [BUCK if isinstance(r, BuckStage) else SINGLE if isinstance(r, SingleStage) else LINEAR for r in rows],
         dtype=np.int64,
     )
     inductors = [
-        cast(Inductor, catalogue.families["inductors"][r.inductor]) if isinstance(r, BuckStage) else None
-        for r in rows
+        cast(Inductor, catalogue.families["inductors"][r.inductor]) if isinstance(r, BuckStage) else None for r in rows
     ]
     rated_a = array(rows, "phase_current_a") * study.derating.current
     saturation_a = np.array([i.saturation_a if i else np.inf for i in inductors])
     thermal = np.asarray(
-        thermal_resistance_at(
-            array(rows, "thermal_k_per_w"), array(rows, "air_speed_m_s"), study.supply.air_speed_m_s
-        )
+        thermal_resistance_at(array(rows, "thermal_k_per_w"), array(rows, "air_speed_m_s"), study.supply.air_speed_m_s)
     )
     return StageTable(
         names=tuple(r.name for r in rows),
@@ -344,9 +334,7 @@ def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) ->
         ),
         input_min_v=np.array(
             [
-                max(r.input_min_v, 5.5)
-                if isinstance(r, BuckStage) and r.gate_supply == "input"
-                else r.input_min_v
+                max(r.input_min_v, 5.5) if isinstance(r, BuckStage) and r.gate_supply == "input" else r.input_min_v
                 for r in cast("list[BuckStage | SingleStage | LinearRegulator]", rows)
             ]
         ),
@@ -471,8 +459,7 @@ def bias_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) -> 
 def stack_table(study: ResolvedStudy, catalogue: Catalogue) -> StackTable:
     """Return the stacks to choose from, by price."""
     foils = {
-        cast(CopperFoil, row).copper_oz: cast(CopperFoil, row)
-        for row in catalogue.families["copper_foils"].values()
+        cast(CopperFoil, row).copper_oz: cast(CopperFoil, row) for row in catalogue.families["copper_foils"].values()
     }
     rows = cast("list[Stack]", allowed(study, catalogue, "stacks"))
     rows = [row for row in rows if not study.board.stacks or row.name in study.board.stacks]

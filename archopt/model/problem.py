@@ -82,9 +82,7 @@ def voltage_grid(study: ResolvedStudy) -> FloatArray:
     return np.asarray(np.arange(first, last + 1) * step, dtype=np.float64)
 
 
-def stage_limits(
-    study: ResolvedStudy, rails: RailArrays, stages: StageTable
-) -> tuple[BoolArray, IntArray, IntArray]:
+def stage_limits(study: ResolvedStudy, rails: RailArrays, stages: StageTable) -> tuple[BoolArray, IntArray, IntArray]:
     """Return which stages can make which rail, and the fewest and most phases worth trying, (R, N)."""
     own = own_rails(study)
     volts = rails.voltage_v[:, None]
@@ -118,16 +116,12 @@ def feed_limits(
         for parent in rail.parents:
             j = place[parent]
             volts = rails.voltage_v[j]
-            fits = (
-                (stages.input_min_v <= volts) & (stages.input_max_v >= volts) & (volts > rails.voltage_v[r])
-            )
+            fits = (stages.input_min_v <= volts) & (stages.input_max_v >= volts) & (volts > rails.voltage_v[r])
             out[r, :, PARENT + j] = stage_ok[r] & fits & (stages.kind != SINGLE)
     return out
 
 
-def bank_effective_f(
-    study: ResolvedStudy, capacitors: CapacitorTable, bias_v: FloatArray | float
-) -> FloatArray:
+def bank_effective_f(study: ResolvedStudy, capacitors: CapacitorTable, bias_v: FloatArray | float) -> FloatArray:
     """Return one piece's capacitance under bias, at its tolerance and end of life; shapes broadcast on (K,)."""
     return np.asarray(
         effective_capacitance_f(
@@ -212,8 +206,6 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
         capacitor_ok=capacitor_ok,
         bulk_ok=bulk_ok,
         sheet_ohm=np.asarray(sheet_resistance_ohm(stacks.thickness_m, warm_degc)),
-        bus_squares=squares_matrix(
-            study.board.bus_shared_squares, np.full(len(own), study.board.bus_own_squares)
-        ),
+        bus_squares=squares_matrix(study.board.bus_shared_squares, np.full(len(own), study.board.bus_own_squares)),
         bank_counts=np.array(BANK_COUNTS, dtype=np.int64),
     )

@@ -110,9 +110,7 @@ class Designs:
     @property
     def running_phases(self) -> IntArray:
         """Phases running, (P, R, B)."""
-        return self.rows[:, self.layout.running_phases].reshape(
-            len(self.rows), self.layout.rails, self.layout.bands
-        )
+        return self.rows[:, self.layout.running_phases].reshape(len(self.rows), self.layout.rails, self.layout.bands)
 
     def copy(self) -> Designs:
         """Return a copy that shares nothing."""

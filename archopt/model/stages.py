@@ -50,18 +50,11 @@ def operate(
     running : phases running, at least 1
     input_v, output_v, current_a, ambient_degc : stage input, stage output, whole current, local air
     """
-    shape = np.broadcast_shapes(
-        *(np.shape(x) for x in (index, running, input_v, output_v, current_a, ambient_degc))
-    )
+    shape = np.broadcast_shapes(*(np.shape(x) for x in (index, running, input_v, output_v, current_a, ambient_degc)))
     kinds = np.unique(stages.kind[index])
     if len(kinds) == 1:
-        return operate_kind(
-            stages, int(kinds[0]), index, running, input_v, output_v, current_a, ambient_degc, shape
-        )
-    flat = [
-        np.broadcast_to(x, shape).ravel()
-        for x in (index, running, input_v, output_v, current_a, ambient_degc)
-    ]
+        return operate_kind(stages, int(kinds[0]), index, running, input_v, output_v, current_a, ambient_degc, shape)
+    flat = [np.broadcast_to(x, shape).ravel() for x in (index, running, input_v, output_v, current_a, ambient_degc)]
     out = [np.empty(flat[0].size) for _ in range(4)]
     kind_of = stages.kind[flat[0]]
     for kind in kinds:
@@ -70,9 +63,7 @@ def operate(
         point = operate_kind(
             stages, int(kind), picked[0], picked[1], picked[2], picked[3], picked[4], picked[5], pick.shape
         )
-        for target, values in zip(
-            out, (point.loss_w, point.bias_w, point.temperature_degc, point.gain), strict=True
-        ):
+        for target, values in zip(out, (point.loss_w, point.bias_w, point.temperature_degc, point.gain), strict=True):
             target[pick] = values
     return StagePoint(*(x.reshape(shape) for x in out))
 
@@ -178,9 +169,7 @@ def slew_up_a_per_s(
     return np.where(free, LINEAR_SLEW_A_PER_S, value)
 
 
-def slew_down_a_per_s(
-    stages: StageTable, index: IntArray, running: NDArray[Any], output_v: FloatArray
-) -> FloatArray:
+def slew_down_a_per_s(stages: StageTable, index: IntArray, running: NDArray[Any], output_v: FloatArray) -> FloatArray:
     """Return how fast the running phases can lower their current, A/s."""
     inductance = stages.inductance_h[index]
     free = np.isnan(inductance)
@@ -199,9 +188,7 @@ def ripple_a(
     if np.any(kind == SINGLE):
         duty = np.clip(output_v * stages.turns[index] / np.maximum(input_v, 1e-3), 0.0, 1.0)
         single = (
-            output_v
-            * (1.0 - duty)
-            / (np.nan_to_num(stages.inductance_h[index], nan=1.0) * stages.frequency_hz[index])
+            output_v * (1.0 - duty) / (np.nan_to_num(stages.inductance_h[index], nan=1.0) * stages.frequency_hz[index])
         )
         out = np.where(kind == SINGLE, single, out)
     return out

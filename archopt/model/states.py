@@ -207,9 +207,7 @@ class EnergyStates:
 
     def take(self, index: IntArray) -> EnergyStates:
         """Return some of the states."""
-        picked = {
-            field.name: getattr(self, field.name)[index] for field in fields(self) if field.name != "name"
-        }
+        picked = {field.name: getattr(self, field.name)[index] for field in fields(self) if field.name != "name"}
         return EnergyStates(name=tuple(self.name[int(k)] for k in index), **picked)
 
 
@@ -272,9 +270,7 @@ def every_moment(study: ResolvedStudy, moments: Moments, band: IntArray, index: 
     parts = [(index[stated], moments.input_v[index[stated]], 1.0)]
     free = index[~stated]
     parts += [
-        (free, np.full(len(free), level.voltage_v), level.share)
-        for level in study.supply.levels
-        if level.share > 0
+        (free, np.full(len(free), level.voltage_v), level.share) for level in study.supply.levels if level.share > 0
     ]
     where = np.concatenate([part[0] for part in parts])
     return EnergyStates(
@@ -292,9 +288,7 @@ def every_moment(study: ResolvedStudy, moments: Moments, band: IntArray, index: 
 
 def worst_mix(moments: Moments, band: IntArray, bands: int) -> tuple[FloatArray, BoolArray]:
     """Return (B, R) the highest current each rail has in any moment of a band, and rails off throughout it."""
-    mix = np.array(
-        [np.where(moments.off, 0.0, moments.current_a)[band == k].max(axis=0) for k in range(bands)]
-    )
+    mix = np.array([np.where(moments.off, 0.0, moments.current_a)[band == k].max(axis=0) for k in range(bands)])
     off = np.array([moments.off[band == k].all(axis=0) for k in range(bands)])
     return mix, off
 
@@ -331,9 +325,7 @@ def with_maximum(study: ResolvedStudy, moments: Moments) -> Moments:
     )
 
 
-def reduce_load(
-    study: ResolvedStudy, annual_loss: Callable[[EnergyStates], float] | None = None
-) -> StateTable:
+def reduce_load(study: ResolvedStudy, annual_loss: Callable[[EnergyStates], float] | None = None) -> StateTable:
     """Reduce the study's load to representative states and add the zero-hour ones.
 
     ``annual_loss`` returns the loss of a plain design over given states, kWh; clusters are added until it is
@@ -412,8 +404,7 @@ def assemble(
         kind=np.concatenate([np.full(len(energy.name), ENERGY), np.array([row[1] for row in extra])]),
         hours=np.concatenate([energy.hours, np.zeros(count)]),
         input_v=np.concatenate([energy.input_v, np.array([row[2] for row in extra])]),
-        ambient_degc=np.concatenate([energy.inlet_degc, np.array([row[3] for row in extra])])
-        + supply.local_rise_k,
+        ambient_degc=np.concatenate([energy.inlet_degc, np.array([row[3] for row in extra])]) + supply.local_rise_k,
         current_a=np.vstack([energy.current_a, extra_current]),
         off=np.vstack([energy.off, np.array([row[5] for row in extra])]),
         band=np.concatenate([energy.band, np.array([row[6] for row in extra], dtype=np.int64)]),

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from archopt.model.hardware import Hardware
-from archopt.model.parameters import FloatArray, IntArray
+from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_A, INPUT, PARENT
 from archopt.model.stages import operate, ripple_a
@@ -48,7 +48,7 @@ class LossTables:
 def stage_reach(problem: Problem) -> tuple[FloatArray, FloatArray]:
     """Return the lowest and highest input voltage each stage can be asked to run at, (N,) V."""
     supply = problem.study.supply
-    feeds = problem.feed_ok.any(axis=0)  # (N, F)
+    feeds: BoolArray = np.asarray(problem.feed_ok.any(axis=0))  # (N, F)
     low = np.full(len(problem.stages.names), np.inf)
     high = np.zeros(len(problem.stages.names))
     bus = feeds[:, BUS_A:PARENT].any(axis=1)
@@ -80,7 +80,7 @@ def make_tables(problem: Problem, states: StateTable) -> LossTables:
     rails, stages = problem.layout.rails, len(problem.stages.names)
     base = np.full((rails, stages), -1, dtype=np.int64)
     rows: list[tuple[int, int, int]] = []
-    usable = problem.feed_ok.any(axis=2)
+    usable: BoolArray = np.asarray(problem.feed_ok.any(axis=2))
     for r in range(rails):
         for s in np.flatnonzero(usable[r]):
             base[r, s] = len(rows)
@@ -92,15 +92,15 @@ def make_tables(problem: Problem, states: StateTable) -> LossTables:
     node = np.arange(NODES)
     for start in range(0, len(row), chunk):
         part = row[start : start + chunk]
-        r, s, running = (part[:, k][:, None, None] for k in range(3))
-        volts = low[s] + step[s] * node
+        rail, stage, running = part[:, 0, None, None], part[:, 1, None, None], part[:, 2, None, None]
+        volts = low[stage] + step[stage] * node
         current = states.current_a.T[part[:, 0]][:, :, None]
-        output_v = problem.rails.voltage_v[r]
-        point = operate(problem.stages, s, running, volts, output_v, current, states.ambient_degc[:, None])
+        output_v = problem.rails.voltage_v[rail]
+        point = operate(problem.stages, stage, running, volts, output_v, current, states.ambient_degc[:, None])
         loss[start : start + chunk] = point.loss_w
         per_phase = current / running
         ripple[start : start + chunk] = (
-            running * ripple_a(problem.stages, s, volts, output_v, per_phase) ** 2 / 12.0
+            running * ripple_a(problem.stages, stage, volts, output_v, per_phase) ** 2 / 12.0
         )
     return LossTables(
         base=base,
@@ -158,9 +158,7 @@ class TableStages:
             self.correct_parents(hardware, stage_v, current_a, loss)
         return np.where(states.off | (base < 0)[:, None, :], 0.0, np.maximum(loss, 0.0))
 
-    def correct_parents(
-        self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray, loss: FloatArray
-    ) -> None:
+    def correct_parents(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray, loss: FloatArray) -> None:
         """Replace the losses of rails with children by direct physics, in place."""
         problem = self.problem
         p, r = np.nonzero(hardware.children)

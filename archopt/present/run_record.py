@@ -38,7 +38,7 @@ def package_versions() -> dict[str, str]:
 
 def processor() -> dict[str, Any]:
     """Return the processor and the features numpy uses on it; the same bytes need the same ones."""
-    config: dict[str, Any] = np.show_config(mode="dicts") or {}
+    config: Any = np.show_config(mode="dicts") or {}
     simd = config.get("SIMD Extensions", {})
     blas = config.get("Build Dependencies", {}).get("blas", {})
     return {

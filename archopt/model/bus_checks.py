@@ -1,0 +1,109 @@
+"""The checks of every bus and its converters, stability with constant-power loads among them."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from archopt.model.limits import Ledger
+from archopt.model.parameters import BoolArray, IntArray
+from archopt.model.situation import Situation
+from archopt.model.space import BUS_NAMES
+from archopt.model.states import FALLBACK, JUMP, MIX
+from archopt.physics.stability import least_capacitance_f, regulated_source_h, resistance_limit_ohm
+
+
+def check_buses(situation: Situation, ledger: Ledger) -> None:
+    """Check range, current, power, temperature, dip, drop, start-up and stability of every bus."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    solution, converters, study = situation.solution, problem.converters, problem.study
+    used = hardware.converter >= 0
+    if not used.any():
+        return
+    index = np.maximum(hardware.converter, 0)
+    regulated = used & ~hardware.fixed_ratio
+    steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
+    names = tuple(f"{name} converter" for name in BUS_NAMES)
+    axes = (situation.state_names(steady), names)
+    units = hardware.units_running[:, steady]
+    carrying = np.maximum(units - study.derating.spare_converters, 0.5)
+    bus_a, bus_w = solution.bus_a[:, steady], solution.bus_w[:, steady]
+    here = used[:, None, :]
+    ledger.add(
+        "converter current", bus_a / carrying, converters.limit_a[index][:, None, :], at_most=True, axes=axes,
+        applies=here,
+    )  # fmt: skip
+    ledger.add(
+        "converter power", bus_w / carrying, converters.limit_w[index][:, None, :], at_most=True, axes=axes,
+        applies=here,
+    )  # fmt: skip
+    ledger.add(
+        "converter temperature", solution.converter_degc[:, steady], study.derating.junction_degc, at_most=True,
+        axes=axes, applies=here,
+    )  # fmt: skip
+    bands = tuple(f"band {k + 1}" for k in range(states.bands))
+    bus_axes = (BUS_NAMES, bands)
+    band_v = hardware.band_v
+    nominal_v = problem.grid_v[situation.designs.bus("nominal_v")]
+    low_v = np.minimum(band_v.min(axis=2), nominal_v)
+    high_v = np.maximum(band_v.max(axis=2), nominal_v)
+    ledger.add(
+        "bus output range",
+        low_v,
+        converters.output_min_v[index],
+        at_most=False,
+        axes=(BUS_NAMES,),
+        applies=regulated,
+    )
+    ledger.add(
+        "bus output range",
+        high_v,
+        converters.output_max_v[index],
+        at_most=True,
+        axes=(BUS_NAMES,),
+        applies=regulated,
+    )
+    set_v = np.where(hardware.fixed_ratio[..., None], (converters.ratio[index] * study.supply.low_v)[..., None], band_v)
+    dip = 100.0 * solution.dip_v / set_v
+    ledger.add("bus dip", dip, study.control.bus_dip_percent, at_most=True, axes=bus_axes, applies=used[..., None])
+    rail_axes = (situation.state_names(steady), situation.rail_names)
+    on_bus: BoolArray = np.asarray(hardware.on_bus.any(axis=1))[:, None, :]
+    bus_of = np.where(hardware.on_bus[:, 1], 1, 0)[:, None, :]
+    feed_v = np.take_along_axis(
+        solution.bus_v[:, steady], np.broadcast_to(bus_of, on_bus.shape).repeat(len(steady), 1), 2
+    )
+    drop = 100.0 * (1.0 - solution.stage_v[:, steady] / np.maximum(feed_v, 1e-3))
+    ledger.add(
+        "bus drop", drop, study.board.bus_drop_budget_percent, at_most=True, axes=rail_axes,
+        applies=on_bus & ~states.off[steady],
+    )  # fmt: skip
+    ledger.add(
+        "start-up capacitance", 1e6 * hardware.bulk_nominal_f,
+        1e6 * converters.startup_max_f[index] * hardware.units, at_most=True, axes=(BUS_NAMES,), applies=used,
+    )  # fmt: skip
+    top_v = np.where(hardware.fixed_ratio, converters.ratio[index] * study.supply.high_v, high_v)
+    bulk_rated = problem.capacitors.rated_v[situation.designs.bus("bulk")] * study.derating.voltage
+    ledger.add("capacitor voltage", top_v, bulk_rated, at_most=True, axes=(BUS_NAMES,), applies=used)
+    check_stability(situation, ledger, index, used)
+
+
+def check_stability(situation: Situation, ledger: Ledger, index: IntArray, used: BoolArray) -> None:
+    """Check the bus capacitance against constant-power loads after a jump, at the dipped voltage."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    converters, path = problem.converters, problem.path
+    jump = states.of_kind(JUMP)
+    power = np.maximum(situation.solution.bus_w[:, jump].transpose(0, 2, 1), 1e-3)
+    volts = np.maximum(situation.solution.bus_v[:, jump].transpose(0, 2, 1), 1e-3)
+    units = hardware.units_band
+    ratio = converters.ratio[index][..., None]
+    output_ohm = converters.output_ohm[index][..., None] / units
+    bandwidth_hz = converters.bandwidth_rad_s[index][..., None] / (2.0 * np.pi)
+    fixed_ratio = hardware.fixed_ratio[..., None]
+    source_ohm = np.where(fixed_ratio, output_ohm + path.resistance_ohm * ratio**2, output_ohm)
+    source_h = np.where(fixed_ratio, path.inductance_h * ratio**2, regulated_source_h(output_ohm, bandwidth_hz))
+    source_ohm = np.maximum(source_ohm, 1e-6)
+    least = least_capacitance_f(source_ohm, source_h, power, volts)
+    margin = np.minimum(hardware.bulk_f[..., None] / np.maximum(least, 1e-12), 1e6)
+    resistive = np.minimum(resistance_limit_ohm(power, volts) / source_ohm, 1e6)
+    bound = problem.study.control.stability_margin
+    axes = (BUS_NAMES, situation.state_names(jump))
+    ledger.add("stability", np.minimum(margin, resistive), bound, at_most=False, axes=axes, applies=used[..., None])

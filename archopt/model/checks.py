@@ -1,0 +1,136 @@
+"""All checks of a batch of solved designs: rails, jump, buses, copper, input, and that choices fit together."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from archopt.model.bus_checks import check_buses
+from archopt.model.cost import copper_area_m2
+from archopt.model.limits import Ledger
+from archopt.model.parameters import BoolArray, FloatArray, IntArray
+from archopt.model.rail_checks import check_jump, check_rails
+from archopt.model.situation import Droop, Situation
+from archopt.model.space import BUS_NAMES
+from archopt.model.states import FALLBACK, JUMP, MIX
+from archopt.physics.ampacity import current_limit_a
+
+
+def check_copper(situation: Situation, ledger: Ledger) -> None:
+    """Check drops, ampacity and the layer budget."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    rails, board, solution = problem.rails, problem.study.board, situation.solution
+    steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
+    axes = (situation.state_names(steady), situation.rail_names)
+    amps = solution.current_a[:, steady]
+    drop = amps * hardware.pour_ohm[:, None, :] / rails.voltage_v
+    ledger.add("rail drop", 100.0 * drop, 100.0 * rails.drop_budget, at_most=True, axes=axes)
+    thickness = problem.stacks.thickness_m[hardware.stack][:, None]
+    pairs = situation.designs.rail("pairs")
+    limit_a = pairs * current_limit_a(rails.copper_width_m, thickness, board.copper_rise_k, inner=True)
+    ledger.add("copper ampacity", amps, limit_a[:, None, :], at_most=True, axes=axes)
+    width_m = np.sqrt(board.bus_area_cm2 * 1e-4 / max(board.bus_shared_squares + board.bus_own_squares, 0.1))
+    bus_pairs = situation.designs.bus("pairs")
+    bus_limit = bus_pairs * current_limit_a(width_m, thickness, board.copper_rise_k, inner=True)
+    bus_axes = (situation.state_names(steady), tuple(f"{name} plane" for name in BUS_NAMES))
+    ledger.add(
+        "copper ampacity", solution.bus_a[:, steady], bus_limit[:, None, :], at_most=True, axes=bus_axes,
+        applies=(hardware.converter >= 0)[:, None, :],
+    )  # fmt: skip
+    stack_pairs = problem.stacks.pairs[hardware.stack]
+    offered = stack_pairs * board.area_cm2 * board.usable_copper_share
+    ledger.add("layer budget", 1e4 * copper_area_m2(problem, situation.designs), offered, at_most=True)
+
+
+def check_board(situation: Situation, ledger: Ledger) -> None:
+    """Check the input path, the bias supply, caps, and that the choices fit together."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    solution, board = situation.solution, problem.study.board
+    steady = np.concatenate([states.of_kind(MIX), states.of_kind(JUMP), states.of_kind(FALLBACK)])
+    axes = (situation.state_names(steady),)
+    ledger.add("input current", solution.input_a[:, steady], problem.path.limit_a, at_most=True, axes=axes)
+    every = (states.name,)
+    most = states.input_v**2 / (4.0 * max(problem.path.resistance_ohm, 1e-12))
+    wanted = solution.input_w - solution.path_w + solution.missing_w
+    ledger.add("deliverable power", wanted, most, at_most=True, axes=every)
+    needs_bias: BoolArray = np.asarray((hardware.bias_w > 0).any(axis=1))
+    if len(problem.biases.names):
+        bound = problem.biases.max_power_w[np.maximum(hardware.bias, 0)]
+        demand = solution.bias_out_w[:, steady]
+        applies = needs_bias[:, None] & (hardware.bias >= 0)[:, None]
+        ledger.add("bias supply power", demand, bound[:, None], at_most=True, axes=axes, applies=applies)
+    if np.isfinite(board.cost_cap):
+        ledger.add("cost cap", situation.bill.total, board.cost_cap, at_most=True)
+    if np.isfinite(board.area_cap_cm2):
+        ledger.add("area cap", situation.bill.area_mm2 * 0.01, board.area_cap_cm2, at_most=True)
+    ledger.add("choices that fit together", misfits(situation).astype(np.float64), 0.0, at_most=True)
+
+
+def misfits(situation: Situation) -> IntArray:
+    """Return how many choices of each design cannot be combined, (P,)."""
+    problem, hardware, designs = situation.problem, situation.hardware, situation.designs
+    stage, feed = hardware.stage, hardware.feed
+    rail = np.arange(stage.shape[1])
+    count = (~problem.feed_ok[rail, stage, feed]).sum(axis=1)
+    count += (hardware.phases > problem.stages.max_phases[stage]).sum(axis=1)
+    count += (~problem.capacitor_ok[rail, designs.rail("bank")]).sum(axis=1)
+    parent = np.maximum(hardware.parent, 0)
+    grandparent = np.take_along_axis(hardware.parent, parent, axis=1)
+    count += ((hardware.parent >= 0) & (grandparent >= 0)).sum(axis=1)
+    used: BoolArray = np.asarray(hardware.on_bus.any(axis=2))
+    count += (used & (hardware.converter < 0)).sum(axis=1)
+    if len(problem.converters.names):
+        most = problem.converters.max_parallel[np.maximum(hardware.converter, 0)]
+        count += ((hardware.converter >= 0) & (hardware.units > most)).sum(axis=1)
+    pairs = problem.stacks.pairs[hardware.stack][:, None]
+    count += (designs.rail("pairs") > pairs).sum(axis=1)
+    count += (used & (designs.bus("pairs") > pairs)).sum(axis=1)
+    return np.asarray(count + bias_misfits(situation) + supervisor_misfits(situation, used))
+
+
+def bias_misfits(situation: Situation) -> IntArray:
+    """Return 1 where gates need a bias that is missing or cannot run from its feed."""
+    problem, hardware = situation.problem, situation.hardware
+    needs: BoolArray = np.asarray((hardware.bias_w > 0).any(axis=1))
+    if not len(problem.biases.names):
+        return needs.astype(np.int64)
+    index = np.maximum(hardware.bias, 0)
+    supply = problem.study.supply
+    biases = problem.biases
+    low_bus = hardware.band_v[:, 0].min(axis=1) - hardware_dip(situation)
+    high_bus = hardware.band_v[:, 0].max(axis=1)
+    on_bus = hardware.bias_on_bus
+    low = np.where(on_bus, low_bus, supply.low_v)
+    high = np.where(on_bus, high_bus, supply.high_v)
+    fits = (biases.input_min_v[index] <= low) & (biases.input_max_v[index] >= high)
+    fits &= on_bus | biases.isolated[index] | (not supply.isolation)
+    fits &= ~on_bus | hardware.on_bus[:, 0].any(axis=1)
+    return np.asarray(needs & ~((hardware.bias >= 0) & fits), dtype=np.int64)
+
+
+def hardware_dip(situation: Situation) -> FloatArray:
+    """Return the deepest dip of bus A, V, (P,)."""
+    return np.asarray(situation.solution.dip_v[:, 0].max(axis=1))
+
+
+def supervisor_misfits(situation: Situation, used: BoolArray) -> IntArray:
+    """Return 1 where a bus moves and nothing that can move it is on the board."""
+    problem, hardware = situation.problem, situation.hardware
+    control = situation.designs.bus("control")
+    level = np.where(used, control, 0)
+    needed, buses = level.max(axis=1), (level > 0).sum(axis=1)
+    if not len(problem.supervisors.names):
+        return np.asarray(needed > 0, dtype=np.int64)
+    index = np.maximum(hardware.supervisor, 0)
+    fits = (problem.supervisors.level[index] >= needed) & (problem.supervisors.buses[index] >= buses)
+    return np.asarray((needed > 0) & ~((hardware.supervisor >= 0) & fits), dtype=np.int64)
+
+
+def check_all(situation: Situation, droop: Droop, *, explain: bool = False) -> Ledger:
+    """Check every limit of a batch of solved designs."""
+    ledger = Ledger(len(situation.designs), explain=explain, states=frozenset(situation.states.name))
+    check_rails(situation, droop, ledger)
+    check_jump(situation, ledger)
+    check_buses(situation, ledger)
+    check_copper(situation, ledger)
+    check_board(situation, ledger)
+    return ledger

@@ -1,0 +1,126 @@
+"""The checks of every rail's stage: steady, and through the largest unannounced jump."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from archopt.model.limits import Ledger
+from archopt.model.parameters import BUCK, LINEAR
+from archopt.model.situation import Droop, Situation
+from archopt.model.space import BUS_NAMES, FIXED
+from archopt.model.stages import conduction_ratio, headroom_v, ripple_a
+from archopt.model.states import FALLBACK, JUMP, MIX
+
+
+def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
+    """Check droop, release, duty, times, headroom, input range, current and temperature of every stage."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    solution, stages, rails = situation.solution, problem.stages, problem.rails
+    names = situation.rail_names
+    bands = tuple(f"band {k + 1}" for k in range(states.bands))
+    ledger.add("rail droop", droop.droop_percent, 100.0, at_most=True, axes=(names, bands))
+    ledger.add("rail release", droop.release_percent, 100.0, at_most=True, axes=(names, bands))
+    steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
+    axes = (situation.state_names(steady), names)
+    volts, amps = solution.stage_v[:, steady], solution.current_a[:, steady]
+    running = hardware.running[:, steady]
+    stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
+    on = ~states.off[steady]
+    per_phase = amps / running
+    drop_v = np.where(rails.remote_sense, amps * hardware.pour_ohm[:, None, :], 0.0)
+    duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
+    frequency = stages.frequency_hz[stage]
+    is_buck = stages.kind[stage] == BUCK
+    ledger.add(
+        "duty", 100.0 * duty, 100.0 * stages.max_duty[stage], at_most=True, axes=axes,
+        applies=on & (stages.kind[stage] != LINEAR),
+    )  # fmt: skip
+    ledger.add(
+        "on-time", 1e9 * duty / frequency, 1e9 * stages.min_on_s[stage], at_most=False, axes=axes,
+        applies=on & is_buck,
+    )  # fmt: skip
+    ledger.add(
+        "off-time", 1e9 * (1.0 - duty) / frequency, 1e9 * stages.min_off_s[stage], at_most=False, axes=axes,
+        applies=on & is_buck,
+    )  # fmt: skip
+    ledger.add(
+        "headroom", headroom_v(stages, stage, volts, rails.voltage_v + drop_v, amps), 0.0, at_most=False, axes=axes,
+        applies=on & (stages.kind[stage] == LINEAR),
+    )  # fmt: skip
+    ledger.add("stage input range", volts, stages.input_min_v[stage], at_most=False, axes=axes, applies=on)
+    ledger.add("stage input range", volts, stages.input_max_v[stage], at_most=True, axes=axes, applies=on)
+    limit_a = stages.phase_limit_a[stage]
+    ledger.add("stage current", per_phase, limit_a, at_most=True, axes=axes, applies=on)
+    own = rails.max_a / hardware.phases
+    ledger.add(
+        "stage current", own, stages.phase_limit_a[hardware.stage], at_most=True,
+        axes=(tuple(f"{name} at its own maximum" for name in names),),
+    )  # fmt: skip
+    heat = solution.stage_loss_w[:, steady] / running + hardware.bias_w[:, None, :]
+    temperature = states.ambient_degc[steady][:, None] + stages.thermal_k_per_w[stage] * heat
+    junction = problem.study.derating.junction_degc
+    ledger.add("stage temperature", temperature, junction, at_most=True, axes=axes, applies=on)
+    ripple = np.sqrt(running / 12.0) * ripple_a(stages, stage, volts, rails.voltage_v, per_phase)
+    capacitors = problem.capacitors
+    bank = situation.designs.rail("bank")
+    pieces = problem.bank_counts[situation.designs.rail("bank_count")]
+    permitted = pieces * capacitors.ripple_a[bank] * problem.study.derating.current
+    ledger.add("capacitor ripple", ripple, permitted[:, None, :], at_most=True, axes=axes, applies=on)
+    bank_uf = 1e6 * hardware.bank_f
+    rail_axes = (names,)
+    ledger.add(
+        "loop capacitance range",
+        bank_uf,
+        1e6 * stages.loop_min_f[hardware.stage],
+        at_most=False,
+        axes=rail_axes,
+    )
+    ledger.add(
+        "loop capacitance range",
+        bank_uf,
+        1e6 * stages.loop_max_f[hardware.stage],
+        at_most=True,
+        axes=rail_axes,
+    )
+
+
+def check_jump(situation: Situation, ledger: Ledger) -> None:
+    """Check that every stage and converter lives through the largest unannounced jump at the dipped bus."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    solution, stages, rails = situation.solution, problem.stages, problem.rails
+    jump = states.of_kind(JUMP)
+    volts, amps = solution.stage_v[:, jump], solution.current_a[:, jump]
+    axes = (situation.state_names(jump), situation.rail_names)
+    stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
+    on = ~states.off[jump]
+    running = hardware.running[:, jump]
+    per_phase = np.minimum(amps / running, stages.phase_limit_a[stage])
+    drop_v = np.where(rails.remote_sense, amps * hardware.pour_ohm[:, None, :], 0.0)
+    duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
+    spare = np.where(stages.kind[stage] == LINEAR, np.inf, volts * (1.0 - duty / stages.max_duty[stage]))
+    spare = np.minimum(spare, volts - stages.input_min_v[stage])
+    linear = headroom_v(stages, stage, volts, rails.voltage_v + drop_v, amps)
+    spare = np.minimum(spare, linear)
+    ledger.add("jump survival: stage input", volts, volts - spare, at_most=False, axes=axes, applies=on)
+    converters = problem.converters
+    index = np.maximum(hardware.converter, 0)[..., None]
+    applies = (hardware.converter >= 0)[..., None] & ~hardware.fixed_ratio[..., None]
+    fixed = (situation.designs.bus("control") == FIXED)[..., None]
+    band_v, units = hardware.band_v, hardware.units_band
+    top_v, top_units = band_v[..., -1:], units[..., -1:]
+    slew = np.maximum(converters.slew_v_per_s[index], 1e-3)
+    rising = (top_v > band_v) & ~fixed
+    rise_s = np.where(rising, problem.study.control.response_ms * 1e-3 + (top_v - band_v) / slew, 0.0)
+    wait_s = np.where(units < top_units, converters.wakeup_s[index], 0.0)
+    charge_a = np.where(rising, hardware.bulk_nominal_f[..., None] * slew, 0.0)
+    bus_a = solution.bus_a[:, jump].transpose(0, 2, 1) + charge_a
+    bound = units * np.where(
+        np.maximum(rise_s, wait_s) <= converters.overload_s[index],
+        np.maximum(converters.overload_a[index], converters.limit_a[index]),
+        converters.limit_a[index],
+    )
+    names = tuple(f"{name} converter" for name in BUS_NAMES)
+    ledger.add(
+        "jump survival: short-time current", bus_a, bound, at_most=True,
+        axes=(names, situation.state_names(jump)), applies=applies,
+    )  # fmt: skip
