@@ -309,6 +309,7 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     designs.rows[:, layout.volts] = volts.reshape(count, -1)
     before = designs.bus("nominal_v").copy()
     snap_limits(problem, designs, volts, idle)
+    snap_fewest(problem, designs)
     unsettled = (designs.bus("nominal_v") != before).any(axis=1)
     return designs, unsettled | (canonical(problem, designs).rows != designs.rows).any(axis=1)
 
@@ -348,6 +349,21 @@ def snap_limits(problem: Problem, designs: Designs, volts: IntArray, idle: BoolA
     lower[:] = np.where(follow, np.minimum(low, nominal), np.where(fixed, nominal, lower))
     upper[:] = np.where(follow, np.maximum(high, nominal), np.where(fixed, nominal, upper))
     resupervise(problem, designs)
+
+
+def snap_fewest(problem: Problem, designs: Designs) -> None:
+    """Name the fewest left running "all" where all run in every band: permission never used is no choice."""
+    allowed, layout = problem.space.allowed, designs.layout
+    rails = (designs.running_phases >= designs.rail("phases")[..., None]).all(axis=2)
+    rails &= designs.rail("phases") > 1
+    buses = (designs.running_converters >= designs.bus("count")[..., None]).all(axis=2)
+    buses &= designs.bus("count") > 1
+    for fewest, idle, columns in (
+        (designs.rail("fewest"), rails, layout.rail("fewest")),
+        (designs.bus("fewest"), buses, layout.bus("fewest")),
+    ):
+        offered = np.array([1 in allowed[column] for column in range(columns.start, columns.stop)])
+        fewest[idle & offered] = 1
 
 
 def resupervise(problem: Problem, designs: Designs) -> None:
