@@ -43,9 +43,7 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]},
 )
 
-StudyArgument = Annotated[
-    Path, typer.Argument(metavar="STUDY", help="Study file (TOML).", show_default=False)
-]
+StudyArgument = Annotated[Path, typer.Argument(metavar="STUDY", help="Study file (TOML).", show_default=False)]
 JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON for a machine instead of tables.")]
 
 
@@ -136,9 +134,7 @@ def start(
 @app.command("new")
 @in_own_words
 def new_command(
-    directory: Annotated[
-        Path, typer.Argument(metavar="DIR", help="Directory to create.", show_default=False)
-    ],
+    directory: Annotated[Path, typer.Argument(metavar="DIR", help="Directory to create.", show_default=False)],
 ) -> None:
     """Write a starter study to edit: a study file and a load profile."""
     from archopt.inputs.starter import write_starter
@@ -182,12 +178,8 @@ def solve_command(
     evaluations: Annotated[
         int | None, typer.Option(min=1, metavar="N", help="Designs to try. [default: the study's]")
     ] = None,
-    seconds: Annotated[
-        float | None, typer.Option(min=1.0, metavar="S", help="End the search after S seconds.")
-    ] = None,
-    quiet: Annotated[
-        bool, typer.Option("--quiet", "-q", help="No progress, no tables; only the files.")
-    ] = False,
+    seconds: Annotated[float | None, typer.Option(min=1.0, metavar="S", help="End the search after S seconds.")] = None,
+    quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress, no tables; only the files.")] = False,
     replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier result in DIR.")] = False,
     as_json: JsonOption = False,
 ) -> None:
@@ -221,9 +213,7 @@ def solve_command(
 @app.command("show")
 @in_own_words
 def show_command(
-    directory: Annotated[
-        Path, typer.Argument(metavar="DIR", help="Directory of a result.", show_default=False)
-    ],
+    directory: Annotated[Path, typer.Argument(metavar="DIR", help="Directory of a result.", show_default=False)],
     design: Annotated[
         str | None,
         typer.Argument(metavar="DESIGN", help="Name (D007), number, mark (knee) or incumbent."),

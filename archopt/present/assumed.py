@@ -48,6 +48,7 @@ def _split(place: str, rails: list[str]) -> tuple[str, str]:
 
 def _lines(entries: list[tuple[str, str]], rails: list[str]) -> Iterable[tuple[str, str]]:
     """Rails and value of each line: one for all where values are equal or short, else one for each value."""
+    entries = [(rail, "itself" if rail and value == rail else value) for rail, value in entries]
     values = list(dict.fromkeys(value for _, value in entries))
     if len(values) > 1 and all(rail and len(value) <= SHORT_VALUE for rail, value in entries):
         yield _who([rail for rail, _ in entries], rails), ", ".join(f"{rail} {v}" for rail, v in entries)

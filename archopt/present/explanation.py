@@ -9,9 +9,10 @@ from rich.table import Table
 from rich.text import Text
 
 from archopt.present.amounts import NONE, fixed, money, number, of, place_word, real, with_unit
-from archopt.present.losses import loss_table, state_table, worst_balance
+from archopt.present.losses import loss_table, shown_states, worst_balance
 from archopt.present.power_tree import BUS_WORD, tree_lines
 from archopt.present.record import Data
+from archopt.present.state_tables import design_states_table
 from archopt.present.tables import HangingLines, WordTable, heading, indented, pairs, section, table
 
 UNITLESS = ("ratio", "choices")
@@ -38,7 +39,8 @@ def explanation(design: Data, problem: Data) -> Iterable[RenderableType]:
             *phases_body(design["bands"]),
         )
     yield from section("Losses by part and mechanism", loss_table(design))
-    yield from section("States of the year, and the shown loads", state_table(design), balance_line(design))
+    states = design_states_table(shown_states(design))
+    yield from section("States of the year, and the shown loads", states, balance_line(design))
     if design.get("heat"):
         yield from section("Heat in the hottest case", heat_table(design["heat"]))
     if design.get("tolerance"):

@@ -267,8 +267,7 @@ def _head(directory: Path) -> Data:
     version = head.get("format_version")
     if version != FORMAT_VERSION:
         raise OutputError(
-            f"{directory}: written in version {version} of the result files;"
-            f" this archopt reads {FORMAT_VERSION}"
+            f"{directory}: written in version {version} of the result files; this archopt reads {FORMAT_VERSION}"
         )
     return head
 

@@ -82,32 +82,18 @@ def loss_table(design: Data) -> WordTable:
     return table(headings, rows, left=["part, mechanism"])
 
 
-def state_table(design: Data) -> WordTable:
-    """States with hours and those of the printed loads: input, bus voltages, load, loss, efficiency."""
+def shown_states(design: Data) -> list[Data]:
+    """The states with hours and those of the printed loads."""
     shown = [state_at(design, load) for load in LOADS]
-    rows = []
-    for state in design.get("states") or []:
-        if not state.get("hours") and not any(state is other for other in shown):
-            continue
-        volts = ", ".join(fixed(v, 2) for v in (state.get("volts") or {}).values() if v is not None)
-        rows.append([
-            str(state.get("state", NONE)), fixed(state.get("hours"), 0), fixed(state.get("input_v"), 1),
-            volts or NONE, fixed(state.get("load_w"), 1), fixed(state.get("loss_w"), 2),
-            _efficiency(state),
-        ])  # fmt: skip
-    return table(
-        ["state", "hours", "input V", "bus V", "load W", "loss W", "efficiency %"], rows, left=["state"]
-    )
+    return [
+        state for state in design.get("states") or []
+        if state.get("hours") or any(state is other for other in shown)
+    ]  # fmt: skip
 
 
 def worst_balance(design: Data) -> float:
     """The largest relative gap between input power and load plus listed losses over all states."""
     return max((abs(real(s.get("balance"), 0.0)) for s in design.get("states") or []), default=0.0)
-
-
-def _efficiency(state: Data) -> str:
-    load, drawn = real(state.get("load_w")), real(state.get("input_w"))
-    return fixed(100.0 * load / drawn, 1) if drawn > 0 else NONE
 
 
 def _watts(losses: object, part: str, mechanism: str) -> float:

@@ -148,8 +148,7 @@ def margin_body(designs: Sequence[Data], currency: str) -> Iterable[RenderableTy
     if len(values) < FEWEST_DROOP_VALUES:
         shown = ", ".join(number(value) for value in values)
         yield Text(
-            "Droop does not discriminate here:"
-            f" the front holds {counted(len(values), 'value')} of it ({shown} %)."
+            f"Droop does not discriminate here: the front holds {counted(len(values), 'value')} of it ({shown} %)."
         )
 
 

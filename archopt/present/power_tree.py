@@ -48,9 +48,7 @@ def input_line(study: Data) -> str:
     return text
 
 
-def fed_from(
-    feed: str, level: int, choices: Data, feeds: dict[str, str], rails: dict[str, Data]
-) -> Iterable[str]:
+def fed_from(feed: str, level: int, choices: Data, feeds: dict[str, str], rails: dict[str, Data]) -> Iterable[str]:
     """Lines of the rails on one feed and, below each, of the rails and taps fed from it."""
     for name in [name for name, source in feeds.items() if source == feed]:
         yield "  " * level + rail_line(name, choices, rails.get(name))

@@ -112,9 +112,7 @@ def losing_body(losing: list[Data], currency: str) -> Iterable[RenderableType]:
     terms = nearest.get("difference_by_mechanism") or {}
     if terms:
         largest = sorted(terms.items(), key=lambda term: -abs(real(term[1], 0.0)))
-        said = ", ".join(
-            f"{mechanism_word(word)} {signed(value, 2)}" for word, value in largest[:MOST_MECHANISMS]
-        )
+        said = ", ".join(f"{mechanism_word(word)} {signed(value, 2)}" for word, value in largest[:MOST_MECHANISMS])
         rest = ""
         if len(largest) > MOST_MECHANISMS:
             left = largest[MOST_MECHANISMS:]

@@ -41,9 +41,7 @@ class WordTable:
     left : headings of the columns that hold words, set to the left; the others hold numbers, never broken
     """
 
-    def __init__(
-        self, columns: Sequence[str], rows: Iterable[Sequence[str]], left: Sequence[str] = ()
-    ) -> None:
+    def __init__(self, columns: Sequence[str], rows: Iterable[Sequence[str]], left: Sequence[str] = ()) -> None:
         self.columns = tuple(columns)
         self.rows = [tuple(row) for row in rows]
         self.left = frozenset(left)

@@ -92,9 +92,7 @@ def even_spread(
     return added
 
 
-def telling(
-    loss: Sequence[float], cost: Sequence[float], roles: Sequence[Sequence[str]], at_most: int = 12
-) -> Telling:
+def telling(loss: Sequence[float], cost: Sequence[float], roles: Sequence[Sequence[str]], at_most: int = 12) -> Telling:
     """Choose the designs to print.
 
     Parameters

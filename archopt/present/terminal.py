@@ -33,9 +33,7 @@ def print_check(console: Console, result: CheckResult) -> None:
     put(console, check_sections(result))
 
 
-def record_sections(
-    record: FrontRecord, width: int, directory: Path | None = None
-) -> Iterable[RenderableType]:
+def record_sections(record: FrontRecord, width: int, directory: Path | None = None) -> Iterable[RenderableType]:
     """All that is printed of a result, for an output so many columns wide."""
     yield from section("Understood", understood(record.problem))
     yield from section("Search", pairs(search_rows(record)))

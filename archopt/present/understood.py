@@ -9,12 +9,11 @@ from rich.console import RenderableType
 from rich.table import Table
 from rich.text import Text
 
-from archopt.present.amounts import NONE, counted, fixed, money, number, of, real, with_unit
+from archopt.present.amounts import NONE, counted, fixed, money, number, of, place_word, real, with_unit
 from archopt.present.assumed import assumed_table
-from archopt.present.record import CheckResult, Data
+from archopt.present.record import BUSES, CheckResult, Data
+from archopt.present.state_tables import by_load, load_states_table
 from archopt.present.tables import WordTable, pairs, section, table
-
-HOURS_OF_A_YEAR = 8760.0
 
 
 def understood(problem: Data) -> Table:
@@ -67,7 +66,9 @@ def load_text(problem: Data) -> str:
     if not states:
         return NONE
     hours = sum(real(state["hours"]) for state in states)
-    text = f"{counted(len(states), 'state')} covering {number(hours)} hours of the year"
+    levels = len({state.get("input_v") for state in states})
+    text = f"{counted(len(by_load(states)), 'load')} at {counted(levels, 'input voltage')},"
+    text += f" covering {number(hours)} hours of the year"
     loads = [real(state.get("load_w")) for state in states]
     if all(math.isfinite(load) for load in loads):
         mean = sum(real(s["hours"]) * load for s, load in zip(states, loads, strict=True)) / hours
@@ -139,19 +140,6 @@ def rails_table(rails: list[Data]) -> WordTable:
     return table(columns, rows, left=words)
 
 
-def states_table(states: list[Data]) -> WordTable:
-    """The load states: those of the year, then those looked at for limits and printed watts."""
-    rows = [
-        [
-            str(state.get("state", NONE)), fixed(state.get("hours"), 0),
-            fixed(100 * real(state.get("hours")) / HOURS_OF_A_YEAR, 1), fixed(state.get("input_v"), 1),
-            fixed(state.get("load_w"), 1),
-        ]
-        for state in states
-    ]  # fmt: skip
-    return table(["state", "hours", "% of a year", "input V", "load W"], rows, left=["state"])
-
-
 def space_rows(space: Data) -> Iterable[tuple[str, str]]:
     """Size of the space and what is on offer."""
     if space.get("choices") is not None:
@@ -181,7 +169,7 @@ def check_sections(result: CheckResult) -> Iterable[RenderableType]:
     if study.get("rails"):
         yield from section("Rails", rails_table(study["rails"]))
     if problem.get("states"):
-        yield from section("States", states_table(problem["states"]))
+        yield from section("States", load_states_table(problem["states"]))
     if result.power:
         yield from section("Load power", pairs(power_rows(result.power)))
     assumed = problem.get("assumed") or []
@@ -193,9 +181,27 @@ def check_sections(result: CheckResult) -> Iterable[RenderableType]:
         yield from section("Space to search", pairs(space_rows(result.space)))
         options = result.space.get("options") or []
         if options:
-            rows = [[str(row.get("choice", NONE)), number(row.get("values"), 6)] for row in options]
-            yield from section("Values of each choice", table(["choice", "values"], rows, left=["choice"]))
+            headings = ["choice", "how many", "values each"]
+            rows = option_rows(options)
+            yield from section("Values of each choice", table(headings, rows, left=["choice"]))
     yield from cautions_section(result.cautions)
+
+
+def option_rows(options: list[Data]) -> list[list[str]]:
+    """Choices with their number of values; those all rails have in one row, fewest to most values."""
+    groups: dict[str, list[int]] = {}
+    for row in options:
+        owner, _, field = str(row.get("choice", NONE)).partition(".")
+        own = owner in (*BUSES, "board") or not field
+        name = f"{place_word(owner)}: {field}" if field else owner
+        groups.setdefault(name if own else f"rails: {field}", []).append(int(real(row.get("values"), 0.0)))
+    return [
+        [
+            name.replace("_", " "), number(len(counts), 6),
+            number(counts[0], 6) if len(set(counts)) == 1 else f"{min(counts):,} to {max(counts):,}",
+        ]
+        for name, counts in groups.items()
+    ]  # fmt: skip
 
 
 def cautions_section(cautions: list[str]) -> Iterable[RenderableType]:

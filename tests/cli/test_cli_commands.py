@@ -28,9 +28,7 @@ def raising(error: BaseException) -> Callable[[], None]:
     return act
 
 
-def test_solve_prints_the_front_and_writes_runs_name(
-    workflow: Workflow, run: Run, record: FrontRecord
-) -> None:
+def test_solve_prints_the_front_and_writes_runs_name(workflow: Workflow, run: Run, record: FrontRecord) -> None:
     code, out, err = run("solve", "board.toml", "--seed", "5", "--evaluations", "200")
     assert code == 0
     assert "Energy against cost" in out
@@ -72,9 +70,7 @@ def test_replace_replaces(workflow: Workflow, run: Run) -> None:
     assert files.read(Path("runs/synthetic")).run == {"seed": 99}
 
 
-def test_a_place_taken_during_the_search_costs_no_result(
-    workflow: Workflow, run: Run, record: FrontRecord
-) -> None:
+def test_a_place_taken_during_the_search_costs_no_result(workflow: Workflow, run: Run, record: FrontRecord) -> None:
     workflow.on_solve = lambda: files.write(record, Path("runs/synthetic"))
     code, out, err = run("solve", "board.toml", "--quiet")
     assert (code, out) == (0, "runs/synthetic-2\n")
@@ -116,9 +112,7 @@ def test_a_fault_of_ours_is_short_and_says_where_to_report(workflow: Workflow, r
     assert "Traceback" not in err
 
 
-def test_the_details_of_a_fault_come_when_asked_for(
-    workflow: Workflow, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_the_details_of_a_fault_come_when_asked_for(workflow: Workflow, monkeypatch: pytest.MonkeyPatch) -> None:
     from archopt.cli import main
 
     workflow.on_solve = raising(ZeroDivisionError("division by zero"))
@@ -188,9 +182,7 @@ def test_check_prints_what_was_understood(workflow: Workflow, run: Run) -> None:
     assert json.loads(out)["space"]["choices"] == 31
 
 
-def test_show_prints_a_result_again_and_explains_a_design(
-    workflow: Workflow, run: Run, record: FrontRecord
-) -> None:
+def test_show_prints_a_result_again_and_explains_a_design(workflow: Workflow, run: Run, record: FrontRecord) -> None:
     files.write(record, Path("result"))
     code, again, _ = run("show", "result")
     assert code == 0

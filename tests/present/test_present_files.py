@@ -89,9 +89,7 @@ def test_an_empty_directory_may_be_used(record: FrontRecord, tmp_path: Path) -> 
 
 
 @pytest.mark.parametrize("replace", [False, True])
-def test_foreign_directories_and_files_are_never_replaced(
-    record: FrontRecord, tmp_path: Path, replace: bool
-) -> None:
+def test_foreign_directories_and_files_are_never_replaced(record: FrontRecord, tmp_path: Path, replace: bool) -> None:
     foreign = tmp_path / "photos"
     foreign.mkdir()
     (foreign / "cat.png").write_bytes(b"x")

@@ -18,8 +18,10 @@ from archopt.present.overview import flat_band, front_sections
 from archopt.present.power_tree import tree_lines
 from archopt.present.questions import gain_lines, volts_text
 from archopt.present.record import CheckResult, FrontRecord
+from archopt.present.state_tables import design_states_table, load_states_table
 from archopt.present.tables import console_for, put, table
 from archopt.present.terminal import print_check, print_front
+from archopt.present.understood import option_rows
 
 
 def printed(record: FrontRecord, width: int | None = None) -> str:
@@ -149,9 +151,7 @@ def test_a_flat_optimum_is_given_as_a_band(record: FrontRecord) -> None:
     assert flat_band(record.designs) == ""
     record.designs[1]["choices"]["bus_a.nominal_v"] = 11.0
     record.designs[1]["objectives"]["energy_loss_kwh_per_year"] = 52.8
-    assert flat_band(record.designs) == (
-        "2 designs within 1 % of the least loss; nominal bus A from 10 to 11 V."
-    )
+    assert flat_band(record.designs) == ("2 designs within 1 % of the least loss; nominal bus A from 10 to 11 V.")
 
 
 def test_an_interrupted_search_says_so(record: FrontRecord) -> None:
@@ -311,3 +311,31 @@ def test_assumptions_that_rails_share_take_one_line() -> None:
         ["rails: capacitors", "io", "ceramic_1, ceramic_2", "rated"],
         ["growth_percent", "", "15", "plain default"],
     ]
+
+
+def test_choices_that_every_rail_has_take_one_line() -> None:
+    options = [
+        {"choice": "core.stage", "values": 12}, {"choice": "io.stage", "values": 30},
+        {"choice": "core.pairs", "values": 4}, {"choice": "io.pairs", "values": 4},
+        {"choice": "bus_a.nominal_v", "values": 33}, {"choice": "board.stack", "values": 7},
+    ]  # fmt: skip
+    assert option_rows(options) == [
+        ["rails: stage", "2", "12 to 30"], ["rails: pairs", "2", "4"],
+        ["bus A: nominal v", "1", "33"], ["board: stack", "1", "7"],
+    ]  # fmt: skip
+
+
+def test_one_load_at_several_inputs_is_one_line() -> None:
+    states = [
+        {"state": "day at 54 V", "hours": 900.0, "input_v": 54.0, "volts": {"bus_a": 9.5}, "load_w": 50.0,
+         "input_w": 60.0, "loss_w": 10.0},
+        {"state": "day at 40 V", "hours": 100.0, "input_v": 40.0, "volts": {"bus_a": 9.0}, "load_w": 50.0,
+         "input_w": 62.0, "loss_w": 12.0},
+        {"state": "30 % load", "hours": 0.0, "input_v": 54.0, "volts": {"bus_a": 8.0}, "load_w": 30.0,
+         "input_w": 37.5, "loss_w": 7.5},
+    ]  # fmt: skip
+    lines = plain_text(design_states_table(states)).splitlines()
+    assert lines[1].split() == ["day", "1,000", "54,", "40", "9.00", "to", "9.50", "50.0", "10.20", "83.1"]
+    assert lines[2].split() == ["30", "%", "load", "0", "54", "8.00", "30.0", "7.50", "80.0"]
+    lines = plain_text(load_states_table(states)).splitlines()
+    assert lines[1].split() == ["day", "1,000", "11.4", "54,", "40", "50.0"]
