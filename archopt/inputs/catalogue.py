@@ -88,9 +88,7 @@ def _read_folder(root: Path, shown: str, reading: _Reading, notebook: Notebook, 
         if not entry.is_dir() and entry.suffix != ".csv":
             continue
         if family not in FAMILIES:
-            notebook.problem(
-                "", f"is no family of parts; {nearest(family, FAMILIES, 20)}", f"{shown}/{entry.name}"
-            )
+            notebook.problem("", f"is no family of parts; {nearest(family, FAMILIES, 20)}", f"{shown}/{entry.name}")
             continue
         files = _entries(entry, shown, notebook) if entry.is_dir() else [entry]
         for file in (file for file in files if file.suffix == ".csv"):
@@ -115,9 +113,7 @@ def _entries(root: Path, shown: str, notebook: Notebook) -> list[Path]:
         return []
 
 
-def _read_rows(
-    path: Path, shown: str, model: type[BaseModel], reading: _Reading, notebook: Notebook
-) -> CsvRows | None:
+def _read_rows(path: Path, shown: str, model: type[BaseModel], reading: _Reading, notebook: Notebook) -> CsvRows | None:
     """Return the rows of one CSV after checking its header against the model's fields."""
     table = read_csv(path, shown, f"rows of {model.__name__}", notebook)
     if table is None:
@@ -156,9 +152,7 @@ def _read_family(
     """Read one CSV of a family into the catalogue; ``seen`` holds the names met in this folder."""
     table = _read_rows(path, shown, model, reading, notebook)
     for line, cells in table.rows if table else ():
-        values = (
-            {key: cell for key, cell in zip(table.header, cells, strict=True) if cell != ""} if table else {}
-        )
+        values = {key: cell for key, cell in zip(table.header, cells, strict=True) if cell != ""} if table else {}
         before = len(notebook.problems)
         part = validated(model, values, _row_place(shown, line), notebook)
         name = values.get("name", "")

@@ -24,9 +24,7 @@ def check_family(part: Part, file: str, line: int, notebook: Notebook) -> None:
 
     for fewer, more in pairwise(PRICES):
         if values[more] > values[fewer]:
-            note(
-                more, f"{values[more]:g} is above {fewer} {values[fewer]:g}; more pieces never cost more each"
-            )
+            note(more, f"{values[more]:g} is above {fewer} {values[fewer]:g}; more pieces never cost more each")
     for low, high in ORDERED:
         if low in values and high in values and values[low] > values[high]:
             unit = unit_of(low)
@@ -67,14 +65,8 @@ def check_parts(
             file, line = place_of[part.name]
             if part.source not in sources:
                 hint = nearest(part.source, list(sources))
-                notebook.problem(
-                    f"row {line}, column source", f"'{part.source}' is not in sources.csv; {hint}", file
-                )
-            if (
-                isinstance(part, BuckStage)
-                and part.inductor not in inductors
-                and part.inductor not in place_of
-            ):
+                notebook.problem(f"row {line}, column source", f"'{part.source}' is not in sources.csv; {hint}", file)
+            if isinstance(part, BuckStage) and part.inductor not in inductors and part.inductor not in place_of:
                 hint = nearest(part.inductor, list(inductors))
                 message = f"'{part.inductor}' is not in inductors; {hint}"
                 notebook.problem(f"row {line}, column inductor", message, file)

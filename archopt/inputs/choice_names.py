@@ -71,15 +71,11 @@ class ChoiceChecker:
             notebook.problem(f"{place}.{name}", f"there is no rail or bus '{owner}'; {hint}")
             return False
         if key not in owners[owner]:
-            notebook.problem(
-                f"{place}.{name}", f"there is no choice '{key}'; {nearest(key, owners[owner], 20)}"
-            )
+            notebook.problem(f"{place}.{name}", f"there is no choice '{key}'; {nearest(key, owners[owner], 20)}")
             return False
         rail = self._rails.get(owner)
         if rail is not None and rail.tap_of and key != "pairs":
-            notebook.problem(
-                f"{place}.{name}", f"'{owner}' taps {rail.tap_of}, which carries it; it has no {key}"
-            )
+            notebook.problem(f"{place}.{name}", f"'{owner}' taps {rail.tap_of}, which carries it; it has no {key}")
             return False
         if owner in self._rail_names and rail is None:
             return False
@@ -96,20 +92,14 @@ class ChoiceChecker:
             if value in names:
                 return ""
             family = next((f for f, parts in self._catalogue.families.items() if value in parts), "")
-            kind = (
-                f"'{value}' ({family}) is no {key} for {owner}" if family else f"there is no {key} '{value}'"
-            )
+            kind = f"'{value}' ({family}) is no {key} for {owner}" if family else f"there is no {key} '{value}'"
             return f"{kind}; {nearest(value, names)}"
         try:
             number = float(value)
         except ValueError:
             return f"needs a number, found {brief(value)}"
         if key in {"nominal_v", "lower_v", "upper_v"}:
-            return (
-                ""
-                if 0 < number <= 100
-                else f"{value} V is out of range; it must be above 0 and at most 100 V"
-            )
+            return "" if 0 < number <= 100 else f"{value} V is out of range; it must be above 0 and at most 100 V"
         if key in {"bank_count", "bulk_count"}:
             counts = ", ".join(str(count) for count in BANK_COUNTS)
             return "" if number in BANK_COUNTS else f"{value} is not one of {counts}"

@@ -111,9 +111,7 @@ def _taps(rail: Rail, rails: Sequence[Rail]) -> list[Rail]:
     return [other for other in rails if other.tap_of == rail.name and other.voltage_v == rail.voltage_v]
 
 
-def _check_input(
-    supply: InputSupply, allowed: dict[str, list[Part]], choices: Choices, notebook: Notebook
-) -> None:
+def _check_input(supply: InputSupply, allowed: dict[str, list[Part]], choices: Choices, notebook: Notebook) -> None:
     """Note an input range that nothing stands, and isolation that nothing gives."""
     buses = [part for part in allowed["bus_converters"] if isinstance(part, BusConverter)]
     pinned = choices.pins.get("bus_a.converter")
@@ -132,9 +130,7 @@ def _check_input(
     if choices.max_buses == 0 and not choices.direct:
         return  # told with the choices
     span = f"{supply.low_v:g} to {supply.high_v:g} V"
-    standing = [
-        part for part in first if part.input_min_v <= supply.low_v and part.input_max_v >= supply.high_v
-    ]
+    standing = [part for part in first if part.input_min_v <= supply.low_v and part.input_max_v >= supply.high_v]
     if not first:
         notebook.problem("input", f"no allowed converter is left to stand {span}")
         return
@@ -165,7 +161,5 @@ def _check_supervisor(control: Control, supervisors: Sequence[Part], notebook: N
     able = {part.control for part in supervisors if isinstance(part, Supervisor)}
     if "follow_load" in able or ("two_levels" in able and "two_levels" in control.kinds):
         return
-    message = (
-        f"without fixed a supervisor is needed for {' or '.join(control.kinds)}; none is allowed that can"
-    )
+    message = f"without fixed a supervisor is needed for {' or '.join(control.kinds)}; none is allowed that can"
     notebook.problem("control.kinds", message)

@@ -64,7 +64,6 @@ class _Filling:
         self._control = control
         self._derating = derating
         self._notebook = notebook
-        self._unused = {bus for bus in BUSES if stated.get(f"{bus}.converter", "none") == "none"}
 
     def filled(self) -> dict[str, str]:
         """Return the whole design."""
@@ -84,8 +83,7 @@ class _Filling:
     def _fill(self, name: str, value: str, reason: str) -> str:
         if name not in self._design:
             self._design[name] = value
-            if name.split(".", maxsplit=1)[0] not in self._unused:
-                self._notebook.assume(f"incumbent.{name}", value, reason)
+            self._notebook.assume(f"incumbent.{name}", value, reason)
         return self._design[name]
 
     def _fill_rail(self, rail: Rail, feed: str) -> None:
@@ -106,28 +104,22 @@ class _Filling:
         part = self._families["capacitors"].get(bank)
         least = 0.0
         if isinstance(stage, (BuckStage, SingleStage, LinearRegulator)):
-            least = (
-                stage.loop_min_uf * phases if not isinstance(stage, LinearRegulator) else stage.loop_min_uf
-            )
+            least = stage.loop_min_uf * phases if not isinstance(stage, LinearRegulator) else stage.loop_min_uf
         count = math.ceil(2 * least / part.capacitance_uf) if isinstance(part, Capacitor) else 1
-        self._fill(
-            f"{name}.bank_count", _bank_count(max(count, 4)), "twice the least its loop needs, at least four"
-        )
+        self._fill(f"{name}.bank_count", _bank_count(max(count, 4)), "twice the least its loop needs, at least four")
 
     def _largest(self, names: Sequence[str]) -> str:
         parts = self._families["capacitors"]
-        sizes = {
-            name: part.capacitance_uf for name in names if isinstance(part := parts.get(name), Capacitor)
-        }
+        sizes = {name: part.capacitance_uf for name in names if isinstance(part := parts.get(name), Capacitor)}
         return max(sizes, key=lambda name: sizes[name]) if sizes else ""
 
     def _fill_bus(self, bus: str, power_w: float) -> None:
         used = any(self._design.get(f"{rail.name}.feed") == bus for rail in self._rails)
         converter = self._fill(f"{bus}.converter", "none", "no bus converter stated")
         if converter == "none" and used:
-            self._notebook.problem(
-                f"incumbent.{bus}.converter", f"missing; rails of today's design hang on {bus}"
-            )
+            self._notebook.problem(f"incumbent.{bus}.converter", f"missing; rails of today's design hang on {bus}")
+        if converter == "none":
+            return  # the other choices of a bus that is not there are none
         part = self._families["bus_converters"].get(converter)
         nominal, count = self._control.habitual_v, 1
         if isinstance(part, BusConverter):
@@ -151,9 +143,9 @@ class _Filling:
         self._fill(f"{bus}.pairs", "1", "one layer pair")
 
     def _check_bus(self, bus: str) -> None:
-        lower, nominal, upper = (
-            float(self._design[f"{bus}.{key}"]) for key in ("lower_v", "nominal_v", "upper_v")
-        )
+        if self._design[f"{bus}.converter"] == "none":
+            return
+        lower, nominal, upper = (float(self._design[f"{bus}.{key}"]) for key in ("lower_v", "nominal_v", "upper_v"))
         if not lower <= nominal <= upper:
             message = f"{nominal:g} V is outside lower_v {lower:g} to upper_v {upper:g} V"
             self._notebook.problem(f"incumbent.{bus}.nominal_v", message)
@@ -205,9 +197,10 @@ class _Filling:
     def _stands(self, part: BiasSupply, feed: str) -> bool:
         """Return whether a bias supply stands the voltage of its feed."""
         if feed == "bus_a":
+            if self._design["bus_a.converter"] == "none":
+                return False
             low_v, high_v = (float(self._design[f"bus_a.{key}"]) for key in ("lower_v", "upper_v"))
-            used = self._design["bus_a.converter"] != "none"
-            return used and part.input_min_v <= low_v and part.input_max_v >= high_v
+            return part.input_min_v <= low_v and part.input_max_v >= high_v
         supply = self._supply
         if supply is None or (supply.isolation and not part.isolated):
             return False

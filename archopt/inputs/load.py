@@ -47,9 +47,7 @@ def load(path: str | Path, catalogue_root: Path | None = None) -> LoadedStudy:
     return loaded_from(content, Path(path), catalogue_root, notebook)
 
 
-def loaded_from(
-    content: Mapping[str, Any], path: Path, catalogue_root: Path | None, notebook: Notebook
-) -> LoadedStudy:
+def loaded_from(content: Mapping[str, Any], path: Path, catalogue_root: Path | None, notebook: Notebook) -> LoadedStudy:
     """Return the study of a file's content, as if it were read from the path.
 
     Raises

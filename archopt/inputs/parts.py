@@ -51,9 +51,7 @@ class BuckStage(Part):
     frequency_khz: float = Field(ge=50, le=5000)
     high_side_mohm: Positive = Field(description="at 25 degC")
     low_side_mohm: Positive = Field(description="at 25 degC")
-    resistance_per_k: NotNegative = Field(
-        le=0.02, description="relative rise of switch resistance per kelvin"
-    )
+    resistance_per_k: NotNegative = Field(le=0.02, description="relative rise of switch resistance per kelvin")
     edge_rise_ns: NotNegative = Field(le=500, description="turn-on overlap of current and voltage")
     edge_fall_ns: NotNegative = Field(le=500, description="turn-off overlap of current and voltage")
     dead_time_ns: NotNegative = Field(le=500, description="both edges together, a cycle")
@@ -71,9 +69,7 @@ class BuckStage(Part):
     input_capacitor_mohm: NotNegative = Field(
         description="equivalent series resistance of the stage's own input capacitor"
     )
-    input_capacitance_uf: NotNegative = Field(
-        description="the stage's own input capacitance under bias, per phase"
-    )
+    input_capacitance_uf: NotNegative = Field(description="the stage's own input capacitance under bias, per phase")
     quiescent_ma: NotNegative = Field(description="controller and driver current, per running phase")
     max_duty: float = Field(gt=0, le=1)
     min_on_ns: NotNegative = Field(le=1000)
@@ -95,9 +91,7 @@ class Inductor(Part):
     inductance_nh: Positive
     winding_mohm: Positive = Field(description="at 25 degC, copper")
     saturation_a: Positive
-    core_loss_mw: NotNegative = Field(
-        description="core loss at core_ripple_a peak to peak and core_frequency_khz"
-    )
+    core_loss_mw: NotNegative = Field(description="core loss at core_ripple_a peak to peak and core_frequency_khz")
     core_ripple_a: Positive
     core_frequency_khz: Positive
     core_frequency_exponent: float = Field(ge=1, le=3, description="Steinmetz exponent of frequency")

@@ -42,9 +42,7 @@ def nearest(name: str, valid: Collection[str], many: int = 8) -> str:
     names = sorted(valid)
     if not names:
         return "there is none to choose from"
-    return f"there is {', '.join(names[:many])}" + (
-        f" and {len(names) - many} more" if len(names) > many else ""
-    )
+    return f"there is {', '.join(names[:many])}" + (f" and {len(names) - many} more" if len(names) > many else "")
 
 
 @dataclass

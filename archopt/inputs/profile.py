@@ -66,9 +66,7 @@ class _Faults:
 
     def close(self) -> None:
         if self.count > REPORTED:
-            self.notebook.problem(
-                "", f"{self.count - REPORTED} more cells are wrong in this file", self.shown_path
-            )
+            self.notebook.problem("", f"{self.count - REPORTED} more cells are wrong in this file", self.shown_path)
 
 
 def read_profile(
@@ -105,9 +103,7 @@ def _check_header(table: CsvRows, known: Sequence[str], notebook: Notebook) -> N
     for column in dict.fromkeys(table.header):
         if column not in PLAIN_COLUMNS and column not in columns:
             hint = nearest(column, [*columns, *PLAIN_COLUMNS], many=40)
-            notebook.problem(
-                f"row 1, column {column or '(no name)'}", f"is no rail; {hint}", table.shown_path
-            )
+            notebook.problem(f"row 1, column {column or '(no name)'}", f"is no rail; {hint}", table.shown_path)
     if "hours" not in table.header:
         notebook.problem("row 1", "column hours is missing", table.shown_path)
     stated = [column for column in columns if column in table.header]

@@ -45,9 +45,7 @@ def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedS
     search = resolve_search(draft, notebook)
     checker = ChoiceChecker(rails, draft.rail_names, catalogue, board)
     choices = resolve_choices(draft, families, forbidden, checker, notebook)
-    incumbent = resolve_incumbent(
-        draft, rails, catalogue, board, supply, control, derating, checker, notebook
-    )
+    incumbent = resolve_incumbent(draft, rails, catalogue, board, supply, control, derating, checker, notebook)
     check_feasible(
         draft, rails, supply, control, derating, choices, catalogue, load.coincidence * load.growth, notebook
     )

@@ -28,9 +28,7 @@ def allowed_families(draft: Draft, notebook: Notebook) -> tuple[str, ...]:
     return tuple(name for name in CHOOSABLE if name in allowed and name not in forbidden) + INFRASTRUCTURE
 
 
-def forbidden_parts(
-    draft: Draft, catalogue: Catalogue, families: Sequence[str], notebook: Notebook
-) -> tuple[str, ...]:
+def forbidden_parts(draft: Draft, catalogue: Catalogue, families: Sequence[str], notebook: Notebook) -> tuple[str, ...]:
     """Return the names of all parts that may not be used.
 
     Those forbidden by name, those of a family of which other parts are listed in ``choices.parts``, and those
@@ -46,9 +44,7 @@ def forbidden_parts(
     for key, names in lists.items():
         for name in names or ():
             if name not in family_of:
-                notebook.problem(
-                    f"choices.{key}", f"there is no part '{name}'; {nearest(name, list(family_of))}"
-                )
+                notebook.problem(f"choices.{key}", f"there is no part '{name}'; {nearest(name, list(family_of))}")
     only = set(table.parts or ())
     listed = {family_of[name] for name in only if name in family_of}
     forbidden = set(table.forbidden_parts or ())
@@ -76,9 +72,7 @@ def resolve_choices(
             continue
         for value in values:
             if value in forbidden:
-                notebook.problem(
-                    f"choices.pin.{name}", f"'{value}' is forbidden by families, parts or forbidden_parts"
-                )
+                notebook.problem(f"choices.pin.{name}", f"'{value}' is forbidden by families, parts or forbidden_parts")
     max_buses = take("choices.max_buses", table.max_buses, 2, "plain default")
     direct = take("choices.direct", table.direct, True, "plain default")
     if max_buses == 0 and not direct:

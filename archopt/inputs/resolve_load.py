@@ -155,18 +155,12 @@ def _check_state(draft: Draft, state: StateRow, notebook: Notebook) -> None:
     for key, names in (("currents", state.currents or {}), ("off", state.off or ())):
         for name in names:
             if name not in draft.rail_names:
-                notebook.problem(
-                    f"{place}.{key}", f"there is no rail '{name}'; {nearest(name, draft.rail_names)}"
-                )
+                notebook.problem(f"{place}.{key}", f"there is no rail '{name}'; {nearest(name, draft.rail_names)}")
     for name in state.off or ():
         if name in (state.currents or {}):
             notebook.problem(f"{place}.off", f"'{name}' is off and has a current; keep one")
     supply = draft.supply
-    if (
-        state.input_v is not None
-        and supply is not None
-        and not supply.low_v <= state.input_v <= supply.high_v
-    ):
+    if state.input_v is not None and supply is not None and not supply.low_v <= state.input_v <= supply.high_v:
         message = f"{state.input_v:g} V is outside the input range {supply.low_v:g} to {supply.high_v:g} V"
         notebook.problem(f"{place}.input_v", message)
     if state.utilisation is None and len(state.currents or {}) + len(state.off or ()) < len(draft.rail_names):

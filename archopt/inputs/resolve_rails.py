@@ -60,13 +60,7 @@ def _rail(
     for key, value in (("typical_current_a", typical_a), ("step_a", step_a)):
         if value > row.max_current_a:
             wrong(key, f"{value:g} A is above max_current_a {row.max_current_a:g} A")
-    kind, slew = (
-        ("core rail", 100.0)
-        if core
-        else ("logic", 10.0)
-        if row.voltage_v < 2
-        else ("not core nor logic", 1.0)
-    )
+    kind, slew = ("core rail", 100.0) if core else ("logic", 10.0) if row.voltage_v < 2 else ("not core nor logic", 1.0)
     slew_a_per_us = take("slew_a_per_us", slew, kind)
     sensed = row.remote_sense
     if sensed is None:
@@ -75,9 +69,7 @@ def _rail(
     tolerance = take("tolerance_percent", 5.0, "+-5 % is usual")
     set_point = take("set_point_percent", 1.0, "plain default")
     ripple = take("ripple_percent", 0.5, "plain default")
-    drop = take(
-        "drop_budget_percent", *((2.0, "sensed") if sensed else (0.3 * tolerance, "0.3 of the tolerance"))
-    )
+    drop = take("drop_budget_percent", *((2.0, "sensed") if sensed else (0.3 * tolerance, "0.3 of the tolerance")))
     unsensed = 0.0 if sensed else drop
     budget = tolerance - set_point - ripple - unsensed
     if budget < LEAST_BUDGET_PERCENT:
@@ -138,9 +130,7 @@ def _copper(draft: Draft, row: RailRow, core: bool, notebook: Notebook) -> tuple
     if length_mm is not None:
         where, file = draft.place(row.name, "copper_length_mm")
         notebook.problem(where, "needs copper_width_mm or squares beside it", file)
-    squares = notebook.take(
-        f"{place}.squares", squares, 1.0 if core else 3.0, "core rail" if core else "not core"
-    )
+    squares = notebook.take(f"{place}.squares", squares, 1.0 if core else 3.0, "core rail" if core else "not core")
     if area_cm2 is not None:
         width_mm = width_mm or math.sqrt(area_cm2 * 100 / squares)
         return squares, area_cm2, width_mm
@@ -153,9 +143,7 @@ def _copper(draft: Draft, row: RailRow, core: bool, notebook: Notebook) -> tuple
                 width_mm, reason = most_mm, "pour of an eighth of the board"
         notebook.assume(f"{place}.copper_width_mm", width_mm, reason)
     area_cm2 = squares * width_mm**2 / 100
-    notebook.assume(
-        f"{place}.copper_area_cm2", area_cm2, f"strip of {squares:g} squares, {width_mm:.3g} mm wide"
-    )
+    notebook.assume(f"{place}.copper_area_cm2", area_cm2, f"strip of {squares:g} squares, {width_mm:.3g} mm wide")
     return squares, area_cm2, width_mm
 
 
@@ -178,9 +166,7 @@ def _capacitors(
         for name in row.capacitors:
             part = offered.get(name)
             if part is None:
-                notebook.problem(
-                    place, f"there is no capacitor '{name}'; {nearest(name, list(offered))}", file
-                )
+                notebook.problem(place, f"there is no capacitor '{name}'; {nearest(name, list(offered))}", file)
             elif not voltage_fits(part, row.voltage_v, derating):
                 message = (
                     f"'{name}' is rated for {part.rated_v:g} V, "
@@ -190,9 +176,7 @@ def _capacitors(
         return tuple(dict.fromkeys(row.capacitors))
     fitting = {name: part for name, part in offered.items() if voltage_fits(part, row.voltage_v, derating)}
     most_v = max(LEAST_RATED_V, LARGEST_RATED * row.voltage_v)
-    suited = [
-        name for name, part in fitting.items() if part.kind != "electrolytic" and part.rated_v <= most_v
-    ]
+    suited = [name for name, part in fitting.items() if part.kind != "electrolytic" and part.rated_v <= most_v]
     named = _named_banks(draft, row.name)
     chosen = [name for name in fitting if name in suited or name in named] or list(fitting)
     if not chosen:
@@ -227,14 +211,10 @@ def _check_relations(draft: Draft, rails: dict[str, Rail], notebook: Notebook) -
             elif name == row.name:
                 notebook.problem(place, "a rail cannot feed itself", file)
             elif name in rails and rails[name].voltage_v <= row.voltage_v:
-                message = (
-                    f"'{name}' has {rails[name].voltage_v:g} V, not above this rail's {row.voltage_v:g} V"
-                )
+                message = f"'{name}' has {rails[name].voltage_v:g} V, not above this rail's {row.voltage_v:g} V"
                 notebook.problem(place, message, file)
             elif name in rails and rails[name].tap_of:
-                notebook.problem(
-                    place, f"'{name}' is a tap; name the rail it taps, {rails[name].tap_of}", file
-                )
+                notebook.problem(place, f"'{name}' is a tap; name the rail it taps, {rails[name].tap_of}", file)
         if row.tap_of:
             _check_tap(draft, row, rails, notebook)
 

@@ -48,9 +48,7 @@ def resolve_supply(
     take = notebook.take
     inlet_degc = take("input.inlet_degc", table.inlet_degc, 40.0, "usual for equipment in a room")
     hottest = max(inlet_degc, hottest_degc) if math.isfinite(hottest_degc) else inlet_degc
-    hottest_inlet = take(
-        "input.hottest_inlet_degc", table.hottest_inlet_degc, hottest, "hottest inlet stated"
-    )
+    hottest_inlet = take("input.hottest_inlet_degc", table.hottest_inlet_degc, hottest, "hottest inlet stated")
     if hottest_inlet < hottest:
         message = f"{hottest_inlet:g} degC is below the {hottest:g} degC stated for the inlet or in the load"
         notebook.problem("input.hottest_inlet_degc", message)
@@ -121,9 +119,7 @@ def _path(
     if table.path is not None:
         part = paths.get(table.path)
         if part is None:
-            notebook.problem(
-                "input.path", f"there is no input path '{table.path}'; {nearest(table.path, list(paths))}"
-            )
+            notebook.problem("input.path", f"there is no input path '{table.path}'; {nearest(table.path, list(paths))}")
         elif part.input_max_v < table.high_v:
             message = f"'{part.name}' is rated for {part.input_max_v:g} V, below high_v {table.high_v:g} V"
             notebook.problem("input.path", message)
@@ -131,9 +127,7 @@ def _path(
     rated = sorted((part.price_1k, name) for name, part in paths.items() if part.input_max_v >= table.high_v)
     if not rated:
         highest = max((part.input_max_v for part in paths.values()), default=0.0)
-        message = (
-            f"no input path is rated for high_v {table.high_v:g} V; the highest is rated for {highest:g} V"
-        )
+        message = f"no input path is rated for high_v {table.high_v:g} V; the highest is rated for {highest:g} V"
         notebook.problem("input.high_v", message)
         return ""
     current_a = power_w / 0.85 / table.low_v
@@ -144,9 +138,7 @@ def _path(
     return notebook.take("input.path", None, name, reason)
 
 
-def resolve_board(
-    draft: Draft, catalogue: Catalogue, forbidden: frozenset[str], notebook: Notebook
-) -> Board | None:
+def resolve_board(draft: Draft, catalogue: Catalogue, forbidden: frozenset[str], notebook: Notebook) -> Board | None:
     """Return the board, None when its area is not known."""
     table, limits, take = draft.board, draft.limits, notebook.take
     if table is None:
@@ -160,9 +152,7 @@ def resolve_board(
             notebook.problem("board.stacks", f"there is no stack '{name}'; {nearest(name, offered)}")
     bus_area = take("board.bus_area_cm2", table.bus_area_cm2, 0.25 * table.area_cm2, "a quarter of the board")
     if bus_area > table.area_cm2:
-        notebook.problem(
-            "board.bus_area_cm2", f"{bus_area:g} cm2 is above the board's {table.area_cm2:g} cm2"
-        )
+        notebook.problem("board.bus_area_cm2", f"{bus_area:g} cm2 is above the board's {table.area_cm2:g} cm2")
     return Board(
         area_cm2=table.area_cm2,
         usable_copper_share=take("board.usable_copper_share", table.usable_copper_share, 0.7, PLAIN),
@@ -170,9 +160,7 @@ def resolve_board(
         bus_shared_squares=take("board.bus_shared_squares", table.bus_shared_squares, 3.0, PLAIN),
         bus_own_squares=take("board.bus_own_squares", table.bus_own_squares, 3.0, PLAIN),
         bus_area_cm2=bus_area,
-        bus_drop_budget_percent=take(
-            "limits.bus_drop_budget_percent", limits.bus_drop_budget_percent, 3.0, PLAIN
-        ),
+        bus_drop_budget_percent=take("limits.bus_drop_budget_percent", limits.bus_drop_budget_percent, 3.0, PLAIN),
         copper_rise_k=take("limits.copper_rise_k", limits.copper_rise_k, 20.0, "most in a warm box"),
         max_pairs_per_net=take("board.max_pairs_per_net", table.max_pairs_per_net, 4, PLAIN),
         area_cap_cm2=math.inf if limits.area_cap_cm2 is None else limits.area_cap_cm2,
@@ -187,9 +175,7 @@ def resolve_control(
     table, limits, take = draft.control, draft.limits, notebook.take
     lowest, highest = _bus_range(draft, catalogue, forbidden)
     grid_v = take("control.grid_v", table.grid_v, 0.25, PLAIN)
-    low_v = take(
-        "control.bus_min_v", table.bus_min_v, math.ceil(lowest / grid_v - 1e-9) * grid_v, "converters offered"
-    )
+    low_v = take("control.bus_min_v", table.bus_min_v, math.ceil(lowest / grid_v - 1e-9) * grid_v, "converters offered")
     high_v = take(
         "control.bus_max_v",
         table.bus_max_v,
@@ -201,9 +187,7 @@ def resolve_control(
     habit = 12.0 if low_v <= 12.0 <= high_v else low_v + math.floor((high_v - low_v) / 2 / grid_v) * grid_v
     habitual_v = take("control.habitual_v", table.habitual_v, habit, "taken out of habit")
     if low_v <= high_v and not low_v <= habitual_v <= high_v:
-        notebook.problem(
-            "control.habitual_v", f"{habitual_v:g} V is outside the bus range {low_v:g} to {high_v:g} V"
-        )
+        notebook.problem("control.habitual_v", f"{habitual_v:g} V is outside the bus range {low_v:g} to {high_v:g} V")
     transitions = table.transitions_per_day
     if transitions is None:
         transitions = math.nan if series else 24.0
@@ -250,9 +234,7 @@ def resolve_derating(draft: Draft, notebook: Notebook) -> Derating:
         current=take("derating.current", table.current, 0.8, "common practice"),
         voltage=take("derating.voltage", table.voltage, 0.8, "common practice"),
         junction_degc=take("derating.junction_degc", table.junction_degc, 110.0, "common practice"),
-        capacitance_end_of_life=take(
-            "derating.capacitance_end_of_life", table.capacitance_end_of_life, 0.8, PLAIN
-        ),
+        capacitance_end_of_life=take("derating.capacitance_end_of_life", table.capacitance_end_of_life, 0.8, PLAIN),
         esr_end_of_life=take("derating.esr_end_of_life", table.esr_end_of_life, 1.5, PLAIN),
         min_on_ns=take("derating.min_on_ns", table.min_on_ns, 50.0, "common practice"),
         spare_converters=take("derating.spare_converters", table.spare_converters, 0, "no redundancy asked"),

@@ -74,7 +74,5 @@ def write_starter(directory: str | Path) -> tuple[Path, ...]:
             with path.open("x", encoding="utf-8", newline="\n") as stream:
                 stream.write(text)
     except (OSError, ValueError) as error:
-        raise OutputError(
-            f"{folder}: cannot be written: {getattr(error, 'strerror', None) or error}"
-        ) from error
+        raise OutputError(f"{folder}: cannot be written: {getattr(error, 'strerror', None) or error}") from error
     return tuple(files)

@@ -51,31 +51,21 @@ class InputTable(Table):
     local_rise_k: float | None = Field(None, ge=0, le=60, description="local air above inlet; default 15")
     air_speed_m_s: float | None = Field(None, gt=0, le=10, description="air over the parts; default 1.5")
     isolation: bool | None = Field(None, description="default: required where high_v is above 60 V")
-    path: str | None = Field(
-        None, description="part of input_paths; default the cheapest that is rated for it"
-    )
+    path: str | None = Field(None, description="part of input_paths; default the cheapest that is rated for it")
 
 
 class BoardTable(Table):
     """``[board]``: area, stacks to choose from, and the copper of the buses."""
 
     area_cm2: float = Field(gt=1, le=6000, description="board area")
-    stacks: Names | None = Field(
-        None, min_length=1, description="stacks to choose from; default all of the catalogue"
-    )
+    stacks: Names | None = Field(None, min_length=1, description="stacks to choose from; default all of the catalogue")
     usable_copper_share: float | None = Field(
         None, gt=0, le=1, description="share of a layer pair left for power copper; default 0.7"
     )
-    bus_shared_squares: float | None = Field(
-        None, ge=0, le=100, description="one way, shared by the stages; default 3"
-    )
+    bus_shared_squares: float | None = Field(None, ge=0, le=100, description="one way, shared by the stages; default 3")
     bus_own_squares: float | None = Field(None, ge=0, le=100, description="one way, to each stage; default 3")
-    bus_area_cm2: float | None = Field(
-        None, gt=0, le=6000, description="plane of one bus; default 0.25 of area_cm2"
-    )
-    max_pairs_per_net: int | None = Field(
-        None, ge=1, le=10, description="layer pairs one net may take; default 4"
-    )
+    bus_area_cm2: float | None = Field(None, gt=0, le=6000, description="plane of one bus; default 0.25 of area_cm2")
+    max_pairs_per_net: int | None = Field(None, ge=1, le=10, description="layer pairs one net may take; default 4")
 
 
 class ControlTable(Table):
@@ -89,12 +79,8 @@ class ControlTable(Table):
     )
     grid_v: float | None = Field(None, ge=0.05, le=2, description="bus voltage grid; default 0.25")
     bus_min_v: float | None = Field(None, ge=3, le=100, description="default the lowest a converter can make")
-    bus_max_v: float | None = Field(
-        None, ge=3, le=100, description="default the highest a converter can make"
-    )
-    habitual_v: float | None = Field(
-        None, ge=3, le=100, description="bus voltage taken out of habit; default 12"
-    )
+    bus_max_v: float | None = Field(None, ge=3, le=100, description="default the highest a converter can make")
+    habitual_v: float | None = Field(None, ge=3, le=100, description="bus voltage taken out of habit; default 12")
     hysteresis_percent: float | None = Field(None, ge=0, le=50, description="of a power threshold; default 5")
     response_ms: float | None = Field(
         None, ge=0, le=10000, description="from a jump until the bus starts to rise; default 20"
@@ -108,16 +94,12 @@ class LimitsTable(Table):
     """``[limits]``: what a design must keep to."""
 
     bus_dip_percent: float | None = Field(None, gt=0, le=50, description="permitted dip of a bus; default 10")
-    bus_drop_budget_percent: float | None = Field(
-        None, gt=0, le=20, description="drop along a bus plane; default 3"
-    )
+    bus_drop_budget_percent: float | None = Field(None, gt=0, le=20, description="drop along a bus plane; default 3")
     copper_rise_k: float | None = Field(None, gt=0, le=60, description="copper above local air; default 20")
     stability_margin: float | None = Field(
         None, ge=1, le=20, description="factor on the least bus capacitance; default 1.5"
     )
-    area_cap_cm2: float | None = Field(
-        None, gt=0, le=6000, description="most area of the power parts; default none"
-    )
+    area_cap_cm2: float | None = Field(None, gt=0, le=6000, description="most area of the power parts; default none")
     cost_cap: float | None = Field(None, gt=0, description="most cost a board, in the currency; default none")
 
 
@@ -125,18 +107,12 @@ class DeratingTable(Table):
     """``[derating]``: engineering margins."""
 
     current: float | None = Field(None, gt=0, le=1, description="share of rated current used; default 0.8")
-    voltage: float | None = Field(
-        None, gt=0, le=1, description="share of rated capacitor voltage used; default 0.8"
-    )
-    junction_degc: float | None = Field(
-        None, ge=60, le=175, description="hottest part temperature; default 110"
-    )
+    voltage: float | None = Field(None, gt=0, le=1, description="share of rated capacitor voltage used; default 0.8")
+    junction_degc: float | None = Field(None, ge=60, le=175, description="hottest part temperature; default 110")
     capacitance_end_of_life: float | None = Field(None, gt=0, le=1, description="share left; default 0.8")
     esr_end_of_life: float | None = Field(None, ge=1, le=10, description="factor; default 1.5")
     min_on_ns: float | None = Field(None, ge=0, le=1000, description="least on-time designed for; default 50")
-    spare_converters: int | None = Field(
-        None, ge=0, le=4, description="bus converters beyond need; default 0"
-    )
+    spare_converters: int | None = Field(None, ge=0, le=4, description="bus converters beyond need; default 0")
 
 
 class ChoicesTable(Table):
@@ -146,9 +122,7 @@ class ChoicesTable(Table):
     forbidden_families: Names | None = Field(None, description="converter families not used; default none")
     parts: Names | None = Field(None, description="where a family has a part here, only those; default all")
     forbidden_parts: Names | None = Field(None, description="parts not used; default none")
-    preferred_parts: Names | None = Field(
-        None, description="parts that cost no new part number; default none"
-    )
+    preferred_parts: Names | None = Field(None, description="parts that cost no new part number; default none")
     pin: dict[str, Any] | None = Field(
         None, description='choice name to value or list of values, e.g. "core.stage" = "..."; default none'
     )
@@ -167,9 +141,7 @@ class EconomicsTable(Table):
     energy_price_per_kwh: float | None = Field(None, ge=0, le=10, description="default 0.15")
     carbon_kg_per_kwh: float | None = Field(None, ge=0, le=3, description="default 0.4")
     cooling_overhead: float | None = Field(None, ge=1, le=4, description="factor on electricity; default 1.4")
-    upstream_efficiency: float | None = Field(
-        None, gt=0, le=1, description="of the supply before; default 0.95"
-    )
+    upstream_efficiency: float | None = Field(None, gt=0, le=1, description="of the supply before; default 0.95")
     life_years: float | None = Field(None, gt=0, le=50, description="default 7")
     currency: str | None = Field(None, min_length=1, max_length=12, description="default EUR")
 
@@ -177,9 +149,7 @@ class EconomicsTable(Table):
 class SearchTable(Table):
     """``[search]``: how long to search."""
 
-    evaluations: int | None = Field(
-        None, ge=10, le=100_000_000, description="designs evaluated; default 40000"
-    )
+    evaluations: int | None = Field(None, ge=10, le=100_000_000, description="designs evaluated; default 40000")
     population: int | None = Field(None, ge=4, le=2000, description="bus genomes kept; default 80")
     seed: int | None = Field(None, ge=0, le=2**32 - 1, description="of the random numbers; default 1")
     stagnation_generations: int | None = Field(
@@ -192,9 +162,7 @@ class Study(Table):
 
     name: str | None = Field(None, min_length=1, description="short name; default the name of the file")
     title: str | None = Field(None, min_length=1, description="one line for the report; default the name")
-    catalogue: str | None = Field(
-        None, description="folder of your own parts, which override or add; default none"
-    )
+    catalogue: str | None = Field(None, description="folder of your own parts, which override or add; default none")
     input: InputTable
     board: BoardTable
     rails: str | Annotated[tuple[RailRow, ...], Field(strict=False)] = Field(

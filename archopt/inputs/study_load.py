@@ -19,52 +19,36 @@ class Row(BaseModel):
 class RailRow(Row):
     """``[[rails]]`` or one row of the rails CSV, where lists are separated by ``;``."""
 
-    name: str = Field(
-        pattern=r"^[A-Za-z0-9][A-Za-z0-9_+-]*$", description="rail's name, without dots or blanks"
-    )
+    name: str = Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_+-]*$", description="rail's name, without dots or blanks")
     voltage_v: float = Field(ge=0.3, le=60, description="voltage at the load")
     max_current_a: float = Field(gt=0, le=1500, description="most the load draws")
     typical_current_a: float | None = Field(None, ge=0, le=1500, description="default 50 % of max_current_a")
     tolerance_percent: float | None = Field(None, gt=0, le=20, description="5 means +-5 %; default 5")
-    step_a: float | None = Field(
-        None, ge=0, le=1500, description="largest load step; default 50 % of max_current_a"
-    )
+    step_a: float | None = Field(None, ge=0, le=1500, description="largest load step; default 50 % of max_current_a")
     slew_a_per_us: float | None = Field(
         None, gt=0, le=10000, description="of the load step; default 100 core rails, 10 below 2 V, 1 others"
     )
     set_point_percent: float | None = Field(None, ge=0, le=10, description="set-point error; default 1")
-    ripple_percent: float | None = Field(
-        None, ge=0, le=10, description="output ripple, either side; default 0.5"
-    )
+    ripple_percent: float | None = Field(None, ge=0, le=10, description="output ripple, either side; default 0.5")
     capacitors: Names | None = Field(
         None,
         min_length=1,
         description="capacitors of its bank; default ceramic and polymer of enough voltage",
     )
     remote_sense: bool | None = Field(None, description="sensed at the load; default core rails only")
-    squares: float | None = Field(
-        None, gt=0, le=100, description="one way, stage to load; default core 1, others 3"
-    )
-    copper_area_cm2: float | None = Field(
-        None, gt=0, le=3000, description="region of its pour; default from width"
-    )
+    squares: float | None = Field(None, gt=0, le=100, description="one way, stage to load; default core 1, others 3")
+    copper_area_cm2: float | None = Field(None, gt=0, le=3000, description="region of its pour; default from width")
     copper_width_mm: float | None = Field(
         None, gt=0, le=600, description="narrowest width of its pour; default 1.5 mm an ampere, 5 at least"
     )
-    copper_length_mm: float | None = Field(
-        None, gt=0, le=1000, description="stage to load; default from squares"
-    )
+    copper_length_mm: float | None = Field(None, gt=0, le=1000, description="stage to load; default from squares")
     drop_budget_percent: float | None = Field(
         None, gt=0, le=20, description="drop from stage to load; default 2 sensed, else 0.3 of the tolerance"
     )
-    step_group: str | None = Field(
-        None, min_length=1, description="rails of one group step together; default alone"
-    )
+    step_group: str | None = Field(None, min_length=1, description="rails of one group step together; default alone")
     parents: Names | None = Field(None, description="rails it may be fed from; default none")
     tap_of: str | None = Field(None, min_length=1, description="rail of equal voltage it taps; default none")
-    tap_mohm: float | None = Field(
-        None, ge=0, le=1000, description="ferrite or load switch of the tap; default 10"
-    )
+    tap_mohm: float | None = Field(None, ge=0, le=1000, description="ferrite or load switch of the tap; default 10")
     linear_only: bool | None = Field(None, description="only linear regulators may feed it; default false")
     core: bool | None = Field(None, description="default: below 1.2 V and above 20 A")
 
@@ -72,9 +56,7 @@ class RailRow(Row):
     @classmethod
     def _not_reserved(cls, name: str) -> str:
         if name.lower() in RESERVED_NAMES:
-            raise ValueError(
-                f"'{name}' is a name of the board itself ({', '.join(RESERVED_NAMES)}); take another"
-            )
+            raise ValueError(f"'{name}' is a name of the board itself ({', '.join(RESERVED_NAMES)}); take another")
         return name
 
 
@@ -109,9 +91,7 @@ class LoadTable(Row):
         None,
         description="what the hours add up to: a year, or a sample scaled to hours_per_year; default year",
     )
-    hours_per_year: float | None = Field(
-        None, gt=0, le=8784, description="hours the board is on; default 8760"
-    )
+    hours_per_year: float | None = Field(None, gt=0, le=8784, description="hours the board is on; default 8760")
     coincidence: float | None = Field(
         None,
         gt=0,

@@ -174,7 +174,15 @@ def test_incumbent_is_filled(desk: Desk, study_text: str) -> None:
     }  # fmt: skip
     assert {name: study.incumbent[name] for name in expected} == expected
     assert "incumbent.core.phases" in {item.place for item in study.assumed}
-    assert len(study.incumbent) == 2 * 7 + 2 * 10 + 4
+    assert len(study.incumbent) == 2 * 7 + 10 + 1 + 4
+
+
+def test_incumbent_without_a_bus(desk: Desk, study_text: str) -> None:
+    study = desk.load(study_text + "[incumbent]\n'core.stage' = 'stage_40'\n'io.stage' = 'stage_40'\n").study
+    assert study.incumbent is not None
+    assert study.incumbent["core.feed"] == "input"
+    assert study.incumbent["board.bias"] == "none"  # the only bias supply stands neither input nor bus
+    assert [name for name in study.incumbent if name.startswith("bus_")] == ["bus_a.converter", "bus_b.converter"]
 
 
 def test_units_and_nearest_names() -> None:
