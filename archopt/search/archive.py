@@ -18,6 +18,12 @@ RANKING_DIGITS = 12
 # Correctly rounded powers of ten: numpy's vectorised power may differ in the last bit between processors.
 _POWER_OF_TEN: FloatArray = np.array([float(f"1e{exponent}") for exponent in range(301)])
 
+# New designs that may wait before the archive is sorted anew.
+_MOST_UNSETTLED = 1000
+
+# Boxes grow by a tenth a notch, a thousandfold in all, before the droop step doubles.
+_NOTCH, _NOTCHES = 1.1, 72
+
 ENERGY, COST, DROOP = 0, 1, 2
 
 
@@ -71,22 +77,31 @@ class Archive:
     def __init__(self, n_columns: int, n_objectives: int = 3) -> None:
         if n_columns < 1 or n_objectives < 2:
             raise ValueError("an archive needs a column and two objectives at least")
-        self._rows: IntArray = np.zeros((0, n_columns), dtype=np.int64)
+        # Settled designs: objectives in order, and where in the store each one's row is. The newest designs
+        # wait beside them until somebody looks, so that adding a batch does not move the whole archive.
+        self._store: IntArray = np.zeros((0, n_columns), dtype=np.int64)
+        self._slot: IntArray = np.zeros(0, dtype=np.int64)
         self._objectives: FloatArray = np.zeros((0, n_objectives), dtype=np.float64)
+        self._by_objective: FloatArray = np.zeros((n_objectives, 0), dtype=np.float64)
+        self._new_rows: IntArray = np.zeros((0, n_columns), dtype=np.int64)
+        self._new_objectives: FloatArray = np.zeros((0, n_objectives), dtype=np.float64)
         self._known: set[bytes] = set()
 
     def __len__(self) -> int:
-        return len(self._rows)
+        self._settle()
+        return len(self._slot)
 
     @property
     def rows(self) -> IntArray:
-        """Design rows, shape (designs, columns), sorted by objectives, read-only."""
-        return _read_only(self._rows)
+        """Design rows, shape (designs, columns), sorted by objectives; a copy."""
+        self._settle()
+        return self._store[self._slot]
 
     @property
     def objectives(self) -> FloatArray:
-        """Objectives, shape (designs, objectives), rounded to 12 significant digits, read-only."""
-        return _read_only(self._objectives)
+        """Objectives, shape (designs, objectives), rounded to 12 significant digits; a copy."""
+        self._settle()
+        return self._objectives.copy()
 
     def add(self, rows: NDArray[np.integer[Any]], objectives: FloatArray) -> int:
         """Add feasible designs; return how many of them are now held and were not before.
@@ -107,41 +122,72 @@ class Archive:
         candidates, values = candidates[order], values[order]
         keep = is_nondominated(values)  # sorted: of equal objectives the first row stays
         candidates, values = candidates[keep], values[keep]
-        fresh = tell_apart(candidates, self._known)
-        candidates, values = candidates[fresh], values[fresh]
-        if len(self):
-            against = is_nondominated(np.concatenate([self._objectives, values]), keep_weakly=True)
-            fresh = against[len(self) :]
-            candidates, values = candidates[fresh], values[fresh]
-        return self._merge(candidates, values) if len(candidates) else 0
+        keep = tell_apart(candidates, self._known)
+        keep[keep] = [
+            self._admits(row, point) for row, point in zip(candidates[keep], values[keep], strict=True)
+        ]
+        candidates, values = candidates[keep], values[keep]
+        return self._join(candidates, values) if len(candidates) else 0
+
+    def _admits(self, row: IntArray, point: FloatArray) -> bool:
+        """Whether no settled design is as good; of equal objectives the first row in order counts."""
+        end = int(np.searchsorted(self._by_objective[0], point[0], side="right"))
+        as_good = self._by_objective[1, :end] <= point[1]
+        for column in range(2, len(point)):
+            as_good &= self._by_objective[column, :end] <= point[column]
+        if not as_good.any():
+            return True
+        found = np.flatnonzero(as_good)
+        if len(found) > 1 or (self._objectives[found[0]] != point).any():
+            return False
+        return bool(tuple(row) < tuple(self._store[self._slot[found[0]]]))
+
+    def _join(self, candidates: IntArray, values: FloatArray) -> int:
+        """Put designs that no settled one equals or beats among the new ones; how many stay."""
+        fresh = np.repeat([False, True], [len(self._new_rows), len(candidates)])
+        rows = np.concatenate([self._new_rows, candidates])
+        objectives = np.concatenate([self._new_objectives, values])
+        order = _canonical_order(rows, objectives)
+        rows, objectives, fresh = rows[order], objectives[order], fresh[order]
+        keep = is_nondominated(objectives)
+        self._known.difference_update(row.tobytes() for row in rows[~keep])
+        self._known.update(row.tobytes() for row in rows[keep & fresh])
+        self._new_rows, self._new_objectives = rows[keep], objectives[keep]
+        if len(self._new_rows) > _MOST_UNSETTLED:
+            self._settle()
+        return int((keep & fresh).sum())
+
+    def _settle(self) -> None:
+        """Merge the new designs into the settled ones and let go of what they beat."""
+        if not len(self._new_rows):
+            return
+        slots = np.arange(len(self._store), len(self._store) + len(self._new_rows))
+        slot = np.concatenate([slots, self._slot])
+        objectives = np.concatenate([self._new_objectives, self._objectives])
+        # new ones stand first and the sort is stable: of equals the new one is kept, as _admits decided
+        order = np.lexsort(objectives.T[::-1])
+        slot, objectives = slot[order], objectives[order]
+        keep = is_nondominated(objectives)
+        self._store = np.concatenate([self._store, self._new_rows])
+        self._known.difference_update(row.tobytes() for row in self._store[slot[~keep]])
+        self._slot, self._objectives = slot[keep], objectives[keep]
+        self._by_objective = np.ascontiguousarray(self._objectives.T)
+        self._new_rows, self._new_objectives = self._new_rows[:0], self._new_objectives[:0]
+        if len(self._store) > 2 * len(self._slot) + _MOST_UNSETTLED:
+            self._store, self._slot = self._store[self._slot], np.arange(len(self._slot))
 
     def _checked(self, rows: NDArray[np.integer[Any]], objectives: FloatArray) -> tuple[IntArray, FloatArray]:
         given = np.asarray(rows)
         values = np.asarray(objectives, dtype=np.float64)
         if given.dtype.kind not in "iu":
             raise ValueError("design rows are whole numbers")
-        if given.ndim != 2 or given.shape[1] != self._rows.shape[1]:
-            raise ValueError(f"design rows have {self._rows.shape[1]} columns, got shape {given.shape}")
+        if given.ndim != 2 or given.shape[1] != self._store.shape[1]:
+            raise ValueError(f"design rows have {self._store.shape[1]} columns, got shape {given.shape}")
         if values.shape != (len(given), self._objectives.shape[1]):
             raise ValueError(f"objectives of shape {values.shape} do not fit {len(given)} rows")
         if not np.isfinite(values).all():
             raise ValueError("an objective is not finite; only feasible designs belong in the archive")
         return np.ascontiguousarray(given, dtype=np.int64), significant(values)
-
-    def _merge(self, candidates: IntArray, values: FloatArray) -> int:
-        """Join designs none of which the held ones dominate."""
-        new = np.repeat([False, True], [len(self), len(candidates)])
-        rows = np.concatenate([self._rows, candidates])
-        objectives = np.concatenate([self._objectives, values])
-        order = _canonical_order(rows, objectives)
-        rows, objectives, new = rows[order], objectives[order], new[order]
-        keep = is_nondominated(objectives)
-        for row in rows[~keep]:
-            self._known.discard(row.tobytes())
-        self._rows, self._objectives = rows[keep], objectives[keep]
-        added = new & keep
-        self._known.update(row.tobytes() for row in rows[added])
-        return int(added.sum())
 
     def thin(
         self,
@@ -183,7 +229,7 @@ class Archive:
             raise ValueError("thinning needs a limit of 3 or more and positive widths")
         if self._objectives.shape[1] != 3:
             raise ValueError("thinning is declared for energy, cost and droop")
-        values = self._objectives
+        values = self.objectives
         if not len(values):
             empty = np.zeros(0, dtype=np.int64)
             return Thinning(empty, energy_resolution, cost_resolution, droop_step)
@@ -193,21 +239,27 @@ class Archive:
         logs -= logs.min(axis=0)
         held = _held_until(values, droop_step)
         extremes = _extremes(values)
-        growth, step = 1.0, droop_step
-        while True:
-            widths = np.log1p(np.array([energy_resolution, cost_resolution]) * growth)
-            kept = _one_a_box(values, logs / widths, step, held, extremes)
-            if len(kept) <= limit:
-                return Thinning(kept, energy_resolution * growth, cost_resolution * growth, step)
-            if growth < 1000.0:
-                growth *= 1.1
-            else:
-                step *= 2.0
-                growth *= 2.0
+
+        def kept(notch: int, step: float) -> IntArray:
+            widths = np.log1p(np.array([energy_resolution, cost_resolution]) * _NOTCH**notch)
+            return _one_a_box(values, logs / widths, step, held, extremes)
+
+        step, last = droop_step, _NOTCHES
+        while len(kept(last, step)) > limit:
+            step, last = 2.0 * step, last + 8
+        # the finest notch that fits: try it, then gallop, then halve the gap
+        failed, fits = -1, 0
+        while fits < last and len(kept(fits, step)) > limit:
+            failed, fits = fits, min(2 * fits + 1, last)
+        while fits - failed > 1:
+            middle = (failed + fits) // 2
+            failed, fits = (failed, middle) if len(kept(middle, step)) <= limit else (middle, fits)
+        growth = _NOTCH**fits
+        return Thinning(kept(fits, step), energy_resolution * growth, cost_resolution * growth, step)
 
     def state(self) -> dict[str, NDArray[Any]]:
         """Everything the archive holds, as plain arrays that :meth:`from_state` takes back."""
-        return {"rows": self._rows.copy(), "objectives": self._objectives.copy()}
+        return {"rows": self.rows, "objectives": self.objectives}
 
     @classmethod
     def from_state(cls, state: Mapping[str, NDArray[Any]]) -> Archive:
@@ -222,15 +274,9 @@ class Archive:
             raise ValueError("the state of an archive holds two matrices")
         archive = cls(rows.shape[1], objectives.shape[1])
         archive.add(rows, objectives)
-        if not (np.array_equal(archive._rows, rows) and np.array_equal(archive._objectives, objectives)):
+        if not (np.array_equal(archive.rows, rows) and np.array_equal(archive.objectives, objectives)):
             raise ValueError("the state given is not that of an archive")
         return archive
-
-
-def _read_only(values: NDArray[Any]) -> NDArray[Any]:
-    view = values.view()
-    view.flags.writeable = False
-    return view
 
 
 def _canonical_order(rows: IntArray, objectives: FloatArray) -> IntArray:
