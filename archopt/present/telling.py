@@ -10,6 +10,9 @@ LOSS_CLOSE = 0.02
 COST_CLOSE = 0.05
 """The catalogue's own spread: designs closer than both are one design in a printed table."""
 
+SPREAD_PLACES = 4
+"""Places of a printed table kept for the spread, however many topologies have a best design."""
+
 ROLE_ORDER = ("least loss", "least cost", "knee", "most margin", "least lifetime cost")
 
 
@@ -108,14 +111,21 @@ def telling(loss: Sequence[float], cost: Sequence[float], roles: Sequence[Sequen
     )
     chosen: list[int] = []
     merged_roles: dict[int, list[tuple[str, int]]] = {}
+    waiting: list[int] = []
     for position in marked:
         near = next((other for other in chosen if close(loss, cost, position, other)), None)
+        main = any(role in ROLE_ORDER for role in roles[position])
         if near is not None:
             merged_roles.setdefault(near, []).extend((role, position) for role in roles[position])
-        elif len(chosen) < at_most:
+        elif len(chosen) < (at_most if main else at_most - SPREAD_PLACES):
             chosen.append(position)
+        else:
+            waiting.append(position)
     front = energy_cost_front(loss, cost)
     chosen += even_spread(loss, cost, chosen, front, at_most - len(chosen))
+    for position in waiting:
+        if len(chosen) < at_most and not any(close(loss, cost, position, other) for other in chosen):
+            chosen.append(position)
     order = tuple(sorted(chosen, key=lambda position: (loss[position], position)))
     on_front = set(front)
     merged = sum(

@@ -69,6 +69,24 @@ def test_more_marks_than_places_keeps_the_extremes() -> None:
     assert chosen.index == (7, 13, 19)
 
 
+def test_topologies_leave_room_for_the_spread() -> None:
+    loss = [10.0 * 1.1**k for k in range(30)]
+    cost = [1000.0 / 1.1**k for k in range(30)]
+    roles = [[f"best of topology {k}"] if k < 20 else [] for k in range(30)]
+    roles[0], roles[1] = ["least loss"], ["knee"]
+    chosen = telling(loss, cost, roles)
+    assert len(chosen.index) == 12
+    assert sum(1 for k in chosen.index if k < 8) >= 8
+    assert max(chosen.index) == 29
+
+
+def test_topologies_take_the_places_the_spread_leaves() -> None:
+    loss = [10.0, 11.0, 12.0, 13.0, 14.0, 15.0, 16.0]
+    cost = [10.0, 20.0, 30.0, 40.0, 50.0, 60.0, 70.0]
+    roles = [["least loss"], *[[f"best of topology {k}"] for k in range(6)]]
+    assert telling(loss, cost, roles, at_most=7).index == (0, 1, 2, 3, 4, 5, 6)
+
+
 def test_each_cap_takes_the_least_lifetime_cost_that_meets_it() -> None:
     steps = margin_steps([98.0, 84.0, 60.0], [100.0, 110.0, 130.0], caps=(100, 90, 70, 50))
     assert [(step.cap_percent, step.index) for step in steps] == [(100, 0), (90, 1), (70, 2), (50, None)]
