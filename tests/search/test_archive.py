@@ -20,9 +20,7 @@ def plainly_nondominated(objectives: np.ndarray) -> np.ndarray:
     return ~(no_worse & better).any(axis=1)
 
 
-def plain_archive(
-    rows: np.ndarray, objectives: np.ndarray
-) -> list[tuple[tuple[float, ...], tuple[int, ...]]]:
+def plain_archive(rows: np.ndarray, objectives: np.ndarray) -> list[tuple[tuple[float, ...], tuple[int, ...]]]:
     """What an archive must hold, in its order: of equal objectives the lexicographically first row."""
     keep = plainly_nondominated(objectives)
     best: dict[tuple[float, ...], tuple[int, ...]] = {}
@@ -90,9 +88,7 @@ def test_a_change_to_what_was_read_does_not_reach_the_archive() -> None:
 def test_large_batches_unread_match_one_batch() -> None:
     """More than may wait unsettled, with many equal objectives and rows let go along the way."""
     rows, objectives = front(30_000, 9, droops=4)
-    objectives = np.stack(
-        [np.round(objectives[:, 0]), np.round(objectives[:, 1], 1), objectives[:, 2]], axis=1
-    )
+    objectives = np.stack([np.round(objectives[:, 0]), np.round(objectives[:, 1], 1), objectives[:, 2]], axis=1)
     rows = np.random.default_rng(1).permutation(rows)
     worse = objectives * 1.02
     whole, parts = Archive(2), Archive(2)
@@ -125,9 +121,23 @@ def test_a_row_is_held_once_and_counts_once() -> None:
     assert len(archive) == 2
 
 
-def test_a_dominated_row_may_come_back_only_as_dominated() -> None:
+def test_rows_follow_their_objectives_while_whole_fronts_are_replaced() -> None:
+    rows, objectives = front(6000, 5)
+    archive = Archive(2)
+    for generation in range(6):
+        archive.add(rows + 10_000 * generation, objectives * 0.9**generation)
+        alone = Archive(2)
+        alone.add(rows + 10_000 * generation, objectives * 0.9**generation)
+        assert len(alone) > 1000
+        assert held(archive) == held(alone)
+
+
+@pytest.mark.parametrize("read_between", [False, True])
+def test_a_dominated_row_may_come_back_only_as_dominated(read_between: bool) -> None:
     archive = Archive(1)
     archive.add(np.array([[1]]), np.array([[2.0, 2.0, 2.0]]))
+    if read_between:
+        assert len(archive) == 1
     archive.add(np.array([[2]]), np.array([[1.0, 1.0, 1.0]]))
     assert archive.rows.tolist() == [[2]]
     assert archive.add(np.array([[1]]), np.array([[2.0, 2.0, 2.0]])) == 0
