@@ -85,6 +85,14 @@ def test_ramped_form_is_exact() -> None:
         assert transient.rail_droop_v(*circuit) == pytest.approx(expected_v, rel=1e-3), circuit
 
 
+def test_crest_while_the_load_still_ramps() -> None:
+    # 30 A are missing after the dead time; the current gains on the ramp and the deviation turns at 15 A
+    circuit = Circuit(58.0, 2e7, 1e7, 3e-6, 1e-3, 1.5e-3, 1e7)
+    crest_v = 1.5e-3 * 15.0 + (45e-6 + (30.0**2 - 15.0**2) / (2 * 1e7)) / 1e-3
+    assert transient.rail_droop_v(*circuit) == pytest.approx(crest_v, rel=1e-9)
+    assert integrated_droop_v(circuit, circuit.load_slew_a_per_s) == pytest.approx(crest_v, rel=1e-3)
+
+
 def test_release_is_the_same_deviation_at_the_falling_slew() -> None:
     for circuit in random_circuits(13)[:15]:
         falling = 2 * 1.0 / 200e-9  # two phases, 1 V, 200 nH
@@ -101,9 +109,7 @@ def test_waiting_for_added_phases_is_never_optimistic() -> None:
         deficit_a = circuit.step_a * generator.uniform(0.05, 0.9)
         wakeup_s = 10.0 ** generator.uniform(-6.0, -4.5)
         bound_v = transient.rail_droop_v(*circuit, deficit_a, wakeup_s)
-        waited_v = integrated_droop_v(
-            circuit, circuit.load_slew_a_per_s, circuit.step_a - deficit_a, wakeup_s
-        )
+        waited_v = integrated_droop_v(circuit, circuit.load_slew_a_per_s, circuit.step_a - deficit_a, wakeup_s)
         ratios.append(float(bound_v) / waited_v)
     assert min(ratios) > 0.999
     assert np.median(ratios) < 1.01
