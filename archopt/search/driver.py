@@ -1,0 +1,206 @@
+"""The search: our own ask and tell loop over bus genomes, completion, evaluation and the archive."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from archopt.model.evaluator import Evaluation, Evaluator
+from archopt.model.limits import LIMITS
+from archopt.physics.arrays import FloatArray, IntArray
+from archopt.search.completion import Completion
+from archopt.search.engine import Engine
+from archopt.search.genome import Genome
+from archopt.search.indicator import Stagnation
+from archopt.search.rail_tables import CAPS
+from archopt.search.record import BestOfKind, Record
+from archopt.search.seeds import heuristic_genomes
+
+LEAST_POPULATION = 8
+
+
+@dataclass(frozen=True)
+class Progress:
+    """Where a search stands; ``seconds_left`` is an estimate, ``budget`` the evaluations allowed."""
+
+    generation: int
+    evaluations: int
+    feasible: int
+    archive: int
+    hypervolume: float
+    seconds: float
+    seconds_left: float
+    budget: int
+
+
+@dataclass(frozen=True)
+class SearchResult:
+    """What a search found.
+
+    rows, objectives: the archive (designs, columns) and (designs, 3); fixed_rows, fixed_objectives: the front
+    of designs no bus of which moves. evaluations: completed designs evaluated. least_row: the least violated
+    design, with least_violation. excess: limit -> least normalised excess seen in any design, for the limits
+    no design met. kinds: topology -> its best design. ended: why the search stopped.
+    """
+
+    rows: IntArray
+    objectives: FloatArray
+    fixed_rows: IntArray
+    fixed_objectives: FloatArray
+    evaluations: int
+    feasible: int
+    generations: int
+    seconds: float
+    ended: str
+    least_row: IntArray | None
+    least_violation: float
+    excess: dict[str, float]
+    kinds: dict[str, BestOfKind]
+    history: FloatArray
+
+
+class Search:
+    """One search in progress; :func:`search` runs it to its end."""
+
+    def __init__(
+        self, evaluator: Evaluator, *, population: int, seed: int, seeds_rows: IntArray | None = None
+    ) -> None:
+        self.evaluator = evaluator
+        self.population = max(population, LEAST_POPULATION)
+        self.genome = Genome(evaluator.problem)
+        self.completion = Completion(evaluator, self.genome)
+        self.record = Record.of(evaluator.problem, self.genome.scale)
+        self.rng = np.random.default_rng([seed, 1])
+        self.given = np.zeros((0, evaluator.problem.layout.width), dtype=np.int64)
+        seeds = heuristic_genomes(self.genome, self.population // 2)
+        if seeds_rows is not None and len(seeds_rows):
+            self.given = evaluator.decide(seeds_rows)
+            one = np.ones(len(self.given))
+            own = self.genome.encode(self.given, one, 0.02 * one, np.full(len(one), len(CAPS) - 1))
+            seeds = np.concatenate([own, seeds])[: self.population]
+        self.engine = Engine(self.genome.genes, self.population, seed, seeds=seeds)
+        self.generation = 0
+
+    def evaluate(self, rows: IntArray) -> Evaluation:
+        """Evaluate decided rows in batches of one fixed shape and keep what they show."""
+        size = self.population
+        parts = []
+        for start in range(0, len(rows), size):
+            real = rows[start : start + size]
+            padded = real[np.minimum(np.arange(size), len(real) - 1)]
+            found = self.evaluator.evaluate(padded)
+            self.record.add(found, len(real))
+            parts.append(first_of(found, len(real)))
+        return joined(parts)
+
+    def step(self) -> None:
+        """Advance by one generation."""
+        if self.generation == 0 and len(self.given):
+            self.evaluate(self.given)
+        genomes = self.engine.ask()
+        rows = self.completion.complete(self.genome.decode(genomes))
+        found = self.evaluate(rows)
+        forget = self.rng.random(len(genomes)) < 0.5
+        learned = self.genome.learn(genomes, rows, forget)
+        self.engine.tell(found.objectives, found.violation, learned)
+        self.generation += 1
+
+
+def first_of(found: Evaluation, count: int) -> Evaluation:
+    """Return the first designs of an evaluation."""
+    return Evaluation(
+        found.rows[:count], found.objectives[:count], found.droop_exact[:count], found.slack[:count],
+        found.violation[:count],
+    )  # fmt: skip
+
+
+def joined(parts: list[Evaluation]) -> Evaluation:
+    """Return several evaluations as one."""
+    names = ("rows", "objectives", "droop_exact", "slack", "violation")
+    return Evaluation(*(np.concatenate([getattr(part, name) for part in parts]) for name in names))
+
+
+def search(
+    evaluator: Evaluator,
+    *,
+    evaluations: int,
+    population: int,
+    seed: int,
+    stagnation_generations: int,
+    seeds_rows: IntArray | None = None,
+    seconds: float | None = None,
+    progress: Callable[[Progress], None] | None = None,
+    stop: Callable[[], bool] | None = None,
+) -> SearchResult:
+    """Search a problem until the budget is spent, the archive stops growing, or somebody stops it.
+
+    The same problem, budget and seed give the same archive; ``seconds`` and ``stop`` are outside that promise.
+    An interrupt from the keyboard ends the search and keeps what it found.
+    """
+    began = time.monotonic()
+    run = Search(evaluator, population=population, seed=seed, seeds_rows=seeds_rows)
+    stagnation = Stagnation(stagnation_generations)
+    ended = "budget spent"
+    try:
+        while run.record.evaluations < evaluations:
+            run.step()
+            still = stagnation.update(run.record.archive.objectives)
+            spent = time.monotonic() - began
+            if progress is not None:
+                progress(progress_of(run, stagnation, spent, evaluations, seconds))
+            if still:
+                ended = "no more growth"
+                break
+            if seconds is not None and spent >= seconds:
+                ended = "time spent"
+                break
+            if stop is not None and stop():
+                ended = "stopped"
+                break
+    except KeyboardInterrupt:
+        ended = "interrupted"
+    return result_of(run, stagnation, time.monotonic() - began, ended)
+
+
+def progress_of(
+    run: Search, stagnation: Stagnation, spent: float, budget: int, seconds: float | None
+) -> Progress:
+    """Return where the search stands."""
+    record = run.record
+    rate = record.evaluations / max(spent, 1e-9)
+    left = max(budget - record.evaluations, 0) / max(rate, 1e-9)
+    if seconds is not None:
+        left = min(left, max(seconds - spent, 0.0))
+    volume = float(stagnation.history[-1]) if len(stagnation.history) else 0.0
+    return Progress(
+        run.generation, record.evaluations, record.feasible, len(record.archive), volume, spent, left, budget
+    )
+
+
+def result_of(run: Search, stagnation: Stagnation, spent: float, ended: str) -> SearchResult:
+    """Return what the search found."""
+    record = run.record
+    excess = {
+        limit.name: float(least)
+        for limit, least in zip(LIMITS, record.least_excess, strict=True)
+        if np.isfinite(least) and least > 0.0
+    }
+    return SearchResult(
+        rows=record.archive.rows.copy(),
+        objectives=record.archive.objectives.copy(),
+        fixed_rows=record.fixed.rows.copy(),
+        fixed_objectives=record.fixed.objectives.copy(),
+        evaluations=record.evaluations,
+        feasible=record.feasible,
+        generations=run.generation,
+        seconds=spent,
+        ended=ended,
+        least_row=record.least_row,
+        least_violation=record.least_sum,
+        excess=excess,
+        kinds=dict(sorted(record.kinds.items())),
+        history=stagnation.history,
+    )

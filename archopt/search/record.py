@@ -1,0 +1,123 @@
+"""What a search has found: the archive, and beside it what a report needs that the front does not hold."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from archopt.model.evaluator import Evaluation
+from archopt.model.limits import LIMITS
+from archopt.model.problem import Problem
+from archopt.model.space import BUS_A, CONTROL_NAMES, INPUT, PARENT, Designs
+from archopt.physics.arrays import FloatArray, IntArray
+from archopt.search.archive import Archive
+
+FEED_PATTERNS = ("direct", "one bus", "one bus and direct", "two buses", "two buses and direct")
+
+
+@dataclass(frozen=True)
+class BestOfKind:
+    """The best design seen of one topology: feasible if any was, else the nearest to feasible."""
+
+    row: IntArray
+    objectives: FloatArray
+    violation: float
+
+
+@dataclass
+class Record:
+    """Everything kept of the designs evaluated so far.
+
+    least_violation (limits,): smallest normalised excess of each limit in any design whose other limits hold
+    or not; 0 where some design met it. kinds: topology -> best design by lifetime cost.
+    """
+
+    problem: Problem
+    price: float
+    archive: Archive
+    fixed: Archive
+    evaluations: int = 0
+    feasible: int = 0
+    least_row: IntArray | None = None
+    least_sum: float = np.inf
+    least_objectives: FloatArray | None = None
+    least_excess: FloatArray = field(default_factory=lambda: np.full(len(LIMITS), np.inf))
+    kinds: dict[str, BestOfKind] = field(default_factory=dict)
+
+    @classmethod
+    def of(cls, problem: Problem, price: float) -> Record:
+        """Return an empty record; ``price`` is money a kWh a year for lifetime cost."""
+        width = problem.layout.width
+        return cls(problem, price, Archive(width), Archive(width))
+
+    def add(self, evaluation: Evaluation, real: int) -> int:
+        """Take in the first ``real`` designs of a batch; return how many entered the archive."""
+        rows, objectives = evaluation.rows[:real], evaluation.objectives[:real]
+        violation, slack = evaluation.violation[:real], evaluation.slack[:real]
+        self.evaluations += real
+        self.least_excess = np.minimum(self.least_excess, np.maximum(-slack, 0.0).min(axis=0))
+        ok = np.flatnonzero(violation <= 0.0)
+        self.feasible += len(ok)
+        worst = int(violation.argmin())
+        if violation[worst] < self.least_sum:
+            self.least_sum = float(violation[worst])
+            self.least_row, self.least_objectives = rows[worst].copy(), objectives[worst].copy()
+        self.note_kinds(rows, objectives, violation)
+        if not len(ok):
+            return 0
+        still = ok[is_fixed(self.problem, rows[ok])]
+        if len(still):
+            self.fixed.add(rows[still], objectives[still])
+        return self.archive.add(rows[ok], objectives[ok])
+
+    def note_kinds(self, rows: IntArray, objectives: FloatArray, violation: FloatArray) -> None:
+        """Keep the best of every topology in the batch."""
+        lifetime = objectives[:, 1] + self.price * objectives[:, 0]
+        score = np.where(violation <= 0.0, lifetime, 1e9 + np.minimum(violation, 1e9))
+        kinds = topology(self.problem, rows)
+        for kind in np.unique(kinds):
+            here = np.flatnonzero(kinds == kind)
+            best = here[score[here].argmin()]
+            name = topology_name(int(kind))
+            known = self.kinds.get(name)
+            if known is None or score[best] < self.score_of(known):
+                self.kinds[name] = BestOfKind(
+                    rows[best].copy(), objectives[best].copy(), float(violation[best])
+                )
+
+    def score_of(self, best: BestOfKind) -> float:
+        """Return what a best design is compared by: lifetime cost, or its violation where infeasible."""
+        if best.violation <= 0.0:
+            return float(best.objectives[1] + self.price * best.objectives[0])
+        return 1e9 + min(best.violation, 1e9)
+
+
+def topology(problem: Problem, rows: IntArray) -> IntArray:
+    """Return the topology of design rows as a number, (P,): feed pattern x the liveliest control."""
+    designs = Designs(problem.layout, rows)
+    feed = designs.rail("feed")
+    used = np.stack([(feed == BUS_A).any(axis=1), (feed == BUS_A + 1).any(axis=1)], axis=1)
+    direct = (feed == INPUT).any(axis=1)
+    buses = used.sum(axis=1)
+    pattern = np.where(buses == 0, 0, 2 * buses - 1 + direct)
+    control = np.where(used, designs.bus("control"), 0).max(axis=1)
+    return np.asarray(pattern * len(CONTROL_NAMES) + control)
+
+
+def topology_name(kind: int) -> str:
+    """Return a topology in words: ``one bus, follows load``."""
+    pattern, control = divmod(kind, len(CONTROL_NAMES))
+    name = FEED_PATTERNS[pattern]
+    return name if pattern == 0 else f"{name}, {('fixed', 'two levels', 'follows load')[control]}"
+
+
+def is_fixed(problem: Problem, rows: IntArray) -> IntArray:
+    """Return the positions of designs no bus of which moves."""
+    return np.flatnonzero(topology(problem, rows) % len(CONTROL_NAMES) == 0)
+
+
+def has_parents(problem: Problem, rows: IntArray) -> IntArray:
+    """Return the positions of designs with a rail fed from another rail."""
+    feed = Designs(problem.layout, rows).rail("feed")
+    return np.flatnonzero((feed >= PARENT).any(axis=1))
