@@ -34,13 +34,13 @@ def state_at(design: Data, load: str) -> Data | None:
 def year_kwh(design: Data) -> dict[tuple[str, str], float]:
     """Energy lost over the year by part and mechanism, kWh.
 
-    As the design states it (``year_kwh``, keys ``part: mechanism``), else hours of each state times its watts.
+    As the design states it (``year_kwh``: part, mechanism), else hours of each state times its watts.
     """
     energy: dict[tuple[str, str], float] = {}
     if design.get("year_kwh"):
-        for key, kwh in design["year_kwh"].items():
-            part, _, mechanism = str(key).partition(": ")
-            energy[part, mechanism] = real(kwh, 0.0)
+        for part, mechanisms in design["year_kwh"].items():
+            for mechanism, kwh in mechanisms.items():
+                energy[str(part), str(mechanism)] = real(kwh, 0.0)
         return energy
     for state in design.get("states") or []:
         hours = real(state.get("hours"), 0.0)
