@@ -14,7 +14,6 @@ from pathlib import Path
 from typing import Any
 
 from archopt.errors import OutputError
-from archopt.present.losses import lean
 from archopt.present.plain import plain, plain_dict, significant
 from archopt.present.record import Data, FrontRecord
 
@@ -124,7 +123,7 @@ def file_contents(record: FrontRecord) -> dict[str, bytes]:
         FRONT: csv_bytes(record.front),
         ARCHIVE: csv_bytes(archive),
         PROBLEM: _json_bytes(record.problem),
-        DESIGNS: _json_lines(lean(design) for design in record.designs),
+        DESIGNS: _json_lines(record.designs),
         EXTRAS: _json_bytes(extras),
     }
     digests = {name: hashlib.sha256(content).hexdigest() for name, content in contents.items()}

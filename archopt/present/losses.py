@@ -51,23 +51,6 @@ def year_kwh(design: Data) -> dict[tuple[str, str], float]:
     return energy
 
 
-def lean(design: Data) -> Data:
-    """A design without what can be told from the rest: watts by mechanism stay in the printed loads alone.
-
-    A board of sixteen rails has a hundred states of two hundred mechanisms; four hundred such designs are
-    hundreds of megabytes. The year's sum of each mechanism is kept (``year_kwh``), and of every state its
-    total. A design that does not state the year's sums is returned as it is.
-    """
-    if not design.get("year_kwh"):
-        return design
-    shown = [state_at(design, load) for load in LOADS]
-    states = [
-        state if any(state is other for other in shown) else {k: v for k, v in state.items() if k != "losses"}
-        for state in design.get("states") or []
-    ]
-    return {**design, "states": states}
-
-
 def loss_table(design: Data) -> WordTable:
     """Losses by part and mechanism: kWh a year, and watts at each load; parts in order of their energy.
 
