@@ -243,13 +243,23 @@ class Reference:
                 found[bus.name].append(max(groups.values()))
         return found
 
+    def standing_w(self, bus: Bus, band: int) -> float:
+        """Return what is on the bus before the last step of the largest jump, or in the worst mix if more."""
+        found = []
+        for kind in (MIX, JUMP):
+            here = [s for s in range(len(self.states.name)) if self.states.kind[s] == kind and self.states.band[s] == band]
+            s = here[0]
+            amps = self.currents(s)
+            found.append(sum(self.stage_in(s, k, self.undropped_v(s, self.nets[k]), amps[k])[0] for k in bus.rails))
+        return max(found[0], found[1] - self.steps_w[bus.name][band])
+
     def dip_v(self, bus: Bus, band: int) -> float:
         row = bus.row
         volts = row.ratio * self.study.supply.low_v if bus.follows_input else bus.volts[band]
         return float(
             bus_dip_v(
                 self.steps_w[bus.name][band], volts, row.crossover_khz * 1e3 * TWO_PI, row.delay_us * 1e-6,
-                bus.held_f, bus.esr_ohm,
+                bus.held_f, bus.esr_ohm, self.standing_w(bus, band),
             )
         )  # fmt: skip
 

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from archopt.model.evaluator import Detail, Evaluator
-from archopt.model.explain import state_losses
+from archopt.model.explain import all_losses
 from equivalence.shipped import STUDIES, decided, evaluator_of
 
 BALANCE = 1e-9
@@ -33,12 +33,20 @@ def test_input_is_useful_power_and_listed_losses(name: str) -> None:
     evaluator = evaluator_of(name)
     detail = evaluator.detail(decided(name, COUNT, SEED)[::3], exact=True)
     input_w = detail.solution.input_w
-    for p in range(len(input_w)):
-        for s in range(input_w.shape[1]):
-            # unsensed pours and taps are losses of the loads' own power: both sides carry them
-            listed = sum(sum(parts.values()) for parts in state_losses(evaluator.problem, detail, p, s).values())
-            out = useful_w(evaluator, detail, p, s)
-            assert abs(out + listed - input_w[p, s]) <= BALANCE * input_w[p, s], (p, evaluator.states.name[s])
+    for p, parts in enumerate(all_losses(evaluator.problem, detail)):
+        listed = sum(np.asarray(watts) for mechanisms in parts.values() for watts in mechanisms.values())
+        out = np.array([useful_w(evaluator, detail, p, s) for s in range(input_w.shape[1])])
+        assert (np.abs(out + listed - input_w[p]) <= BALANCE * input_w[p]).all(), p
+
+
+@pytest.mark.parametrize("name", STUDIES)
+def test_no_listed_loss_is_negative_or_empty(name: str) -> None:
+    evaluator = evaluator_of(name)
+    detail = evaluator.detail(decided(name, COUNT, SEED)[::3], exact=True)
+    for parts in all_losses(evaluator.problem, detail):
+        for part, mechanisms in parts.items():
+            for mechanism, watts in mechanisms.items():
+                assert (np.asarray(watts) >= -1e-9).all(), (part, mechanism)
 
 
 @pytest.mark.parametrize("name", STUDIES)
