@@ -136,6 +136,17 @@ def worst_step_w(problem: Problem, hardware: Hardware, ratio: FloatArray) -> Flo
     return out
 
 
+def standing_w(hardware: Hardware, mix_in_w: FloatArray, jump_in_w: FloatArray, step_w: FloatArray) -> FloatArray:
+    """Return the power on each bus before the step that dips it most, (P, 2, B) W.
+
+    A jump is made of steps; the last one finds all but itself on the bus. Stage inputs are (P, B, R).
+    """
+    on_bus = hardware.on_bus.astype(np.float64)
+    mix = np.einsum("pbr,pkr->pkb", mix_in_w, on_bus)
+    jump = np.einsum("pbr,pkr->pkb", jump_in_w, on_bus)
+    return np.maximum(mix, jump - step_w)
+
+
 def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: StageLoss, *, exact: bool) -> Solution:
     """Solve the board for a batch of designs.
 
@@ -203,6 +214,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
                 converters.delay_s[index][..., None],
                 hardware.bulk_f[..., None],
                 hardware.bulk_esr_ohm[..., None],
+                standing_w(hardware, stage_in[:, mix], stage_in[:, jump_index], step_w),
             )
             dip_v = np.where(has_converter[..., None], dip_v, 0.0)
         rail_a = stage_in / stage_v

@@ -296,6 +296,7 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
         problem.converters.delay_s[index],
         hardware.bulk_f[..., None, None],
         hardware.bulk_esr_ohm[..., None, None],
+        np.maximum(mix_w, jump_w - step_w),
     )
     legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip)
     total = energy + converter_energy(problem, states, hardware, energy)

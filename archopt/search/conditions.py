@@ -122,6 +122,7 @@ def dips(
             converters.delay_s[index],
             hardware.bulk_f[..., None],
             hardware.bulk_esr_ohm[..., None],
+            mix_w,
         )
     )
 
