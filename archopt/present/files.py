@@ -29,7 +29,7 @@ ADDED_LATER = ("report.html",)
 """Files other commands may add to a result; replacing the result may remove them."""
 
 EXTRA_FIELDS = (
-    "incumbent", "baselines", "losing", "leverage", "not_modelled", "cautions", "merged", "notes",
+    "incumbent", "baselines", "gains", "losing", "leverage", "not_modelled", "cautions", "merged", "notes",
 )  # fmt: skip
 
 

@@ -7,8 +7,8 @@ from collections.abc import Iterable
 from rich.console import RenderableType
 from rich.text import Text
 
-from archopt.present.amounts import NONE, fixed, mechanism_word, money, number, real, signed
-from archopt.present.explanation import binding_text
+from archopt.present.amounts import NONE, fixed, mechanism_word, money, number, place_word, real, signed, with_unit
+from archopt.present.explanation import binding_text, payback
 from archopt.present.overview import bus_text
 from archopt.present.record import Data, FrontRecord
 from archopt.present.tables import section, table
@@ -59,7 +59,7 @@ def baseline_body(record: FrontRecord) -> Iterable[RenderableType]:
     words = ["bus", "hardware of", "bus V", "meets limits", "remark"]
     headings = ["bus", "hardware of", "bus V", "kWh a year", "cost", "droop %", "meets limits", "remark"]
     yield table(headings, rows, left=words)
-    yield from gain_lines(record.baselines, record.designs)
+    yield from gain_lines(record.gains, record.currency)
 
 
 def volts_text(volts: object) -> str:
@@ -75,23 +75,48 @@ def volts_text(volts: object) -> str:
     return number(volts)
 
 
-def gain_lines(baselines: list[Data], designs: list[Data]) -> Iterable[Text]:
+def gain_lines(gains: list[Data], currency: str) -> Iterable[Text]:
     """What following the load gains against the best feasible fixed bus, never against a habit."""
-    knee = next((d for d in designs if "knee" in (d.get("roles") or [])), None)
-    fixed_rows = [
-        row for row in baselines
-        if row.get("of") == "knee" and row.get("feasible") and "best" in str(row.get("baseline"))
-        and "fixed" in str(row.get("baseline")) and row.get("energy_loss_kwh_per_year") is not None
-    ]  # fmt: skip
-    if knee is None or not fixed_rows:
-        return
-    best = min(real(row["energy_loss_kwh_per_year"]) for row in fixed_rows)
-    own = real(knee["objectives"]["energy_loss_kwh_per_year"])
-    gain = best - own
-    yield Text(
-        f"Against the best feasible fixed bus the knee {'saves' if gain >= 0 else 'loses'}"
-        f" {number(abs(gain), 3)} kWh a year ({number(100 * abs(gain) / best, 2)} % of the loss)."
-    )
+    for gain in gains:
+        said = fixed_bus_text(gain)
+        kwh = gain.get("gain_kwh_per_year")
+        if kwh is not None:
+            said.append(
+                f"following the load {'saves' if kwh >= 0 else 'loses'} {number(abs(kwh), 3)} kWh a year"
+                f" ({number(abs(real(gain.get('gain_percent'))), 2)} % of its loss,"
+                f" {money(abs(real(gain.get('gain_money_per_year'))), currency)})"
+            )
+            said.append(supervisor_text(gain, currency))
+        for key, word in (("all_unannounced", "unannounced"), ("announced", "announced")):
+            other = gain.get(f"gain_{key}_kwh_per_year")
+            if other is not None:
+                said.append(f"it would save {fixed(other, 2)} kWh were every jump {word}")
+        if any(said):
+            yield Text(f"{gain.get('of', 'design')}: {'; '.join(text for text in said if text)}.")
+
+
+def fixed_bus_text(gain: Data) -> list[str]:
+    """The best fixed voltage of each bus and the band that loses at most 1 % more; or that there is none."""
+    best, flat = gain.get("best_fixed_v"), gain.get("flat_band_v") or {}
+    if not best:
+        return [str(gain["note"])] if gain.get("note") else ["no fixed bus voltage meets every limit"]
+    texts = []
+    for bus, volts in best.items():
+        band = volts_text(flat.get(bus)) if flat.get(bus) else NONE
+        texts.append(
+            f"best fixed {place_word(bus)} {with_unit(volts, 'V')}"
+            + (f" ({band} V within 1 % of its loss)" if band != NONE else "")
+        )
+    return texts
+
+
+def supervisor_text(gain: Data, currency: str) -> str:
+    """What the supervisor costs and when it has paid for itself."""
+    cost, years = gain.get("supervisor_cost"), gain.get("supervisor_payback_years")
+    if not isinstance(cost, int | float) or cost <= 0:
+        return ""
+    back = "never pays back" if years is None else f"pays back {payback(years)}"
+    return f"setting the bus costs {money(cost, currency)} a board and {back}"
 
 
 def losing_body(losing: list[Data], currency: str) -> Iterable[RenderableType]:

@@ -32,6 +32,7 @@ class FrontRecord:
     run : versions, hashes, seed, counts, timings, processor, models and sources, why the search stopped
     incumbent : today's design, explained, with ``violated`` listing the limits it does not meet; or None
     baselines : the same hardware with its bus voltage held or released, one row each
+    gains : for each design of ``baselines`` what following the load gains against the best feasible fixed bus
     losing : the best of each topology that does not win, and why
     leverage : the catalogue numbers whose spread moves the knee most
     merged : designs of the archive left out of ``designs`` as too close to one of them
@@ -43,6 +44,7 @@ class FrontRecord:
     run: Data
     incumbent: Data | None = None
     baselines: list[Data] = field(default_factory=list)
+    gains: list[Data] = field(default_factory=list)
     losing: list[Data] = field(default_factory=list)
     leverage: list[Data] = field(default_factory=list)
     not_modelled: list[str] = field(default_factory=list)
@@ -218,6 +220,7 @@ def summary(record: FrontRecord) -> Data:
             "violated": incumbent.get("violated") or []
         },
         "baselines": record.baselines,
+        "gains": record.gains,
         "losing": [
             {**row, "best_design": named(row.get("best_design"))} for row in record.losing
         ],

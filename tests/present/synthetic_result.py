@@ -179,6 +179,12 @@ def record() -> FrontRecord:
              "cost_per_board": 78.0, "worst_droop_percent": 84.0, "volts": 10.5, "feasible": True,
              "note": ""},
         ],
+        gains=[
+            {"of": "knee", "best_fixed_v": {"bus_a": 10.5}, "flat_band_v": {"bus_a": [9.75, 11.0]},
+             "gain_kwh_per_year": 1.928, "gain_percent": 2.966, "gain_money_per_year": 0.42,
+             "supervisor_cost": 1.28, "supervisor_payback_years": 3.048,
+             "gain_all_unannounced_kwh_per_year": 1.1, "gain_announced_kwh_per_year": 2.5},
+        ],
         losing=[
             {"topology": "two buses", "best_design": loser, "lifetime_cost": 180.0, "behind_by": 14.5,
              "difference_by_mechanism": {"fixed_w": 9.0, "overlap_w": -4.0}, "limit": None},
