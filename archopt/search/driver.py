@@ -7,19 +7,27 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+from moocore import is_nondominated
 
 from archopt.model.evaluator import Evaluation, Evaluator
 from archopt.model.limits import LIMITS
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.completion import Completion
+from archopt.search.consolidate import dropped_plans, worth
 from archopt.search.engine import Engine
-from archopt.search.genome import Genome
+from archopt.search.genome import Genome, Plan
 from archopt.search.indicator import Stagnation
+from archopt.search.local import Neighbours
 from archopt.search.rail_tables import CAPS
 from archopt.search.record import BestOfKind, Record
 from archopt.search.seeds import heuristic_genomes
 
 LEAST_POPULATION = 8
+FORGET_SHARE = 0.5  # of genomes that keep only the approved parts they used
+CONSOLIDATE_EVERY = 4
+CONSOLIDATED = 4
+CONSOLIDATE_ROUNDS = 3
+LOCAL_BATCHES = 1
 
 
 @dataclass(frozen=True)
@@ -81,32 +89,101 @@ class Search:
             one = np.ones(len(self.given))
             own = self.genome.encode(self.given, one, 0.02 * one, np.full(len(one), len(CAPS) - 1))
             seeds = np.concatenate([own, seeds])[: self.population]
+        self.neighbours = Neighbours(evaluator.problem)
         self.engine = Engine(self.genome.genes, self.population, seed, seeds=seeds)
         self.generation = 0
+        self.local_batches = LOCAL_BATCHES
 
-    def evaluate(self, rows: IntArray) -> Evaluation:
+    def evaluate(self, rows: IntArray) -> tuple[Evaluation, int]:
         """Evaluate decided rows in batches of one fixed shape and keep what they show."""
         size = self.population
-        parts = []
+        parts, entered = [], 0
         for start in range(0, len(rows), size):
             real = rows[start : start + size]
             padded = real[np.minimum(np.arange(size), len(real) - 1)]
             found = self.evaluator.evaluate(padded)
-            self.record.add(found, len(real))
+            entered += self.record.add(found, len(real))
             parts.append(first_of(found, len(real)))
-        return joined(parts)
+        return joined(parts), entered
 
     def step(self) -> None:
-        """Advance by one generation."""
+        """Advance by one generation: completed genomes, consolidation of the promising, local search."""
         if self.generation == 0 and len(self.given):
             self.evaluate(self.given)
         genomes = self.engine.ask()
-        rows = self.completion.complete(self.genome.decode(genomes))
-        found = self.evaluate(rows)
-        forget = self.rng.random(len(genomes)) < 0.5
-        learned = self.genome.learn(genomes, rows, forget)
-        self.engine.tell(found.objectives, found.violation, learned)
+        plan = self.genome.decode(genomes)
+        rows = self.completion.complete(plan)
+        found, _ = self.evaluate(rows)
+        learned = self.genome.learn(genomes, rows, self.rng.random(len(genomes)) < FORGET_SHARE)
+        objectives, violation = found.objectives.copy(), found.violation.copy()
+        if self.generation % CONSOLIDATE_EVERY == CONSOLIDATE_EVERY - 1:
+            self.consolidate(rows, objectives, violation, learned, plan)
+        self.engine.tell(objectives, violation, learned)
+        for _ in range(self.local_batches):
+            self.climb()
         self.generation += 1
+
+    def climb(self) -> None:
+        """Evaluate neighbours of archived designs, the lonely and the new ones first."""
+        archive = self.record.archive
+        if not len(archive):
+            return
+        chance = loneliness(archive.objectives)
+        picked = self.rng.choice(len(archive), size=self.population, p=chance)
+        rows = self.evaluator.decide(self.neighbours.draw(archive.rows[picked], self.rng))
+        self.evaluate(rows)
+
+    def consolidate(
+        self, rows: IntArray, objectives: FloatArray, violation: FloatArray,
+        learned: FloatArray, plan: Plan,
+    ) -> None:  # fmt: skip
+        """Drop part numbers of a few promising designs; what is better takes the genome's place, in place."""
+        front = np.flatnonzero(violation <= 0.0)
+        if not len(front):
+            return
+        front = front[is_nondominated(objectives[front], keep_weakly=True)]
+        chosen = self.rng.permutation(front)[:CONSOLIDATED]
+        for k in chosen:
+            self.consolidate_one(int(k), rows, objectives, violation, learned, plan)
+
+    def consolidate_one(
+        self, k: int, rows: IntArray, objectives: FloatArray, violation: FloatArray, learned: FloatArray,
+        plan: Plan,
+    ) -> None:  # fmt: skip
+        """Drop part numbers of one design until no drop is better."""
+        price = plan.price[k : k + 1]
+        cap = np.array(CAPS, dtype=np.float64)[plan.cap[k : k + 1]]
+        row, here = rows[k], learned[k : k + 1]
+        best = float(worth(objectives[k : k + 1], violation[k : k + 1], price, cap)[0])
+        for _ in range(CONSOLIDATE_ROUNDS):
+            plans = dropped_plans(self.genome, here, row)
+            tried = self.completion.complete(plans)
+            found, _ = self.evaluate(tried)
+            score = worth(found.objectives, found.violation, price, cap)
+            winner = int(score.argmin())
+            if score[winner] >= best - 1e-9:
+                return
+            best, row = float(score[winner]), tried[winner]
+            here = self.genome.learn(here, row[None], np.ones(1, dtype=bool))
+            learned[k], objectives[k], violation[k] = (
+                here[0], found.objectives[winner], found.violation[winner],
+            )  # fmt: skip
+
+
+def loneliness(objectives: FloatArray) -> FloatArray:
+    """Return chances to be picked, (P,): large where a front is sparse, never nought."""
+    if len(objectives) < 3:
+        return np.full(len(objectives), 1.0 / len(objectives))
+    low, high = objectives.min(axis=0), objectives.max(axis=0)
+    scaled = (objectives - low) / np.where(high > low, high - low, 1.0)
+    gap = np.full(len(scaled), np.inf)
+    for start in range(0, len(scaled), 256):
+        part = scaled[start : start + 256]
+        apart = np.abs(part[:, None, :] - scaled[None, :, :]).max(axis=2)
+        apart[np.arange(len(part)), np.arange(start, start + len(part))] = np.inf
+        gap[start : start + 256] = apart.min(axis=1)
+    weight = np.sqrt(np.minimum(gap, 1.0)) + 0.02
+    return np.asarray(weight / weight.sum())
 
 
 def first_of(found: Evaluation, count: int) -> Evaluation:
