@@ -247,8 +247,8 @@ class Reference:
         """Return what is on the bus before the last step of the largest jump, or in the worst mix if more."""
         found = []
         for kind in (MIX, JUMP):
-            here = [s for s in range(len(self.states.name)) if self.states.kind[s] == kind and self.states.band[s] == band]
-            s = here[0]
+            every = range(len(self.states.name))
+            s = next(s for s in every if self.states.kind[s] == kind and self.states.band[s] == band)
             amps = self.currents(s)
             found.append(sum(self.stage_in(s, k, self.undropped_v(s, self.nets[k]), amps[k])[0] for k in bus.rails))
         return max(found[0], found[1] - self.steps_w[bus.name][band])
