@@ -84,13 +84,18 @@ def front_table(designs: Sequence[Data], currency: str, width: int) -> WordTable
         row += [str(design.get("topology") or NONE), bus_text(design)]
         if wide:
             row += [converter_text(design), str((design.get("choices") or {}).get("board.stack") or NONE)]
-        row.append(", ".join(str(role) for role in design.get("roles") or []))
+        row.append(", ".join(role_word(str(role), design) for role in design.get("roles") or []))
         rows.append(row)
     money = f", {currency}" if currency else ""
     headings = ["design", "kWh a year", f"cost{money}", "droop %"]
     headings += [f"life cost{money}", "W at 30 %", "W at 50 %", "W at 100 %"] if wide else []
     words = ["topology", "bus V", *(["bus converter", "stack"] if wide else []), "marked as"]
     return table([*headings, *words], rows, left=["design", *words])
+
+
+def role_word(role: str, design: Data) -> str:
+    """A role as printed beside the topology: the best of its own is said shortly."""
+    return "best of its kind" if role == f"best of {design.get('topology')}" else role
 
 
 def bus_text(design: Data) -> str:

@@ -364,3 +364,8 @@ def test_the_years_sums_of_a_design_stand_for_its_states(record: FrontRecord) ->
     design["year_kwh"] = sums
     del design["states"][0]["losses"]
     assert plain_text(Front(record).design("knee")) == whole
+
+
+def test_the_best_of_a_topology_is_said_shortly(record: FrontRecord) -> None:
+    record.designs[2]["roles"] = ["knee", "best of one bus, follows load", "best of two buses"]
+    assert "  knee, best of its kind, best of two buses" in printed(record)
