@@ -19,7 +19,7 @@ FRONT = np.array(
         [50.0, 80.0, 80.0],
         [45.0, 100.0, 70.0],
         [44.0, 150.0, 60.0],
-        [58.0, 62.0, 104.0],  # beyond its droop budget
+        [58.0, 66.0, 104.0],  # beyond its droop budget
         [110.0, 55.0, 60.0],  # beaten in energy and cost, kept for its margin
     ]
 )
@@ -71,7 +71,7 @@ def test_roles_mark_ends_knee_margin_and_the_best_of_each_topology() -> None:
     assert roles[4] == ["least loss", "most margin"]
     assert roles[0] == ["least cost"]
     assert roles[1] == ["knee", "least lifetime cost", "best of fixed"]
-    assert roles[5] == ["best of moving"]
+    assert roles[5] == ["best of moving"], "153 over its life"
     assert roles[6] == [], "as much margin as design 4, at a higher lifetime cost"
     assert sum(len(names) for names in roles) == 7
 
