@@ -65,7 +65,7 @@ def search_rows(record: FrontRecord) -> Iterable[tuple[str, str]]:
         yield "seed", str(run["seed"])
     stop = str(run.get("stop_reason") or NONE)
     if run.get("interrupted"):
-        stop = f"interrupted; what was found until then is kept{'' if stop == NONE else f' ({stop})'}"
+        stop = f"interrupted; what was found until then is kept{'' if stop in (NONE, 'interrupted') else f' ({stop})'}"
     if stop != NONE:
         yield "stopped", stop
     kept = f"{counted(len(record.designs), 'design')} published"

@@ -9,7 +9,7 @@ from rich.console import RenderableType
 from rich.table import Table
 from rich.text import Text
 
-from archopt.present.amounts import NONE, counted, fixed, money, number, of, place_word, real, with_unit
+from archopt.present.amounts import NONE, counted, fixed, money, number, of, real, with_unit
 from archopt.present.assumed import assumed_table
 from archopt.present.record import BUSES, CheckResult, Data
 from archopt.present.state_tables import by_load, load_states_table
@@ -188,13 +188,13 @@ def check_sections(result: CheckResult) -> Iterable[RenderableType]:
 
 
 def option_rows(options: list[Data]) -> list[list[str]]:
-    """Choices with their number of values; those all rails have in one row, fewest to most values."""
+    """Choices with their number of values; those of all rails, or buses, in one row, fewest to most."""
     groups: dict[str, list[int]] = {}
     for row in options:
         owner, _, field = str(row.get("choice", NONE)).partition(".")
-        own = owner in (*BUSES, "board") or not field
-        name = f"{place_word(owner)}: {field}" if field else owner
-        groups.setdefault(name if own else f"rails: {field}", []).append(int(real(row.get("values"), 0.0)))
+        group = "buses" if owner in BUSES else "board" if owner == "board" else "rails"
+        name = f"{group}: {field}" if field else owner
+        groups.setdefault(name, []).append(int(real(row.get("values"), 0.0)))
     return [
         [
             name.replace("_", " "), number(len(counts), 6),

@@ -335,7 +335,7 @@ def test_choices_that_every_rail_has_take_one_line() -> None:
     ]  # fmt: skip
     assert option_rows(options) == [
         ["rails: stage", "2", "12 to 30"], ["rails: pairs", "2", "4"],
-        ["bus A: nominal v", "1", "33"], ["board: stack", "1", "7"],
+        ["buses: nominal v", "1", "33"], ["board: stack", "1", "7"],
     ]  # fmt: skip
 
 
