@@ -7,7 +7,7 @@ from types import TracebackType
 from typing import Self
 
 from rich.console import Console
-from rich.progress import BarColumn, Progress, TextColumn
+from rich.progress import Progress, TextColumn
 
 from archopt.present.amounts import number
 
@@ -36,9 +36,11 @@ class SearchProgress:
         self.visible = console.is_terminal and not quiet
         self._began_s = time.monotonic()
         self._bar = Progress(
-            TextColumn("{task.description}"), BarColumn(bar_width=24), TextColumn("{task.fields[said]}"),
-            console=console, transient=True, disable=not self.visible,
-        )  # fmt: skip
+            TextColumn("{task.description} {task.percentage:.0f} %  {task.fields[said]}"),
+            console=console,
+            transient=True,
+            disable=not self.visible,
+        )
         self._task = self._bar.add_task("starting", total=1.0, said="")
 
     def __enter__(self) -> Self:
@@ -94,7 +96,7 @@ def said_line(
     hypervolume: float | None,
     remaining_s: float | None,
 ) -> str:
-    """What stands behind the bar."""
+    """What stands behind the share; a hypervolume of zero has no scale yet and is not said."""
     words = []
     if generation is not None:
         words.append(f"generation {number(generation, 9)}")
@@ -102,7 +104,7 @@ def said_line(
         words.append(f"{number(evaluations, 9)} designs tried")
     if feasible is not None:
         words.append(f"{number(feasible, 9)} feasible")
-    if hypervolume is not None:
+    if hypervolume:
         words.append(f"hypervolume {hypervolume:.4f}")
     if remaining_s is not None:
         minutes, seconds = divmod(round(remaining_s), 60)
