@@ -35,22 +35,22 @@ class SearchProgress:
         self.seconds = seconds
         self.visible = console.is_terminal and not quiet
         self._began_s = time.monotonic()
-        self._bar = Progress(
+        self._line = Progress(
             TextColumn("{task.description} {task.percentage:.0f} %  {task.fields[said]}"),
             console=console,
             transient=True,
             disable=not self.visible,
         )
-        self._task = self._bar.add_task("starting", total=1.0, said="")
+        self._task = self._line.add_task("starting", total=1.0, said="")
 
     def __enter__(self) -> Self:
-        self._bar.start()
+        self._line.start()
         return self
 
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        self._bar.stop()
+        self._line.stop()
 
     def __call__(
         self,
@@ -72,7 +72,7 @@ class SearchProgress:
         passed_s = time.monotonic() - self._began_s
         share = self.share(evaluations, passed_s)
         said = said_line(generation, evaluations, feasible, hypervolume, left_s(share, passed_s))
-        self._bar.update(self._task, description=stage, completed=share, said=said)
+        self._line.update(self._task, description=stage, completed=share, said=said)
 
     def share(self, evaluations: int | None, passed_s: float) -> float:
         """The share of the budget used, whichever of designs and time is nearer its end."""
