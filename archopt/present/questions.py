@@ -124,15 +124,16 @@ def losing_body(losing: list[Data], currency: str) -> Iterable[RenderableType]:
     ordered = sorted(losing, key=lambda row: real(row.get("behind_by"), 1e300))
     rows = [
         [
-            str(row.get("topology", NONE)), _name_of(row.get("best_design")),
-            fixed(row.get("lifetime_cost"), 2), signed(row.get("behind_by"), 2), limit_text(row.get("limit")),
+            str(row.get("topology", NONE)), _name_of(row),
+            fixed(row.get("lifetime_cost"), 2), signed(row.get("behind_by"), 2),
+            signed(row.get("energy_more_kwh"), 2), signed(row.get("cost_more"), 2), limit_text(row.get("limit")),
         ]
         for row in ordered
     ]  # fmt: skip
     words = ["topology", "best design", "limit it cannot meet"]
     unit = f", {currency}" if currency else ""
-    headings = ["topology", "best design", f"life cost{unit}", "behind by", "limit it cannot meet"]
-    yield table(headings, rows, left=words)
+    headings = ["topology", "best design", f"life cost{unit}", "behind by", "kWh more", "cost more"]
+    yield table([*headings, "limit it cannot meet"], rows, left=words)
     nearest = ordered[0]
     terms = nearest.get("difference_by_mechanism") or {}
     if terms:
@@ -152,21 +153,28 @@ def limit_text(limit: object) -> str:
 
 def leverage_body(record: FrontRecord) -> Iterable[RenderableType]:
     """The numbers whose spread moves the knee most, nothing chosen anew, and where they come from."""
-    ordered = sorted(record.leverage, key=lambda row: -abs(real(row.get("energy_change_kwh"), 0.0)))
+    ordered = sorted(record.leverage, key=lambda row: -abs(_weight(row)))
     rows = [
         [
             str(row.get("part", NONE)), str(row.get("column") or row.get("number") or NONE),
             number(row.get("value")), f"+-{number(row.get('spread_percent'))} %",
             signed(row.get("energy_change_kwh"), 2), signed(row.get("cost_change"), 2),
-            str(row.get("source") or NONE),
+            signed(row.get("lifetime_change"), 2), str(row.get("source") or NONE),
         ]
         for row in ordered[:MOST_LEVERAGE]
     ]  # fmt: skip
     words = ["part", "number", "source"]
-    yield table(["part", "number", "value", "spread", "kWh a year", "cost", "source"], rows, left=words)
+    headings = ["part", "number", "value", "spread", "kWh a year", "cost", "life cost", "source"]
+    yield table(headings, rows, left=words)
 
 
-def _name_of(design: object) -> str:
-    if isinstance(design, dict):
-        return str(design.get("design") or NONE)
-    return str(design or NONE)
+def _name_of(row: Data) -> str:
+    """The name of a published design; the best of a topology need not be on the front."""
+    design = row.get("best_design")
+    name = str(design.get("design") or NONE) if isinstance(design, dict) else str(design or NONE)
+    return "not on the front" if name.startswith("best of ") else name
+
+
+def _weight(row: Data) -> float:
+    """What a change of one number comes to over the life; its energy where that is not known."""
+    return real(row.get("lifetime_change"), real(row.get("energy_change_kwh"), 0.0))

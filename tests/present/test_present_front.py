@@ -69,7 +69,7 @@ def test_summary_is_json_and_holds_no_states(record: FrontRecord) -> None:
     data = json.loads(text)
     assert [row["design"] for row in data["front"]] == ["D001", "D002", "D003", "D004", "D005"]
     assert data["incumbent"]["violated"][0]["limit"] == "rail droop"
-    assert data["losing"][0]["best_design"]["design"] == "two buses"
+    assert data["losing"][0]["best_design"]["design"] == "best of two buses"
     assert '"states"' not in text
 
 

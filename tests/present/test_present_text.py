@@ -133,13 +133,13 @@ def test_a_gain_that_has_two_infeasible_sides_says_so() -> None:
 
 def test_the_nearest_losing_topology_says_why(record: FrontRecord) -> None:
     lines = block(printed(record), "Topologies that lost")
-    assert lines[1].split() == ["two", "buses", "two", "buses", "180.00", "+14.50", "-"]
+    assert lines[1].split() == ["two", "buses", "not", "on", "the", "front", "180.00", "+14.50", "+2.63", "+17.00", "-"]
     assert lines[2].endswith("on-time at core, over by 20 ns")
     assert lines[3] == "  Nearest, two buses, against the winner, kWh a year: fixed +9.00, overlap -4.00."
 
 
 def test_only_the_five_strongest_numbers_are_printed(record: FrontRecord) -> None:
-    many = [{**record.leverage[0], "part": f"PART-{k}", "energy_change_kwh": -float(k)} for k in range(8)]
+    many = [{**record.leverage[0], "part": f"PART-{k}", "lifetime_change": -float(k)} for k in range(8)]
     text = printed(dataclasses.replace(record, leverage=many))
     assert "PART-7" in text
     assert "PART-3" in text
