@@ -195,7 +195,8 @@ def record() -> FrontRecord:
         ],
         leverage=[
             {"part": "BRICK-8", "column": "fixed_w", "value": 1.0, "spread_percent": 15.0,
-             "energy_change_kwh": 3.1, "cost_change": 0.0, "lifetime_change": 4.774, "source": "maker's sheet, invented"},
+             "energy_change_kwh": 3.1, "cost_change": 0.0, "lifetime_change": 4.774,
+             "source": "maker's sheet, invented"},
         ],
         not_modelled=["first droop inside the package", "EMC"],
         cautions=["io: the droop budget is small"],
