@@ -48,7 +48,7 @@ def rail_windows(
     band = np.arange(row.shape[2])
     bank, count = designs.rail("bank")[..., None], designs.rail("bank_count")[..., None]
     percent = rows.droop_percent[row, bank, count, band]  # (P, R, B, nodes)
-    nodes = rows.droop_nodes_v[designs.rail("stage")][:, :, None, :]
+    nodes = rows.droop_nodes_v[row]  # (P, R, B, nodes)
     return (
         rows.need_v[row, band],
         np.maximum(rows.jump_v[row, band], crossing(nodes, percent, 100.0)),
@@ -57,7 +57,11 @@ def rail_windows(
 
 
 def crossing(nodes_v: FloatArray, percent: NDArray[Any], bound: float) -> FloatArray:
-    """Return the least voltage from which a falling curve (..., nodes) stays at or below the bound; inf if never."""
+    """Return the least voltage from which a falling curve (..., nodes) stays at or below the bound; inf if never.
+
+    Droop falls with the headroom like a + b / (V - V0): between nodes its reciprocal is nearly a line, and lies
+    above that line, so that the voltage found is never too low.
+    """
     above = percent > bound
     count = above.shape[-1]
     last = count - 1 - np.argmax(above[..., ::-1], axis=-1)  # last node above
@@ -69,7 +73,8 @@ def crossing(nodes_v: FloatArray, percent: NDArray[Any], bound: float) -> FloatA
     spread = np.broadcast_to(nodes_v, shape)
     v_high = np.take_along_axis(spread, upper[..., None], -1)[..., 0]
     v_low = np.take_along_axis(spread, last[..., None], -1)[..., 0]
-    share = (low - bound) / np.maximum(low - high, 1e-9)
+    low, high = 1.0 / np.maximum(low, 1e-6), 1.0 / np.maximum(high, 1e-6)
+    share = (1.0 / bound - low) / np.maximum(high - low, 1e-12)
     found = np.where(last >= count - 1, np.inf, v_low + share * (v_high - v_low))
     return np.where(any_above, found, 0.0)
 

@@ -21,6 +21,7 @@ from archopt.model.tables import NODES, LossTables, cubic_weights
 from archopt.physics.transient import rail_droop_v
 
 DROOP_NODES = 8
+LEAST_HEADROOM_V = 0.05  # of the lowest droop node above the voltage at which the stage cannot raise its current
 LEAST_V = 1e-3  # keeps the search for the highest voltage finite where a stage has no duty
 IDLE_HOURS = 1e-6  # weight of a band's worst mix, so that a band without hours still has a preference
 
@@ -31,7 +32,7 @@ class RowTables:
 
     energy_kwh (rows, B, G) and input_kwh (rows, B): stage input energy a year; mix_w, jump_w (rows, B, G);
     need_v, jump_v, high_v (rows, B): window of stage input voltage; droop_percent (rows, K, counts, B, nodes)
-    float32 over droop_v nodes (N, nodes) of the stage.
+    float32 over droop_nodes_v (rows, nodes).
     """
 
     energy_kwh: FloatArray
@@ -153,14 +154,18 @@ def hottest(problem: Problem, states: StateTable, tables: LossTables) -> FloatAr
 def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tuple[NDArray[np.float32], FloatArray]:
     """Return the worse of droop and release in percent of budget for every row and bank, and its nodes.
 
-    (rows, K, counts, B, nodes) float32 and (N, nodes) V.
+    (rows, K, counts, B, nodes) float32 and (rows, nodes) V, even steps of the logarithm of the headroom: that is
+    what droop bends with.
     """
     stages, rails = problem.stages, problem.rails
     capacitors = problem.capacitors
     counts = np.array(BANK_COUNTS)
     top = tables.start_v + tables.step_v * (NODES - 1)
     node = np.linspace(0.0, 1.0, DROOP_NODES)
-    nodes_v = tables.start_v[:, None] * (top / tables.start_v)[:, None] ** node
+    no_headroom_v = rails.voltage_v[tables.row_rail] * (stages.turns / stages.max_duty)[tables.row_stage]
+    first = np.maximum(tables.start_v[tables.row_stage] - no_headroom_v, LEAST_HEADROOM_V)
+    last = np.maximum(top[tables.row_stage] - no_headroom_v, 2.0 * LEAST_HEADROOM_V)
+    nodes_v = no_headroom_v[:, None] + first[:, None] * (last / first)[:, None] ** node
     out = np.full(
         (len(tables.row_stage), len(capacitors.names), len(counts), states.bands, DROOP_NODES),
         1e6,
@@ -187,7 +192,7 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
         after = np.minimum(mix + rails.step_a[r], max(float(rails.max_a[r]), float(mix.max())))
         carried = running * stages.phase_limit_a[stage]
         deficit = np.maximum(after[None, :] - carried[:, None], 0.0)[:, None, None, :, None]
-        up = slew_up_a_per_s(stages, stage[:, None], running[:, None], nodes_v[stage], np.array(volts_r))
+        up = slew_up_a_per_s(stages, stage[:, None], running[:, None], nodes_v[rows], np.array(volts_r))
         down = slew_down_a_per_s(stages, stage, running, np.array(volts_r))
         loop = (spread(stages.bandwidth_rad_s[stage]), spread(stages.delay_s[stage]), bank_f, esr)
         slew = rails.load_slew_a_per_s[r]
