@@ -293,18 +293,19 @@ class Completion:
     ) -> Offer:  # fmt: skip
         """Return each option with its best bank: cost (P, O) without bank, counts (P, O, K) the least index."""
         count, banks = counts.shape[0], counts.shape[2]
-        flat = bank_cost.reshape(count, -1)
-        base = (np.arange(banks) * (NO_COUNT + 1)).astype(np.int64)
-        place = counts + base
-        place += (np.arange(count) * flat.shape[1])[:, None, None]
-        money = bank_cost.ravel()[place]
+        width = NO_COUNT + 1
+        base = np.arange(banks) * width
         esr = (self.esr[table.banks, None] / np.maximum(self.pieces, 1.0)).astype(np.float32)
-        heat = esr.ravel()[counts + base]
-        heat *= (price * marginal)[:, :, None] * table.ripple[None, :, None]
-        money += heat
-        bank = money.argmin(axis=2)
-        score = cost + np.take_along_axis(money, bank[..., None], 2)[..., 0]
+        # banks are compared at the rail's typical ripple; the option then pays for its own
+        typical = np.float32(np.median(table.ripple))
+        worth = price * marginal
+        money = (bank_cost + (worth * typical)[:, :, None] * esr).reshape(-1)
+        place = counts + (base + (np.arange(count) * banks * width)[:, None, None])
+        paid = money[place]
+        bank = paid.argmin(axis=2)
         chosen = np.take_along_axis(counts, bank[..., None], 2)[..., 0].astype(np.int64)
+        score = cost + np.take_along_axis(paid, bank[..., None], 2)[..., 0]
+        score += worth * esr[bank, chosen] * (table.ripple - typical)
         return Offer(feed, np.where(ok, score, score + np.float32(ILLEGAL)), bank, chosen)
 
     def rows(self, plan: Plan, board: Board, seen: Conditions) -> IntArray:

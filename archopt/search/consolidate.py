@@ -24,17 +24,20 @@ def droppable_parts(problem: Problem, row: IntArray) -> IntArray:
     return np.asarray(np.intersect1d(used, rail_parts), dtype=np.int64)
 
 
-def dropped_plans(genome: Genome, genomes: FloatArray, row: IntArray) -> Plan:
-    """Return the plans of one genome (1, genes) with each part number its design uses dropped in turn."""
+def dropped_plans(genome: Genome, genomes: FloatArray, rows: IntArray) -> tuple[Plan, IntArray]:
+    """Return plans of genomes (P, genes) with each part number their designs use dropped in turn.
+
+    Beside the plans stands the place of the genome each came from.
+    """
     problem = genome.problem
-    learned = genome.learn(genomes, row[None], np.ones(1, dtype=bool))
-    parts = droppable_parts(problem, row)
-    plan = genome.decode(np.repeat(learned, max(len(parts), 1), axis=0))
-    stage_ok, capacitor_ok = plan.stage_ok.copy(), plan.capacitor_ok.copy()
-    for k, part in enumerate(parts):
-        stage_ok[k, (problem.stages.part == part) | (problem.stages.second_part == part)] = False
-        capacitor_ok[k, problem.capacitors.part == part] = False
-    return replace(plan, stage_ok=stage_ok, capacitor_ok=capacitor_ok)
+    learned = genome.learn(genomes, rows, np.ones(len(rows), dtype=bool))
+    parts = [droppable_parts(problem, row) for row in rows]
+    owner = np.repeat(np.arange(len(rows)), [len(each) for each in parts])
+    dropped = np.concatenate(parts)[:, None]
+    plan = genome.decode(learned[owner])
+    stages, capacitors = problem.stages, problem.capacitors
+    stage_ok = plan.stage_ok & (stages.part != dropped) & (stages.second_part != dropped)
+    return replace(plan, stage_ok=stage_ok, capacitor_ok=plan.capacitor_ok & (capacitors.part != dropped)), owner
 
 
 def worth(objectives: FloatArray, violation: FloatArray, price: FloatArray, cap: FloatArray) -> FloatArray:

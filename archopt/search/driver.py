@@ -92,9 +92,9 @@ class Search:
         self.neighbours = Neighbours(evaluator.problem)
         self.engine = Engine(self.genome.genes, self.population, seed, seeds=seeds)
         self.generation = 0
-        self.local_batches = LOCAL_BATCHES
+        self.credit: dict[str, tuple[int, int]] = {}
 
-    def evaluate(self, rows: IntArray) -> tuple[Evaluation, int]:
+    def evaluate(self, rows: IntArray, source: str) -> Evaluation:
         """Evaluate decided rows in batches of one fixed shape and keep what they show."""
         size = self.population
         parts, entered = [], 0
@@ -104,22 +104,24 @@ class Search:
             found = self.evaluator.evaluate(padded)
             entered += self.record.add(found, len(real))
             parts.append(first_of(found, len(real)))
-        return joined(parts), entered
+        tried, won = self.credit.get(source, (0, 0))
+        self.credit[source] = (tried + len(rows), won + entered)
+        return joined(parts)
 
     def step(self) -> None:
         """Advance by one generation: completed genomes, consolidation of the promising, local search."""
         if self.generation == 0 and len(self.given):
-            self.evaluate(self.given)
+            self.evaluate(self.given, "given")
         genomes = self.engine.ask()
         plan = self.genome.decode(genomes)
-        rows = self.completion.complete(plan)
-        found, _ = self.evaluate(rows)
+        rows = self.complete(plan)
+        found = self.evaluate(rows, "completion")
         learned = self.genome.learn(genomes, rows, self.rng.random(len(genomes)) < FORGET_SHARE)
         objectives, violation = found.objectives.copy(), found.violation.copy()
         if self.generation % CONSOLIDATE_EVERY == CONSOLIDATE_EVERY - 1:
             self.consolidate(rows, objectives, violation, learned, plan)
         self.engine.tell(objectives, violation, learned)
-        for _ in range(self.local_batches):
+        for _ in range(LOCAL_BATCHES):
             self.climb()
         self.generation += 1
 
@@ -131,7 +133,7 @@ class Search:
         chance = loneliness(archive.objectives)
         picked = self.rng.choice(len(archive), size=self.population, p=chance)
         rows = self.evaluator.decide(self.neighbours.draw(archive.rows[picked], self.rng))
-        self.evaluate(rows)
+        self.evaluate(rows, "local")
 
     def consolidate(
         self, rows: IntArray, objectives: FloatArray, violation: FloatArray,
@@ -142,32 +144,39 @@ class Search:
         if not len(front):
             return
         front = front[is_nondominated(objectives[front], keep_weakly=True)]
-        chosen = self.rng.permutation(front)[:CONSOLIDATED]
-        for k in chosen:
-            self.consolidate_one(int(k), rows, objectives, violation, learned, plan)
-
-    def consolidate_one(
-        self, k: int, rows: IntArray, objectives: FloatArray, violation: FloatArray, learned: FloatArray,
-        plan: Plan,
-    ) -> None:  # fmt: skip
-        """Drop part numbers of one design until no drop is better."""
-        price = plan.price[k : k + 1]
-        cap = np.array(CAPS, dtype=np.float64)[plan.cap[k : k + 1]]
-        row, here = rows[k], learned[k : k + 1]
-        best = float(worth(objectives[k : k + 1], violation[k : k + 1], price, cap)[0])
+        places = self.rng.permutation(front)[:CONSOLIDATED]
+        price, cap = plan.price, np.array(CAPS, dtype=np.float64)[plan.cap]
+        score = worth(objectives, violation, price, cap)
+        row = rows.copy()
         for _ in range(CONSOLIDATE_ROUNDS):
-            plans = dropped_plans(self.genome, here, row)
-            tried = self.completion.complete(plans)
-            found, _ = self.evaluate(tried)
-            score = worth(found.objectives, found.violation, price, cap)
-            winner = int(score.argmin())
-            if score[winner] >= best - 1e-9:
+            if not len(places):
                 return
-            best, row = float(score[winner]), tried[winner]
-            here = self.genome.learn(here, row[None], np.ones(1, dtype=bool))
-            learned[k], objectives[k], violation[k] = (
-                here[0], found.objectives[winner], found.violation[winner],
-            )  # fmt: skip
+            plans, owner = dropped_plans(self.genome, learned[places], row[places])
+            owner = places[owner]
+            tried = self.complete(plans)
+            found = self.evaluate(tried, "consolidation")
+            fresh = worth(found.objectives, found.violation, price[owner], cap[owner])
+            kept = []
+            for k in places:
+                own = np.flatnonzero(owner == k)
+                best = own[fresh[own].argmin()] if len(own) else -1
+                if best < 0 or fresh[best] >= score[k] - 1e-9:
+                    continue
+                score[k], row[k] = fresh[best], tried[best]
+                objectives[k], violation[k] = found.objectives[best], found.violation[best]
+                learned[k] = self.genome.learn(learned[k : k + 1], row[k : k + 1], np.ones(1, dtype=bool))[0]
+                kept.append(int(k))
+            places = np.array(kept, dtype=np.int64)
+
+    def complete(self, plan: Plan) -> IntArray:
+        """Return decided rows of plans, completed in batches of one fixed shape."""
+        size = self.population
+        parts = []
+        for start in range(0, len(plan), size):
+            index = np.arange(start, min(start + size, len(plan)))
+            padded = index[np.minimum(np.arange(size), len(index) - 1)]
+            parts.append(self.completion.complete(plan.take(padded))[: len(index)])
+        return np.concatenate(parts)
 
 
 def loneliness(objectives: FloatArray) -> FloatArray:

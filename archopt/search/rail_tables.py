@@ -205,20 +205,22 @@ class BankCounts:
         used, place = np.unique(row, return_inverse=True)
         place = place.reshape(row.shape)
         bands = np.arange(row.shape[1])
-        percent = options.rows.droop_percent[used][:, table.banks]  # (U, K, counts, B, nodes)
-        nodes = options.rows.droop_nodes_v[evaluator.tables.row_stage[used]]
+        percent = options.rows.droop_percent[np.ix_(used, table.banks)]  # (U, K, counts, B, nodes)
+        nodes = options.rows.droop_nodes_v[used]
         least_v = least_voltage(nodes, percent, float(CAPS[cap]), table.counts)  # (U, K, counts, B)
         least_v = np.maximum(least_v, options.rows.jump_v[used][:, None, None, :])
         volts = self.volts_of(table)
         order = np.argsort(volts, kind="stable")
         met = np.searchsorted(volts[order], least_v - 1e-9)  # voltages, from the lowest, at which it is not met
-        met = np.minimum.accumulate(met, axis=2).astype(np.uint8)
-        counts = np.zeros((len(volts), *met[:, :, 0].shape), np.uint8)
-        place_in_order = np.argsort(order, kind="stable").astype(np.uint8)[:, None, None, None]
+        met_first = np.minimum.accumulate(met, axis=2).astype(np.uint8).transpose(2, 0, 3, 1)
+        shape = met_first.shape[1:]  # (U, B, K)
+        flat = np.ascontiguousarray(met_first).reshape(NO_COUNT, -1)
+        rank = np.argsort(order, kind="stable").astype(np.uint8)[:, None]
+        counts = np.zeros((len(volts), flat.shape[1]), np.uint8)
         for count in range(NO_COUNT):
-            counts += place_in_order < met[:, :, count]
-        counts = np.maximum(counts, self.ripple_counts(table, used))
-        spread = counts.transpose(0, 1, 3, 2)[:, place, bands]  # (V, O, B, K)
+            counts += (rank < flat[count]).view(np.uint8)
+        counts = np.maximum(counts.reshape(-1, *shape), self.ripple_counts(table, used))
+        spread = counts[:, place, bands]  # (V, O, B, K)
         table.bus_counts[cap] = spread[: len(self.volts)].transpose(2, 0, 1, 3)
         for k in range(len(table.places)):
             table.place_counts[cap, k] = spread[len(self.volts) + k].max(axis=1)
@@ -228,7 +230,7 @@ class BankCounts:
         return np.concatenate([self.volts, [spot.volts for spot in table.places]])
 
     def ripple_counts(self, table: RailTable, used: IntArray) -> ByteArray:
-        """Return the least count index each bank needs to stand the ripple, (V, U, K, B), made once."""
+        """Return the least count index each bank needs to stand the ripple, (V, U, B, K), made once."""
         if table.rail not in self.ripple:
             evaluator = self.evaluator
             mix = evaluator.states.of_kind(MIX)[1::2]
@@ -239,7 +241,7 @@ class BankCounts:
             node = np.clip(node, 0, rms.shape[2] - 1).astype(np.int64)  # (V, U)
             permitted = evaluator.problem.capacitors.ripple_a[table.banks]
             permitted = permitted * evaluator.problem.study.derating.current
-            pieces = rms[np.arange(len(rms)), :, node][:, :, None, :] / permitted[:, None]
+            pieces = rms[np.arange(len(rms)), :, node][..., None] / permitted
             index = np.searchsorted(np.array(BANK_COUNTS, dtype=np.float64), pieces - 1e-9)
             self.ripple[table.rail] = index.astype(np.uint8)
         return self.ripple[table.rail]
@@ -259,7 +261,8 @@ def least_voltage(nodes: FloatArray, percent: Float32Array, cap: float, counts: 
     p_low, p_high = percent.ravel()[flat], percent.ravel()[flat + 1]
     node_v = np.arange(len(nodes))[:, None, None, None] * (last + 1) + low
     v_low, v_high = nodes.ravel()[node_v], nodes.ravel()[node_v + 1]
-    share = np.clip((p_low - cap) / np.maximum(p_low - p_high, 1e-9), 0.0, 1.0)
+    r_low, r_high = 1.0 / np.maximum(p_low, 1e-6), 1.0 / np.maximum(p_high, 1e-6)  # nearly straight in headroom
+    share = np.clip((1.0 / cap - r_low) / np.maximum(r_high - r_low, 1e-12), 0.0, 1.0)
     found = np.where(above == 0, 0.0, v_low + share * (v_high - v_low))
     found = np.where(above > last, np.inf, found)
     return np.where(counts[None, None, :, None], found, np.inf)
