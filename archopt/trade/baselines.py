@@ -1,12 +1,12 @@
-"""The same hardware with its bus voltage held or released: what following the load is worth, and against what.
+"""The same hardware with its bus voltage held or released: what following the load is worth.
 
 ``baselines(problem, row, of)`` answers for one design. Nothing of the hardware is chosen again but the
 supervisor: none where the bus is held, the design's own or the first that suffices where it moves; its price
 and power count. The gain of adaptation is quoted against the best feasible fixed bus, never against a habit.
 
 Rows: ``baseline, of, energy_loss_kwh_per_year, cost_per_board, worst_droop_percent, volts, feasible, note``;
-energy, cost, droop and volts are None where the baseline does not apply. ``volts`` is a number (held), a list by
-band (moving), or either by bus where there are two.
+energy, cost, droop and volts are None where the baseline does not apply. ``volts`` is a number (held), a list
+by band (moving), or either by bus where there are two.
 
 Summary: ``of, best_fixed_v, flat_band_v`` (lowest and highest fixed voltage within 1 % of the best loss, by
 bus), and for the jump the study states, ``gain_kwh_per_year, gain_percent, gain_money_per_year,
@@ -21,10 +21,11 @@ from typing import Any
 
 import numpy as np
 
+from archopt.model.canonical import canonical
 from archopt.model.evaluator import Evaluator
 from archopt.model.parameters import IntArray
 from archopt.model.problem import Problem
-from archopt.model.space import BUS_NAMES, FOLLOW
+from archopt.model.space import BUS_NAMES, FOLLOW, Designs
 from archopt.trade.money import money_per_kwh, payback_years
 from archopt.trade.pinned import evaluate_exactly, pinned_problem, unmet_limits, with_jump
 from archopt.trade.schedules import (
@@ -63,7 +64,8 @@ def baselines(problem: Problem, row: IntArray, of: str) -> Baselines:
     row : (width,) a design, decided or not; its decisions are made again
     of : what the design is called, e.g. ``knee`` or ``incumbent``
     """
-    row = np.asarray(row, dtype=np.int64)
+    given = Designs(problem.layout, np.asarray(row, dtype=np.int64)[None])
+    row = canonical(problem, given).rows[0]
     pinned = pinned_problem(problem, row)
     evaluator = Evaluator(pinned)
     buses = regulated_buses(problem, row)

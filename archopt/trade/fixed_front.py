@@ -39,7 +39,7 @@ class FixedFront:
 
 
 def bus_is_fixed(problem: Problem, rows: IntArray) -> BoolArray:
-    """Return whether no bus of a design moves by the load, (P,): fixed, following the input, or no bus at all."""
+    """Return whether no bus of a design moves by the load, (P,): fixed, fixed ratio, or no bus at all."""
     designs = Designs(problem.layout, np.atleast_2d(rows))
     moving = buses_used(designs) & (designs.bus("control") != FIXED)
     return np.asarray(~moving.any(axis=1))
@@ -71,9 +71,10 @@ def fixed_front(problem: Problem, rows: IntArray, objectives: FloatArray) -> Fix
 
 
 def equal_cost_percent(fixed: FloatArray, every: FloatArray) -> tuple[float, float, float] | None:
-    """Return the least, median and greatest extra energy of the best fixed design at no more cost, percent."""
+    """Return the least, median and greatest extra energy of fixed designs at no more cost, percent."""
     front = every[energy_cost_front(every)]
-    best = np.array([fixed[fixed[:, 1] <= cost * (1.0 + 1e-9), 0].min(initial=np.inf) for cost in front[:, 1]])
+    caps = front[:, 1] * (1.0 + 1e-9)
+    best = np.array([fixed[fixed[:, 1] <= cap, 0].min(initial=np.inf) for cap in caps])
     reached = np.isfinite(best)
     if not reached.any():
         return None

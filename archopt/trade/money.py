@@ -1,4 +1,4 @@
-"""Money over time: what a kilowatt-hour of loss costs, what a design costs over its life, when it pays back."""
+"""Money over time: what a kilowatt-hour of loss costs, a design over its life, and when it pays back."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ from archopt.physics.arrays import FloatArray
 
 
 def money_per_kwh(study: ResolvedStudy) -> float:
-    """Return what one kilowatt-hour lost on the board costs at the meter, currency: cooling and supply included."""
+    """Return what a kilowatt-hour lost on the board costs at the meter, cooling and supply included."""
     economics = study.economics
     return economics.energy_price_per_kwh * economics.cooling_overhead / economics.upstream_efficiency
 
@@ -31,8 +31,8 @@ def payback_years(
     """Return after how many years each design has earned back what it costs more than a reference.
 
     0.0 where it costs no more and loses less. None where it never pays back: it saves no energy, or there is
-    no reference. None says nothing against a design that is merely cheaper: it has nothing to earn back and no
-    energy saving to earn it with.
+    no reference. None says nothing against a design that is merely cheaper: it has nothing to earn back, and
+    no energy saving to earn it with.
 
     Parameters
     ----------

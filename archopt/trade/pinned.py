@@ -47,6 +47,10 @@ def pinned_problem(problem: Problem, row: IntArray) -> Problem:
 
     Bus voltages are free over the whole grid, control free among the study's kinds, and the supervisor free.
     Pins on these, which a study may carry, do not hold here: the question is what another voltage would do.
+
+    Parameters
+    ----------
+    row : (width,) in canonical form; its decisions are not read
     """
     designs = Designs(problem.layout, row[None])
     rails = np.arange(problem.layout.rails)

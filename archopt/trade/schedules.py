@@ -91,7 +91,7 @@ def follow_rows(problem: Problem, row: IntArray, volts: IntArray) -> IntArray:
 
 
 def combinations(problem: Problem, row: IntArray, buses: Sequence[int]) -> list[IntArray]:
-    """Return the voltages to sweep, a list of (K, 2) grid positions: all pairs at once, or a bus at a time."""
+    """Return the voltages to sweep, (K, 2) grid positions: all pairs at once, or one bus after the other."""
     spans = {bus: span_of(problem, row, bus) for bus in buses}
     if np.prod([len(span) for span in spans.values()]) <= MOST_COMBINATIONS:
         every = np.array(list(product(*(spans.get(bus, np.array([-1])) for bus in range(2)))), dtype=np.int64)

@@ -77,7 +77,7 @@ def test_roles_mark_ends_knee_margin_and_the_best_of_each_topology() -> None:
 
 
 def test_most_margin_goes_to_the_cheapest_over_its_life() -> None:
-    """Margin below 60 % buys nothing, so many designs share it; 110 x 1.5 + 55 is more than 44 x 1.5 + 150."""
+    """Margin below 60 % buys nothing, so many share it; 110 x 1.5 + 55 is more than 44 x 1.5 + 150."""
     roles = assign_roles(FRONT, ["any"] * 7, FRONT[:, 1] + FRONT[:, 0] * 1.5)
     assert "most margin" in roles[4]
     roles = assign_roles(FRONT, ["any"] * 7, FRONT[:, 1] + FRONT[:, 0] * 0.1)
@@ -101,7 +101,7 @@ def test_lifetime_cost_is_the_explained_designs(telecom) -> None:
 
 
 def test_payback_by_hand(telecom) -> None:
-    """Closed form: 0.19 a kWh x 1.0 / 0.95 = 0.2; 10 kWh saved is 2 a year, 5 more is paid back in 2.5 years."""
+    """Closed form: 0.19 a kWh / 0.95 = 0.2; 10 kWh saved is 2 a year, 5 more is paid back in 2.5 years."""
     economics = replace(
         telecom[0].study.economics, energy_price_per_kwh=0.19, cooling_overhead=1.0, upstream_efficiency=0.95
     )
