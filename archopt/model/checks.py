@@ -6,6 +6,7 @@ import numpy as np
 
 from archopt.model.bus_checks import check_buses
 from archopt.model.cost import copper_area_m2
+from archopt.model.hardware import plane_limit_a
 from archopt.model.limits import Ledger
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.rail_checks import check_jump, check_rails
@@ -28,9 +29,7 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
     pairs = situation.designs.rail("pairs")
     limit_a = pairs * current_limit_a(rails.copper_width_m, thickness, board.copper_rise_k, inner=True)
     ledger.add("copper ampacity", amps, limit_a[:, None, :], at_most=True, axes=axes)
-    width_m = np.sqrt(board.bus_area_cm2 * 1e-4 / max(board.bus_shared_squares + board.bus_own_squares, 0.1))
-    bus_pairs = situation.designs.bus("pairs")
-    bus_limit = bus_pairs * current_limit_a(width_m, thickness, board.copper_rise_k, inner=True)
+    bus_limit = plane_limit_a(problem, hardware.stack, situation.designs.bus("pairs"))
     bus_axes = (situation.state_names(steady), tuple(f"{name} plane" for name in BUS_NAMES))
     ledger.add(
         "copper ampacity", solution.bus_a[:, steady], bus_limit[:, None, :], at_most=True, axes=bus_axes,
@@ -50,7 +49,7 @@ def check_board(situation: Situation, ledger: Ledger) -> None:
     ledger.add("input current", solution.input_a[:, steady], problem.path.limit_a, at_most=True, axes=axes)
     every = (states.name,)
     most = states.input_v**2 / (4.0 * max(problem.path.resistance_ohm, 1e-12))
-    wanted = solution.input_w - solution.path_w + solution.missing_w
+    wanted = solution.input_w - solution.path_w
     ledger.add("deliverable power", wanted, most, at_most=True, axes=every)
     needs_bias: BoolArray = np.asarray((hardware.bias_w > 0).any(axis=1))
     if len(problem.biases.names):

@@ -7,14 +7,14 @@ at its undropped input; it is never chosen again by the evaluation.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
-from archopt.model.hardware import Hardware, unpack
+from archopt.model.hardware import Hardware, plane_limit_a, unpack
 from archopt.model.options import Options, band_hours, option_index
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
@@ -27,16 +27,6 @@ from archopt.physics.transient import bus_dip_v
 ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
 SAFETY_V = 0.01
 SETTLING_PASSES = 3
-
-
-@dataclass(frozen=True)
-class BandLoad:
-    """What each bus carries in each band over the grid: (P, 2, B, G)."""
-
-    energy_kwh: FloatArray
-    mix_w: FloatArray
-    jump_w: FloatArray
-    legal: BoolArray
 
 
 def rail_windows(
@@ -79,25 +69,6 @@ def crossing(nodes_v: FloatArray, percent: NDArray[Any], bound: float) -> FloatA
     return np.where(any_above, found, 0.0)
 
 
-def bus_sums(options: Options, option: IntArray, hardware: Hardware) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return energy, mix and jump power of each bus's rails, (P, 2, B, G)."""
-    rows = options.rows
-    row = options.row[option]
-    shape = (len(row), 2, row.shape[2], rows.energy_kwh.shape[2])
-    energy, mix, jump = np.zeros(shape), np.zeros(shape), np.zeros(shape)
-    band = np.arange(row.shape[2])
-    for r in range(row.shape[1]):
-        for bus in range(2):
-            here = np.flatnonzero(hardware.on_bus[:, bus, r])
-            if not len(here):
-                continue
-            index = row[here, r]
-            energy[here, bus] += rows.energy_kwh[index, band]
-            mix[here, bus] += rows.mix_w[index, band]
-            jump[here, bus] += rows.jump_w[index, band]
-    return energy, mix, jump
-
-
 def legal_voltages(
     problem: Problem, designs: Designs, option: IntArray, options: Options, hardware: Hardware,
     mix_w: FloatArray, jump_w: FloatArray, dip_v: FloatArray,
@@ -111,6 +82,7 @@ def legal_voltages(
     legal = (grid >= converters.output_min_v[index] - 1e-9) & (grid <= converters.output_max_v[index] + 1e-9)
     legal = legal & (mix_w <= spare * converters.limit_w[index])
     legal &= mix_w / grid <= spare * converters.limit_a[index]
+    legal &= mix_w / grid <= plane_limit_a(problem, hardware.stack, designs.bus("pairs"))[..., None, None]
     dipped = np.maximum(grid - dip_v, 0.1)
     legal &= dip_v <= study.control.bus_dip_percent * 0.01 * grid
     moving = (designs.bus("control") != FIXED)[..., None, None]
@@ -287,7 +259,9 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     running = raise_for_children(problem, options, designs, option, options.run[option])
     designs.rows[:, layout.running_phases] = running.reshape(len(designs), -1)
     hardware = unpack(problem, designs, states)
-    energy, mix_w, jump_w = bus_sums(options, option, hardware)
+    energy, mix_w, jump_w = with_bus_losses(
+        problem, states, hardware, rail_shares(options, option, hardware), bus_sums(options, option, hardware)
+    )
     units = running_units(problem, states, designs, hardware, energy, mix_w, jump_w)
     units = np.where(hardware.converter[..., None] >= 0, units, 0)
     designs.rows[:, layout.running_converters] = units.reshape(len(designs), -1)

@@ -10,6 +10,7 @@ from archopt.model.parameters import FIXED_RATIO, BoolArray, FloatArray, IntArra
 from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
 from archopt.model.space import BUS_A, PARENT, Designs
 from archopt.model.states import FALLBACK, StateTable
+from archopt.physics.ampacity import current_limit_a
 
 
 @dataclass(frozen=True)
@@ -134,3 +135,11 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
 def bus_ratio_v(problem: Problem, converter: IntArray) -> FloatArray:
     """Return the unloaded bus voltage of fixed-ratio converters at the highest input, V."""
     return problem.converters.ratio[np.maximum(converter, 0)] * problem.study.supply.high_v
+
+
+def plane_limit_a(problem: Problem, stack: IntArray, pairs: IntArray) -> FloatArray:
+    """Return what the bus planes may carry, (P, 2) A: a region as wide as its area over its squares allows."""
+    board = problem.study.board
+    width_m = np.sqrt(board.bus_area_cm2 * 1e-4 / max(board.bus_shared_squares + board.bus_own_squares, 0.1))
+    thickness = problem.stacks.thickness_m[stack][:, None]
+    return np.asarray(pairs * current_limit_a(width_m, thickness, board.copper_rise_k, inner=True))

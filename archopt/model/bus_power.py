@@ -1,0 +1,73 @@
+"""What each bus carries in each band over the voltage grid, from the tables: its rails, its plane, its bias supply."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from archopt.model.hardware import Hardware
+from archopt.model.options import Options, band_hours
+from archopt.model.parameters import FloatArray, IntArray
+from archopt.model.problem import Problem
+from archopt.model.states import StateTable
+
+
+def bus_sums(options: Options, option: IntArray, hardware: Hardware) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return energy, mix and jump power of each bus's rails, (P, 2, B, G)."""
+    rows = options.rows
+    row = options.row[option]
+    shape = (len(row), 2, row.shape[2], rows.energy_kwh.shape[2])
+    energy, mix, jump = np.zeros(shape), np.zeros(shape), np.zeros(shape)
+    band = np.arange(row.shape[2])
+    for r in range(row.shape[1]):
+        for bus in range(2):
+            here = np.flatnonzero(hardware.on_bus[:, bus, r])
+            if not len(here):
+                continue
+            index = row[here, r]
+            energy[here, bus] += rows.energy_kwh[index, band]
+            mix[here, bus] += rows.mix_w[index, band]
+            jump[here, bus] += rows.jump_w[index, band]
+    return energy, mix, jump
+
+
+def rail_shares(options: Options, option: IntArray, hardware: Hardware) -> FloatArray:
+    """Return the sum of the squares of the rails' shares of each bus's power, (P, 2, B), at the worst mix."""
+    rows = options.rows
+    middle = rows.mix_w.shape[2] // 2
+    power = rows.mix_w[options.row[option], np.arange(rows.mix_w.shape[1]), middle]  # (P, R, B)
+    on_bus = hardware.on_bus.astype(np.float64)
+    total = np.einsum("pkr,prb->pkb", on_bus, power)
+    square = np.einsum("pkr,prb->pkb", on_bus, power**2)
+    return np.where(total > 0, square / np.maximum(total, 1e-12) ** 2, 1.0)
+
+
+def with_bus_losses(
+    problem: Problem,
+    states: StateTable,
+    hardware: Hardware,
+    shares: FloatArray,
+    sums: tuple[FloatArray, FloatArray, FloatArray],
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return energy (kWh), mix and jump power (W) of each bus, (P, 2, B, G), with what the bus itself adds.
+
+    The plane loses I^T R I, by the band's mean current and how evenly its rails share it; a bias supply on bus
+    A draws its own power. Both weigh on the schedule: the plane asks for a higher bus at heavy load.
+    """
+    energy, mix_w, jump_w = sums
+    board = problem.study.board
+    squares = board.bus_shared_squares + board.bus_own_squares * shares
+    per_square_amp = (hardware.plane_ohm[..., None] * squares)[..., None] / problem.grid_v**2  # (P, 2, B, G)
+    hours = np.maximum(band_hours(states), 1e-6)[:, None]
+    mean_w = energy * 1e3 / hours
+    bias_w = np.zeros((*hardware.band_v.shape, 1))
+    if len(problem.biases.names):
+        index = np.maximum(hardware.bias, 0)
+        gates = np.einsum("prb,pr->pb", hardware.running_band.astype(np.float64), hardware.bias_w)
+        drawn = problem.biases.no_load_w[index][:, None] + gates / problem.biases.efficiency[index][:, None]
+        on_bus = hardware.bias_on_bus & hardware.on_bus[:, 0].any(axis=1)
+        bias_w[:, 0, :, 0] = np.where(on_bus[:, None], drawn, 0.0)
+    return (
+        energy + (per_square_amp * mean_w**2 + bias_w) * hours * 1e-3,
+        mix_w + per_square_amp * mix_w**2 + bias_w,
+        jump_w + per_square_amp * jump_w**2 + bias_w,
+    )
