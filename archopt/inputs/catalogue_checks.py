@@ -8,6 +8,7 @@ from itertools import pairwise
 from archopt.inputs.parts import BuckStage, BusConverter, Capacitor, Part, SingleStage, Stack
 from archopt.inputs.problems import Notebook, nearest, unit_of
 
+LEAST_GATE_V = 4.5  # what drives logic-level switches on fully (common practice)
 PRICES = ("price_100", "price_1k", "price_10k", "price_100k")
 ORDERED = (
     ("input_min_v", "input_max_v"), ("output_min_v", "output_max_v"), ("loop_min_uf", "loop_max_uf"),
@@ -39,8 +40,23 @@ def check_family(part: Part, file: str, line: int, notebook: Notebook) -> None:
                 )
     if isinstance(part, BusConverter):
         _check_converter(part, note)
+    if isinstance(part, BuckStage):
+        _check_buck(part, note)
     if isinstance(part, Stack) and part.layers < 2 * part.pairs:
         note("layers", f"{part.layers} layers cannot hold {part.pairs} pairs")
+
+
+def _check_buck(part: BuckStage, note: Callable[[str, str], None]) -> None:
+    """Note what contradicts the gate supply and the light load of a buck stage."""
+    if part.gate_supply == "output" and part.output_min_v < LEAST_GATE_V:
+        note(
+            "gate_supply",
+            f"gates need {LEAST_GATE_V:g} V from the output, output_min_v is {part.output_min_v:g} V",
+        )
+    if part.light_load == "emulation" and part.gate_supply == "bias":
+        note("light_load", "emulation needs a gate supply from input or output: a bias is counted at full frequency")
+    if part.fold_floor_khz > part.frequency_khz:
+        note("fold_floor_khz", f"{part.fold_floor_khz:g} kHz is above frequency_khz {part.frequency_khz:g} kHz")
 
 
 def _check_converter(part: BusConverter, note: Callable[[str, str], None]) -> None:

@@ -12,6 +12,10 @@ from pydantic import BaseModel, ConfigDict, Field
 
 Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]
+SHEDDING = (
+    "phases running at light load: ideal (the number that loses least), threshold (the load over shed_share of "
+    "the phase current, rounded up), none (all)"
+)
 
 
 class Part(BaseModel):
@@ -36,7 +40,11 @@ class Part(BaseModel):
 
 
 class BuckStage(Part):
-    """One phase of a synchronous buck stage; numbers are per phase. The inductor is a part of its own."""
+    """One phase of a synchronous buck stage; numbers are per phase. The inductor is a part of its own.
+
+    There is no column for derating over ambient: the permitted current follows from the junction limit, the local
+    air and thermal_k_per_w at the study's air speed, and a second curve would count the same heat twice.
+    """
 
     family = "buck_stages"
 
@@ -58,8 +66,9 @@ class BuckStage(Part):
     diode_v: NotNegative = Field(le=2)
     high_side_gate_nc: NotNegative
     low_side_gate_nc: NotNegative
-    gate_supply: Literal["input", "bias"] = Field(
-        description="gate drive derived from the stage input or from a 5 V bias"
+    gate_supply: Literal["input", "bias", "output"] = Field(
+        description="gate drive derived from the stage input, from a 5 V bias, or from the stage's own output "
+        "(of at least 4.5 V)"
     )
     gate_v: Positive = Field(le=20)
     high_side_output_nc: NotNegative = Field(description="output charge at output_charge_at_v")
@@ -71,6 +80,19 @@ class BuckStage(Part):
     )
     input_capacitance_uf: NotNegative = Field(description="the stage's own input capacitance under bias, per phase")
     quiescent_ma: NotNegative = Field(description="controller and driver current, per running phase")
+    light_load: Literal["forced", "emulation"] = Field(
+        description="forced conduction, or diode emulation: the low side stops at zero current"
+    )
+    fold_floor_khz: NotNegative = Field(
+        0.0, le=5000, description="emulation: lowest frequency pulses fold to; frequency_khz where they do not fold"
+    )
+    folded_crossover_share: float = Field(
+        1.0, gt=0, le=1, description="emulation: share of the loop bandwidth left without load"
+    )
+    shedding: Literal["ideal", "threshold", "none"] = Field(description=SHEDDING)
+    shed_share: float = Field(
+        1.0, gt=0, le=1, description="threshold: share of phase_current_a from which another phase runs"
+    )
     max_duty: float = Field(gt=0, le=1)
     min_on_ns: NotNegative = Field(le=1000)
     min_off_ns: NotNegative = Field(le=1000)
@@ -168,6 +190,10 @@ class SingleStage(Part):
     crossover_khz: Positive
     delay_ns: NotNegative
     wakeup_us: NotNegative
+    shedding: Literal["ideal", "threshold", "none"] = Field(description=SHEDDING)
+    shed_share: float = Field(
+        1.0, gt=0, le=1, description="threshold: share of phase_current_a from which another phase runs"
+    )
     loop_min_uf: NotNegative
     loop_max_uf: Positive
     input_capacitance_uf: NotNegative

@@ -15,7 +15,7 @@ from archopt.model.hardware import Hardware
 from archopt.model.parameters import FloatArray
 from archopt.model.problem import Problem
 from archopt.model.space import INPUT
-from archopt.model.stages import operate, ripple_a
+from archopt.model.stages import operate, ripple_square_a2
 from archopt.model.states import JUMP, MIX, StateTable
 from archopt.physics import bus_converter
 from archopt.physics.transient import bus_dip_v
@@ -93,14 +93,14 @@ class DirectStages:
 
 def bank_loss_w(problem: Problem, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
     """Return the loss of the output banks in their series resistance, (P, S, R) W; phases add no cancelling."""
-    ripple = ripple_a(
+    square = ripple_square_a2(
         problem.stages,
         np.broadcast_to(hardware.stage[:, None, :], stage_v.shape),
         stage_v,
         problem.rails.voltage_v,
         current_a / hardware.running,
     )
-    return hardware.bank_esr_ohm[:, None, :] * hardware.running * ripple**2 / 12.0
+    return hardware.bank_esr_ohm[:, None, :] * hardware.running * square
 
 
 def children_current_a(problem: Problem, hardware: Hardware, stage_in_w: FloatArray) -> FloatArray:

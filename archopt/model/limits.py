@@ -42,6 +42,7 @@ LIMITS = (
     Limit("converter current", "A", 0.05, relative=True),
     Limit("converter power", "W", 0.05, relative=True),
     Limit("converter temperature", "K", 5.0),
+    Limit("thermal gain", "ratio", 0.05),
     Limit("jump survival: stage input", "V", 0.25),
     Limit("jump survival: short-time current", "A", 0.05, relative=True),
     Limit("bus drop", "% of bus", 0.5),

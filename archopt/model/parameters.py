@@ -35,6 +35,8 @@ BoolArray = NDArray[np.bool_]
 
 BUCK, SINGLE, LINEAR = 0, 1, 2
 REGULATED, FIXED_RATIO, NON_ISOLATED = 0, 1, 2
+IDEAL_SHEDDING, THRESHOLD_SHEDDING, NO_SHEDDING = 0, 1, 2
+LEAST_INPUT_DRIVEN_V = 5.5  # a gate supply derived from the input, at start-up at least, needs this (common practice)
 PRICE_STEPS = (1_000.0, 10_000.0, 100_000.0)
 
 
@@ -72,8 +74,11 @@ class StageTable:
     isolated: BoolArray
     bias_fed: BoolArray
     bandwidth_rad_s: FloatArray
+    folded_share: FloatArray  # of the bandwidth, left without load
     delay_s: FloatArray
     wakeup_s: FloatArray
+    shedding: IntArray
+    shed_at_a: FloatArray  # load of a phase from which another one runs; inf without thresholds
     loop_min_f: FloatArray
     loop_max_f: FloatArray
     inductance_h: FloatArray  # nan where nothing limits the slew (linear)
@@ -193,6 +198,9 @@ def array(rows: list[Part], name: str, scale: float = 1.0) -> FloatArray:
     return np.array([float(getattr(row, name, math.nan)) * scale for row in rows], dtype=np.float64)
 
 
+HARMLESS_ZERO = ("gate_from_input", "gate_from_output", "emulation")
+
+
 def buck_parameters(study: ResolvedStudy, catalogue: Catalogue, rows: list[Part]) -> BuckParameters:
     """Return buck parameters in SI; rows of other families get harmless ones, never used."""
     dummy = next((row for row in rows if isinstance(row, BuckStage)), None)
@@ -201,7 +209,7 @@ def buck_parameters(study: ResolvedStudy, catalogue: Catalogue, rows: list[Part]
     for row in bucks:
         if row is None:
             for name, column in columns.items():
-                column.append(0.0 if name == "gate_from_input" else 1.0)
+                column.append(0.0 if name in HARMLESS_ZERO else 1.0)
             continue
         inductor = cast(Inductor, catalogue.families["inductors"][row.inductor])
         core_w = inductor.core_loss_mw * 1e-3
@@ -213,6 +221,7 @@ def buck_parameters(study: ResolvedStudy, catalogue: Catalogue, rows: list[Part]
             "core_w": core_w,
             "core_ripple_a": inductor.core_ripple_a,
             "core_exponent": inductor.core_ripple_exponent,
+            "core_frequency_exponent": inductor.core_frequency_exponent,
             "high_side_ohm": row.high_side_mohm * 1e-3,
             "low_side_ohm": row.low_side_mohm * 1e-3,
             "switch_per_k": row.resistance_per_k,
@@ -225,6 +234,7 @@ def buck_parameters(study: ResolvedStudy, catalogue: Catalogue, rows: list[Part]
             "low_side_gate_c": row.low_side_gate_nc * 1e-9,
             "gate_v": row.gate_v,
             "gate_from_input": 1.0 if row.gate_supply == "input" else 0.0,
+            "gate_from_output": 1.0 if row.gate_supply == "output" else 0.0,
             "high_side_output_c": row.high_side_output_nc * 1e-9,
             "low_side_output_c": row.low_side_output_nc * 1e-9,
             "output_charge_v": row.output_charge_at_v,
@@ -232,6 +242,8 @@ def buck_parameters(study: ResolvedStudy, catalogue: Catalogue, rows: list[Part]
             "recovery_a": row.phase_current_a,
             "input_capacitor_ohm": row.input_capacitor_mohm * 1e-3,
             "quiescent_a": row.quiescent_ma * 1e-3,
+            "emulation": 1.0 if row.light_load == "emulation" else 0.0,
+            "fold_floor_hz": row.fold_floor_khz * 1e3,
             "thermal_k_per_w": float(
                 thermal_resistance_at(row.thermal_k_per_w, row.air_speed_m_s, study.supply.air_speed_m_s)
             ),
@@ -302,6 +314,26 @@ def part_number(row: Part) -> str:
     return row.part if isinstance(row, BuckStage) else row.name
 
 
+def stage_input_min_v(row: Part) -> float:
+    """Return the lowest input a stage starts at, V: its own, or what its gate supply needs."""
+    lowest = float(cast("BuckStage | SingleStage | LinearRegulator", row).input_min_v)
+    own_drive = isinstance(row, BuckStage) and row.gate_supply != "bias"
+    return max(lowest, LEAST_INPUT_DRIVEN_V) if own_drive else lowest
+
+
+def folded_share(row: Part) -> float:
+    """Return the share of its bandwidth a stage has left without load."""
+    return row.folded_crossover_share if isinstance(row, BuckStage) and row.light_load == "emulation" else 1.0
+
+
+def shedding_of(rows: list[Part]) -> tuple[IntArray, FloatArray]:
+    """Return how each stage sheds phases and the load of a phase from which another one runs, A."""
+    kinds = {"ideal": IDEAL_SHEDDING, "threshold": THRESHOLD_SHEDDING, "none": NO_SHEDDING}
+    kind = np.array([kinds[getattr(row, "shedding", "ideal")] for row in rows], dtype=np.int64)
+    share = np.nan_to_num(array(rows, "shed_share"), nan=1.0)
+    return kind, np.where(kind == THRESHOLD_SHEDDING, share * array(rows, "phase_current_a"), np.inf)
+
+
 def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) -> StageTable:
     """Return all allowed rail stages in one table."""
     rows: list[Part] = [
@@ -321,6 +353,7 @@ def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) ->
     thermal = np.asarray(
         thermal_resistance_at(array(rows, "thermal_k_per_w"), array(rows, "air_speed_m_s"), study.supply.air_speed_m_s)
     )
+    shedding, shed_at_a = shedding_of(rows)
     return StageTable(
         names=tuple(r.name for r in rows),
         kind=kind,
@@ -332,12 +365,7 @@ def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) ->
             rated_a=array(rows, "phase_current_a"),
             thermal_k_per_w=thermal,
         ),
-        input_min_v=np.array(
-            [
-                max(r.input_min_v, 5.5) if isinstance(r, BuckStage) and r.gate_supply == "input" else r.input_min_v
-                for r in cast("list[BuckStage | SingleStage | LinearRegulator]", rows)
-            ]
-        ),
+        input_min_v=np.array([stage_input_min_v(row) for row in rows]),
         input_max_v=array(rows, "input_max_v"),
         output_min_v=array(rows, "output_min_v"),
         output_max_v=array(rows, "output_max_v"),
@@ -346,8 +374,11 @@ def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) ->
         isolated=np.array([bool(getattr(r, "isolated", False)) for r in rows], dtype=bool),
         bias_fed=np.array([getattr(r, "gate_supply", "input") == "bias" for r in rows], dtype=bool),
         bandwidth_rad_s=array(rows, "crossover_khz", 2e3 * math.pi),
+        folded_share=np.array([folded_share(row) for row in rows]),
         delay_s=array(rows, "delay_ns", 1e-9),
         wakeup_s=np.nan_to_num(array(rows, "wakeup_us", 1e-6)),
+        shedding=shedding,
+        shed_at_a=shed_at_a,
         loop_min_f=array(rows, "loop_min_uf", 1e-6),
         loop_max_f=array(rows, "loop_max_uf", 1e-6),
         inductance_h=np.array(

@@ -8,7 +8,7 @@ from archopt.model.limits import Ledger
 from archopt.model.parameters import BUCK, LINEAR
 from archopt.model.situation import Droop, Situation
 from archopt.model.space import BUS_NAMES, FIXED
-from archopt.model.stages import conduction_ratio, headroom_v, ripple_a
+from archopt.model.stages import conduction_ratio, headroom_v, ripple_square_a2, thermal_gain
 from archopt.model.states import FALLBACK, JUMP, MIX
 
 
@@ -60,7 +60,9 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     temperature = states.ambient_degc[steady][:, None] + stages.thermal_k_per_w[stage] * heat
     junction = problem.study.derating.junction_degc
     ledger.add("stage temperature", temperature, junction, at_most=True, axes=axes, applies=on)
-    ripple = np.sqrt(running / 12.0) * ripple_a(stages, stage, volts, rails.voltage_v, per_phase)
+    gain = thermal_gain(stages, stage, volts, rails.voltage_v, per_phase)
+    ledger.add("thermal gain", gain, 1.0, at_most=True, axes=axes, applies=on)
+    ripple = np.sqrt(running * ripple_square_a2(stages, stage, volts, rails.voltage_v, per_phase))
     capacitors = problem.capacitors
     bank = situation.designs.rail("bank")
     pieces = problem.bank_counts[situation.designs.rail("bank_count")]

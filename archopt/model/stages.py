@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray, StageTable
 from archopt.physics import buck, bus_converter, linear
+from archopt.physics.buck_light_load import crossover_share, pulses
 from archopt.physics.transient import buck_slew_a_per_s
 
 LINEAR_SLEW_A_PER_S = 1e12  # a linear regulator has no inductor: only its loop limits it
@@ -176,19 +177,48 @@ def slew_down_a_per_s(stages: StageTable, index: IntArray, running: NDArray[Any]
     return np.where(free, LINEAR_SLEW_A_PER_S, running * output_v / np.where(free, 1.0, inductance))
 
 
-def ripple_a(
+def ripple_square_a2(
     stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
 ) -> FloatArray:
-    """Return the peak-to-peak output ripple current of one phase, A."""
+    """Return the mean square of the current one phase sends into the output bank, A^2."""
     kind = stages.kind[index]
     out = np.zeros(np.broadcast_shapes(kind.shape, np.shape(input_v), np.shape(per_phase_a)))
     if np.any(kind == BUCK):
-        value = buck.ripple_a(stages.buck.take(index), input_v, output_v, per_phase_a)
+        value = buck.ripple_square_a2(stages.buck.take(index), input_v, output_v, per_phase_a)
         out = np.where(kind == BUCK, value, out)
     if np.any(kind == SINGLE):
         duty = np.clip(output_v * stages.turns[index] / np.maximum(input_v, 1e-3), 0.0, 1.0)
         single = (
             output_v * (1.0 - duty) / (np.nan_to_num(stages.inductance_h[index], nan=1.0) * stages.frequency_hz[index])
         )
-        out = np.where(kind == SINGLE, single, out)
+        out = np.where(kind == SINGLE, single * single / 12.0, out)
+    return out
+
+
+def loop_bandwidth_rad_s(
+    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
+) -> FloatArray:
+    """Return the loop bandwidth at a load of each phase, rad/s: in emulation it falls with the load."""
+    full = stages.bandwidth_rad_s[index]
+    folded = stages.folded_share[index]
+    if not np.any(folded < 1.0):
+        return full
+    phase = stages.buck.take(index)
+    ripple = buck.ripple_a(phase, input_v, output_v, per_phase_a)
+    pulse = pulses(phase.emulation, phase.fold_floor_hz, phase.frequency_hz, per_phase_a, ripple)
+    return full * crossover_share(folded, pulse.load_share)
+
+
+def thermal_gain(
+    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
+) -> FloatArray:
+    """Return the rise of one phase's loss per kelvin times its thermal resistance; 0 for linear regulators."""
+    kind = stages.kind[index]
+    out = np.zeros(np.broadcast_shapes(kind.shape, np.shape(input_v), np.shape(per_phase_a)))
+    if np.any(kind == BUCK):
+        value = buck.thermal_gain(stages.buck.take(index), input_v, output_v, per_phase_a)
+        out = np.where(kind == BUCK, value, out)
+    if np.any(kind == SINGLE):
+        value = bus_converter.thermal_gain(stages.single.take(index), per_phase_a)
+        out = np.where(kind == SINGLE, value, out)
     return out

@@ -14,7 +14,7 @@ from archopt.model.hardware import Hardware
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_A, INPUT, PARENT
-from archopt.model.stages import operate, ripple_a
+from archopt.model.stages import operate, ripple_square_a2
 from archopt.model.states import StateTable
 
 NODES = 32
@@ -26,7 +26,7 @@ class LossTables:
     """Tables of a problem in its states.
 
     base (R, N): first row of a rail's stage, -1 where it has none; row = base + running - 1.
-    loss_w (rows, S, K): loss without bank; ripple_square (rows, S, K): running phases x ripple^2 / 12.
+    loss_w (rows, S, K): loss without bank; ripple_square (rows, S, K): mean square of the ripple of all running phases.
     start_v, step_v (N,): voltage of the first node and between nodes, a stage.
     """
 
@@ -99,9 +99,7 @@ def make_tables(problem: Problem, states: StateTable) -> LossTables:
         point = operate(problem.stages, stage, running, volts, output_v, current, states.ambient_degc[:, None])
         loss[start : start + chunk] = point.loss_w
         per_phase = current / running
-        ripple[start : start + chunk] = (
-            running * ripple_a(problem.stages, stage, volts, output_v, per_phase) ** 2 / 12.0
-        )
+        ripple[start : start + chunk] = running * ripple_square_a2(problem.stages, stage, volts, output_v, per_phase)
     return LossTables(
         base=base,
         loss_w=loss,
@@ -167,6 +165,6 @@ class TableStages:
         volts, amps = stage_v[p, :, r], current_a[p, :, r]
         output_v = problem.rails.voltage_v[r][:, None]
         point = operate(problem.stages, stage, running, volts, output_v, amps, self.states.ambient_degc)
-        ripple = ripple_a(problem.stages, stage, volts, output_v, amps / running)
+        square = ripple_square_a2(problem.stages, stage, volts, output_v, amps / running)
         esr = hardware.bank_esr_ohm[p, r][:, None]
-        loss[p, :, r] = point.loss_w + esr * running * ripple**2 / 12.0
+        loss[p, :, r] = point.loss_w + esr * running * square

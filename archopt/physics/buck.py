@@ -1,6 +1,7 @@
-"""Losses of one phase of a synchronous buck stage in forced conduction, by mechanism.
+"""Losses of one phase of a synchronous buck stage, by mechanism: forced conduction or diode emulation.
 
-Valid for continuous and forced negative inductor current, with edges and dead time short against the period.
+Valid for continuous, forced negative and, with emulation, pulsed inductor current, with edges and dead time
+short against the period.
 """
 
 from __future__ import annotations
@@ -11,6 +12,7 @@ from typing import NamedTuple
 import numpy as np
 
 from archopt.physics.arrays import FloatArray, FloatLike
+from archopt.physics.buck_light_load import pulses
 from archopt.physics.parameters import Gatherable
 from archopt.physics.thermal import fixed_point
 
@@ -23,6 +25,8 @@ LEAST_SPAN = 1e-3
 LEAST_DUTY = 1e-3
 #: Least relative resistance of cold switches and windings; keeps extrapolated coefficients positive.
 LEAST_RESISTANCE_FACTOR = 0.2
+#: Least exponent of the swing in the core loss of one pulse; keeps odd pairs of Steinmetz exponents finite.
+LEAST_PULSE_EXPONENT = 0.5
 TINY = 1e-30
 
 
@@ -31,10 +35,13 @@ class BuckParameters(Gatherable):
     """One phase of each buck stage; every field broadcasts against the operating point.
 
     core_w is the core loss at the stage's own frequency and a ripple of core_ripple_a peak to peak;
+    core_exponent and core_frequency_exponent are Steinmetz exponents of swing and frequency;
     switch_per_k and winding_per_k are relative to the resistance at 25 degC; dead_s is both edges of a cycle;
-    gate_from_input is 1 where the gate supply is derived from the stage input, 0 with a separate bias;
-    the output charges are stated at output_charge_v, recovery_c at recovery_a; thermal_k_per_w holds at the
-    air speed of the study. max_duty, min_on_s and min_off_s are carried for the limits.
+    gate_from_input is 1 where the gate supply is derived from the stage input, gate_from_output 1 where it is
+    the stage's own output, both 0 with a separate bias; the output charges are stated at output_charge_v,
+    recovery_c at recovery_a; emulation is 1 where the low side stops at zero current, 0 in forced conduction;
+    fold_floor_hz is the lowest frequency its pulses fold to; thermal_k_per_w holds at the air speed of the
+    study. max_duty, min_on_s and min_off_s are carried for the limits.
     """
 
     frequency_hz: FloatArray
@@ -43,6 +50,7 @@ class BuckParameters(Gatherable):
     core_w: FloatArray
     core_ripple_a: FloatArray
     core_exponent: FloatArray
+    core_frequency_exponent: FloatArray
     high_side_ohm: FloatArray
     low_side_ohm: FloatArray
     switch_per_k: FloatArray
@@ -55,6 +63,7 @@ class BuckParameters(Gatherable):
     low_side_gate_c: FloatArray
     gate_v: FloatArray
     gate_from_input: FloatArray
+    gate_from_output: FloatArray
     high_side_output_c: FloatArray
     low_side_output_c: FloatArray
     output_charge_v: FloatArray
@@ -62,6 +71,8 @@ class BuckParameters(Gatherable):
     recovery_a: FloatArray
     input_capacitor_ohm: FloatArray
     quiescent_a: FloatArray
+    emulation: FloatArray
+    fold_floor_hz: FloatArray
     thermal_k_per_w: FloatArray
     max_duty: FloatArray
     min_on_s: FloatArray
@@ -88,8 +99,9 @@ class BuckLosses:
     """Watts per phase by mechanism, in the broadcast shape of the operating point (some are read-only views).
 
     The fields named in MECHANISMS come from the stage input; bias_w is what the separate bias supply delivers
-    besides. duty is what the operating point asks for and may exceed 1; on_s follows it. ripple_a is peak to
-    peak. thermal_gain of 1 or more is thermal runaway; losses are then those of a gain of 0.95.
+    besides. duty is what the operating point asks for and may exceed 1; on_s follows it. ripple_a is the swing
+    of the inductor current, peak to peak. thermal_gain of 1 or more is thermal runaway; losses are then those of
+    a gain of 0.95.
     """
 
     high_side_conduction_w: FloatArray
@@ -151,7 +163,9 @@ def duty(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: 
 
 
 def ripple_a(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike) -> FloatArray:
-    """Peak-to-peak inductor ripple (A) per phase; 0 where the duty reaches 1. Parameters as for :func:`duty`.
+    """Peak-to-peak inductor ripple (A) per phase in continuous conduction; 0 where the duty reaches 1.
+
+    Parameters as for :func:`duty`. In emulation the swing of a pulse is at most this.
 
     Notes
     -----
@@ -160,6 +174,33 @@ def ripple_a(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current
     asked, off_v = _duty_and_off_voltage(p, input_v, output_v, current_a)
     off_share = 1.0 - np.clip(asked, LEAST_DUTY, 1.0)
     return np.maximum(off_v, 0.0) * off_share / (p.inductance_h * p.frequency_hz)
+
+
+def ripple_square_a2(
+    p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike
+) -> FloatArray:
+    """Mean square (A^2) of the current one phase sends into the output capacitor. Parameters as for :func:`duty`.
+
+    Notes
+    -----
+    Mean square of the inductor current less the square of its mean: ripple^2 / 12 in continuous conduction, more
+    in emulation, where the current comes in pulses. Closed form.
+    """
+    at = _point(p, input_v, output_v, current_a)
+    square: FloatArray = np.maximum(at.rms_square - at.current_a * at.current_a, 0.0)
+    return square
+
+
+def thermal_gain(
+    p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike
+) -> FloatArray:
+    """Rise of one phase's loss per kelvin times its thermal resistance; 1 or more is thermal runaway.
+
+    Parameters as for :func:`duty`. The same number :func:`losses` reports, without the losses.
+    """
+    high_w, low_w, winding_w = _conduction(p, _point(p, input_v, output_v, current_a))
+    gain: FloatArray = p.thermal_k_per_w * (p.switch_per_k * (high_w + low_w) + p.winding_per_k * winding_w)
+    return gain
 
 
 def output_charge_energy_j(
@@ -199,17 +240,20 @@ def hard_switched_share(p: BuckParameters, input_v: FloatLike, valley_a: FloatLi
 
 
 class _Point(NamedTuple):
-    """Inductor current of one operating point: duty within its bounds, ripple and what follows from it."""
+    """Inductor current of one operating point: duty within its bounds, swing and what follows from it."""
 
     input_v: FloatArray
+    output_v: FloatArray
     current_a: FloatArray
     asked: FloatArray
-    duty: FloatArray
-    ripple_a: FloatArray
+    duty: FloatArray  # share of the conducting time that the high side conducts
+    ripple_a: FloatArray  # in continuous conduction
+    swing_share: FloatArray  # swing of a pulse over that ripple; 1 unless the low side has stopped
+    frequency_share: FloatArray  # pulses a second over the stage's frequency
+    frequency_hz: FloatArray
     valley_a: FloatArray
     carried_a: FloatArray  # the valley current where it is not reversed
     peak_a: FloatArray
-    ripple_square: FloatArray
     rms_square: FloatArray
 
 
@@ -219,46 +263,62 @@ def _point(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a
     d = np.clip(asked, LEAST_DUTY, 1.0)
     ripple = np.maximum(off_v, 0.0) * (1.0 - d) / (p.inductance_h * p.frequency_hz)
     half = 0.5 * ripple
-    valley = current - half
-    ripple_square = ripple * ripple * (1.0 / 12.0)
+    valley, peak = current - half, np.maximum(current + half, 0.0)
+    rms_square = current * current + ripple * ripple * (1.0 / 12.0)
+    swing_share = frequency_share = np.ones(())
+    if np.any(p.emulation):
+        pulse = pulses(p.emulation, p.fold_floor_hz, p.frequency_hz, current, ripple)
+        swing_share, frequency_share = pulse.swing_share, pulse.frequency_share
+        swing = ripple * swing_share
+        valley = np.where(pulse.stopped, 0.0, valley)
+        peak = np.where(pulse.stopped, swing, peak)
+        rms_square = np.where(pulse.stopped, pulse.conducting_share * swing * swing * (1.0 / 3.0), rms_square)
     return _Point(
         np.asarray(input_v, dtype=np.float64),
+        np.asarray(output_v, dtype=np.float64),
         current,
         asked,
         d,
         ripple,
+        swing_share,
+        frequency_share,
+        p.frequency_hz * frequency_share,
         valley,
         np.maximum(valley, 0.0),
-        np.maximum(current + half, 0.0),
-        ripple_square,
-        current * current + ripple_square,
+        peak,
+        rms_square,
     )
 
 
 def _conduction(p: BuckParameters, at: _Point) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Loss (W) of high side, low side and winding at 25 degC."""
-    off_share = np.maximum(1.0 - at.duty - p.dead_s * p.frequency_hz, 0.0)
+    # the dead time is a larger part of a shorter pulse
+    dead_share = p.dead_s * p.frequency_hz / np.maximum(at.swing_share, TINY)
+    off_share = np.maximum(1.0 - at.duty - dead_share, 0.0)
     high_w = p.high_side_ohm * at.duty * at.rms_square
     return high_w, p.low_side_ohm * off_share * at.rms_square, p.winding_ohm * at.rms_square
 
 
 def _constant(p: BuckParameters, at: _Point) -> tuple[FloatArray, ...]:
     """Losses (W) that do not depend on temperature, in the order of MECHANISMS from core_w, then bias_w."""
-    v, frequency = at.input_v, p.frequency_hz
+    v, frequency = at.input_v, at.frequency_hz
     vf = v * frequency
     charge_j = output_charge_energy_j(p.high_side_output_c, p.low_side_output_c, p.output_charge_v, v)
     gate_c = p.high_side_gate_c + p.low_side_gate_c
+    supply_v = p.gate_from_input * v + p.gate_from_output * at.output_v
+    pulse_exponent = np.maximum(p.core_exponent - p.core_frequency_exponent + 1.0, LEAST_PULSE_EXPONENT)
     return (
-        p.core_w * (at.ripple_a / np.maximum(p.core_ripple_a, TINY)) ** p.core_exponent,
+        p.core_w * (at.ripple_a / np.maximum(p.core_ripple_a, TINY)) ** p.core_exponent
+        * at.frequency_share * at.swing_share**pulse_exponent,
         vf * (0.5 * p.rise_s * at.carried_a + 0.5 * p.fall_s * at.peak_a),
         0.5 * p.diode_v * p.dead_s * frequency * (np.abs(at.valley_a) + at.peak_a),
         frequency * charge_j * hard_switched_share(p, v, at.valley_a),
         vf * (p.recovery_c / np.maximum(p.recovery_a, TINY)) * at.carried_a,
-        p.input_capacitor_ohm * at.duty * ((1.0 - at.duty) * at.current_a * at.current_a + at.ripple_square),
-        vf * (gate_c * p.gate_from_input),
+        p.input_capacitor_ohm * at.duty * np.maximum(at.rms_square - at.duty * at.current_a * at.current_a, 0.0),
+        frequency * gate_c * supply_v,
         p.quiescent_a * v,
-        (1.0 - p.gate_from_input) * gate_c * p.gate_v * frequency,
-    )
+        (1.0 - p.gate_from_input - p.gate_from_output) * gate_c * p.gate_v * frequency,
+    )  # fmt: skip
 
 
 def losses(
@@ -268,10 +328,11 @@ def losses(
     current_a: FloatLike,
     ambient_degc: FloatLike,
 ) -> BuckLosses:
-    """Losses of one phase in forced conduction, with switches and winding at their own temperature.
+    """Losses of one phase, with switches and winding at their own temperature.
 
     Finite on every finite input with input_v above 0. All heat of the phase counts against thermal_k_per_w,
-    the gate power of a separate bias included.
+    the gate power of a separate bias included. A gate supply from the stage's own output draws the gate charge
+    at the output voltage; what those milliamperes cost on their way through the stage is neglected.
 
     Parameters
     ----------
@@ -285,7 +346,10 @@ def losses(
     rms^2 = I^2 + ripple^2 / 12; overlap V f (t_rise max(valley, 0) + t_fall peak) / 2; dead time
     Vd f dead (|valley| + peak) / 2; recovery V f Q max(valley, 0) / rated; core by the power of ripple that
     Steinmetz found (1892); input capacitor D (1 - D) I^2 + D ripple^2 / 12. Textbook forms, checked against
-    SNVS276G p. 26 and two ROHM notes.
+    SNVS276G p. 26 and two ROHM notes. In emulation below zero valley current (see buck_light_load) the valley
+    is 0, a pulse swings by p during the share c of the time, rms^2 = c p^2 / 3, and everything that is lost per
+    cycle is lost as often as there are pulses. The output charge is then that of a node at 0 V: the ringing
+    of the idle node is not followed.
     """
     at = _point(p, input_v, output_v, current_a)
     high_w, low_w, winding_w = _conduction(p, at)
@@ -307,6 +371,7 @@ def losses(
     switch_factor = np.maximum(1.0 + p.switch_per_k * rise_k, LEAST_RESISTANCE_FACTOR)
     winding_factor = np.maximum(1.0 + p.winding_per_k * rise_k, LEAST_RESISTANCE_FACTOR)
     conduction = (high_w * switch_factor, low_w * switch_factor, winding_w * winding_factor)
-    state = (at.asked, at.ripple_a, at.asked / p.frequency_hz, temperature, gain)
+    on_s = at.asked * at.swing_share / p.frequency_hz
+    state = (at.asked, at.ripple_a * at.swing_share, on_s, temperature, gain)
     shape = np.shape(temperature)
     return BuckLosses(*(np.broadcast_to(result, shape) for result in (*conduction, *constant, *state)))

@@ -62,6 +62,13 @@ class ConverterLosses:
         return self.fixed_w + self.switching_w + self.linear_w + self.resistive_w
 
 
+def thermal_gain(p: ConverterParameters, current_a: FloatLike) -> FloatArray:
+    """Rise of one unit's loss per kelvin times its thermal resistance at a current (A); 1 or more is runaway."""
+    square = np.square(np.asarray(current_a, dtype=np.float64))
+    gain: FloatArray = p.thermal_k_per_w * p.resistance_per_k * p.resistance_ohm * square
+    return gain
+
+
 def losses(
     p: ConverterParameters,
     input_v: FloatLike,

@@ -7,7 +7,7 @@ of their own), the names of the choices, and closed forms of the physics room fo
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import cast
 
 from archopt.inputs.parts import (
@@ -188,8 +188,8 @@ class Reference:
             one = converter_unit(net.row, vin, vout, each, ambient, air)
         else:
             one = linear_unit(cast(LinearRegulator, net.row), vin, vout, each, ambient, air)
-        bank = net.bank_ohm * running * one.ripple_a**2 / 12.0
-        return Point(one.loss_w * running + bank, one.bias_w * running, one.ripple_a, one.duty, one.temperature_degc)
+        bank = net.bank_ohm * running * one.square_a2
+        return replace(one, loss_w=one.loss_w * running + bank, bias_w=one.bias_w * running)
 
     def running_in(self, s: int, net: Net) -> int:
         return net.phases if self.states.kind[s] == FALLBACK else net.running[int(self.states.band[s])]

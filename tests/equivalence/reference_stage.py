@@ -16,11 +16,15 @@ COPPER_PER_K = 0.00393
 
 @dataclass(frozen=True)
 class Point:
-    """One phase or unit: what its input loses, what a separate bias delivers, ripple, duty, temperature."""
+    """One phase or unit: what its input loses, what a separate bias delivers, ripple, duty, temperature.
+
+    square_a2: mean square of what one phase sends into the output bank; reach: load over that of zero valley.
+    """
 
     loss_w: float
     bias_w: float = 0.0
-    ripple_a: float = 0.0
+    square_a2: float = 0.0
+    reach: float = 1.0
     duty: float = 0.0
     temperature_degc: float = 0.0
 
@@ -40,7 +44,7 @@ def settle(cold_w: float, per_k: float, ambient: float, k_per_w: float) -> float
 def buck_phase(
     row: BuckStage, coil: Inductor, vin: float, vout: float, amps: float, ambient: float, air_m_s: float
 ) -> Point:
-    """Return the losses of one phase in forced conduction."""
+    """Return the losses of one phase, in forced conduction or with pulses that stop at zero current."""
     f = row.frequency_khz * 1e3
     henry = coil.inductance_nh * 1e-9
     high, low, winding = row.high_side_mohm * 1e-3, row.low_side_mohm * 1e-3, coil.winding_mohm * 1e-3
@@ -52,27 +56,37 @@ def buck_phase(
     ripple = across_off * (1.0 - d) / (henry * f)
     valley, peak = amps - ripple / 2.0, max(amps + ripple / 2.0, 0.0)
     rms2 = amps**2 + ripple**2 / 12.0
+    reach, high_pulse, often = 1.0, 1.0, 1.0
+    if row.light_load == "emulation" and ripple > 0.0 and valley < 0.0:
+        reach = amps / (ripple / 2.0)
+        often = max(reach, row.fold_floor_khz / row.frequency_khz)
+        high_pulse = math.sqrt(reach / often) if often > 0.0 else 0.0
+        valley, peak = 0.0, ripple * high_pulse
+        rms2 = often * high_pulse * peak**2 / 3.0  # triangles from zero, that share of the time
+    pulse_hz = f * often
     dead = row.dead_time_ns * 1e-9
-    conduction = high * d * rms2 + low * max(1.0 - d - dead * f, 0.0) * rms2
+    conduction = high * d * rms2 + low * max(1.0 - d - dead * f / max(high_pulse, 1e-30), 0.0) * rms2
     copper = winding * rms2
     core = coil.core_loss_mw * 1e-3
     core *= (row.frequency_khz / coil.core_frequency_khz) ** coil.core_frequency_exponent
     core *= (ripple / coil.core_ripple_a) ** coil.core_ripple_exponent
-    overlap = 0.5 * vin * f * 1e-9 * (row.edge_rise_ns * max(valley, 0.0) + row.edge_fall_ns * peak)
-    diode = row.diode_v * f * (dead / 2.0) * (abs(valley) + peak)
+    # a pulse of less height is shorter: the same slopes, so energy goes with height to b - a + 1
+    core *= often * high_pulse ** max(coil.core_ripple_exponent - coil.core_frequency_exponent + 1.0, 0.5)
+    overlap = 0.5 * vin * pulse_hz * 1e-9 * (row.edge_rise_ns * max(valley, 0.0) + row.edge_fall_ns * peak)
+    diode = row.diode_v * pulse_hz * (dead / 2.0) * (abs(valley) + peak)
     # charge grows as the root of voltage: V Qlow + Ehigh - Elow with E = Q V / 3
     root = math.sqrt(vin / row.output_charge_at_v)
     q_high, q_low = row.high_side_output_nc * 1e-9 * root, row.low_side_output_nc * 1e-9 * root
-    output = f * (vin * q_low + q_high * vin / 3.0 - q_low * vin / 3.0)
+    output = pulse_hz * (vin * q_low + q_high * vin / 3.0 - q_low * vin / 3.0)
     if valley < 0.0:
         moved = -valley * dead / 2.0
         total = q_high + q_low
         output *= max(1.0 - moved / total, 0.0) ** 2 if total > 1e-30 else 0.0
-    recovery = vin * f * row.recovery_nc * 1e-9 * max(valley, 0.0) / row.phase_current_a
-    own_input = row.input_capacitor_mohm * 1e-3 * (d * (1.0 - d) * amps**2 + d * ripple**2 / 12.0)
+    recovery = vin * pulse_hz * row.recovery_nc * 1e-9 * max(valley, 0.0) / row.phase_current_a
+    own_input = row.input_capacitor_mohm * 1e-3 * (d * rms2 - (d * amps) ** 2)
     gate_c = (row.high_side_gate_nc + row.low_side_gate_nc) * 1e-9
-    gate = gate_c * vin * f if row.gate_supply == "input" else 0.0
-    bias = gate_c * row.gate_v * f if row.gate_supply == "bias" else 0.0
+    gate = gate_c * pulse_hz * {"input": vin, "output": vout, "bias": 0.0}[row.gate_supply]
+    bias = gate_c * row.gate_v * pulse_hz if row.gate_supply == "bias" else 0.0
     controller = row.quiescent_ma * 1e-3 * vin
     steady = core + overlap + diode + output + recovery + own_input + gate + controller
     per_k = row.resistance_per_k * conduction + COPPER_PER_K * copper
@@ -80,7 +94,7 @@ def buck_phase(
     degc = settle(conduction + copper + steady + bias, per_k, ambient, k_per_w)
     loss = steady + conduction * max(1.0 + row.resistance_per_k * (degc - 25.0), 0.2)
     loss += copper * max(1.0 + COPPER_PER_K * (degc - 25.0), 0.2)
-    return Point(loss, bias, ripple, asked, degc)
+    return Point(loss, bias, rms2 - amps**2, reach, asked, degc)
 
 
 def converter_unit(
@@ -101,7 +115,7 @@ def converter_unit(
         ratio = min(max(vout * turns / vin, 0.0), 1.0)
         ripple = vout * (1.0 - ratio) / (row.inductance_nh * 1e-9 * row.frequency_khz * 1e3)
         duty = (vout + amps * row.resistance_mohm * 1e-3) * turns / vin
-    return Point(loss, 0.0, ripple, duty, degc)
+    return Point(loss, square_a2=ripple**2 / 12.0, duty=duty, temperature_degc=degc)
 
 
 def linear_unit(row: LinearRegulator, vin: float, vout: float, amps: float, ambient: float, air_m_s: float) -> Point:

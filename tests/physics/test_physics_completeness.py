@@ -15,6 +15,7 @@ import archopt.physics
 
 TESTS = Path(__file__).parent.parent
 BUCK = "published/test_published_buck.py"
+LIGHT = "physics/test_buck_light_load.py"
 COPPER = "published/test_published_copper.py"
 DROOP = "published/test_published_transient.py"
 IN_TIME = "property/test_property_transient.py"
@@ -33,9 +34,15 @@ CLAIMS = {
     "buck.losses": (BUCK, "test_overlap_61_mw", "SNVS276G p. 26"),
     "buck.output_charge_energy_j": (BUCK, "test_output_charge_against_integrals", "numerical integration"),
     "buck.ripple_a": (BUCK, "test_ripple_of_data_sheet_examples", "SLUS973 p. 21, RT6263A p. 17"),
+    "buck.ripple_square_a2": (LIGHT, "test_output_ripple_is_a_twelfth_in_continuous_conduction", "closed form"),
+    "buck.thermal_gain": (LIGHT, "test_thermal_gain_is_that_of_the_losses", "losses"),
+    "buck_light_load.Pulses": (LIGHT, "test_pulses_carry_the_load", "closed form"),
+    "buck_light_load.crossover_share": (LIGHT, "test_loop_bandwidth_falls_to_its_share", "closed form"),
+    "buck_light_load.pulses": (LIGHT, "test_pulses_carry_the_load", "closed form"),
     "bus_converter.ConverterLosses": (PARAMETERS, "test_converter_by_hand", "closed form"),
     "bus_converter.ConverterParameters": (PARAMETERS, "test_converter_by_hand", "closed form"),
     "bus_converter.losses": (PARAMETERS, "test_converter_by_hand", "closed form"),
+    "bus_converter.thermal_gain": (PARAMETERS, "test_converter_by_hand", "closed form"),
     "capacitor.buck_input_ripple_rms_a": (BUCK, "test_input_capacitor_1_92_a_and_88_8_mw", "SNVS276G p. 26"),
     "capacitor.buck_output_ripple_rms_a": (CAPACITOR, "test_output_ripple_rms", "sampled waveform"),
     "capacitor.effective_capacitance_f": (CAPACITOR, "test_bias_halves_at_its_voltage", "closed form"),

@@ -53,6 +53,8 @@ def test_converter_by_hand() -> None:
     heated = 5e-3 * 400.0 * (1.0 + 0.004 * (result.temperature_degc - 25.0))
     assert result.resistive_w == pytest.approx(heated, rel=1e-12)
     assert result.temperature_degc == pytest.approx(40.0 + 6.0 * result.total_w, rel=1e-9)
+    assert bus_converter.thermal_gain(cold, 20.0) == pytest.approx(np.array([6.0 * 0.004 * 5e-3 * 400.0]), rel=1e-12)
+    np.testing.assert_allclose(bus_converter.thermal_gain(cold, 20.0), result.thermal_gain, rtol=1e-6)
 
 
 def test_grid_equals_one_at_a_time() -> None:
@@ -73,7 +75,8 @@ def test_grid_equals_one_at_a_time() -> None:
 
 def test_buck_results_all_have_the_shape_of_the_operating_point() -> None:
     values = dict.fromkeys((field.name for field in fields(buck.BuckParameters)), 1e-3)
-    values |= {"frequency_hz": 1e6, "inductance_h": 1e-6, "core_exponent": 2.0, "gate_from_input": 0.0}
+    values |= {"frequency_hz": 1e6, "inductance_h": 1e-6, "core_exponent": 2.0}
+    values |= {"gate_from_input": 0.0, "gate_from_output": 0.0}
     stage = buck.BuckParameters(**{name: np.array([value, value]) for name, value in values.items()})
     grid = stage.take(np.arange(2)[:, None])
     result = buck.losses(grid, np.linspace(5.0, 12.0, 4), 1.0, 5.0, 50.0)

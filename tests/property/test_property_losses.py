@@ -31,6 +31,7 @@ stages = st.builds(
     core_w=span(0.0, 2.0),
     core_ripple_a=span(0.1, 50.0),
     core_exponent=span(1.5, 3.5),
+    core_frequency_exponent=span(1.0, 3.0),
     high_side_ohm=span(2e-4, 0.2),
     low_side_ohm=span(2e-4, 0.2),
     switch_per_k=span(0.0, 0.02),
@@ -43,6 +44,7 @@ stages = st.builds(
     low_side_gate_c=span(0.0, 200e-9),
     gate_v=span(3.0, 20.0),
     gate_from_input=st.sampled_from([0.0, 1.0]),
+    gate_from_output=st.just(0.0),
     high_side_output_c=span(0.0, 100e-9),
     low_side_output_c=span(0.0, 200e-9),
     output_charge_v=span(1.0, 60.0),
@@ -50,6 +52,8 @@ stages = st.builds(
     recovery_a=span(1.0, 100.0),
     input_capacitor_ohm=span(0.0, 0.05),
     quiescent_a=span(0.0, 0.05),
+    emulation=st.sampled_from([0.0, 1.0]),
+    fold_floor_hz=span(0.0, 1e6),
     thermal_k_per_w=span(0.5, 100.0),
     max_duty=span(0.5, 1.0),
     min_on_s=span(0.0, 1e-6),
@@ -72,8 +76,8 @@ TYPICAL = BuckParameters(
     *(
         np.asarray(value)
         for value in (
-            600e3, 0.3e-6, 0.6e-3, 0.2, 8.0, 2.4, 5e-3, 2e-3, 0.004, 0.00393, 6e-9, 6e-9, 25e-9, 0.8, 8e-9,
-            20e-9, 5.0, 1.0, 10e-9, 20e-9, 12.0, 20e-9, 25.0, 2e-3, 5e-3, 12.0, 0.9, 50e-9, 100e-9,
+            600e3, 0.3e-6, 0.6e-3, 0.2, 8.0, 2.4, 1.5, 5e-3, 2e-3, 0.004, 0.00393, 6e-9, 6e-9, 25e-9, 0.8, 8e-9,
+            20e-9, 5.0, 1.0, 0.0, 10e-9, 20e-9, 12.0, 20e-9, 25.0, 2e-3, 5e-3, 0.0, 0.0, 12.0, 0.9, 50e-9, 100e-9,
         )
     )
 )  # fmt: skip
