@@ -15,6 +15,7 @@ from archopt.present.tables import section, table
 
 MOST_MECHANISMS = 6
 MOST_LEVERAGE = 5
+MOST_PRICES = 3
 
 
 def question_sections(record: FrontRecord) -> Iterable[RenderableType]:
@@ -152,8 +153,10 @@ def limit_text(limit: object) -> str:
 
 
 def leverage_body(record: FrontRecord) -> Iterable[RenderableType]:
-    """The numbers whose spread moves the knee most, nothing chosen anew, and where they come from."""
+    """The numbers whose spread moves the knee most, nothing chosen anew: those of losses, then prices."""
     ordered = sorted(record.leverage, key=lambda row: -abs(_weight(row)))
+    losses = [row for row in ordered if not _is_price(row)]
+    prices = [row for row in ordered if _is_price(row)]
     rows = [
         [
             str(row.get("part", NONE)), str(row.get("column") or row.get("number") or NONE),
@@ -161,7 +164,7 @@ def leverage_body(record: FrontRecord) -> Iterable[RenderableType]:
             signed(row.get("energy_change_kwh"), 2), signed(row.get("cost_change"), 2),
             signed(row.get("lifetime_change"), 2), str(row.get("source") or NONE),
         ]
-        for row in ordered[:MOST_LEVERAGE]
+        for row in [*losses[:MOST_LEVERAGE], *prices[:MOST_PRICES]]
     ]  # fmt: skip
     words = ["part", "number", "source"]
     headings = ["part", "number", "value", "spread", "kWh a year", "cost", "life cost", "source"]
@@ -173,6 +176,10 @@ def _name_of(row: Data) -> str:
     design = row.get("best_design")
     name = str(design.get("design") or NONE) if isinstance(design, dict) else str(design or NONE)
     return "not on the front" if name.startswith("best of ") else name
+
+
+def _is_price(row: Data) -> bool:
+    return str(row.get("column") or row.get("number")).startswith("price")
 
 
 def _weight(row: Data) -> float:

@@ -140,7 +140,10 @@ def test_the_nearest_losing_topology_says_why(record: FrontRecord) -> None:
 
 def test_only_the_five_strongest_numbers_are_printed(record: FrontRecord) -> None:
     many = [{**record.leverage[0], "part": f"PART-{k}", "lifetime_change": -float(k)} for k in range(8)]
+    many += [{**record.leverage[0], "part": f"COST-{k}", "column": "price_1k"} for k in range(4)]
     text = printed(dataclasses.replace(record, leverage=many))
+    assert text.count("COST-") == 3
+    assert text.index("PART-3") < text.index("COST-0")
     assert "PART-7" in text
     assert "PART-3" in text
     assert "PART-2" not in text
