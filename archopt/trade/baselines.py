@@ -90,7 +90,7 @@ def baselines(problem: Problem, row: IntArray, of: str) -> Baselines:
             continue
         other = Evaluator(with_jump(pinned, jump))
         if jump not in moving:
-            moving[jump] = best_schedule(other, row, best_fixed(other, row))
+            moving[jump] = best_schedule(other, row)
         note = f"jump of {jump:g} % of rated load" if name == FOLLOWS_STUDY else ""
         rows.append(baseline_row(other, name, of, moving[jump], note))
     return Baselines(rows, summary_of(evaluator, of, fixed, moving))
@@ -151,6 +151,10 @@ def baseline_row(
         bus: values[0] if len(values) == 1 else values
         for bus, values in schedule_v(problem, design.row).items()
     }
+    if design.row[problem.layout.board("supervisor")] > 0 and not any(
+        isinstance(values, list) for values in volts.values()
+    ):
+        remarks.append("nothing is gained by moving the bus")
     energy, cost, droop = (float(x) for x in design.objectives)
     return {
         "baseline": name,

@@ -79,21 +79,23 @@ def fixed_rows(problem: Problem, row: IntArray, volts: IntArray) -> IntArray:
 
 
 def follow_rows(problem: Problem, row: IntArray, volts: IntArray) -> IntArray:
-    """Return rows that follow the load over the converters' whole range, from given nominals, (K, 2)."""
+    """Return rows that follow the load over the converters' whole range, from given nominals, (K, 2), or their own."""
     rows = np.repeat(row[None], len(volts), axis=0)
     designs = Designs(problem.layout, rows)
     for bus in regulated_buses(problem, row):
         span = span_of(problem, row, bus)
         designs.bus("control")[:, bus] = FOLLOW
-        designs.bus("nominal_v")[:, bus] = volts[:, bus]
+        nominal = designs.bus("nominal_v")[:, bus]
+        nominal[:] = np.where(volts[:, bus] >= 0, volts[:, bus], nominal)
         designs.bus("lower_v")[:, bus], designs.bus("upper_v")[:, bus] = span[0], span[-1]
     return rows
 
 
-def combinations(problem: Problem, row: IntArray, buses: Sequence[int]) -> list[IntArray]:
-    """Return the voltages to sweep, (K, 2) grid positions: all pairs at once, or one bus after the other."""
+def combinations(problem: Problem, row: IntArray, buses: Sequence[int], *, together: bool) -> list[IntArray]:
+    """Return the voltages to sweep, (K, 2) grid positions: all pairs, or one bus after the other, twice."""
     spans = {bus: span_of(problem, row, bus) for bus in buses}
-    if np.prod([len(span) for span in spans.values()]) <= MOST_COMBINATIONS:
+    pairs = np.prod([len(span) for span in spans.values()])
+    if len(buses) == 1 or (together and pairs <= MOST_COMBINATIONS):
         every = np.array(list(product(*(spans.get(bus, np.array([-1])) for bus in range(2)))), dtype=np.int64)
         return [every]
     return [alone(bus, spans[bus]) for _ in range(ROUNDS // 2) for bus in buses]
@@ -130,7 +132,7 @@ def best_fixed(evaluator: Evaluator, row: IntArray) -> Scheduled:
     buses = regulated_buses(problem, row)
     best = None
     start = row
-    for volts in combinations(problem, row, buses):
+    for volts in combinations(problem, row, buses, together=True):
         rows = evaluator.decide(fixed_rows(problem, start, volts))
         found = taken(evaluate_exactly(evaluator, rows))
         best = found if best is None else better(best, found)
@@ -171,22 +173,18 @@ def flat_band(evaluator: Evaluator, best: Scheduled) -> dict[str, list[float]]:
     return bands
 
 
-def best_schedule(evaluator: Evaluator, row: IntArray, fixed: Scheduled) -> Scheduled:
+def best_schedule(evaluator: Evaluator, row: IntArray) -> Scheduled:
     """Return the design following the load as well as it can under the problem's own jump.
 
     The tables propose a schedule for every nominal. The best of them by direct physics (or, where none is
     feasible, the best fixed voltage with a supervisor added) is moved band by band by direct physics until no
     single band's voltage can be changed for the better.
-
-    Parameters
-    ----------
-    fixed : the same hardware at its best fixed voltage
     """
     problem = evaluator.problem
     buses = regulated_buses(problem, row)
     best = None
     start = row
-    for volts in combinations(problem, row, buses):
+    for volts in combinations(problem, row, buses, together=False):
         rows = evaluator.decide(follow_rows(problem, start, volts))
         moving = (Designs(problem.layout, rows).bus("control")[:, list(buses)] == FOLLOW).any(axis=1)
         if not moving.any():
@@ -196,7 +194,7 @@ def best_schedule(evaluator: Evaluator, row: IntArray, fixed: Scheduled) -> Sche
         start = best.row
     if best is not None and best.feasible:
         return moved(evaluator, best)
-    flat = moved(evaluator, supervised(problem, row, fixed))
+    flat = moved(evaluator, supervised(problem, row, best_fixed(evaluator, row)))
     return flat if best is None else better(flat, best)
 
 

@@ -24,7 +24,7 @@ from archopt.trade.baselines import (
 )
 from archopt.trade.money import money_per_kwh
 from archopt.trade.pinned import pinned_problem, with_jump
-from archopt.trade.schedules import best_fixed, best_schedule, flat_band, regulated_buses
+from archopt.trade.schedules import best_fixed, best_schedule, fixed_rows, flat_band, regulated_buses
 
 from .conftest import STUDIES
 
@@ -136,7 +136,7 @@ def test_nothing_of_the_hardware_is_chosen_again(industrial) -> None:
     problem, row = industrial
     evaluator = Evaluator(pinned_problem(problem, row))
     fixed = best_fixed(evaluator, row)
-    moving = best_schedule(evaluator, row, fixed)
+    moving = best_schedule(evaluator, row)
     start = evaluator.decide(row[None])[0]
     layout = problem.layout
     free = {layout.bus(field).start + bus for field in HARDWARE_FREE for bus in range(2)}
@@ -151,7 +151,7 @@ def test_nothing_of_the_hardware_is_chosen_again(industrial) -> None:
 def test_no_single_band_can_be_moved_for_the_better(wide) -> None:
     problem, row = wide
     evaluator = Evaluator(pinned_problem(problem, row))
-    best = best_schedule(evaluator, row, best_fixed(evaluator, row))
+    best = best_schedule(evaluator, row)
     layout = problem.layout
     for band in range(layout.bands):
         for step in (-1, 1):
@@ -179,6 +179,48 @@ def test_flat_band_holds_the_voltages_within_one_percent(wide) -> None:
     for beyond in (low - step, high + step):
         energy, violation = energy_at(evaluator, best.row, float(beyond))
         assert violation > 0 or energy > 1.01 * best.objectives[0]
+
+
+def test_two_buses_are_swept_together(telecom) -> None:
+    """No pair of fixed voltages a step away in either bus, or in both, is better and feasible."""
+    problem, row = telecom
+    second = {
+        "aux_2v5.feed": "bus_b", "optics_3v3.feed": "bus_b", "bus_b.converter": "wide_bus_100w",
+        "bus_b.count": "1", "bus_b.nominal_v": "12", "bus_b.lower_v": "12", "bus_b.upper_v": "12",
+        "bus_b.bulk": "polymer_270u_16v_can", "bus_b.bulk_count": "4", "bus_b.pairs": "1",
+    }  # fmt: skip
+    row = problem.space.encode(second, row)
+    evaluator = Evaluator(pinned_problem(problem, row))
+    assert regulated_buses(problem, row) == (0, 1)
+    best = best_fixed(evaluator, row)
+    assert best.feasible
+    at = Designs(problem.layout, best.row[None]).bus("nominal_v")[0]
+    around = at + np.array([(i, j) for i in (-1, 0, 1) for j in (-1, 0, 1)])
+    around = around[(around >= 0).all(axis=1)]
+    found = evaluator.evaluate(evaluator.decide(fixed_rows(evaluator.problem, row, around)), exact=True)
+    legal = found.violation <= 0
+    assert found.objectives[legal, 0].min() == pytest.approx(best.objectives[0], rel=1e-12)
+    assert set(flat_band(evaluator, best)) == {"bus_a", "bus_b"}
+    moving = best_schedule(evaluator, row)
+    assert moving.feasible
+    volts = Designs(problem.layout, moving.row[None]).volts[0]
+    assert np.all(np.diff(volts, axis=1) >= 0)
+
+
+def test_bus_that_cannot_move_pays_for_a_supervisor_that_does_nothing(telecom) -> None:
+    """A converter that makes 12 V only: the gain is the supervisor's own power over the year, negative."""
+    problem, row = telecom
+    only_12 = np.full_like(problem.converters.output_min_v, 12.0)
+    stiff = replace(problem.converters, output_min_v=only_12, output_max_v=only_12)
+    result = baselines(replace(problem, converters=stiff), row, "incumbent")
+    found = rows_of(result)
+    assert [row["volts"] for row in result.rows] == [12.0] * 5
+    assert "nothing is gained by moving the bus" in found[FOLLOWS_STUDY]["note"]
+    watts = problem.supervisors.power_w[int(np.argmax(problem.supervisors.level >= 2))]
+    expected = -watts * problem.states.hours.sum() * 1e-3
+    assert result.summary["gain_kwh_per_year"] == pytest.approx(expected, rel=0.02)
+    assert result.summary["supervisor_payback_years"] is None
+    assert result.summary["flat_band_v"] == {"bus_a": [12.0, 12.0]}
 
 
 @pytest.mark.parametrize("jump", [0.0, 60.0])
