@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from archopt.model.board import STEP_POWER_RATIO
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
 from archopt.model.hardware import Hardware, plane_limit_a, unpack
@@ -26,6 +27,7 @@ from archopt.physics.transient import bus_dip_v
 
 ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
 SAFETY_V = 0.01
+LARGEST_STEP_RATIO = 3.0  # of a rail's step in bus power over its own, as the board solution has it
 SETTLING_PASSES = 3
 
 
@@ -227,7 +229,8 @@ def raise_for_children(
     np.add.at(extra, (p, parent), power / problem.rails.voltage_v[parent][:, None])
     stage = designs.rail("stage")
     total = problem.states.mix_a.T + extra
-    needed = np.ceil(total / problem.stages.phase_limit_a[stage][..., None] - 1e-9).astype(np.int64)
+    each = np.minimum(problem.stages.phase_limit_a, problem.stages.shed_at_a)[stage]
+    needed = np.ceil(total / each[..., None] - 1e-9).astype(np.int64)
     raised = np.maximum(running, np.minimum(needed, designs.rail("phases")[..., None]))
     return np.where(extra > 0, raised, running)
 
@@ -266,7 +269,7 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     units = np.where(hardware.converter[..., None] >= 0, units, 0)
     designs.rows[:, layout.running_converters] = units.reshape(len(designs), -1)
     hardware = unpack(problem, designs, states)
-    step_w = step_power(problem, designs, mix_w, hardware)
+    step_w = step_power(problem, options, option, hardware, mix_w)
     index = np.maximum(hardware.converter, 0)[..., None, None]
     dip = bus_dip_v(
         step_w,
@@ -294,20 +297,24 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     return designs, unsettled | (canonical(problem, designs).rows != designs.rows).any(axis=1)
 
 
-def step_power(problem: Problem, designs: Designs, mix_w: FloatArray, hardware: Hardware) -> FloatArray:
-    """Return the largest coincident step of bus power, (P, 2, B, 1) W, at the mix's mean in-over-out ratio."""
+def step_power(
+    problem: Problem, options: Options, option: IntArray, hardware: Hardware, bus_w: FloatArray
+) -> FloatArray:
+    """Return the largest coincident step of bus power over the grid, (P, 2, B, G) W.
+
+    Each rail's own power in over out at the middle of the grid, scaled as the whole bus (P, 2, B, G) is.
+    """
     rails = problem.rails
-    volts_amps = rails.voltage_v * problem.states.mix_a  # (B, R)
-    output = np.einsum("pkr,br->pkb", hardware.on_bus.astype(np.float64), volts_amps)
-    middle = mix_w[..., mix_w.shape[3] // 2]
-    ratio = np.where(output > 0, middle / np.maximum(output, 1e-9), 1.2)
-    step = rails.step_a * rails.voltage_v
-    groups = int(rails.step_group.max()) + 1
-    largest = np.zeros(hardware.on_bus.shape[:2])
-    for group in range(groups):
-        here = np.where(rails.step_group == group, step, 0.0)
-        largest = np.maximum(largest, (hardware.on_bus * here).sum(axis=2))
-    return np.asarray((largest[..., None] * np.clip(ratio, 1.0, 3.0))[..., None])
+    mix_w = options.rows.mix_w
+    middle = mix_w[options.row[option], np.arange(mix_w.shape[1]), mix_w.shape[2] // 2]  # (P, R, B)
+    output = (rails.voltage_v * problem.states.mix_a).T  # (R, B)
+    ratio = np.where(output > 0, middle / np.maximum(output, 1e-12), STEP_POWER_RATIO)
+    step = (rails.step_a * rails.voltage_v)[:, None] * np.minimum(ratio, LARGEST_STEP_RATIO)
+    largest = np.zeros(hardware.band_v.shape)
+    for group in range(int(rails.step_group.max()) + 1):
+        here = hardware.on_bus & (rails.step_group == group)
+        largest = np.maximum(largest, np.einsum("pkr,prb->pkb", here.astype(np.float64), step))
+    return largest[..., None] * bus_w / np.maximum(bus_w[..., mix_w.shape[2] // 2, None], 1e-9)
 
 
 def snap_limits(problem: Problem, designs: Designs, volts: IntArray, idle: BoolArray) -> None:
