@@ -300,7 +300,7 @@ class Source(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid")
 
     key: str = Field(min_length=1)
-    kind: Literal["published", "common practice", "memory", "invented"]
+    kind: Literal["published", "common practice", "memory", "measured", "invented"]
     dated: str = Field(pattern=r"^\d{4}-\d{2}-\d{2}$")
     title: str = Field(min_length=1)
 
