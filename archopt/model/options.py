@@ -12,10 +12,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from archopt.model.hardware import bias_per_phase_w
-from archopt.model.parameters import BUCK, LINEAR, FloatArray, IntArray
+from archopt.model.parameters import BUCK, LINEAR, NO_SHEDDING, THRESHOLD_SHEDDING, FloatArray, IntArray
 from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
 from archopt.model.space import BANK_COUNTS
-from archopt.model.stages import conduction_ratio, slew_down_a_per_s, slew_up_a_per_s
+from archopt.model.stages import conduction_ratio, loop_bandwidth_rad_s, slew_down_a_per_s, slew_up_a_per_s
 from archopt.model.states import ENERGY, JUMP, MIX, StateTable
 from archopt.model.tables import NODES, LossTables, cubic_weights
 from archopt.physics.transient import rail_droop_v
@@ -151,6 +151,20 @@ def hottest(problem: Problem, states: StateTable, tables: LossTables) -> FloatAr
     return np.asarray(np.where(ok, volts[:, None, :], 0.0).max(axis=2) + np.where(ok[:, :, -1], 1e3, 0.0))
 
 
+def banded_bandwidth(
+    problem: Problem, stage: IntArray, running: IntArray, nodes_v: FloatArray, output_v: float, load_a: FloatArray
+) -> FloatArray:
+    """Return the loop bandwidth of table rows at the loads of the bands (B,), rad/s, (rows, 1, 1, B or 1, nodes or 1).
+
+    nodes_v (rows, nodes): stage input voltages.
+    """
+    each = (load_a / running[:, None])[..., None]
+    at = loop_bandwidth_rad_s(
+        problem.stages, stage[:, None, None], nodes_v[:, None, :], np.array(output_v), each
+    )
+    return at[:, None, None]
+
+
 def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tuple[NDArray[np.float32], FloatArray]:
     """Return the worse of droop and release in percent of budget for every row and bank, and its nodes.
 
@@ -194,11 +208,16 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
         deficit = np.maximum(after[None, :] - carried[:, None], 0.0)[:, None, None, :, None]
         up = slew_up_a_per_s(stages, stage[:, None], running[:, None], nodes_v[rows], np.array(volts_r))
         down = slew_down_a_per_s(stages, stage, running, np.array(volts_r))
-        loop = (spread(stages.bandwidth_rad_s[stage]), spread(stages.delay_s[stage]), bank_f, esr)
+        step = rails.step_a[r]
+        rise, fall = (
+            banded_bandwidth(problem, stage, running, nodes_v[stage], volts_r, load)
+            for load in (np.maximum(after - step, 0.0), np.maximum(mix - step, 0.0))
+        )
+        loop = (spread(stages.delay_s[stage]), bank_f, esr)
         slew = rails.load_slew_a_per_s[r]
         wakeup = spread(stages.wakeup_s[stage])
-        droop = rail_droop_v(rails.step_a[r], up[:, None, None, None, :], *loop, slew, deficit, wakeup)
-        release = rail_droop_v(rails.step_a[r], spread(down), *loop, slew)
+        droop = rail_droop_v(step, up[:, None, None, None, :], rise, *loop, slew, deficit, wakeup)
+        release = rail_droop_v(step, spread(down), fall, *loop, slew)
         worst = np.broadcast_to(np.maximum(droop, release), shape) * (100.0 / rails.budget_v[r])
         effective = bank_f[0, :, :, 0, 0][None]
         inside = (effective >= stages.loop_min_f[stage][:, None, None]) & (
@@ -263,7 +282,11 @@ def band_hours(states: StateTable) -> FloatArray:
 def running_phases(
     problem: Problem, states: StateTable, tables: LossTables, energy: FloatArray, table: IntArray
 ) -> IntArray:
-    """Return the running phases of each option in each band, (O, B): least energy that carries the mix."""
+    """Return the running phases of each option in each band, (O, B).
+
+    Least energy that carries the mix where the part can shed at will; as its thresholds say at the mix where it
+    goes by them; all where it never sheds.
+    """
     rail, stage, phases, fewest = table.T
     mean = energy.mean(axis=2)  # (rows, B) over the stage's voltages
     gates_w = tables.row_running * bias_per_phase_w(problem)[tables.row_stage]
@@ -279,6 +302,11 @@ def running_phases(
         better = can & (value < best_kwh)
         best = np.where(better, running, best)
         best_kwh = np.where(better, value, best_kwh)
+    stages = problem.stages
+    counted = np.ceil(states.mix_a.T[rail] / stages.shed_at_a[stage][:, None] - 1e-9).astype(np.int64)
+    by_threshold = np.where((fewest == 0)[:, None], np.clip(counted, needed, phases[:, None]), phases[:, None])
+    kind = stages.shedding[stage][:, None]
+    best = np.where(kind == THRESHOLD_SHEDDING, by_threshold, np.where(kind == NO_SHEDDING, phases[:, None], best))
     off = states.mix_off.T[rail]
     return np.where(off, phases[:, None], best)
 

@@ -12,7 +12,7 @@ from archopt.model.hardware import Hardware
 from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
-from archopt.model.stages import slew_down_a_per_s, slew_up_a_per_s
+from archopt.model.stages import loop_bandwidth_rad_s, slew_down_a_per_s, slew_up_a_per_s
 from archopt.model.states import JUMP, StateTable
 from archopt.physics.transient import rail_droop_v
 
@@ -49,7 +49,11 @@ class Droop:
 
 
 def rail_droop(situation: Situation) -> Droop:
-    """Return droop and release of all rails at their load steps, with the phases running in each band."""
+    """Return droop and release of all rails at their load steps, with the phases running in each band.
+
+    The loop is as fast as its lighter end lets it be: a rise starts at the load a step below the highest, a
+    release ends a step below the mix. What children draw stays on the rail before and after.
+    """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     rails, stages = problem.rails, problem.stages
     jump = states.of_kind(JUMP)
@@ -65,15 +69,19 @@ def rail_droop(situation: Situation) -> Droop:
     bank_f, esr = hardware.bank_f[..., None], hardware.bank_esr_ohm[..., None]
     up = slew_up_a_per_s(stages, stage, running, stage_v, volts)
     down = slew_down_a_per_s(stages, stage, running, volts)
+    step = rails.step_a[:, None]
+    before, left = np.maximum(after - step, 0.0), np.maximum(mix - step, 0.0)
+    rise, fall = (
+        loop_bandwidth_rad_s(stages, stage, stage_v, volts, load / running) for load in (before, left)
+    )
     loop = (
-        stages.bandwidth_rad_s[stage],
         stages.delay_s[stage],
         bank_f,
         esr,
         rails.load_slew_a_per_s[:, None],
     )
-    droop = rail_droop_v(rails.step_a[:, None], up, *loop, deficit, stages.wakeup_s[stage])
-    release = rail_droop_v(rails.step_a[:, None], down, *loop)
+    droop = rail_droop_v(step, up, rise, *loop, deficit, stages.wakeup_s[stage])
+    release = rail_droop_v(step, down, fall, *loop)
     awake = ~states.mix_off.T
     droop, release = np.where(awake, droop, 0.0), np.where(awake, release, 0.0)
     budget = 100.0 / rails.budget_v[:, None]
