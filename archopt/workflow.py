@@ -24,8 +24,13 @@ from archopt.present.record import CheckResult, Data, FrontRecord
 from archopt.present.run_record import run_record
 from archopt.search.archive import Archive
 from archopt.search.driver import Progress, SearchResult, search
+from archopt.trade.baselines import baselines
+from archopt.trade.cautions import NOT_MODELLED, cautions
+from archopt.trade.fixed_front import fixed_front
+from archopt.trade.leverage import leverage
+from archopt.trade.losing import losing
 from archopt.trade.money import lifetime_costs, payback_years
-from archopt.trade.roles import assign_roles
+from archopt.trade.roles import assign_roles, knee
 
 PUBLISHED = 400
 BATCH = 64
@@ -65,7 +70,7 @@ def check(loaded: LoadedStudy) -> CheckResult:
             "rated_w": coincident * study.growth,
             "mean_w": float(states.useful_w @ states.hours) / hours,
         },
-        cautions=[],
+        cautions=cautions(problem, []),
     )
 
 
@@ -108,6 +113,8 @@ def solve(
     incumbent = explain_incumbent(evaluator, today)
     mark(problem, designs, published.objectives, incumbent)
     clock.note("explain")
+    asked = question(evaluator, found, published, designs, today)
+    clock.note("questions")
     reason = stop() if stop is not None else ""
     record = FrontRecord(
         designs=designs,
@@ -130,8 +137,70 @@ def solve(
             interrupted=found.ended == "interrupted" or reason == "interrupted",
         ),
         incumbent=incumbent,
+        baselines=asked.baselines,
+        gains=asked.gains,
+        losing=asked.losing,
+        leverage=asked.leverage,
+        not_modelled=list(NOT_MODELLED),
+        cautions=cautions(problem, designs),
+        notes=asked.notes,
     )
     return Front(record)
+
+
+@dataclass(frozen=True)
+class Answers:
+    """What is printed beside a front."""
+
+    baselines: list[Data]
+    gains: list[Data]
+    losing: list[Data]
+    leverage: list[Data]
+    notes: list[str]
+
+
+def question(
+    evaluator: Evaluator, found: SearchResult, published: Published, designs: list[Data], today: IntArray | None
+) -> Answers:
+    """Return baselines of the knee and of today's hardware, losing topologies, leverage and remarks."""
+    problem = evaluator.problem
+    best = published.rows[knee(published.objectives)]
+    asked = [baselines(problem, best, "knee")]
+    if today is not None:
+        asked.append(baselines(problem, today, "incumbent"))
+    called = {row.tobytes(): str(design["design"]) for row, design in zip(published.rows, designs, strict=True)}
+    nearest = {name: (kind.row, kind.violation) for name, kind in found.kinds.items() if kind.violation > 0}
+    rows, objectives = everything_kept(found)
+    return Answers(
+        baselines=[row for answer in asked for row in answer.rows],
+        gains=[answer.summary for answer in asked if answer.summary],
+        losing=losing(
+            evaluator, rows, objectives, infeasible=nearest, names=[called.get(row.tobytes(), "") for row in rows]
+        ),
+        leverage=leverage(problem, best),
+        notes=remarks(problem, rows, objectives),
+    )
+
+
+def everything_kept(found: SearchResult) -> tuple[IntArray, FloatArray]:
+    """Return every feasible design the search kept: the archive, the fixed front, the best of each topology."""
+    best = [kind for kind in found.kinds.values() if kind.violation <= 0]
+    rows = np.concatenate([found.rows, found.fixed_rows, *(kind.row[None] for kind in best)])
+    objectives = np.concatenate([found.objectives, found.fixed_objectives, *(kind.objectives[None] for kind in best)])
+    _, first = np.unique(rows, axis=0, return_index=True)
+    return rows[np.sort(first)], objectives[np.sort(first)]
+
+
+def remarks(problem: Problem, rows: IntArray, objectives: FloatArray) -> list[str]:
+    """Return what the front as a whole is worth remarking."""
+    fixed = fixed_front(problem, rows, objectives)
+    if fixed.hypervolume_share is None or fixed.least_loss_kwh is None:
+        return []
+    note = f"Boards chosen for a fixed bus reach {100 * fixed.hypervolume_share:.1f} % of the front's hypervolume"
+    if fixed.energy_more_percent is not None:
+        _, median, most = fixed.energy_more_percent
+        note += f"; at equal cost they lose {median:.1f} % more energy in the median, {most:.1f} % at most"
+    return [note + "."]
 
 
 class Clock:
@@ -230,9 +299,7 @@ def mark(problem: Problem, designs: list[Data], objectives: FloatArray, incumben
     names = [str(design["topology"]) for design in designs]
     roles = assign_roles(objectives, names, lifetime_costs(problem.study, objectives))
     today = None if incumbent is None else np.array(list(incumbent["objectives"].values()))[:3]
-    for design, role, years in zip(
-        designs, roles, payback_years(problem.study, objectives, today), strict=True
-    ):
+    for design, role, years in zip(designs, roles, payback_years(problem.study, objectives, today), strict=True):
         design["roles"] = role
         design["beside"]["payback_years"] = years
 

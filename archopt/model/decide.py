@@ -297,12 +297,10 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     return designs, unsettled | (canonical(problem, designs).rows != designs.rows).any(axis=1)
 
 
-def step_power(
-    problem: Problem, options: Options, option: IntArray, hardware: Hardware, bus_w: FloatArray
-) -> FloatArray:
-    """Return the largest coincident step of bus power over the grid, (P, 2, B, G) W.
+def coincident_step_w(problem: Problem, options: Options, option: IntArray, hardware: Hardware) -> FloatArray:
+    """Return the largest coincident step of bus power at the middle of the grid, (P, 2, B) W.
 
-    Each rail's own power in over out at the middle of the grid, scaled as the whole bus (P, 2, B, G) is.
+    Each rail's step times its own power in over out at its worst mix.
     """
     rails = problem.rails
     mix_w = options.rows.mix_w
@@ -314,7 +312,15 @@ def step_power(
     for group in range(int(rails.step_group.max()) + 1):
         here = hardware.on_bus & (rails.step_group == group)
         largest = np.maximum(largest, np.einsum("pkr,prb->pkb", here.astype(np.float64), step))
-    return largest[..., None] * bus_w / np.maximum(bus_w[..., mix_w.shape[2] // 2, None], 1e-9)
+    return largest
+
+
+def step_power(
+    problem: Problem, options: Options, option: IntArray, hardware: Hardware, bus_w: FloatArray
+) -> FloatArray:
+    """Return the largest coincident step over the grid, (P, 2, B, G) W, scaled as the whole bus (same shape) is."""
+    largest = coincident_step_w(problem, options, option, hardware)
+    return largest[..., None] * bus_w / np.maximum(bus_w[..., bus_w.shape[3] // 2, None], 1e-9)
 
 
 def snap_limits(problem: Problem, designs: Designs, volts: IntArray, idle: BoolArray) -> None:

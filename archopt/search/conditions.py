@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from archopt.model.decide import step_power
+from archopt.model.decide import coincident_step_w
 from archopt.model.evaluator import Evaluator
 from archopt.model.hardware import Hardware, unpack
 from archopt.model.options import band_hours, option_index
@@ -93,7 +93,7 @@ def conditions_of(evaluator: Evaluator, designs: Designs, unused: Conditions) ->
         on = hardware.on_bus[:, b, :, None]
         mean_w[:, b] = (options.rows.energy_kwh[row, band, at] * on).sum(axis=1) * 1e3 / hours
         mix_w[:, b] = (options.rows.mix_w[row, band, at] * on).sum(axis=1)
-    dip = dips(evaluator, designs, hardware, mix_w, volts)
+    dip = dips(evaluator, coincident_step_w(problem, options, option, hardware), hardware, mix_w, volts)
     dip = np.where(used[..., None], dip, FIRST_DIP * problem.grid_v[volts])
     found = conditions(evaluator, hardware.converter, volts, mean_w, hardware.units_band, dip)
     marginal = np.where(used[..., None], found.marginal, unused.marginal)
@@ -102,7 +102,7 @@ def conditions_of(evaluator: Evaluator, designs: Designs, unused: Conditions) ->
 
 
 def dips(
-    evaluator: Evaluator, designs: Designs, hardware: Hardware, mix_w: FloatArray, volts: IntArray
+    evaluator: Evaluator, step_w: FloatArray, hardware: Hardware, mix_w: FloatArray, volts: IntArray
 ) -> FloatArray:
     """Return the dip of each bus in each band, V (P, 2, B)."""
     problem = evaluator.problem
@@ -110,7 +110,6 @@ def dips(
     if not len(converters.names):
         return np.zeros(mix_w.shape)
     index = np.maximum(hardware.converter, 0)[..., None]
-    step_w = step_power(problem, designs, mix_w[..., None], hardware)[..., 0]
     set_v = problem.grid_v[volts]
     ratio = converters.ratio[index] * problem.study.supply.low_v
     set_v = np.where(hardware.fixed_ratio[..., None], ratio, set_v)
