@@ -11,7 +11,7 @@ from archopt.present.amounts import NONE, fixed, mechanism_word, money, number, 
 from archopt.present.explanation import binding_text, payback
 from archopt.present.overview import bus_text
 from archopt.present.record import Data, FrontRecord
-from archopt.present.tables import section, table
+from archopt.present.tables import HangingLines, section, table
 
 MOST_MECHANISMS = 6
 MOST_LEVERAGE = 5
@@ -53,7 +53,7 @@ def baseline_body(record: FrontRecord) -> Iterable[RenderableType]:
             str(row.get("baseline", NONE)), str(row.get("of") or NONE), volts_text(row.get("volts")),
             fixed(row.get("energy_loss_kwh_per_year"), 2), fixed(row.get("cost_per_board"), 2),
             fixed(row.get("worst_droop_percent"), 0), "yes" if row.get("feasible") else "no",
-            str(row.get("note") or ""),
+            place_word(row.get("note")) if row.get("note") else "",
         ]
         for row in record.baselines
     ]  # fmt: skip
@@ -157,18 +157,20 @@ def leverage_body(record: FrontRecord) -> Iterable[RenderableType]:
     ordered = sorted(record.leverage, key=lambda row: -abs(_weight(row)))
     losses = [row for row in ordered if not _is_price(row)]
     prices = [row for row in ordered if _is_price(row)]
+    shown = [*losses[:MOST_LEVERAGE], *prices[:MOST_PRICES]]
+    sources = list(dict.fromkeys(str(row.get("source") or NONE) for row in shown))
     rows = [
         [
             str(row.get("part", NONE)), str(row.get("column") or row.get("number") or NONE),
             number(row.get("value")), f"+-{number(row.get('spread_percent'))} %",
             signed(row.get("energy_change_kwh"), 2), signed(row.get("cost_change"), 2),
-            signed(row.get("lifetime_change"), 2), str(row.get("source") or NONE),
+            signed(row.get("lifetime_change"), 2), str(sources.index(str(row.get("source") or NONE)) + 1),
         ]
-        for row in [*losses[:MOST_LEVERAGE], *prices[:MOST_PRICES]]
+        for row in shown
     ]  # fmt: skip
-    words = ["part", "number", "source"]
     headings = ["part", "number", "value", "spread", "kWh a year", "cost", "life cost", "source"]
-    yield table(headings, rows, left=words)
+    yield table(headings, rows, left=["part", "number"])
+    yield HangingLines(f"source {k + 1}: {source}" for k, source in enumerate(sources))
 
 
 def _name_of(row: Data) -> str:

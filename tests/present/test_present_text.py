@@ -372,3 +372,13 @@ def test_the_years_sums_of_a_design_stand_for_its_states(record: FrontRecord) ->
 def test_the_best_of_a_topology_is_said_shortly(record: FrontRecord) -> None:
     record.designs[2]["roles"] = ["knee", "best of one bus, follows load", "best of two buses"]
     assert "  knee, best of its kind, best of two buses" in printed(record)
+
+
+def test_sources_of_numbers_are_listed_once(record: FrontRecord) -> None:
+    many = [{**record.leverage[0], "part": f"PART-{k}"} for k in range(3)]
+    lines = block(
+        printed(dataclasses.replace(record, leverage=many)),
+        "Catalogue numbers with the most leverage on the knee",
+    )
+    assert [line.split()[-1] for line in lines[1:4]] == ["1", "1", "1"]
+    assert lines[4:] == ["  source 1: maker's sheet, invented"]
