@@ -1,0 +1,219 @@
+"""Measured points of one converter or stage: read from a CSV, every fault told at once with its row and column."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+
+from archopt.errors import InputError
+from archopt.inputs.problems import Notebook, brief, nearest
+from archopt.inputs.text_files import CsvRows, read_csv
+from archopt.physics.arrays import FloatArray, IntArray
+from archopt.physics.measured import LossTable
+
+NEEDED = ("input_voltage_v", "output_voltage_v", "current_a")
+RESULTS = ("efficiency", "loss_w")
+OPTIONAL = ("temperature_degc",)
+UNIT = {"input_voltage_v": "V", "output_voltage_v": "V", "current_a": "A", "loss_w": "W", "temperature_degc": "degC"}
+#: Local air at the bench where the points do not say (degC).
+BENCH_DEGC = 25.0
+#: Settings closer than this are one level: a bench supply does not return to the same millivolt.
+LEVEL_WIDTH = 0.03
+
+
+@dataclass(frozen=True)
+class MeasuredPoints:
+    """Points of one unit (one phase of a buck stage); every array has shape (points,).
+
+    lines are the rows of the file; input_v, output_v, current_a, loss_w (W) and temperature_degc, the local air.
+    temperature_stated is False where the file has no temperatures and those of :data:`BENCH_DEGC` were taken.
+    """
+
+    file: str
+    lines: tuple[int, ...]
+    input_v: FloatArray
+    output_v: FloatArray
+    current_a: FloatArray
+    loss_w: FloatArray
+    temperature_degc: FloatArray
+    temperature_stated: bool = True
+
+    def __len__(self) -> int:
+        return len(self.lines)
+
+    @property
+    def output_w(self) -> FloatArray:
+        """Output power (W) of each point."""
+        return self.output_v * self.current_a
+
+    def efficiency(self, loss_w: FloatArray) -> FloatArray:
+        """Efficiency (0 to 1) of each point, did it lose ``loss_w``."""
+        total: FloatArray = self.output_w / (self.output_w + loss_w)
+        return total
+
+
+def level_numbers(values: FloatArray, width: float = LEVEL_WIDTH) -> IntArray:
+    """Return to which level each value (points,) belongs, counted from the lowest.
+
+    A new level starts where a value is more than ``width`` (relative) above the one before it in order.
+    """
+    order = np.argsort(values, kind="stable")
+    ordered = values[order]
+    starts = np.concatenate(([False], ordered[1:] - ordered[:-1] > width * np.abs(ordered[1:])))
+    numbers: IntArray = np.empty(len(values), dtype=np.int_)
+    numbers[order] = np.cumsum(starts)
+    return numbers
+
+
+def level_means(values: FloatArray, width: float = LEVEL_WIDTH) -> FloatArray:
+    """Return the mean value of each level, rising."""
+    numbers = level_numbers(values, width)
+    return np.array([values[numbers == level].mean() for level in range(int(numbers.max()) + 1)])
+
+
+def settings(points: MeasuredPoints) -> IntArray:
+    """Return the number of the setting each point belongs to: repeats of one setting share a number."""
+    numbers = np.stack([level_numbers(v) for v in (points.input_v, points.output_v, points.current_a)], axis=1)
+    return np.unique(numbers, axis=0, return_inverse=True)[1].reshape(-1).astype(np.int_)
+
+
+def read_points(path: str | Path, units: int = 1) -> MeasuredPoints:
+    """Return the measured points of a CSV file, per unit.
+
+    Parameters
+    ----------
+    path : CSV with input_voltage_v, output_voltage_v, current_a, either efficiency (0 to 1) or loss_w, and
+        optionally temperature_degc, the local air (25 degC where the column is not there)
+    units : how many units or phases shared the current when it was measured; current and loss are divided by it
+
+    Raises
+    ------
+    InputError : with every fault of the file
+    """
+    notebook = Notebook(str(path))
+    table = read_csv(Path(path), str(path), "measured points", notebook)
+    if table is None:
+        raise InputError(notebook.problems)
+    _check_header(table.header, notebook)
+    if notebook.problems:
+        raise InputError(notebook.problems)
+    if not table.rows:
+        notebook.problem("", "has no points below its header")
+    numbers = [_numbers(table, line, cells, notebook) for line, cells in table.rows]
+    for (line, _), values in zip(table.rows, numbers, strict=True):
+        _check_point(line, values, notebook)
+    if notebook.problems:
+        raise InputError(notebook.problems)
+    column = {name: np.array([values[name] for values in numbers]) for name in table.header}
+    current = column["current_a"]
+    if "loss_w" in column:
+        loss = column["loss_w"]
+    else:
+        loss = column["output_voltage_v"] * current * (1.0 / column["efficiency"] - 1.0)
+    stated = "temperature_degc" in column
+    return MeasuredPoints(
+        file=str(path),
+        lines=tuple(line for line, _ in table.rows),
+        input_v=column["input_voltage_v"],
+        output_v=column["output_voltage_v"],
+        current_a=current / units,
+        loss_w=loss / units,
+        temperature_degc=column["temperature_degc"] if stated else np.full(len(current), BENCH_DEGC),
+        temperature_stated=stated,
+    )
+
+
+def _check_header(header: Sequence[str], notebook: Notebook) -> None:
+    """Note columns that are missing, unknown, or say the same twice."""
+    known = (*NEEDED, *RESULTS, *OPTIONAL)
+    for name in dict.fromkeys(header):
+        if name not in known:
+            notebook.problem(f"row 1, column {name or '(no name)'}", f"unknown; {nearest(name, known)}")
+    missing = [name for name in NEEDED if name not in header]
+    if missing:
+        notebook.problem("row 1", f"column {', '.join(missing)} missing")
+    if not any(name in header for name in RESULTS):
+        notebook.problem("row 1", "column efficiency (0 to 1) or loss_w missing")
+    if all(name in header for name in RESULTS):
+        notebook.problem("row 1", "has both efficiency and loss_w; keep the one that was measured")
+
+
+def _numbers(table: CsvRows, line: int, cells: Sequence[str], notebook: Notebook) -> dict[str, float]:
+    """Return the numbers of one row; a cell that holds none is noted and left out."""
+    values: dict[str, float] = {}
+    for column, cell in zip(table.header, cells, strict=True):
+        unit = UNIT.get(column, "")
+        place = f"row {line}, column {column}"
+        try:
+            value = float(cell)
+        except ValueError:
+            found = "an empty cell" if cell == "" else brief(cell)
+            notebook.problem(place, f"needs a number{f' in {unit}' if unit else ''}, found {found}")
+            continue
+        if math.isfinite(value):
+            values[column] = value
+        else:
+            notebook.problem(place, f"{brief(cell)} is not a finite number")
+    return values
+
+
+def _check_point(line: int, values: dict[str, float], notebook: Notebook) -> None:
+    """Note what no measured point can be."""
+
+    def note(column: str, message: str) -> None:
+        notebook.problem(f"row {line}, column {column}", message)
+
+    for column in ("input_voltage_v", "output_voltage_v"):
+        if values.get(column, 1.0) <= 0:
+            note(column, f"{values[column]:g} V is out of range; it must be above 0 V")
+    current = values.get("current_a")
+    if current is not None and current < 0:
+        note("current_a", f"{current:g} A is out of range; it must be at least 0 A")
+    efficiency = values.get("efficiency")
+    if efficiency is not None:
+        if efficiency > 1:
+            meant = f"; if {efficiency:g} % was meant, write {efficiency / 100:g}" if efficiency <= 100 else ""
+            note("efficiency", f"{efficiency:g} is above 1{meant}")
+        elif efficiency == 1:
+            note("efficiency", "is 1, no loss at all; nothing can be fitted to it")
+        elif efficiency <= 0:
+            note("efficiency", f"{efficiency:g} is out of range; it must be above 0 (no load: give loss_w instead)")
+        if current == 0:
+            note("current_a", "is 0 A, where efficiency says nothing; give loss_w instead of efficiency")
+    loss = values.get("loss_w")
+    if loss is not None and loss <= 0:
+        note("loss_w", f"{loss:g} W is out of range; a loss is above 0 W")
+    temperature = values.get("temperature_degc")
+    if temperature is not None and not -60 <= temperature <= 150:
+        note("temperature_degc", f"{temperature:g} degC is out of range; it must be -60 to 150, the local air")
+
+
+def loss_table(points: MeasuredPoints) -> LossTable:
+    """Return the points as a table over input voltage, output voltage and current, repeats averaged.
+
+    Raises
+    ------
+    InputError : the points do not fill the grid; every missing setting is named
+    """
+    axes = (points.input_v, points.output_v, points.current_a)
+    numbers = [level_numbers(values) for values in axes]
+    means = [level_means(values) for values in axes]
+    total = np.zeros([len(mean) for mean in means])
+    count = np.zeros_like(total)
+    np.add.at(total, tuple(numbers), points.loss_w)
+    np.add.at(count, tuple(numbers), 1.0)
+    notebook = Notebook(points.file)
+    missing = np.argwhere(count == 0)
+    for at in missing[:20]:
+        volts_in, volts_out, amperes = (mean[level] for mean, level in zip(means, at, strict=True))
+        place = f"{volts_in:.4g} V in, {volts_out:.4g} V out, {amperes:.4g} A"
+        notebook.problem("", f"no point at {place}; a table needs every combination of its levels")
+    if len(missing) > 20:
+        notebook.problem("", f"{len(missing) - 20} more combinations have no point")
+    if notebook.problems:
+        raise InputError(notebook.problems)
+    return LossTable(means[0], means[1], means[2], total / count)
