@@ -210,7 +210,7 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
         down = slew_down_a_per_s(stages, stage, running, np.array(volts_r))
         step = rails.step_a[r]
         rise, fall = (
-            banded_bandwidth(problem, stage, running, nodes_v[stage], volts_r, load)
+            banded_bandwidth(problem, stage, running, nodes_v[rows], volts_r, load)
             for load in (np.maximum(after - step, 0.0), np.maximum(mix - step, 0.0))
         )
         loop = (spread(stages.delay_s[stage]), bank_f, esr)
