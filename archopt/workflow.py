@@ -106,16 +106,19 @@ def solve(
         progress=None if progress is None else lambda state: tell(progress, state),
         stop=None if stop is None else lambda: bool(stop()),
     )
+    reason = stop() if stop is not None and found.ended == "stopped" else ""
     clock.note("search")
+    say(progress, "direct physics")
     published = publish(evaluator, found)
     clock.note("direct physics")
+    say(progress, "explaining")
     designs = explain_published(evaluator, published.rows)
     incumbent = explain_incumbent(evaluator, today)
     mark(problem, designs, published.objectives, incumbent)
     clock.note("explain")
+    say(progress, "baselines and leverage")
     asked = question(evaluator, found, published, designs, today)
     clock.note("questions")
-    reason = stop() if stop is not None else ""
     record = FrontRecord(
         designs=designs,
         archive=archive_rows(problem, found),
@@ -137,6 +140,7 @@ def solve(
             interrupted=found.ended == "interrupted" or reason == "interrupted",
         ),
         incumbent=incumbent,
+        merged=len(found.rows) - published.recomputed,
         baselines=asked.baselines,
         gains=asked.gains,
         losing=asked.losing,
@@ -217,6 +221,12 @@ class Clock:
         self._last = now
 
 
+def say(progress: Told | None, stage: str) -> None:
+    """Say what is being done after the search."""
+    if progress is not None:
+        progress(stage=stage)
+
+
 def tell(progress: Told, state: Progress) -> None:
     """Pass a search's progress on."""
     progress(
@@ -270,8 +280,8 @@ def infeasible(found: SearchResult) -> InfeasibleError:
     for name, excess in sorted(found.excess.items(), key=lambda item: -item[1]):
         limit = LIMITS[INDEX[name]]
         size = excess * limit.tolerance
-        unit = "of the limit" if limit.relative else limit.unit
-        never.append(f"{name}: short by at least {size:.3g} {unit} in every design tried")
+        text = f"{100 * size:.3g} % of the limit" if limit.relative else f"{size:.3g} {limit.unit}"
+        never.append(f"{name}: missed by at least {text} in every design tried")
     if not never:
         never = ["every limit was met by some design, but no design met all of them together"]
     return InfeasibleError("no design meets every limit", tuple(never))
