@@ -24,7 +24,15 @@ from archopt.trade.baselines import (
 )
 from archopt.trade.money import money_per_kwh
 from archopt.trade.pinned import pinned_problem, with_jump
-from archopt.trade.schedules import best_fixed, best_schedule, fixed_rows, flat_band, regulated_buses
+from archopt.trade.schedules import (
+    best_fixed,
+    best_schedule,
+    fixed_rows,
+    flat_band,
+    moved,
+    regulated_buses,
+    supervised,
+)
 
 from .conftest import STUDIES
 
@@ -164,6 +172,19 @@ def test_no_single_band_can_be_moved_for_the_better(wide) -> None:
             designs.bus("upper_v")[0, 0] = max(designs.volts[0, 0].max(), designs.bus("nominal_v")[0, 0])
             found = evaluator.evaluate(other, exact=True)
             assert found.violation[0] > 0 or found.objectives[0, 0] >= best.objectives[0]
+
+
+def test_flat_schedule_is_moved_as_low_as_the_tables_propose(wide) -> None:
+    """Two ways to one schedule: from the best fixed voltage by direct physics, and from the tables."""
+    problem, row = wide
+    evaluator = Evaluator(pinned_problem(problem, row))
+    fixed = best_fixed(evaluator, row)
+    flat = supervised(evaluator.problem, row, fixed)
+    found = moved(evaluator, flat)
+    assert found.feasible
+    assert found.objectives[0] < 0.99 * fixed.objectives[0]
+    assert found.objectives[0] == pytest.approx(best_schedule(evaluator, row).objectives[0], rel=2e-3)
+    assert np.all(np.diff(Designs(problem.layout, found.row[None]).volts[0, 0]) >= 0)
 
 
 def test_flat_band_holds_the_voltages_within_one_percent(wide) -> None:
