@@ -144,7 +144,7 @@ def standing_w(hardware: Hardware, mix_in_w: FloatArray, jump_in_w: FloatArray, 
     on_bus = hardware.on_bus.astype(np.float64)
     mix = np.einsum("pbr,pkr->pkb", mix_in_w, on_bus)
     jump = np.einsum("pbr,pkr->pkb", jump_in_w, on_bus)
-    return np.maximum(mix, jump - step_w)
+    return np.asarray(np.maximum(mix, jump - step_w))
 
 
 def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: StageLoss, *, exact: bool) -> Solution:
