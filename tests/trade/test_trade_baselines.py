@@ -277,6 +277,20 @@ def test_fixed_ratio_bus_has_no_voltage_to_choose(telecom) -> None:
     assert "no regulated bus" in result.rows[0]["note"]
 
 
+def test_pins_of_the_bus_do_not_hold_for_the_question(wide) -> None:
+    """A study that pins its bus at 12 V and fixed still learns what another voltage would do."""
+    problem, row = wide
+    pins = {"bus_a.nominal_v": ("12",), "bus_a.control": ("fixed",), "core.phases": ("2",)}
+    choices = replace(problem.study.choices, pins=pins)
+    pinned = replace(problem, study=replace(problem.study, choices=choices))
+    free, held = (rows_of(baselines(one, row, "knee")) for one in (problem, pinned))
+    for name in (BEST_FIXED, FOLLOWS_STUDY):
+        assert held[name]["volts"] == free[name]["volts"]
+        assert held[name]["energy_loss_kwh_per_year"] == pytest.approx(
+            free[name]["energy_loss_kwh_per_year"], rel=1e-12
+        )
+
+
 def test_study_without_a_moving_bus_gets_no_moving_baseline() -> None:
     loaded = overlay(load(STUDIES / "telecom_six" / "study.toml"), {"control.kinds": ["fixed"]})
     problem = compile_study(loaded.study, loaded.catalogue)
