@@ -6,6 +6,7 @@ A stage that holds its output draws less current at more voltage: to small signa
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from archopt.physics.arrays import FloatArray, FloatLike
 
@@ -13,6 +14,9 @@ from archopt.physics.arrays import FloatArray, FloatLike
 LEAST_OHM = 1e-9
 LEAST_V = 1e-3
 LEAST_POWER_W = 1e-9
+LEAST_HENRY = 1e-12
+LEAST_FARAD = 1e-12
+PEAK_SAMPLES = 24
 
 
 def least_capacitance_f(
@@ -76,3 +80,73 @@ def damped_peak(ratio: FloatLike) -> FloatArray:
     n = np.maximum(ratio, LEAST_OHM)
     peak: FloatArray = np.sqrt(2.0 * (2.0 + n)) / n
     return peak
+
+
+def bank_impedance_ohm(
+    frequency_hz: FloatLike, bulk_f: FloatLike, bulk_esr_ohm: FloatLike, input_f: FloatLike
+) -> NDArray[np.complex128]:
+    """Impedance (ohm, complex) of a bulk bank with ESR beside capacitance without resistance.
+
+    Parameters
+    ----------
+    frequency_hz : where it is asked for, above 0
+    bulk_f, bulk_esr_ohm : bulk bank (F, ohm)
+    input_f : capacitance beside it (F); all broadcast
+    """
+    s = 2j * np.pi * np.asarray(frequency_hz)
+    bulk = bulk_esr_ohm + 1.0 / (s * np.maximum(bulk_f, LEAST_FARAD))
+    return np.asarray(1.0 / (1.0 / bulk + s * np.asarray(input_f)))
+
+
+def output_peak_ohm(
+    source_ohm: FloatLike, source_h: FloatLike, bulk_f: FloatLike, bulk_esr_ohm: FloatLike, input_f: FloatLike
+) -> FloatArray:
+    """Largest impedance (ohm) over frequency that a bus shows its loads: source, bulk bank and stage inputs.
+
+    Parameters
+    ----------
+    source_ohm, source_h : series resistance (ohm) and inductance (H) of the source
+    bulk_f, bulk_esr_ohm, input_f : as for :func:`bank_impedance_ohm`; all broadcast
+
+    Notes
+    -----
+    Read where the circuit's modes ring, at a tenth of the resonance of the source's inductance with all of the
+    capacitance to ten times that with the stages' alone (where a bulk bank of large ESR leaves the stages to
+    ring), and at direct current, where it is R. The bulk bank's own ESR is what damps it: no further branch.
+    """
+    ohm, henry, bulk, esr, beside = np.broadcast_arrays(
+        np.maximum(source_ohm, LEAST_OHM), np.maximum(source_h, LEAST_HENRY), np.maximum(bulk_f, LEAST_FARAD),
+        np.maximum(bulk_esr_ohm, LEAST_OHM), np.maximum(input_f, LEAST_FARAD),
+    )  # fmt: skip
+    low = 0.1 / np.sqrt(henry * (bulk + beside))
+    high = 10.0 / np.sqrt(henry * np.maximum(beside, 0.03 * bulk))
+    swept = low[..., None] * (high / low)[..., None] ** np.linspace(0.0, 1.0, PEAK_SAMPLES)
+    # 1/Z = 0 is a cubic in s; where two of its roots are a pair the peak lies at their frequency
+    square = beside * bulk * esr * henry
+    companion = np.zeros((*ohm.shape, 3, 3))
+    companion[..., 0, 0] = -(henry * (bulk + beside) + beside * bulk * esr * ohm) / square
+    companion[..., 0, 1] = -(ohm * (bulk + beside) + bulk * esr) / square
+    companion[..., 0, 2] = -1.0 / square
+    companion[..., 1, 0] = companion[..., 2, 1] = 1.0
+    ringing = np.maximum(np.abs(np.linalg.eigvals(companion).imag), low[..., None])
+    hertz = np.concatenate([swept, ringing], axis=-1) / (2.0 * np.pi)
+    bank = bank_impedance_ohm(hertz, bulk[..., None], esr[..., None], beside[..., None])
+    source = ohm[..., None] + 2j * np.pi * hertz * henry[..., None]
+    peak: FloatArray = np.maximum(np.abs(bank * source / (bank + source)).max(axis=-1), ohm)
+    return peak
+
+
+def impedance_margin_db(peak_ohm: FloatLike, power_w: FloatLike, bus_v: FloatLike) -> FloatArray:
+    """Margin (dB) of an impedance below the loads' negative input resistance V^2/P: 20 log10 of the ratio.
+
+    Above 0 dB at every frequency the product of source impedance and load admittance stays inside the unit
+    circle, so that no phase can make it unstable (Middlebrook's criterion).
+
+    Parameters
+    ----------
+    peak_ohm : largest impedance of the source over frequency (ohm)
+    power_w : constant power drawn (W)
+    bus_v : bus voltage (V); all broadcast
+    """
+    ratio = resistance_limit_ohm(power_w, bus_v) / np.maximum(peak_ohm, LEAST_OHM)
+    return np.asarray(20.0 * np.log10(np.maximum(ratio, LEAST_OHM)))

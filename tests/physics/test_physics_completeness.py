@@ -19,14 +19,35 @@ LIGHT = "physics/test_buck_light_load.py"
 COPPER = "published/test_published_copper.py"
 DROOP = "published/test_published_transient.py"
 IN_TIME = "property/test_property_transient.py"
+TIME_DOMAIN = "published/test_published_time_domain.py"
+WAVES = "property/test_property_time_domain.py"
 CAPACITOR = "physics/test_physics_capacitor.py"
+MEASURED = "physics/test_physics_measured.py"
 PARAMETERS = "physics/test_physics_parameters.py"
+SHAPES = "physics/test_physics_sheet.py"
+SHEET = "published/test_published_sheet.py"
 THERMAL = "physics/test_physics_thermal.py"
 
 # what is claimed: (test file, test, source of the expected value)
 CLAIMS = {
     "ampacity.current_limit_a": (COPPER, "test_one_ampere_for_ten_kelvin", "IPC-2221 form"),
     "ampacity.temperature_rise_k": (COPPER, "test_one_ampere_for_ten_kelvin", "IPC-2221 form"),
+    "averaged.LoadStep": (WAVES, "test_a_load_ramps_for_as_long_as_its_slew_takes", "closed form"),
+    "averaged.RailCircuit": (WAVES, "test_a_load_line_lowers_the_set_point", "closed form"),
+    "averaged.RailWave": (WAVES, "test_a_load_line_lowers_the_set_point", "closed form"),
+    "averaged.integrate": (WAVES, "test_integration_meets_an_exponential", "closed form"),
+    "averaged.pieces": (WAVES, "test_pieces_between_kinks", "by hand"),
+    "averaged.rail_wave": (WAVES, "test_a_load_line_lowers_the_set_point", "closed form"),
+    "averaged_board.BoardWave": (WAVES, "test_one_stage_behind_a_stiff_bus_is_the_rail_alone", "rail_wave"),
+    "averaged_board.Rise": (WAVES, "test_one_stage_behind_a_stiff_bus_is_the_rail_alone", "rail_wave"),
+    "averaged_board.StageCircuit": (WAVES, "test_one_stage_behind_a_stiff_bus_is_the_rail_alone", "rail_wave"),
+    "averaged_board.board_wave": (WAVES, "test_one_stage_behind_a_stiff_bus_is_the_rail_alone", "rail_wave"),
+    "averaged_bus.BusCircuit": (WAVES, "test_charge_and_energy_balance_of_a_bus", "balance"),
+    "averaged_bus.BusWave": (WAVES, "test_charge_and_energy_balance_of_a_bus", "balance"),
+    "averaged_bus.Command": (WAVES, "test_a_command_charges_the_bank", "closed form"),
+    "averaged_bus.PowerTrain": (WAVES, "test_a_train_of_steps", "closed form"),
+    "averaged_bus.bus_eigenvalues": (WAVES, "test_bus_eigenvalues_without_bank_resistance", "closed form"),
+    "averaged_bus.bus_wave": (WAVES, "test_charge_and_energy_balance_of_a_bus", "balance"),
     "buck.BuckLosses": (BUCK, "test_total_1_31_w", "ROHM AEK59-D1-0065-2"),
     "buck.BuckParameters": (BUCK, "test_rc5051_duty_with_drops", "RC5051 AN50 p. 9"),
     "buck.duty": (BUCK, "test_rc5051_duty_with_drops", "RC5051 AN50 p. 9"),
@@ -59,12 +80,55 @@ CLAIMS = {
     "linear.LinearParameters": (PARAMETERS, "test_linear_by_hand", "closed form"),
     "linear.headroom_v": (PARAMETERS, "test_linear_by_hand", "closed form"),
     "linear.losses": (PARAMETERS, "test_linear_by_hand", "closed form"),
+    "measured.LossTable": (MEASURED, "test_equals_scipy_inside", "scipy RegularGridInterpolator"),
+    "measured.table_loss_w": (MEASURED, "test_exact_for_products_of_linear_functions", "closed form"),
     "parameters.Gatherable": (PARAMETERS, "test_take_gathers_every_field_and_keeps_plain_numbers", "numpy"),
+    "stability.bank_impedance_ohm": (WAVES, "test_bank_impedance_at_both_ends", "closed form"),
+    "sheet.SheetSolution": (SHEET, "test_density_in_a_strip", "closed form"),
+    "sheet.solve": (SHEET, "test_van_der_pauw_on_an_irregular_outline", "Philips Res. Rep. 13, 1958"),
+    "sheet_fields.NeckFlow": (SHAPES, "test_neck_runs_from_edge_to_edge_around_its_middle", "closed form"),
+    "sheet_fields.averaged_density_a_per_m": (SHEET, "test_averaged_density_in_an_annulus", "closed form"),
+    "sheet_fields.density_a_per_m": (SHEET, "test_density_in_a_strip", "closed form"),
+    "sheet_fields.drop_v": (SHEET, "test_density_in_a_strip", "closed form"),
+    "sheet_fields.link_current_a": (SHEET, "test_link_currents_add_up_to_what_is_drawn", "Kirchhoff"),
+    "sheet_fields.neck_flow": (SHEET, "test_neck_carries_all_and_is_as_wide_as_the_copper", "Kirchhoff"),
+    "sheet_findings.SheetFinding": (SHAPES, "test_several_faults_are_told_at_once", "common practice"),
+    "sheet_findings.connection_findings": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "common practice"),
+    "sheet_findings.findings": (SHAPES, "test_each_fault_is_found_and_placed", "common practice"),
+    "sheet_findings.shape_findings": (SHAPES, "test_several_faults_are_told_at_once", "common practice"),
+    "sheet_grid.Faces": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_grid.Grid": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_grid.copper_share": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_grid.cut_faces": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_grid.default_pitch_m": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_grid.lay_grid": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_neck.NeckStretch": (SHAPES, "test_neck_runs_from_edge_to_edge_around_its_middle", "closed form"),
+    "sheet_neck.neck_stretch": (SHAPES, "test_neck_runs_from_edge_to_edge_around_its_middle", "closed form"),
+    "sheet_network.Network": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_network.build_network": (SHAPES, "test_cells_hold_the_copper_of_the_sheet", "closed form"),
+    "sheet_network.joined_to": (SHEET, "test_small_grid_against_networkx", "networkx"),
+    "sheet_network.solve_network": (SHEET, "test_infinite_square_lattice", "Cserti 2000; OEIS A355565"),
+    "sheet_parts.line_crossings": (SHAPES, "test_a_slit_makes_two_nodes_of_a_cell", "closed form"),
+    "sheet_parts.part_of_cell": (SHAPES, "test_a_slit_makes_two_nodes_of_a_cell", "closed form"),
+    "sheet_shape.DiscPad": (SHEET, "test_two_discs", "textbook, two parallel cylinders"),
+    "sheet_shape.Neck": (SHAPES, "test_neck_runs_from_edge_to_edge_around_its_middle", "closed form"),
+    "sheet_shape.RectanglePad": (SHEET, "test_straight_strip", "closed form"),
+    "sheet_shape.Sheet": (SHEET, "test_straight_strip", "closed form"),
+    "sheet_shape.SheetError": (SHAPES, "test_each_fault_is_found_and_placed", "common practice"),
+    "sheet_shape.distance_to_segments": (SHAPES, "test_polygons", "closed form"),
+    "sheet_shape.edges": (SHAPES, "test_polygons", "closed form"),
+    "sheet_shape.inside_polygon": (SHAPES, "test_polygons", "closed form"),
+    "sheet_shape.near_pairs": (SHAPES, "test_polygons", "every pair compared"),
+    "sheet_shape.on_copper": (SHAPES, "test_polygons", "closed form"),
+    "sheet_shape.polygon_area_m2": (SHAPES, "test_polygons", "closed form"),
+    "sheet_shape.segments_cross": (SHAPES, "test_polygons", "closed form"),
     "stability.damped_peak": (DROOP, "test_damped_peak_against_a_minimax_search", "from memory; searched"),
     "stability.deliverable_power_w": (
         DROOP, "test_deliverable_power_is_where_the_operating_point_vanishes", "closed form",
     ),
+    "stability.impedance_margin_db": (WAVES, "test_positive_impedance_margin_is_stable", "eigenvalues"),
     "stability.least_capacitance_f": (DROOP, "test_stability_against_eigenvalues", "eigenvalues"),
+    "stability.output_peak_ohm": (WAVES, "test_output_peak_against_a_fine_sweep", "fine sweep"),
     "stability.regulated_source_h": (
         DROOP, "test_source_inductance_meets_its_resistance_at_the_bandwidth", "closed form",
     ),
@@ -75,6 +139,7 @@ CLAIMS = {
     "transient.bus_dip_v": (IN_TIME, "test_bus_dip_is_never_optimistic", "integration in time"),
     "transient.rail_droop_v": (IN_TIME, "test_ramped_form_is_exact", "integration in time"),
     "transient.release_v": (DROOP, "test_release_against_the_energy_form", "SLUS659F p. 24, SGLS371A p. 22"),
+    "transient.source_peak_ohm": (WAVES, "test_source_peak_against_the_matrix_exponential", "matrix exponential"),
     "transient.step_droop_v": (DROOP, "test_undershoot_of_slus659f", "SLUS659F p. 24"),
     "transient.transition_energy_j": (DROOP, "test_transition_energy", "closed form"),
 }  # fmt: skip
