@@ -24,7 +24,8 @@ SIMPLER = 1.02
 #: ... or when both errors are below any measurement (efficiency, 0 to 1).
 NEGLIGIBLE = 1e-5
 EXPONENT_RANGE = (-1.0, 4.0)
-COARSE_EXPONENTS = tuple(float(value) for value in np.arange(-1.0, 4.01, 0.5))
+EXPONENT_STEP = 0.5
+COARSE_EXPONENTS = tuple(float(value) for value in np.arange(-1.0, 4.01, EXPONENT_STEP))
 
 
 @dataclass(frozen=True)
@@ -175,14 +176,22 @@ def deal(setting: IntArray, random: np.random.Generator) -> list[FloatArray]:
 
 
 def left_out_error(form: Form, loss_w: FloatArray, weight: FloatArray, parts: Sequence[FloatArray]) -> float:
-    """Return the mean absolute error in efficiency (0 to 1) of points predicted without them."""
+    """Return the mean absolute error in efficiency (0 to 1) of points predicted without them.
+
+    Free exponents are searched anew without the points, on the coarse grid around those of all points.
+    """
     target = loss_w - form.offset
+    middle = _grid_exponents(form, target, weight)
+    near = (-EXPONENT_STEP, 0.0, EXPONENT_STEP)
+    candidates = [
+        tuple(float(np.clip(m + s, *EXPONENT_RANGE)) for m, s in zip(middle, steps, strict=True))
+        for steps in product(near, repeat=len(middle))
+    ]
     errors = np.zeros(len(loss_w))
     for out in parts:
         kept = np.logical_not(out)
         exponents: tuple[float, ...] = ()
         if form.exponents:
-            candidates = list(product(COARSE_EXPONENTS, repeat=len(form.exponents)))
             misfits = [_misfit(form.columns(values)[kept], target[kept], weight[kept]) for values in candidates]
             exponents = candidates[int(np.argmin(misfits))]
         columns = form.columns(exponents)

@@ -10,7 +10,7 @@ import numpy as np
 
 from archopt.errors import InputError, OutputError, Problem
 from archopt.inputs.fitting_part import FittedPart, fit_part
-from archopt.inputs.measured import MeasuredPoints, loss_table, read_points
+from archopt.inputs.measured import MeasuredPoints, loss_table, read_points, table_left_out_points
 from archopt.inputs.measured_catalogue import read_catalogue
 from archopt.inputs.measured_files import Places, check_name, places, write_part
 from archopt.physics.measured import LossTable, table_loss_w
@@ -92,10 +92,12 @@ def fit_to_files(request: FitRequest) -> FitResult:
 
 
 def table_words(points: MeasuredPoints, table: LossTable) -> str:
-    """How well the loss table, linear between its points, gives the measured points back, and who reads it."""
+    """How well the loss table, linear between its points, gives the points back, and who reads it."""
     loss, inside = table_loss_w(table, points.input_v, points.output_v, points.current_a)
     error = 100 * np.abs(points.efficiency(loss) - points.efficiency(points.loss_w))[points.output_w > 0]
+    gap = table_left_out_points(table)
+    between = "" if np.isnan(gap) else f", and inner levels from their neighbours within {gap:.2f}"
     return (
         f"the loss table gives {int(inside.sum())} of {len(points)} points back within {float(error.max()):.2f} "
-        "points of efficiency; it is kept beside the row, which is what a search reads"
+        f"points of efficiency{between}; it is kept beside the row, which is what a search reads"
     )
