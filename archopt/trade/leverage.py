@@ -11,9 +11,10 @@ Rows: ``part, number, value, spread_percent, energy_change_kwh, cost_change, lif
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass, replace
-from typing import Any, cast
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, fields, is_dataclass, replace
+from itertools import chain
+from typing import TYPE_CHECKING, Any, TypeVar, cast
 
 import numpy as np
 
@@ -27,14 +28,22 @@ from archopt.model.hardware import unpack
 from archopt.model.parameters import PRICE_STEPS, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
+from archopt.physics.arrays import FloatArray
 from archopt.physics.copper import sheet_resistance_ohm
 from archopt.trade.money import money_per_kwh
+from archopt.trade.pinned import BATCH
+
+if TYPE_CHECKING:
+    from _typeshed import DataclassInstance
+
+Table = TypeVar("Table", bound="DataclassInstance")
 
 PRICE_SPREAD_PERCENT = 10.0
 PRICE_MARK = "spread assumed; "
 PRICE_COLUMNS = ("price_100", "price_1k", "price_10k", "price_100k")
 
 STAGE_FAMILIES = ("buck_stages", "single_stages", "linear_regulators")
+TOGETHER = (*STAGE_FAMILIES, "inductors")  # families the stage table is made of
 UNIT_LOSSES = (
     "fixed_w", "switching_w", "input_exponent", "output_exponent", "linear_w_per_a", "resistance_mohm",
     "resistance_per_k", "thermal_k_per_w",
@@ -98,13 +107,66 @@ def leverage(problem: Problem, row: IntArray, count: int = 5, prices: int = 3) -
 
 def loss_rows(problem: Problem, row: IntArray) -> list[dict[str, Any]]:
     """Return a row for every loss number of every part a design uses, in catalogue order."""
-    base = annual_kwh(problem, row)
     worth = money_per_kwh(problem.study) * problem.study.economics.life_years
+    numbers = list(loss_numbers(problem, row))
+    of_stages = [number for number in numbers if number.family in TOGETHER]
+    together = dict(zip(of_stages, stage_changes_kwh(problem, row, of_stages), strict=True))
+    base = float(annual_kwh(problem, row[None])[0])
     out = []
-    for number in loss_numbers(problem, row):
-        change = annual_kwh(perturbed(problem, number), row) - base
+    for number in numbers:
+        change = together.get(number)
+        if change is None:
+            change = float(annual_kwh(perturbed(problem, number), row[None])[0]) - base
         out.append(record(number, change, 0.0, change * worth))
     return out
+
+
+def stage_changes_kwh(problem: Problem, row: IntArray, numbers: Sequence[Number]) -> list[float]:
+    """Return the change of a design's year by each number of its stages and coils, solved in one batch.
+
+    Each number adds the stages it belongs to, made again with it, to the end of the stage table, and one copy
+    of the design that uses them; the first copy uses none.
+    """
+    used = {problem.stages.names[k] for k in Designs(problem.layout, row[None]).rail("stage")[0]}
+    rows = np.repeat(row[None], len(numbers) + 1, axis=0)
+    stage = Designs(problem.layout, rows).rail("stage")
+    tables, count = [problem.stages], len(problem.stages.names)
+    for copy, number in enumerate(numbers, start=1):
+        table = tables_of.stage_table(problem.study, only_stages(problem, number, used), problem.parts)
+        for place, name in enumerate(table.names):
+            stage[copy][stage[0] == problem.stages.names.index(name)] = count + place
+        tables.append(table)
+        count += len(table.names)
+    energy = annual_kwh(replace(problem, stages=joined(tables)), rows)
+    return [float(value) for value in energy[1:] - energy[0]]
+
+
+def only_stages(problem: Problem, number: Number, used: set[str]) -> Catalogue:
+    """Return a catalogue with one number off and no stages but the used ones that number belongs to."""
+    families = changed_families(problem.catalogue, number)
+    kept: dict[str, dict[str, Part]] = {"inductors": families["inductors"]}
+    for family in STAGE_FAMILIES:
+        kept[family] = {
+            name: part
+            for name, part in families.get(family, {}).items()
+            if name in used and number.name in {name, getattr(part, "inductor", "")}
+        }
+    return replace(problem.catalogue, families=kept)
+
+
+def joined(tables: Sequence[Table]) -> Table:
+    """Return parameter tables one behind the other, field by field."""
+    first = tables[0]
+    values: dict[str, Any] = {}
+    for one in fields(first):
+        held = [getattr(table, one.name) for table in tables]
+        if isinstance(held[0], tuple):
+            values[one.name] = tuple(chain.from_iterable(held))
+        elif is_dataclass(held[0]):
+            values[one.name] = joined(held)
+        else:
+            values[one.name] = np.concatenate(held)
+    return replace(first, **values)
 
 
 def price_rows(problem: Problem, row: IntArray) -> list[dict[str, Any]]:
@@ -150,13 +212,17 @@ def record(number: Number, energy_kwh: float, cost: float, lifetime: float) -> d
     }
 
 
-def annual_kwh(problem: Problem, row: IntArray) -> float:
-    """Return the energy one decided design loses a year by direct physics, kWh; no limit is checked."""
+def annual_kwh(problem: Problem, rows: IntArray) -> FloatArray:
+    """Return the energy decided designs lose a year by direct physics, (P,) kWh; no limit is checked."""
     states = problem.states
-    hardware = unpack(problem, Designs(problem.layout, row[None]), states)
-    solution = solve(problem, states, hardware, DirectStages(problem, states), exact=True)
-    moving = transition_kwh(problem, states, hardware)
-    return float((solution.loss_w[0] * states.hours).sum()) * 1e-3 + float(moving[0])
+    out = np.empty(len(rows))
+    for start in range(0, len(rows), BATCH):
+        part = slice(start, start + BATCH)
+        hardware = unpack(problem, Designs(problem.layout, rows[part]), states)
+        solution = solve(problem, states, hardware, DirectStages(problem, states), exact=True)
+        out[part] = (solution.loss_w * states.hours).sum(axis=1) * 1e-3
+        out[part] += transition_kwh(problem, states, hardware)
+    return out
 
 
 def loss_numbers(problem: Problem, row: IntArray) -> Iterator[Number]:
@@ -219,23 +285,25 @@ def source_text(catalogue: Catalogue, part: Part) -> str:
 
 
 def perturbed(problem: Problem, number: Number) -> Problem:
-    """Return the problem with one catalogue number off by its spread.
+    """Return the problem with one catalogue number, of no stage, off by its spread.
 
     The parameter tables of its family are made again by the same functions that made them; the decision space
     and the prices stay, so that a row means the same design.
     """
-    rows = problem.catalogue.families[number.family]
-    part = rows[number.name].model_copy(update={number.column: number.raised})
-    families = {**problem.catalogue.families, number.family: {**rows, number.name: part}}
-    catalogue = replace(problem.catalogue, families=families)
+    catalogue = replace(problem.catalogue, families=changed_families(problem.catalogue, number))
     return with_catalogue(problem, catalogue, number)
+
+
+def changed_families(catalogue: Catalogue, number: Number) -> dict[str, dict[str, Part]]:
+    """Return the catalogue's families with one number off by its spread."""
+    rows = catalogue.families[number.family]
+    part = rows[number.name].model_copy(update={number.column: number.raised})
+    return {**catalogue.families, number.family: {**rows, number.name: part}}
 
 
 def with_catalogue(problem: Problem, catalogue: Catalogue, number: Number) -> Problem:
     """Return the problem with the tables of one family made from another catalogue."""
     study, parts, family = problem.study, problem.parts, number.family
-    if family in STAGE_FAMILIES or family == "inductors":
-        return replace(problem, stages=tables_of.stage_table(study, catalogue, parts))
     if family == "bus_converters":
         return replace(problem, converters=tables_of.converter_table(study, catalogue, parts))
     if family == "capacitors":

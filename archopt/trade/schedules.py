@@ -79,7 +79,7 @@ def fixed_rows(problem: Problem, row: IntArray, volts: IntArray) -> IntArray:
 
 
 def follow_rows(problem: Problem, row: IntArray, volts: IntArray) -> IntArray:
-    """Return rows that follow the load over the converters' whole range; volts (K, 2) nominals, -1 their own."""
+    """Return rows that follow the load over the converters' whole range; volts (K, 2) nominals or -1."""
     rows = np.repeat(row[None], len(volts), axis=0)
     designs = Designs(problem.layout, rows)
     for bus in regulated_buses(problem, row):

@@ -55,7 +55,7 @@ def test_annual_energy_is_the_evaluators(line_card) -> None:
     problem, row, _ = line_card
     evaluator = Evaluator(pinned_problem(problem, row))
     expected = evaluator.evaluate(row[None], exact=True).objectives[0, 0]
-    assert annual_kwh(problem, row) == pytest.approx(expected, rel=1e-12)
+    assert annual_kwh(problem, row[None])[0] == pytest.approx(expected, rel=1e-12)
 
 
 @pytest.mark.parametrize(
@@ -69,7 +69,7 @@ def test_annual_energy_is_the_evaluators(line_card) -> None:
 )  # fmt: skip
 def test_leverage_is_a_finite_difference_of_the_recompiled_study(line_card, family: str, column: str) -> None:
     problem, row, found = line_card
-    base = annual_kwh(problem, row)
+    base = annual_kwh(problem, row[None])[0]
     names = [name for kind, name in used_rows(problem, row) if kind == family]
     changes = []
     for name in names[:3]:
@@ -82,6 +82,25 @@ def test_leverage_is_a_finite_difference_of_the_recompiled_study(line_card, fami
         assert mine["value"] == getattr(part, column)
         assert mine["spread_percent"] == part.spread_percent
     assert any(change != 0.0 for change in changes)
+
+
+def test_leverage_reaches_through_a_parent_rail(industrial) -> None:
+    """A linear regulator below another rail, that rail's stage and coil: each against the recompiled study."""
+    problem, row = industrial
+    row = Evaluator(pinned_problem(problem, row)).decide(row[None])[0]
+    designs = Designs(problem.layout, row[None])
+    child = int(np.flatnonzero(designs.rail("feed")[0] >= 3)[0])
+    parent = int(designs.rail("feed")[0, child]) - 3
+    below, above = (problem.stages.names[int(designs.rail("stage")[0, r])] for r in (child, parent))
+    family = "linear_regulators" if below in problem.catalogue.families["linear_regulators"] else "buck_stages"
+    found = loss_rows(problem, row)
+    base = annual_kwh(problem, row[None])[0]
+    for kind, name, column in ((family, below, "quiescent_ma"), ("buck_stages", above, "low_side_mohm")):
+        mine = next(one for one in found if one["part"] == name and one["number"] == column)
+        raised = mine["value"] * (1 + 0.01 * mine["spread_percent"])
+        expected = recompiled_kwh(problem, row, kind, name, column, raised) - base
+        assert expected > 0.0
+        assert mine["energy_change_kwh"] == pytest.approx(expected, rel=1e-6, abs=1e-9)
 
 
 def test_supervisor_leverage_in_closed_form(line_card) -> None:
@@ -136,4 +155,4 @@ def test_parts_not_on_the_board_have_no_leverage(telecom) -> None:
     assert not families & {"supervisors", "bias_supplies", "single_stages", "linear_regulators"}
     stages = {number.name for number in loss_numbers(problem, row) if number.family == "buck_stages"}
     assert stages == {value for name, value in problem.study.incumbent.items() if name.endswith(".stage")}
-    assert np.isfinite(annual_kwh(problem, row))
+    assert np.isfinite(annual_kwh(problem, row[None])[0])
