@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from archopt.model.bus_checks import check_buses
+from archopt.model.bus_stability import check_impedance
 from archopt.model.cost import copper_area_m2
 from archopt.model.hardware import plane_limit_a
 from archopt.model.limits import Ledger
@@ -130,6 +131,7 @@ def check_all(situation: Situation, droop: Droop, *, explain: bool = False) -> L
     check_rails(situation, droop, ledger)
     check_jump(situation, ledger)
     check_buses(situation, ledger)
+    check_impedance(situation, ledger)
     check_copper(situation, ledger)
     check_board(situation, ledger)
     return ledger

@@ -50,6 +50,8 @@ LIMITS = (
     Limit("copper ampacity", "A", 0.05, relative=True),
     Limit("layer budget", "cm2", 0.05, relative=True),
     Limit("stability", "ratio", 0.1),
+    Limit("impedance margin", "dB", 1.0),
+    Limit("input impedance margin", "dB", 1.0),
     Limit("start-up capacitance", "uF", 0.05, relative=True),
     Limit("input current", "A", 0.05, relative=True),
     Limit("deliverable power", "W", 0.05, relative=True),

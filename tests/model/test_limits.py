@@ -71,7 +71,7 @@ def stricter(problem: Problem, limit: str) -> Problem:
     if limit == "bus output range":
         narrow = np.full(len(problem.converters.names), 1.0)
         return replace(problem, converters=replace(problem.converters, output_max_v=narrow))
-    if limit == "stability":
+    if limit in ("stability", "impedance margin", "input impedance margin"):
         control = replace(problem.study.control, stability_margin=1e5)
         return replace(problem, study=replace(problem.study, control=control))
     if limit == "bias supply power":
