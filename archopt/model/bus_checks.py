@@ -4,16 +4,24 @@ from __future__ import annotations
 
 import numpy as np
 
+from archopt.model.hardware import setting_error_v
 from archopt.model.limits import Ledger
 from archopt.model.parameters import BoolArray, IntArray
 from archopt.model.situation import Situation
 from archopt.model.space import BUS_NAMES
 from archopt.model.states import FALLBACK, JUMP, MIX
+from archopt.physics import bus_converter
 from archopt.physics.stability import least_capacitance_f, regulated_source_h, resistance_limit_ohm
+
+LEAST_BUS_V = 1e-3  # keeps the losses of a collapsed bus finite
 
 
 def check_buses(situation: Situation, ledger: Ledger) -> None:
-    """Check range, current, power, temperature, dip, drop, start-up and stability of every bus."""
+    """Check range, current, power, temperature, dip, drop, start-up and stability of every bus.
+
+    Where the study asks for spare converters, those left after as many have failed carry every load alone, keep
+    cool and start into all of the bus capacitance. The losses of a year are those of all that run.
+    """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     solution, converters, study = situation.solution, problem.converters, problem.study
     used = hardware.converter >= 0
@@ -36,10 +44,15 @@ def check_buses(situation: Situation, ledger: Ledger) -> None:
         "converter power", bus_w / carrying, converters.limit_w[index][:, None, :], at_most=True, axes=axes,
         applies=here,
     )  # fmt: skip
+    unit = bus_converter.losses(
+        converters.loss.take(index[:, None, :]), solution.node_v[:, steady, None],
+        np.maximum(solution.bus_v[:, steady], LEAST_BUS_V), bus_a / carrying, states.ambient_degc[steady][:, None],
+    )  # fmt: skip
     ledger.add(
-        "converter temperature", solution.converter_degc[:, steady], study.derating.junction_degc, at_most=True,
+        "converter temperature", unit.temperature_degc, study.derating.junction_degc, at_most=True,
         axes=axes, applies=here,
     )  # fmt: skip
+    ledger.add("thermal gain", unit.thermal_gain, 1.0, at_most=True, axes=axes, applies=here)
     bands = tuple(f"band {k + 1}" for k in range(states.bands))
     bus_axes = (BUS_NAMES, bands)
     band_v = hardware.band_v
@@ -78,9 +91,11 @@ def check_buses(situation: Situation, ledger: Ledger) -> None:
     )  # fmt: skip
     ledger.add(
         "start-up capacitance", 1e6 * hardware.bulk_nominal_f,
-        1e6 * converters.startup_max_f[index] * hardware.units, at_most=True, axes=(BUS_NAMES,), applies=used,
+        1e6 * converters.startup_max_f[index] * np.maximum(hardware.units - study.derating.spare_converters, 0.5),
+        at_most=True, axes=(BUS_NAMES,), applies=used,
     )  # fmt: skip
-    top_v = np.where(hardware.fixed_ratio, converters.ratio[index] * study.supply.high_v, high_v)
+    top_v = high_v + setting_error_v(problem, hardware.converter, high_v)
+    top_v = np.where(hardware.fixed_ratio, converters.ratio[index] * study.supply.high_v, top_v)
     bulk_rated = problem.capacitors.rated_v[situation.designs.bus("bulk")] * study.derating.voltage
     ledger.add("capacitor voltage", top_v, bulk_rated, at_most=True, axes=(BUS_NAMES,), applies=used)
     check_stability(situation, ledger, index, used)

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from archopt.model.board import STEP_POWER_RATIO
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
-from archopt.model.hardware import Hardware, plane_limit_a, unpack
+from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, unpack
 from archopt.model.options import Options, band_hours, option_index
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
@@ -81,11 +81,13 @@ def legal_voltages(
     index = np.maximum(hardware.converter, 0)[..., None, None]
     units = hardware.units_band[..., None]
     spare = np.maximum(units - study.derating.spare_converters, 0.5)
+    error_v = setting_error_v(problem, hardware.converter[..., None, None], grid)
+    low_v, high_v = grid - error_v, grid + error_v
     legal = (grid >= converters.output_min_v[index] - 1e-9) & (grid <= converters.output_max_v[index] + 1e-9)
     legal = legal & (mix_w <= spare * converters.limit_w[index])
-    legal &= mix_w / grid <= spare * converters.limit_a[index]
-    legal &= mix_w / grid <= plane_limit_a(problem, hardware.stack, designs.bus("pairs"))[..., None, None]
-    dipped = np.maximum(grid - dip_v, 0.1)
+    legal &= mix_w / low_v <= spare * converters.limit_a[index]
+    legal &= mix_w / low_v <= plane_limit_a(problem, hardware.stack, designs.bus("pairs"))[..., None, None]
+    dipped = np.maximum(low_v - dip_v, 0.1)
     legal &= dip_v <= study.control.bus_dip_percent * 0.01 * grid
     moving = (designs.bus("control") != FIXED)[..., None, None]
     charge = np.where(moving, hardware.bulk_nominal_f[..., None, None] * converters.slew_v_per_s[index], 0.0)
@@ -108,9 +110,9 @@ def legal_voltages(
         drop_v2 = np.einsum("pqb,rq->prb", rail_w[here] * on_here[..., None], problem.bus_squares)
         drop_v2 *= hardware.plane_ohm[here, bus, None, None]
         for r in np.flatnonzero(on_here.any(axis=0)):
-            drop = drop_v2[:, r, :, None] / grid
-            at_stage = grid - drop - SAFETY_V
-            ok = (at_stage >= need[here, r, :, None]) & (grid <= high[here, r, :, None])
+            drop = drop_v2[:, r, :, None] / low_v[here, bus]
+            at_stage = low_v[here, bus] - drop - SAFETY_V
+            ok = (at_stage >= need[here, r, :, None]) & (high_v[here, bus] <= high[here, r, :, None])
             ok &= at_stage - dip_v[here, bus] >= jump[here, r, :, None]
             legal[here, bus] &= ok | ~on_here[:, r, None, None]
     return legal
@@ -126,6 +128,7 @@ def running_units(
     units = designs.bus("count")
     nominal = designs.bus("nominal_v")
     volts = problem.grid_v[nominal][..., None]
+    low_v = volts - setting_error_v(problem, hardware.converter[..., None], volts)
     at = nominal[..., None, None]
     mean_w = np.take_along_axis(energy_kwh, np.broadcast_to(at, (*energy_kwh.shape[:3], 1)), 3)[..., 0]
     hours = np.maximum(band_hours(states), 1e-6)
@@ -141,9 +144,9 @@ def running_units(
     for running in range(int(units.max(initial=1)), 0, -1):
         carry = max(running - spare, 0.5)
         fits = (mix <= carry * converters.limit_w[index][..., None]) & (
-            mix / volts <= carry * converters.limit_a[index][..., None]
+            mix / low_v <= carry * converters.limit_a[index][..., None]
         )
-        fits &= jump / (0.9 * volts) <= running * converters.overload_a[index][..., None]
+        fits &= jump / (0.9 * low_v) <= running * converters.overload_a[index][..., None]
         can = (running == units[..., None]) | (
             fits & (running < units[..., None]) & (designs.bus("fewest") == 0)[..., None]
         )

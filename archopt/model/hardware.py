@@ -20,7 +20,8 @@ class Hardware:
     Rails (P, R): stage, phases, feed, parent (-1 none), bank_f, bank_esr_ohm, pour_ohm (loop), bank_count.
     Buses (P, 2): converter (-1 none), units, plane_ohm (loop, a square), bulk_f (with stage inputs), esr_ohm,
     bulk_nominal_f. on_bus (P, 2, R). running (P, S, R) phases, units_running (P, S, 2), set_v (P, S, 2) bus
-    voltage set point (nan for fixed ratio), band_v (P, 2, B). bias, bias_on_bus, supervisor, stack: (P,).
+    voltage set, with its setting error where limits are checked (not used for fixed ratio), band_v (P, 2, B).
+    bias, bias_on_bus, supervisor, stack: (P,).
     """
 
     stage: IntArray
@@ -85,6 +86,7 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
     nominal_v = problem.grid_v[designs.bus("nominal_v")]
     fallback = states.kind == FALLBACK
     set_v = np.where(fallback[None, :, None], nominal_v[:, None, :], band_v.transpose(0, 2, 1)[:, states.band])
+    set_v = set_v + states.setting_side[None, :, None] * setting_error_v(problem, converter[:, None, :], set_v)
     running_band = designs.running_phases
     running = np.where(fallback[None, :, None], phases[:, None, :], running_band.transpose(0, 2, 1)[:, states.band])
     units_band = designs.running_converters
@@ -130,6 +132,22 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
         supervisor=designs.board("supervisor") - 1,
         stack=stack,
     )
+
+
+def setting_error_v(problem: Problem, converter: IntArray, set_v: FloatArray) -> FloatArray:
+    """Return how far a regulated bus may stand from where the study's grid sets it, V; shapes broadcast.
+
+    The accuracy of the setting, and what the converter's own setting grid leaves. A fixed ratio is exact.
+    """
+    table = problem.converters
+    if not len(table.names):
+        return np.zeros(np.broadcast_shapes(converter.shape, set_v.shape))
+    index = np.maximum(converter, 0)
+    grid_v = table.setting_grid_v[index]
+    step_v = np.where(grid_v > 0, grid_v, 1.0)
+    rounded = np.where(grid_v > 0, np.abs(set_v - step_v * np.round(set_v / step_v)), 0.0)
+    sets = (converter >= 0) & (table.kind[index] != FIXED_RATIO)
+    return np.where(sets, table.accuracy[index] * set_v + rounded, 0.0)
 
 
 def bus_ratio_v(problem: Problem, converter: IntArray) -> FloatArray:

@@ -106,7 +106,7 @@ def check_jump(situation: Situation, ledger: Ledger) -> None:
     ledger.add("jump survival: stage input", volts, volts - spare, at_most=False, axes=axes, applies=on)
     converters = problem.converters
     index = np.maximum(hardware.converter, 0)[..., None]
-    applies = (hardware.converter >= 0)[..., None] & ~hardware.fixed_ratio[..., None]
+    applies = (hardware.converter >= 0)[..., None]
     fixed = (situation.designs.bus("control") == FIXED)[..., None]
     band_v, units = hardware.band_v, hardware.units_band
     top_v, top_units = band_v[..., -1:], units[..., -1:]

@@ -51,6 +51,20 @@ class StateTable:
         return np.flatnonzero(self.kind == kind)
 
     @property
+    def setting_side(self) -> FloatArray:
+        """Where in its setting accuracy a regulated bus stands, (S,): 0 as set, -1 lowest, 1 highest.
+
+        Limits are checked at the lowest bus with the lowest input and after a jump, at the highest with the
+        highest input; hours are counted as set.
+        """
+        side = np.zeros(len(self.hours))
+        side[self.of_kind(JUMP)] = -1.0
+        for kind in (MIX, FALLBACK):
+            places = self.of_kind(kind)
+            side[places[0::2]], side[places[1::2]] = -1.0, 1.0
+        return side
+
+    @property
     def bands(self) -> int:
         """Number of bands."""
         return len(self.edges_w) - 1

@@ -214,11 +214,21 @@ class Reference:
                 amps[parent] += self.stage_in(s, k, volts, float(self.states.current_a[s, k]))[0] / volts
         return amps
 
+    def set_v(self, s: int, bus: Bus) -> float:
+        """Return the set bus voltage; where limits are checked with its error, low or high."""
+        kind = self.states.kind[s]
+        volts = bus.nominal_v if kind == FALLBACK else bus.volts[int(self.states.band[s])]
+        if kind not in (MIX, JUMP, FALLBACK) or bus.follows_input:
+            return volts
+        grid = bus.row.setting_grid_v
+        error = bus.row.accuracy_percent / 100.0 * volts + (abs(volts - grid * round(volts / grid)) if grid else 0.0)
+        same = [k for k in range(len(self.states.name)) if self.states.kind[k] == kind]
+        return volts + error if kind != JUMP and same.index(s) % 2 else volts - error
+
     def undropped_v(self, s: int, net: Net) -> float:
         for bus in self.buses:
             if bus.name == net.feed:
-                band = int(self.states.band[s])
-                return bus.row.ratio * float(self.states.input_v[s]) if bus.follows_input else bus.volts[band]
+                return bus.row.ratio * float(self.states.input_v[s]) if bus.follows_input else self.set_v(s, bus)
         return float(self.states.input_v[s]) if net.feed == "input" else self.own[self.place[net.feed]].voltage_v
 
     def largest_steps_w(self) -> dict[str, list[float]]:
@@ -272,9 +282,7 @@ class Reference:
         fallback = states.kind[s] == FALLBACK
         amps = self.currents(s)
         node = vin0
-        set_v: dict[str, float] = {}
-        for bus in self.buses:
-            set_v[bus.name] = bus.nominal_v if fallback else bus.volts[band]
+        set_v = {bus.name: self.set_v(s, bus) for bus in self.buses}
         bus_v = {b.name: b.row.ratio * node if b.follows_input else set_v[b.name] for b in self.buses}
         drops = [0.0] * len(self.nets)
         quiet = 0

@@ -94,6 +94,7 @@ def test_the_jump_is_solved_at_the_dipped_bus() -> None:
     bus = reference.buses[0]
     jump = [s for s in range(len(reference.results)) if reference.states.kind[s] == JUMP]
     for band, s in enumerate(jump):
-        dipped = bus.volts[band] - reference.dips_v[bus.name][band]
+        dipped = reference.set_v(s, bus) - reference.dips_v[bus.name][band]
         assert reference.results[s].bus_v[bus.name] == pytest.approx(dipped, rel=1e-12)
+        assert reference.set_v(s, bus) < bus.volts[band]
         assert dipped < bus.volts[band]

@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from archopt.model.decide import choose_schedule, crossing
+from archopt.model.limits import INDEX
 from archopt.model.space import FIXED, FOLLOW, TWO_LEVELS, Designs
 
 BANDS, GRID = 4, 6
@@ -167,7 +168,8 @@ def test_no_legal_neighbour_saves_more_than_a_thousandth(name: str) -> None:
     for p in good:
         changed = neighbours(rows[p], designs, 0, last)
         exact = evaluator.evaluate(np.array([rows[p], *changed]), exact=True)
-        legal = exact.violation[1:] <= 0.0
+        # near its limit droop is so steep that 10 mV, the schedule's safety, are a twentieth of the budget
+        legal = (exact.violation[1:] <= 0.0) & (exact.slack[1:, INDEX["rail droop"]] >= 1.0)
         tried += int(legal.sum())
         gain = 1.0 - exact.objectives[1:, 0] / exact.objectives[0, 0]
         worst = max(worst, float(gain[legal].max(initial=0.0)))
