@@ -50,30 +50,30 @@ class BuckStage(Part):
 
     part: str = Field(min_length=1, description="part number; variants of one part share it")
     inductor: str = Field(min_length=1, description="row of inductors.csv")
-    input_min_v: Positive = Field(le=100)
-    input_max_v: Positive = Field(le=100)
-    output_min_v: Positive = Field(le=100)
-    output_max_v: Positive = Field(le=100)
+    input_min_v: Positive = Field(le=100, description="lowest input voltage")
+    input_max_v: Positive = Field(le=100, description="highest input voltage")
+    output_min_v: Positive = Field(le=100, description="lowest output voltage it can be set to")
+    output_max_v: Positive = Field(le=100, description="highest output voltage it can be set to")
     phase_current_a: Positive = Field(le=200, description="rated current of one phase before derating")
-    max_phases: int = Field(ge=1, le=16)
-    frequency_khz: float = Field(ge=50, le=5000)
+    max_phases: int = Field(ge=1, le=16, description="most phases in parallel")
+    frequency_khz: float = Field(ge=50, le=5000, description="switching frequency")
     high_side_mohm: Positive = Field(description="at 25 degC")
     low_side_mohm: Positive = Field(description="at 25 degC")
     resistance_per_k: NotNegative = Field(le=0.02, description="relative rise of switch resistance per kelvin")
     edge_rise_ns: NotNegative = Field(le=500, description="turn-on overlap of current and voltage")
     edge_fall_ns: NotNegative = Field(le=500, description="turn-off overlap of current and voltage")
     dead_time_ns: NotNegative = Field(le=500, description="both edges together, a cycle")
-    diode_v: NotNegative = Field(le=2)
-    high_side_gate_nc: NotNegative
-    low_side_gate_nc: NotNegative
+    diode_v: NotNegative = Field(le=2, description="voltage across the low side during the dead time")
+    high_side_gate_nc: NotNegative = Field(description="gate charge of the high side, a cycle")
+    low_side_gate_nc: NotNegative = Field(description="gate charge of the low side, a cycle")
     gate_supply: Literal["input", "bias", "output"] = Field(
         description="gate drive derived from the stage input, from a 5 V bias, or from the stage's own output "
         "(of at least 4.5 V)"
     )
-    gate_v: Positive = Field(le=20)
+    gate_v: Positive = Field(le=20, description="gate drive voltage")
     high_side_output_nc: NotNegative = Field(description="output charge at output_charge_at_v")
     low_side_output_nc: NotNegative = Field(description="output charge at output_charge_at_v")
-    output_charge_at_v: Positive
+    output_charge_at_v: Positive = Field(description="voltage the output charges are stated at")
     recovery_nc: NotNegative = Field(description="reverse recovery charge at rated phase current")
     input_capacitor_mohm: NotNegative = Field(
         description="equivalent series resistance of the stage's own input capacitor"
@@ -93,16 +93,16 @@ class BuckStage(Part):
     shed_share: float = Field(
         1.0, gt=0, le=1, description="threshold: share of phase_current_a from which another phase runs"
     )
-    max_duty: float = Field(gt=0, le=1)
-    min_on_ns: NotNegative = Field(le=1000)
-    min_off_ns: NotNegative = Field(le=1000)
+    max_duty: float = Field(gt=0, le=1, description="largest duty it can reach")
+    min_on_ns: NotNegative = Field(le=1000, description="shortest on-time of the high side")
+    min_off_ns: NotNegative = Field(le=1000, description="shortest off-time of the high side")
     crossover_khz: Positive = Field(description="loop bandwidth")
     delay_ns: NotNegative = Field(description="dead time of the loop before the current starts to move")
     wakeup_us: NotNegative = Field(description="delay until an added phase carries current")
     loop_min_uf: NotNegative = Field(description="least output capacitance the loop can be compensated for")
     loop_max_uf: Positive = Field(description="most output capacitance the loop can be compensated for")
     thermal_k_per_w: Positive = Field(description="local air to junction, per phase, at air_speed_m_s")
-    air_speed_m_s: Positive
+    air_speed_m_s: Positive = Field(description="air speed that thermal_k_per_w holds at")
 
 
 class Inductor(Part):
@@ -110,12 +110,12 @@ class Inductor(Part):
 
     family = "inductors"
 
-    inductance_nh: Positive
+    inductance_nh: Positive = Field(description="inductance at rated current")
     winding_mohm: Positive = Field(description="at 25 degC, copper")
-    saturation_a: Positive
+    saturation_a: Positive = Field(description="peak current it may carry")
     core_loss_mw: NotNegative = Field(description="core loss at core_ripple_a peak to peak and core_frequency_khz")
-    core_ripple_a: Positive
-    core_frequency_khz: Positive
+    core_ripple_a: Positive = Field(description="peak-to-peak ripple core_loss_mw is stated at")
+    core_frequency_khz: Positive = Field(description="frequency core_loss_mw is stated at")
     core_frequency_exponent: float = Field(ge=1, le=3, description="Steinmetz exponent of frequency")
     core_ripple_exponent: float = Field(ge=1.5, le=3.5, description="Steinmetz exponent of flux swing")
 
@@ -125,39 +125,45 @@ class BusConverter(Part):
 
     family = "bus_converters"
 
-    kind: Literal["regulated", "fixed_ratio", "non_isolated"]
-    isolated: bool
-    input_min_v: Positive = Field(le=450)
-    input_max_v: Positive = Field(le=450)
-    output_min_v: Positive = Field(le=100)
-    output_max_v: Positive = Field(le=100)
+    kind: Literal["regulated", "fixed_ratio", "non_isolated"] = Field(
+        description="regulated, of fixed ratio to the input, or regulated without isolation"
+    )
+    isolated: bool = Field(description="whether output and input are isolated from each other")
+    input_min_v: Positive = Field(le=450, description="lowest input voltage")
+    input_max_v: Positive = Field(le=450, description="highest input voltage")
+    output_min_v: Positive = Field(le=100, description="lowest output voltage it can be set to")
+    output_max_v: Positive = Field(le=100, description="highest output voltage it can be set to")
     input_nominal_v: Positive = Field(description="input voltage the loss numbers are stated at")
     output_nominal_v: Positive = Field(description="output voltage the loss numbers are stated at")
     ratio: NotNegative = Field(le=1, description="output over input of a fixed-ratio converter, else 0")
-    max_current_a: Positive
-    max_power_w: Positive
+    max_current_a: Positive = Field(description="rated output current before derating")
+    max_power_w: Positive = Field(description="rated output power before derating")
     overload_a: Positive = Field(description="guaranteed short-time current")
     overload_ms: NotNegative = Field(description="how long overload_a is guaranteed")
     fixed_w: NotNegative = Field(description="loss that depends on nothing")
     switching_w: NotNegative = Field(description="magnetics and switching loss at nominal input and output")
-    input_exponent: float = Field(ge=-1, le=4)
-    output_exponent: float = Field(ge=-1, le=4)
-    linear_w_per_a: NotNegative
+    input_exponent: float = Field(
+        ge=-1, le=4, description="power of input over nominal input that switching_w follows"
+    )
+    output_exponent: float = Field(
+        ge=-1, le=4, description="power of output over nominal output that switching_w follows"
+    )
+    linear_w_per_a: NotNegative = Field(description="loss in proportion to output current")
     resistance_mohm: NotNegative = Field(description="referred to the output, at 25 degC")
-    resistance_per_k: NotNegative = Field(le=0.02)
+    resistance_per_k: NotNegative = Field(le=0.02, description="relative rise of resistance per kelvin")
     thermal_k_per_w: Positive = Field(description="local air to hottest part at air_speed_m_s")
-    air_speed_m_s: Positive
+    air_speed_m_s: Positive = Field(description="air speed that thermal_k_per_w holds at")
     setting_grid_v: NotNegative = Field(description="step of the output setting; 0 for fixed ratio")
-    accuracy_percent: NotNegative = Field(le=10)
-    slew_v_per_ms: NotNegative
-    crossover_khz: Positive
-    delay_us: NotNegative
+    accuracy_percent: NotNegative = Field(le=10, description="accuracy of the output setting")
+    slew_v_per_ms: NotNegative = Field(description="rate at which the output follows a new setting")
+    crossover_khz: Positive = Field(description="loop bandwidth")
+    delay_us: NotNegative = Field(description="dead time of the loop before the current starts to move")
     output_mohm: NotNegative = Field(
         description="closed-loop output impedance (regulated) or droop resistance (fixed ratio)"
     )
     startup_max_uf: Positive = Field(description="largest output capacitance it starts into, per unit")
     wakeup_ms: NotNegative = Field(description="delay until a paralleled unit that was off carries current")
-    max_parallel: int = Field(ge=1, le=8)
+    max_parallel: int = Field(ge=1, le=8, description="most units in parallel")
 
 
 class SingleStage(Part):
@@ -165,38 +171,42 @@ class SingleStage(Part):
 
     family = "single_stages"
 
-    isolated: bool
-    input_min_v: Positive = Field(le=450)
-    input_max_v: Positive = Field(le=450)
-    output_min_v: Positive = Field(le=100)
-    output_max_v: Positive = Field(le=100)
-    input_nominal_v: Positive
-    output_nominal_v: Positive
-    phase_current_a: Positive
-    max_phases: int = Field(ge=1, le=16)
-    fixed_w: NotNegative
-    switching_w: NotNegative
-    input_exponent: float = Field(ge=-1, le=4)
-    output_exponent: float = Field(ge=-1, le=4)
-    linear_w_per_a: NotNegative
+    isolated: bool = Field(description="whether output and input are isolated from each other")
+    input_min_v: Positive = Field(le=450, description="lowest input voltage")
+    input_max_v: Positive = Field(le=450, description="highest input voltage")
+    output_min_v: Positive = Field(le=100, description="lowest output voltage it can be set to")
+    output_max_v: Positive = Field(le=100, description="highest output voltage it can be set to")
+    input_nominal_v: Positive = Field(description="input voltage the loss numbers are stated at")
+    output_nominal_v: Positive = Field(description="output voltage the loss numbers are stated at")
+    phase_current_a: Positive = Field(description="rated current of one unit before derating")
+    max_phases: int = Field(ge=1, le=16, description="most units in parallel")
+    fixed_w: NotNegative = Field(description="loss that depends on nothing")
+    switching_w: NotNegative = Field(description="magnetics and switching loss at nominal input and output")
+    input_exponent: float = Field(
+        ge=-1, le=4, description="power of input over nominal input that switching_w follows"
+    )
+    output_exponent: float = Field(
+        ge=-1, le=4, description="power of output over nominal output that switching_w follows"
+    )
+    linear_w_per_a: NotNegative = Field(description="loss in proportion to output current")
     resistance_mohm: NotNegative = Field(description="referred to the output, at 25 degC")
-    resistance_per_k: NotNegative = Field(le=0.02)
-    thermal_k_per_w: Positive
-    air_speed_m_s: Positive
+    resistance_per_k: NotNegative = Field(le=0.02, description="relative rise of resistance per kelvin")
+    thermal_k_per_w: Positive = Field(description="local air to hottest part at air_speed_m_s")
+    air_speed_m_s: Positive = Field(description="air speed that thermal_k_per_w holds at")
     transformer_ratio: Positive = Field(description="primary over secondary turns; 1 without transformer")
     inductance_nh: Positive = Field(description="output inductance per unit")
-    frequency_khz: float = Field(ge=50, le=5000)
-    max_duty: float = Field(gt=0, le=1)
-    crossover_khz: Positive
-    delay_ns: NotNegative
-    wakeup_us: NotNegative
+    frequency_khz: float = Field(ge=50, le=5000, description="switching frequency")
+    max_duty: float = Field(gt=0, le=1, description="largest duty it can reach")
+    crossover_khz: Positive = Field(description="loop bandwidth")
+    delay_ns: NotNegative = Field(description="dead time of the loop before the current starts to move")
+    wakeup_us: NotNegative = Field(description="delay until an added phase carries current")
     shedding: Literal["ideal", "threshold", "none"] = Field(description=SHEDDING)
     shed_share: float = Field(
         1.0, gt=0, le=1, description="threshold: share of phase_current_a from which another phase runs"
     )
-    loop_min_uf: NotNegative
-    loop_max_uf: Positive
-    input_capacitance_uf: NotNegative
+    loop_min_uf: NotNegative = Field(description="least output capacitance the loop can be compensated for")
+    loop_max_uf: Positive = Field(description="most output capacitance the loop can be compensated for")
+    input_capacitance_uf: NotNegative = Field(description="the stage's own input capacitance under bias, per unit")
 
 
 class LinearRegulator(Part):
@@ -204,19 +214,19 @@ class LinearRegulator(Part):
 
     family = "linear_regulators"
 
-    input_min_v: Positive = Field(le=100)
-    input_max_v: Positive = Field(le=100)
-    output_min_v: Positive = Field(le=100)
-    output_max_v: Positive = Field(le=100)
+    input_min_v: Positive = Field(le=100, description="lowest input voltage")
+    input_max_v: Positive = Field(le=100, description="highest input voltage")
+    output_min_v: Positive = Field(le=100, description="lowest output voltage it can be set to")
+    output_max_v: Positive = Field(le=100, description="highest output voltage it can be set to")
     dropout_mv: NotNegative = Field(description="at rated current")
     phase_current_a: Positive = Field(description="rated current")
-    quiescent_ma: NotNegative
-    crossover_khz: Positive
-    delay_ns: NotNegative
-    loop_min_uf: NotNegative
-    loop_max_uf: Positive
-    thermal_k_per_w: Positive
-    air_speed_m_s: Positive
+    quiescent_ma: NotNegative = Field(description="ground current")
+    crossover_khz: Positive = Field(description="loop bandwidth")
+    delay_ns: NotNegative = Field(description="dead time of the loop before the current starts to move")
+    loop_min_uf: NotNegative = Field(description="least output capacitance the loop can be compensated for")
+    loop_max_uf: Positive = Field(description="most output capacitance the loop can be compensated for")
+    thermal_k_per_w: Positive = Field(description="local air to junction at air_speed_m_s")
+    air_speed_m_s: Positive = Field(description="air speed that thermal_k_per_w holds at")
 
 
 class Capacitor(Part):
@@ -224,14 +234,14 @@ class Capacitor(Part):
 
     family = "capacitors"
 
-    kind: Literal["ceramic", "polymer", "electrolytic"]
-    capacitance_uf: Positive
-    rated_v: Positive
-    esr_mohm: Positive
+    kind: Literal["ceramic", "polymer", "electrolytic"] = Field(description="ceramic, polymer or electrolytic")
+    capacitance_uf: Positive = Field(description="nominal capacitance without bias")
+    rated_v: Positive = Field(description="rated voltage before derating")
+    esr_mohm: Positive = Field(description="equivalent series resistance")
     half_capacitance_v: Positive = Field(
         description="bias at which half the capacitance is left; very large where bias does nothing"
     )
-    tolerance_percent: NotNegative = Field(le=50)
+    tolerance_percent: NotNegative = Field(le=50, description="tolerance of the capacitance, either way")
     ripple_a: Positive = Field(description="permitted ripple current, rms")
 
 
@@ -243,7 +253,7 @@ class Supervisor(Part):
     control: Literal["two_levels", "follow_load"] = Field(
         description="the most it can do; follow_load includes two_levels"
     )
-    power_mw: NotNegative
+    power_mw: NotNegative = Field(description="its own supply power, constant")
     buses: int = Field(ge=1, le=4, description="how many buses it can set")
 
 
@@ -252,12 +262,12 @@ class BiasSupply(Part):
 
     family = "bias_supplies"
 
-    input_min_v: Positive = Field(le=450)
-    input_max_v: Positive = Field(le=450)
-    isolated: bool
-    output_v: Positive
-    max_power_w: Positive
-    no_load_mw: NotNegative
+    input_min_v: Positive = Field(le=450, description="lowest input voltage")
+    input_max_v: Positive = Field(le=450, description="highest input voltage")
+    isolated: bool = Field(description="whether output and input are isolated from each other")
+    output_v: Positive = Field(description="output voltage")
+    max_power_w: Positive = Field(description="rated output power")
+    no_load_mw: NotNegative = Field(description="input power without load")
     efficiency: float = Field(gt=0, le=1, description="of the power above no-load")
 
 
@@ -266,7 +276,7 @@ class Stack(Part):
 
     family = "stacks"
 
-    layers: int = Field(ge=2, le=40)
+    layers: int = Field(ge=2, le=40, description="copper layers of the board")
     pairs: int = Field(ge=1, le=10, description="power and ground layer pairs of equal weight")
     copper_oz: Positive = Field(description="weight of the power layers; a row of copper_foils.csv")
     price_per_cm2: Positive = Field(description="the whole board, per area, at production volume")
@@ -277,8 +287,8 @@ class CopperFoil(Part):
 
     family = "copper_foils"
 
-    copper_oz: Positive
-    nominal_um: Positive
+    copper_oz: Positive = Field(description="copper weight, ounces a square foot")
+    nominal_um: Positive = Field(description="thickness of the foil before processing")
     finished_um: Positive = Field(description="least thickness left on an inner layer")
 
 
@@ -287,10 +297,10 @@ class InputPath(Part):
 
     family = "input_paths"
 
-    input_max_v: Positive = Field(le=450)
-    resistance_mohm: NotNegative
-    inductance_uh: NotNegative
-    max_current_a: Positive
+    input_max_v: Positive = Field(le=450, description="highest input voltage")
+    resistance_mohm: NotNegative = Field(description="series resistance")
+    inductance_uh: NotNegative = Field(description="series inductance")
+    max_current_a: Positive = Field(description="rated current before derating")
     power_mw: NotNegative = Field(description="its own supply current times input, constant")
 
 
