@@ -6,12 +6,11 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.ndimage import convolve
-from scipy.sparse import coo_array
-from scipy.sparse.csgraph import connected_components
 
-from archopt.physics.arrays import BoolArray, FloatArray, IntArray
+from archopt.physics.arrays import BoolArray, FloatArray
 from archopt.physics.sheet import SheetSolution
-from archopt.physics.sheet_grid import SHORTEST, Faces, copper_share
+from archopt.physics.sheet_cut import cut_along
+from archopt.physics.sheet_grid import copper_share
 from archopt.physics.sheet_neck import neck_stretch
 from archopt.physics.sheet_shape import Neck
 
@@ -118,41 +117,25 @@ class NeckFlow:
 
 
 def neck_flow(solution: SheetSolution, neck: Neck) -> NeckFlow:
-    """Current through a marked neck for every load port: the links between cells either side of its line."""
+    """Current through a marked neck for every load port: the links through faces that cut the copper there.
+
+    Raises
+    ------
+    SheetError
+        If the grid is too coarse to see the edges the neck ends at, as a hole that crosses no cell face.
+    """
     faces, network, grid = solution.faces, solution.network, solution.grid
     stretch = neck_stretch(solution.sheet, neck)
-    origin = np.array(stretch.start_m)
-    along = (np.array(stretch.end_m) - origin) / stretch.width_m
-    row, column = np.divmod(faces.node_cell, grid.columns)
-    centre_m = grid.to_metres(np.stack([column, row], axis=1) + 0.5)
-    side = (centre_m - origin) @ np.array([-along[1], along[0]]) > 0.0
-    parting = np.flatnonzero(side[faces.node[:, 0]] != side[faces.node[:, 1]])
-    place = (grid.to_metres(faces.middle[parting]) - origin) @ along
-    crossed = parting[_unbroken(faces, parting, (place > 0.0) & (place < stretch.width_m))]
-    under = np.isin(network.face, crossed)
-    sign = np.where(side[faces.node[network.face[under], 1]], 1.0, -1.0)[:, None]
+    start, end = grid.to_grid(np.array([stretch.start_m, stretch.end_m]))
+    at_pad = np.zeros(len(faces.length), dtype=bool)
+    at_pad[network.face[~network.inner.all(axis=1)]] = True
+    usable: BoolArray = ~at_pad & (network.copper_node[faces.node].min(axis=1) >= network.port_count)
+    polygons = [grid.to_grid(polygon) for polygon in solution.sheet.polygons_m]
+    face, sense = cut_along(faces, usable, polygons, start, end)
+    signs = np.zeros(len(faces.length))
+    signs[face] = sense
+    sign = signs[network.face]
+    under = sign != 0.0
     drop = solution.node_squares[network.node[under]]
     current = network.conductance[under, None] * (drop[:, 1] - drop[:, 0])
-    return NeckFlow(stretch.width_m, (sign * current).sum(axis=0))
-
-
-def _unbroken(faces: Faces, among: IntArray, sure: BoolArray) -> BoolArray:
-    """Which of some faces make one unbroken cut with those that are sure; both shapes as ``among``.
-
-    The cut follows the cells' faces. Where the line ends at a corner of the copper it may run on along the
-    edge through slivers of copper, and ends only where a face does not reach the next grid crossing.
-    """
-    half = np.where(faces.axis[among, None] == np.arange(2), 0.0, 0.5 * faces.length[among, None])
-    ends = np.stack([faces.middle[among] - half, faces.middle[among] + half], axis=1)
-    whole = np.round(ends)
-    at_crossing = (np.abs(ends - whole) < SHORTEST).all(axis=2)
-    _, crossing = np.unique(whole.reshape(-1, 2), axis=0, return_inverse=True)
-    # faces are numbered first, then the grid crossings they share
-    count = len(among)
-    face = np.repeat(np.arange(count), 2)[at_crossing.ravel()]
-    joint = count + crossing.ravel()[at_crossing.ravel()]
-    size = 3 * count
-    matrix = coo_array((np.ones(len(face)), (face, joint)), shape=(size, size))
-    _, part = connected_components(matrix, directed=False)
-    kept: BoolArray = np.isin(part[:count], part[:count][sure])
-    return kept
+    return NeckFlow(stretch.width_m, (sign[under, None] * current).sum(axis=0))

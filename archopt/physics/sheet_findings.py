@@ -19,6 +19,7 @@ from archopt.physics.sheet_shape import (
     Sheet,
     distance_to_segments,
     edges,
+    near_pairs,
     on_copper,
     polygon_area_m2,
     segments_cross,
@@ -89,24 +90,35 @@ def _polygon_findings(sheet: Sheet) -> Iterator[SheetFinding]:
             continue
         corners = _without_repeats(given)
         size_m = float(np.ptp(given, axis=0).max())
-        if len(corners) < 3 or polygon_area_m2(corners) <= ROUNDING * size_m**2:
+        if len(corners) < 3:
             yield SheetFinding("no polygon", thing, place, f"{name} encloses no area")
             continue
-        crossing = np.argwhere(segments_cross(*edges(corners), *edges(corners)))
+        crossing, touching = _meetings_with_itself(corners, ROUNDING * size_m)
         if len(crossing):
-            at = _spot(0.5 * sum(edges(corners))[crossing[0, 0]])
-            yield SheetFinding(
-                f"self-crossing {thing}", thing, place, f"{name} crosses itself on its side near {at}"
-            )
-            continue
-        touching = distance_to_segments(corners, *edges(corners)) <= ROUNDING * size_m
-        own = np.eye(len(corners), dtype=bool)
-        touching &= ~(own | np.roll(own, -1, axis=1))
-        if touching.any():
-            at = _spot(corners[np.argwhere(touching)[0, 0]])
-            yield SheetFinding(
-                "zero-width neck", thing, place, f"{name} touches itself at {at}; leave copper or a gap"
-            )
+            at = _spot(crossing[0])
+            yield SheetFinding(f"self-crossing {thing}", thing, place, f"{name} crosses itself near {at}")
+        elif polygon_area_m2(corners) <= ROUNDING * size_m**2:
+            yield SheetFinding("no polygon", thing, place, f"{name} encloses no area")
+        elif len(touching):
+            message = f"{name} touches itself at {_spot(touching[0])}; leave copper or a gap"
+            yield SheetFinding("zero-width neck", thing, place, message)
+
+
+def _meetings_with_itself(corners_m: FloatArray, rounding_m: float) -> tuple[FloatArray, FloatArray]:
+    """Where sides of a polygon cross each other, and corners that lie on sides not their own (m), (N, 2)."""
+    start, end = edges(corners_m)
+    last = len(corners_m) - 1
+    low, high = np.minimum(start, end) - rounding_m, np.maximum(start, end) + rounding_m
+    one, other = near_pairs(low, high).T
+    crossed = segments_cross(start[one], end[one], start[other], end[other])
+    crossing = 0.5 * (start[one] + end[one])[crossed]
+    first, second = np.concatenate([one, other]), np.concatenate([other, one])
+    ahead = (first - second) % (last + 1)
+    # the first corner of a side also belongs to the side before it
+    foreign = (ahead != 0) & (ahead != 1)
+    first, second = first[foreign], second[foreign]
+    touched = distance_to_segments(start[first], start[second], end[second]) <= rounding_m
+    return crossing, start[first][touched]
 
 
 def _spot(point_m: FloatArray) -> str:
@@ -148,7 +160,8 @@ def _lies_on_copper(pad: Pad, sheet: Sheet) -> bool:
         return bool(distance_to_segments(centre, start, end).min() >= pad.reach_m * (1.0 - FLUSH))
     corners = pad.corners_m(FLUSH)
     smaller = replace(pad, width_m=pad.width_m * (1.0 - FLUSH), height_m=pad.height_m * (1.0 - FLUSH))
-    clear = not segments_cross(*edges(corners), start, end).any() and not smaller.contains(start).any()
+    sides = [point[:, None] for point in edges(corners)]
+    clear = not segments_cross(*sides, start, end).any() and not smaller.contains(start).any()
     return bool(clear and on_copper(corners, sheet).all())
 
 

@@ -109,7 +109,7 @@ def _span_in_copper(
     for place, missed in ((enter, np.inf), (leave, -np.inf)):
         hit = np.flatnonzero(np.isfinite(place))
         meeting_m = start_m[hit] + np.clip(place[hit], 0.0, 1.0)[:, None] * step_m[hit]
-        blocked = segments_cross(middle_m[hit], meeting_m, *walls_m).any(axis=1)
+        blocked = segments_cross(middle_m[hit, None], meeting_m[:, None], *walls_m).any(axis=1)
         place[hit[blocked]] = missed
     return enter, leave
 

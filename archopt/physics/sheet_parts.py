@@ -7,7 +7,13 @@ from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
-from archopt.physics.sheet_shape import distance_to_segments, edges, inside_polygon, segments_cross
+from archopt.physics.sheet_shape import (
+    distance_to_segments,
+    edges,
+    inside_polygon,
+    near_pairs,
+    segments_cross,
+)
 
 #: Boundaries nearer to each other than this touch (pitches).
 TOUCH = 1e-6
@@ -114,28 +120,22 @@ def _parts_by_rim(rim: FloatArray, place: FloatArray) -> IntArray:
 
 def _meeting_cells(polygons: list[FloatArray], columns: int) -> IntArray:
     """Cells in which the boundaries of two polygons cross or touch each other."""
-    low = np.array([polygon.min(axis=0) for polygon in polygons]) - TOUCH
-    high = np.array([polygon.max(axis=0) for polygon in polygons]) + TOUCH
-    near = (low[:, None] <= high[None]).all(axis=2)
-    points = [np.zeros((0, 2))]
-    for one, other in np.argwhere(np.triu(near & near.T, 1)):
-        points.extend(_meeting_points(polygons[one], polygons[other]))
-    column, row = np.floor(np.concatenate(points)).astype(np.int_).T
-    return np.unique(row * columns + column)
-
-
-def _meeting_points(one: FloatArray, other: FloatArray) -> list[FloatArray]:
-    """Points where two polygons cross, and corners of either that lie on the other."""
-    first, second = np.argwhere(segments_cross(*edges(one), *edges(other))).T
-    start, step = one[first], (np.roll(one, -1, axis=0) - one)[first]
-    away, onward = other[second] - start, (np.roll(other, -1, axis=0) - other)[second]
+    start, end = (np.concatenate(ends) for ends in zip(*map(edges, polygons), strict=True))
+    owner = np.repeat(np.arange(len(polygons)), [len(polygon) for polygon in polygons])
+    one, other = near_pairs(np.minimum(start, end) - TOUCH, np.maximum(start, end) + TOUCH).T
+    foreign = owner[one] != owner[other]
+    one, other = one[foreign], other[foreign]
+    crossed = segments_cross(start[one], end[one], start[other], end[other])
+    first, second = one[crossed], other[crossed]
+    step, onward, away = end[first] - start[first], end[second] - start[second], start[second] - start[first]
     across = step[:, 0] * onward[:, 1] - step[:, 1] * onward[:, 0]
     share = (away[:, 0] * onward[:, 1] - away[:, 1] * onward[:, 0]) / across
-    return [
-        start + share[:, None] * step,
-        one[(distance_to_segments(one, *edges(other)) < TOUCH).any(axis=1)],
-        other[(distance_to_segments(other, *edges(one)) < TOUCH).any(axis=1)],
-    ]
+    points = [start[first] + share[:, None] * step]
+    for corner, side in ((one, other), (other, one)):
+        touching = distance_to_segments(start[corner], start[side], end[side]) < TOUCH
+        points.append(start[corner][touching])
+    column, row = np.floor(np.concatenate(points)).astype(np.int_).T
+    return np.unique(row * columns + column)
 
 
 def _parts_by_sight(polygons: list[FloatArray], corner: IntArray, places: FloatArray) -> IntArray:
@@ -167,7 +167,9 @@ def _parts_by_sight(polygons: list[FloatArray], corner: IntArray, places: FloatA
     copper = np.append(copper, np.ones(len(places), dtype=bool))
     points = np.concatenate([points, places])
     pairs = pairs[copper[pairs].all(axis=1)]
-    seen: BoolArray = ~segments_cross(points[pairs[:, 0]], points[pairs[:, 1]], *walls).any(axis=1)
+    seen: BoolArray = ~segments_cross(points[pairs[:, 0], None], points[pairs[:, 1], None], *walls).any(
+        axis=1
+    )
     size = len(points)
     matrix = coo_array((np.ones(int(seen.sum())), tuple(pairs[seen].T)), shape=(size, size))
     _, part = connected_components(matrix, directed=False)

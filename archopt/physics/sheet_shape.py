@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from archopt.physics.arrays import BoolArray, FloatArray
+from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 
 
 class SheetError(ValueError):
@@ -224,17 +224,30 @@ def _turn(origin: FloatArray, one: FloatArray, other: FloatArray) -> FloatArray:
 def segments_cross(
     start: FloatArray, end: FloatArray, other_start: FloatArray, other_end: FloatArray
 ) -> BoolArray:
-    """Whether segments cross away from their ends, shape (N, M); points shapes (N, 2) and (M, 2)."""
-    a, b, c, d = start[:, None], end[:, None], other_start[None], other_end[None]
-    apart: BoolArray = (_turn(a, b, c) * _turn(a, b, d) < 0.0) & (_turn(c, d, a) * _turn(c, d, b) < 0.0)
+    """Whether segments cross away from their ends; points of shapes (..., 2) that broadcast."""
+    apart: BoolArray = (_turn(start, end, other_start) * _turn(start, end, other_end) < 0.0) & (
+        _turn(other_start, other_end, start) * _turn(other_start, other_end, end) < 0.0
+    )
     return apart
 
 
 def distance_to_segments(points: FloatArray, start: FloatArray, end: FloatArray) -> FloatArray:
-    """Distance from points, shape (N, 2), to segments, shape (M, 2) each; shape (N, M)."""
-    along = end - start
-    square = np.maximum((along**2).sum(axis=1), 1e-300)
-    offset = points[:, None] - start[None]
-    share = np.clip((offset * along).sum(axis=2) / square, 0.0, 1.0)
-    distance: FloatArray = np.linalg.norm(offset - share[..., None] * along, axis=2)
+    """Distance from points to segments; shapes (..., 2) that broadcast."""
+    along, offset = end - start, points - start
+    square = np.maximum((along**2).sum(axis=-1), 1e-300)
+    share = np.clip((offset * along).sum(axis=-1) / square, 0.0, 1.0)
+    distance: FloatArray = np.linalg.norm(offset - share[..., None] * along, axis=-1)
     return distance
+
+
+def near_pairs(low: FloatArray, high: FloatArray) -> IntArray:
+    """Pairs of boxes that meet, shape (pairs, 2), each once; lower and upper corners of shape (N, 2)."""
+    order = np.argsort(low[:, 0], kind="stable")
+    start = np.arange(len(order))
+    count = np.searchsorted(low[order, 0], high[order, 0], side="right") - start - 1
+    count = np.maximum(count, 0)
+    one = np.repeat(start, count)
+    other = one + 1 + np.arange(len(one)) - np.repeat(np.cumsum(count) - count, count)
+    pairs: IntArray = np.stack([order[one], order[other]], axis=1)
+    meet = (low[pairs[:, 0], 1] <= high[pairs[:, 1], 1]) & (low[pairs[:, 1], 1] <= high[pairs[:, 0], 1])
+    return pairs[meet]
