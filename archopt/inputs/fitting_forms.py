@@ -32,13 +32,9 @@ class Candidates:
 
     forms: tuple[Form, ...]
     columns_of: Callable[[Fit], dict[str, Any]]
-    measured_columns: tuple[str, ...]
     untold: tuple[str, ...]
 
 
-CONVERTER_COLUMNS = (
-    "fixed_w", "switching_w", "input_exponent", "output_exponent", "linear_w_per_a", "resistance_mohm",
-)  # fmt: skip
 #: Mechanisms of a buck stage that a measurement can tell apart, and the columns they scale.
 BUCK_GROUPS: dict[str, tuple[tuple[str, ...], tuple[str, ...]]] = {
     "resistance": (("high_side_conduction_w", "low_side_conduction_w"), ("high_side_mohm", "low_side_mohm")),
@@ -108,7 +104,7 @@ def converter_candidates(like: Part, points: MeasuredPoints, losses_of: PartLoss
         untold.append("how loss varies with input voltage: one input voltage was measured")
     if outputs < 2:
         untold.append("how loss varies with output voltage: one output voltage was measured")
-    return Candidates(forms, _converter_columns, CONVERTER_COLUMNS, tuple(untold))
+    return Candidates(forms, _converter_columns, tuple(untold))
 
 
 WORDS = {
@@ -170,5 +166,4 @@ def buck_candidates(like: BuckStage, points: MeasuredPoints, losses_of: PartLoss
                 changed[target] = values[target] * max(scale, LEAST_SCALE if target.endswith("mohm") else 0.0)
         return changed
 
-    measured = tuple(target for name in groups for target in BUCK_GROUPS[name][1])
-    return Candidates(forms, columns_of, measured, tuple(untold))
+    return Candidates(forms, columns_of, tuple(untold))

@@ -12,6 +12,7 @@ from archopt.errors import InputError
 from archopt.inputs.catalogue_checks import check_family
 from archopt.inputs.fitting import Fit, choose, efficiency_weight, fit_form, free_form
 from archopt.inputs.fitting_forms import (
+    BUCK_GROUPS,
     Candidates,
     PartLosses,
     buck_candidates,
@@ -57,7 +58,8 @@ class Residual:
 class FittedPart:
     """A fitted row and everything to judge it by; errors are in points of efficiency.
 
-    form is what the points supported, tried every candidate with (name, numbers fitted, left-out error);
+    form is what the points supported, factors what the mechanisms of a buck stage were scaled by, tried every
+    candidate with (name, numbers fitted, left-out error);
     free_worst_points and free_rms_points are those of a form with more freedom than the row has.
     """
 
@@ -66,6 +68,7 @@ class FittedPart:
     like: str
     like_chosen: bool
     form: str
+    factors: tuple[tuple[str, float], ...]
     tried: tuple[tuple[str, int, float], ...]
     left_out_points: float
     residuals: tuple[Residual, ...]
@@ -120,6 +123,7 @@ def fit_part(
     weight = efficiency_weight(points.output_w, points.loss_w)
     fit, candidates, columns = _fit(base, points, losses_of, weight, random, notebook)
     part = _checked(base, columns, notebook)
+    factors = fit.coefficient.items() if isinstance(start, BuckStage) else ()
     residuals, rms_loss = _residuals(part, points, losses_of, fit.robust_weight)
     spread = {"spread_percent": min(max(float(np.ceil(rms_loss * 1e3) / 10), 0.1), 50.0)}
     part = _checked(part, {**spread, **({"part": name} if isinstance(part, BuckStage) else {})}, notebook)
@@ -129,7 +133,7 @@ def fit_part(
     worst, rms = float(np.nanmax(np.abs(errors))), float(np.sqrt(np.nanmean(errors**2)))
     free_rms = float(np.sqrt(np.nanmean(free_errors**2)))
     distinct = int(settings(points).max()) + 1
-    cautions = [*thin_places(points), *candidates.untold]
+    cautions = [*thin_places(points), *candidates.untold, *_kept_groups(start, fit)]
     if distinct > len(free.coefficient) + 4 and rms > max(1.5 * free_rms, free_rms + 0.05):
         cautions.append(
             f"the row misses by {rms:.2f} points rms where a form free in current and voltage misses by "
@@ -137,9 +141,10 @@ def fit_part(
         )
     cautions += _light_weights(residuals)
     return FittedPart(
-        part, points.file, start.name, like is None, fit.form.name, fit.tried, 100 * fit.left_out, tuple(residuals),
-        worst, rms, 100 * rms_loss, float(np.nanmax(np.abs(free_errors))), free_rms, candidates.measured_columns,
-        kept_columns(start, part, candidates.measured_columns), reach(part, points), tuple(cautions),
+        part, points.file, start.name, like is None, fit.form.name, tuple(factors), fit.tried, 100 * fit.left_out,
+        tuple(residuals),
+        worst, rms, 100 * rms_loss, float(np.nanmax(np.abs(free_errors))), free_rms, tuple(columns),
+        kept_columns(start, part, tuple(columns)), reach(part, points), tuple(cautions),
     )  # fmt: skip
 
 
@@ -223,6 +228,15 @@ def _residuals(
     ]  # fmt: skip
     relative = (fitted - points.loss_w) / points.loss_w
     return rows, float(np.sqrt(np.mean(relative**2)))
+
+
+def _kept_groups(like: Part, fit: Fit) -> list[str]:
+    """Name the mechanisms of a buck stage that the points gave no reason to change."""
+    if not isinstance(like, BuckStage):
+        return []
+    kept = [name for name in BUCK_GROUPS if name not in fit.form.terms]
+    words = f"the points tell nothing of them that {like.name} does not"
+    return [f"kept as they are: {', '.join(kept)}; {words}"] if kept else []
 
 
 def _light_weights(residuals: Sequence[Residual]) -> list[str]:

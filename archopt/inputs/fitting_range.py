@@ -87,7 +87,8 @@ def range_columns(
         columns["recovery_nc"] = like.recovery_nc * current / like.phase_current_a
     if isinstance(like, BusConverter):
         columns["max_power_w"] = _rounded(points.output_w.max())
-        columns["overload_a"] = max(like.overload_a, current)
+        overload = like.overload_a * min(current / like.max_current_a, 1.0)
+        columns["overload_a"] = max(_rounded(overload), current)
     return columns
 
 
@@ -127,12 +128,17 @@ def reach(part: Part, points: MeasuredPoints) -> tuple[tuple[str, float, float, 
 
 
 def kept_columns(like: Part, part: Part, measured: tuple[str, ...]) -> tuple[tuple[str, str], ...]:
-    """Return (column, value) of what the row has from ``like`` unchanged because nothing measured tells it."""
+    """Return (column, value) of what the row has from ``like`` because nothing measured tells it."""
     before, after = like.model_dump(), part.model_dump()
     own = {*measured, "name", "source", "part", "spread_percent"}
     ranges = {key for key in after if key.startswith(("input_m", "output_m")) and key.endswith("_v")}
     told = own | ranges | {current_column(part), "max_power_w", "input_nominal_v", "output_nominal_v"}
-    return tuple((key, shown(value)) for key, value in after.items() if key not in told and before[key] == value)
+    scaled = {"overload_a", "recovery_nc"}  # stated at the rated current and kept in proportion to it
+    return tuple(
+        (key, shown(value) + ("" if before[key] == value else " (in proportion to the rated current)"))
+        for key, value in after.items()
+        if key not in told and (before[key] == value or key in scaled)
+    )
 
 
 def thin_places(points: MeasuredPoints) -> list[str]:

@@ -21,6 +21,8 @@ OPTIONAL = ("temperature_degc",)
 UNIT = {"input_voltage_v": "V", "output_voltage_v": "V", "current_a": "A", "loss_w": "W", "temperature_degc": "degC"}
 #: Local air at the bench where the points do not say (degC).
 BENCH_DEGC = 25.0
+#: Bounds that catch a wrong magnitude.
+MOST_V, MOST_A, MOST_W, LEAST_EFFICIENCY = 1000.0, 10000.0, 100000.0, 0.01
 #: Settings closer than this are one level: a bench supply does not return to the same millivolt.
 LEVEL_WIDTH = 0.03
 
@@ -168,11 +170,11 @@ def _check_point(line: int, values: dict[str, float], notebook: Notebook) -> Non
         notebook.problem(f"row {line}, column {column}", message)
 
     for column in ("input_voltage_v", "output_voltage_v"):
-        if values.get(column, 1.0) <= 0:
-            note(column, f"{values[column]:g} V is out of range; it must be above 0 V")
+        if not 0 < values.get(column, 1.0) <= MOST_V:
+            note(column, f"{values[column]:g} V is out of range; it must be above 0 and at most {MOST_V:g} V")
     current = values.get("current_a")
-    if current is not None and current < 0:
-        note("current_a", f"{current:g} A is out of range; it must be at least 0 A")
+    if current is not None and not 0 <= current <= MOST_A:
+        note("current_a", f"{current:g} A is out of range; it must be 0 to {MOST_A:g} A")
     efficiency = values.get("efficiency")
     if efficiency is not None:
         if efficiency > 1:
@@ -180,13 +182,14 @@ def _check_point(line: int, values: dict[str, float], notebook: Notebook) -> Non
             note("efficiency", f"{efficiency:g} is above 1{meant}")
         elif efficiency == 1:
             note("efficiency", "is 1, no loss at all; nothing can be fitted to it")
-        elif efficiency <= 0:
-            note("efficiency", f"{efficiency:g} is out of range; it must be above 0 (no load: give loss_w instead)")
+        elif efficiency < LEAST_EFFICIENCY:
+            need = f"it must be at least {LEAST_EFFICIENCY:g} (no load: give loss_w instead)"
+            note("efficiency", f"{efficiency:g} is out of range; {need}")
         if current == 0:
             note("current_a", "is 0 A, where efficiency says nothing; give loss_w instead of efficiency")
     loss = values.get("loss_w")
-    if loss is not None and loss <= 0:
-        note("loss_w", f"{loss:g} W is out of range; a loss is above 0 W")
+    if loss is not None and not 0 < loss <= MOST_W:
+        note("loss_w", f"{loss:g} W is out of range; a loss is above 0 and at most {MOST_W:g} W")
     temperature = values.get("temperature_degc")
     if temperature is not None and not -60 <= temperature <= 150:
         note("temperature_degc", f"{temperature:g} degC is out of range; it must be -60 to 150, the local air")

@@ -50,7 +50,11 @@ def fit_sections(
 def _summary(fitted: FittedPart) -> Iterable[tuple[str, str]]:
     """What the fit is and how good."""
     yield "points", f"{len(fitted.residuals)} of {fitted.file}"
-    yield "terms", fitted.form
+    if fitted.factors:
+        scaled = ", ".join(f"{name} x {number(factor, 3)}" for name, factor in fitted.factors)
+        yield "scaled", f"{scaled}, of {fitted.like}"
+    else:
+        yield "terms", fitted.form
     yield "worst error", f"{fixed(fitted.worst_points, 2)} points of efficiency"
     of_loss = f"{fixed(fitted.rms_loss_percent, 1)} % of loss"
     yield "rms error", f"{fixed(fitted.rms_points, 2)} points of efficiency, {of_loss}"

@@ -65,6 +65,10 @@ def test_a_known_buck_stage_comes_back_from_noisy_points(catalogue: Catalogue, s
     known = changed_stage(catalogue)
     points = measure(catalogue, known, [6, 8, 10, 12, 14], [0.9, 1.8], [15 * x for x in SHARES], NOISE, seed)
     fitted = fit(points, "buck_stages", catalogue, like="buck_15a_500k_bus_gate")
+    factors = dict(fitted.factors)
+    assert factors["resistance"] == pytest.approx(1.3, rel=0.1)
+    assert factors["own supply"] == pytest.approx(1.8, rel=0.1)
+    assert fitted.part.model_dump()["high_side_mohm"] == pytest.approx(9.6 * factors["resistance"], rel=1e-4)
     assert worst_points(catalogue, known, fitted.part, points) <= 0.1
 
 
@@ -123,6 +127,7 @@ def test_the_row_claims_no_more_than_was_measured(catalogue: Catalogue) -> None:
     assert (part["input_min_v"], part["input_max_v"], part["output_min_v"], part["output_max_v"]) == (48, 48, 12, 12)
     assert part["max_current_a"] == 10
     assert part["max_power_w"] == 120
+    assert part["overload_a"] == pytest.approx(17 * 10 / 12.5, rel=1e-12)
     assert {"price_1k", "crossover_khz", "thermal_k_per_w"} <= {name for name, _ in fitted.kept}
     assert any("one input voltage" in words for words in fitted.cautions)
     assert any("one output voltage" in words for words in fitted.cautions)

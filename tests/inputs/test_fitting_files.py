@@ -39,12 +39,12 @@ def test_every_fault_of_the_points_is_told_at_once(tmp_path: Path) -> None:
         "row 3, column current_a: needs a number in A, found 'two'",
         "row 4, column output_voltage_v: needs a number in V, found an empty cell",
         "row 5, column efficiency: 93.5 is above 1; if 93.5 % was meant, write 0.935",
-        "row 6, column efficiency: 0 is out of range; it must be above 0 (no load: give loss_w instead)",
-        "row 8, column input_voltage_v: -48 V is out of range; it must be above 0 V",
+        "row 6, column efficiency: 0 is out of range; it must be at least 0.01 (no load: give loss_w instead)",
+        "row 8, column input_voltage_v: -48 V is out of range; it must be above 0 and at most 1000 V",
         "row 8, column efficiency: 'nan' is not a finite number",
         "row 9, column current_a: is 0 A, where efficiency says nothing; give loss_w instead of efficiency",
         "row 10, column efficiency: is 1, no loss at all; nothing can be fitted to it",
-        "row 11, column current_a: -1 A is out of range; it must be at least 0 A",
+        "row 11, column current_a: -1 A is out of range; it must be 0 to 10000 A",
     ):
         assert expected in said
     assert len(said) == 10

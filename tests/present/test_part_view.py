@@ -45,6 +45,7 @@ def test_every_family_lists_and_explains_itself(catalogue: Catalogue, family: st
     explained = text_of(catalogue, family, columns=True)
     for column in FAMILIES[family].model_fields:
         assert f"  {column} " in explained
+    assert all(row["meaning"] for row in column_rows(family))
 
 
 @pytest.mark.parametrize("family", FAMILIES)
