@@ -26,7 +26,7 @@ from archopt.physics.stability import least_capacitance_f, regulated_source_h
 from archopt.physics.transient import bus_dip_v
 
 ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
-SAFETY_V = 0.01
+SAFETY_V = 0.003
 LARGEST_STEP_RATIO = 3.0  # of a rail's step in bus power over its own, as the board solution has it
 SETTLING_PASSES = 3
 
@@ -91,6 +91,7 @@ def legal_voltages(
     legal &= dip_v <= study.control.bus_dip_percent * 0.01 * grid
     moving = (designs.bus("control") != FIXED)[..., None, None]
     charge = np.where(moving, hardware.bulk_nominal_f[..., None, None] * converters.slew_v_per_s[index], 0.0)
+    charge = np.where(np.arange(legal.shape[2])[:, None] < legal.shape[2] - 1, charge, 0.0)  # the top band never rises
     short = np.maximum(converters.overload_a[index], converters.limit_a[index])
     legal &= jump_w / dipped + charge <= units * short
     ohm = np.maximum(converters.output_ohm[index] / units, 1e-6)

@@ -20,7 +20,7 @@ from archopt.model.states import ENERGY, JUMP, MIX, StateTable
 from archopt.model.tables import NODES, LossTables, cubic_weights
 from archopt.physics.transient import rail_droop_v
 
-DROOP_NODES = 8
+DROOP_NODES = 12
 LEAST_HEADROOM_V = 0.05  # of the lowest droop node above the voltage at which the stage cannot raise its current
 LEAST_V = 1e-3  # keeps the search for the highest voltage finite where a stage has no duty
 IDLE_HOURS = 1e-6  # weight of a band's worst mix, so that a band without hours still has a preference
