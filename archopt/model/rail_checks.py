@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from archopt.model.limits import Ledger
-from archopt.model.parameters import BUCK, LINEAR
+from archopt.model.parameters import BUCK, LINEAR, FloatArray
 from archopt.model.situation import Droop, Situation
 from archopt.model.space import BUS_NAMES, FIXED
 from archopt.model.stages import conduction_ratio, headroom_v, ripple_square_a2, thermal_gain
@@ -86,23 +86,33 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     )
 
 
-def check_jump(situation: Situation, ledger: Ledger) -> None:
-    """Check that every stage and converter lives through the largest unannounced jump at the dipped bus."""
-    problem, states, hardware = situation.problem, situation.states, situation.hardware
+def jump_spare_v(situation: Situation) -> FloatArray:
+    """Return how far each stage's input may still fall after the jump before it loses its rail, (P, B, R) V.
+
+    Its input range, its duty with the drops at what the running phases carry, a linear regulator's dropout.
+    """
+    problem, hardware = situation.problem, situation.hardware
     solution, stages, rails = situation.solution, problem.stages, problem.rails
-    jump = states.of_kind(JUMP)
+    jump = situation.states.of_kind(JUMP)
     volts, amps = solution.stage_v[:, jump], solution.current_a[:, jump]
-    axes = (situation.state_names(jump), situation.rail_names)
     stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
-    on = ~states.off[jump]
-    running = hardware.running[:, jump]
-    per_phase = np.minimum(amps / running, stages.phase_limit_a[stage])
+    per_phase = np.minimum(amps / hardware.running[:, jump], stages.phase_limit_a[stage])
     drop_v = np.where(rails.remote_sense, amps * hardware.pour_ohm[:, None, :], 0.0)
     duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
     spare = np.where(stages.kind[stage] == LINEAR, np.inf, volts * (1.0 - duty / stages.max_duty[stage]))
     spare = np.minimum(spare, volts - stages.input_min_v[stage])
-    linear = headroom_v(stages, stage, volts, rails.voltage_v + drop_v, amps)
-    spare = np.minimum(spare, linear)
+    return np.minimum(spare, headroom_v(stages, stage, volts, rails.voltage_v + drop_v, amps))
+
+
+def check_jump(situation: Situation, ledger: Ledger) -> None:
+    """Check that every stage and converter lives through the largest unannounced jump at the dipped bus."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    solution = situation.solution
+    jump = states.of_kind(JUMP)
+    volts, amps = solution.stage_v[:, jump], solution.current_a[:, jump]
+    axes = (situation.state_names(jump), situation.rail_names)
+    on = ~states.off[jump]
+    spare = jump_spare_v(situation)
     ledger.add("jump survival: stage input", volts, volts - spare, at_most=False, axes=axes, applies=on)
     converters = problem.converters
     index = np.maximum(hardware.converter, 0)[..., None]

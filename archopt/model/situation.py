@@ -48,8 +48,33 @@ class Droop:
     release_percent: FloatArray
 
 
-def rail_droop(situation: Situation) -> Droop:
-    """Return droop and release of all rails at their load steps, with the phases running in each band.
+@dataclass(frozen=True)
+class DroopTerms:
+    """What droop and release of every rail in every band follow from, (P, R, B) or broadcasting to it; SI.
+
+    before, after : load before and after the step; left : load after the release from the mix, mix : before it
+    rise, fall : loop bandwidth at the lighter end of each; deficit : load beyond what runs
+    """
+
+    before_a: FloatArray
+    after_a: FloatArray
+    mix_a: FloatArray
+    left_a: FloatArray
+    step_a: FloatArray
+    up_a_per_s: FloatArray
+    down_a_per_s: FloatArray
+    rise_rad_s: FloatArray
+    fall_rad_s: FloatArray
+    delay_s: FloatArray
+    capacitance_f: FloatArray
+    esr_ohm: FloatArray
+    load_slew_a_per_s: FloatArray
+    deficit_a: FloatArray
+    wakeup_s: FloatArray
+
+
+def droop_terms(situation: Situation) -> DroopTerms:
+    """Return the terms of droop and release of all rails, with the phases running in each band.
 
     The loop is as fast as its lighter end lets it be: a rise starts at the load a step below the highest, a
     release ends a step below the mix. What children draw stays on the rail before and after.
@@ -63,26 +88,39 @@ def rail_droop(situation: Situation) -> Droop:
     volts = rails.voltage_v[:, None]
     extra = np.maximum(situation.solution.current_a[:, jump].transpose(0, 2, 1) - states.after_a.T, 0.0)
     mix = states.mix_a.T + extra
-    after = np.minimum(mix + rails.step_a[:, None], np.maximum(rails.max_a[:, None] + extra, mix))
-    deficit = np.maximum(after - running * stages.phase_limit_a[stage], 0.0)
-    deficit = np.where(running < hardware.phases[..., None], deficit, 0.0)
-    bank_f, esr = hardware.bank_f[..., None], hardware.bank_esr_ohm[..., None]
-    up = slew_up_a_per_s(stages, stage, running, stage_v, volts)
-    down = slew_down_a_per_s(stages, stage, running, volts)
     step = rails.step_a[:, None]
+    after = np.minimum(mix + step, np.maximum(rails.max_a[:, None] + extra, mix))
+    deficit = np.maximum(after - running * stages.phase_limit_a[stage], 0.0)
     before, left = np.maximum(after - step, 0.0), np.maximum(mix - step, 0.0)
     rise, fall = (
         loop_bandwidth_rad_s(stages, stage, stage_v, volts, load / running) for load in (before, left)
+    )  # fmt: skip
+    return DroopTerms(
+        before_a=before,
+        after_a=after,
+        mix_a=mix,
+        left_a=left,
+        step_a=step,
+        up_a_per_s=slew_up_a_per_s(stages, stage, running, stage_v, volts),
+        down_a_per_s=slew_down_a_per_s(stages, stage, running, volts),
+        rise_rad_s=rise,
+        fall_rad_s=fall,
+        delay_s=stages.delay_s[stage],
+        capacitance_f=hardware.bank_f[..., None],
+        esr_ohm=hardware.bank_esr_ohm[..., None],
+        load_slew_a_per_s=rails.load_slew_a_per_s[:, None],
+        deficit_a=np.where(running < hardware.phases[..., None], deficit, 0.0),
+        wakeup_s=stages.wakeup_s[stage],
     )
-    loop = (
-        stages.delay_s[stage],
-        bank_f,
-        esr,
-        rails.load_slew_a_per_s[:, None],
-    )
-    droop = rail_droop_v(step, up, rise, *loop, deficit, stages.wakeup_s[stage])
-    release = rail_droop_v(step, down, fall, *loop)
-    awake = ~states.mix_off.T
+
+
+def rail_droop(situation: Situation) -> Droop:
+    """Return droop and release of all rails at their load steps."""
+    terms = droop_terms(situation)
+    loop = (terms.delay_s, terms.capacitance_f, terms.esr_ohm, terms.load_slew_a_per_s)
+    droop = rail_droop_v(terms.step_a, terms.up_a_per_s, terms.rise_rad_s, *loop, terms.deficit_a, terms.wakeup_s)
+    release = rail_droop_v(terms.step_a, terms.down_a_per_s, terms.fall_rad_s, *loop)
+    awake = ~situation.states.mix_off.T
     droop, release = np.where(awake, droop, 0.0), np.where(awake, release, 0.0)
-    budget = 100.0 / rails.budget_v[:, None]
+    budget = 100.0 / situation.problem.rails.budget_v[:, None]
     return Droop(droop, release, droop * budget, release * budget)
