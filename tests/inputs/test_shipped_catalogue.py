@@ -33,8 +33,8 @@ BIAS_EFFICIENCY = 0.9
 SHARES = np.array([0.1, 0.3, 0.5, 1.0])
 
 LEAST_COUNT = {
-    "buck_stages": 36, "inductors": 30, "bus_converters": 8, "single_stages": 5, "linear_regulators": 5,
-    "capacitors": 14, "supervisors": 4, "bias_supplies": 3, "stacks": 12, "copper_foils": 4, "input_paths": 4,
+    "buck_stages": 60, "inductors": 30, "bus_converters": 24, "single_stages": 10, "linear_regulators": 12,
+    "capacitors": 20, "supervisors": 4, "bias_supplies": 3, "stacks": 12, "copper_foils": 4, "input_paths": 4,
 }  # fmt: skip
 
 AnyPart = TypeVar("AnyPart", bound=Part)
@@ -175,13 +175,38 @@ def test_wide_adjustment_costs_money_and_loss(catalogue: Catalogue) -> None:
 
 
 def test_gate_supply_follows_the_size(catalogue: Catalogue) -> None:
-    """Common practice: small stages derive their gate supply from the input, from 25 A a phase few do."""
+    """Common practice: small stages derive their gate supply from input or output, from 25 A a phase few do."""
     stages = family(catalogue, BuckStage)
     small = [stage.gate_supply for stage in stages if stage.phase_current_a < 20]
     large = [stage.gate_supply for stage in stages if stage.phase_current_a >= 25]
-    assert set(small) == {"input"}
+    assert set(small) == {"input", "output"}
+    assert small.count("input") > 4 * small.count("output")
     assert large.count("bias") > large.count("input") > 0
     assert all(stage.input_min_v >= 5.5 for stage in stages if stage.gate_supply == "input")
+
+
+def test_light_load_columns_cost_something(catalogue: Catalogue) -> None:
+    """A folding part is dearer and slower at light load than the same stage in forced conduction."""
+    stages = catalogue.families["buck_stages"]
+    folding = [stage for stage in family(catalogue, BuckStage) if stage.light_load == "emulation"]
+    assert len(folding) >= 10
+    for stage in folding:
+        plain = cast(BuckStage, stages[stage.name.replace("_fold_", "_")])
+        assert plain.light_load == "forced"
+        assert stage.price_1k > plain.price_1k
+        assert 0.0 < stage.fold_floor_khz < 0.2 * stage.frequency_khz
+        assert stage.folded_crossover_share < 0.5
+        input_v, output_v = usual_point(stage)
+        light_a = np.array([0.01, 0.03]) * stage.phase_current_a
+        ours, forced = (buck.losses(phase(s, catalogue), input_v, output_v, light_a, 50.0) for s in (stage, plain))
+        assert np.all(ours.total_w < 0.7 * forced.total_w), stage.name
+
+
+def test_every_way_of_shedding_is_offered(catalogue: Catalogue) -> None:
+    for model in (BuckStage, SingleStage):
+        parts = family(catalogue, model)
+        assert {part.shedding for part in parts} == {"ideal", "threshold", "none"}
+        assert all((part.shed_share < 1.0) == (part.shedding == "threshold") for part in parts)
 
 
 def test_every_source_is_dated_and_used(catalogue: Catalogue) -> None:
