@@ -8,7 +8,7 @@ from archopt.model.hardware import Hardware
 from archopt.model.options import Options, band_hours
 from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
-from archopt.model.states import StateTable
+from archopt.model.states import ENERGY, StateTable
 
 
 def bus_sums(options: Options, option: IntArray, hardware: Hardware) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -41,6 +41,19 @@ def rail_shares(options: Options, option: IntArray, hardware: Hardware) -> Float
     return np.where(total > 0, square / np.maximum(total, 1e-12) ** 2, 1.0)
 
 
+def sensed_pours(
+    problem: Problem, states: StateTable, hardware: Hardware
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return what the pours of rails with remote sense take from each bus, (P, 2, B, 1): kWh, mix W, jump W."""
+    ohm = np.where(problem.rails.remote_sense, hardware.pour_ohm, 0.0)
+    on_bus = hardware.on_bus * ohm[:, None, :]
+    energy = states.of_kind(ENERGY)
+    square_kwh = np.zeros_like(states.mix_a)
+    np.add.at(square_kwh, states.band[energy], states.hours[energy, None] * states.current_a[energy] ** 2 * 1e-3)
+    found = [np.einsum("pkr,br->pkb", on_bus, square) for square in (square_kwh, states.mix_a**2, states.after_a**2)]
+    return found[0][..., None], found[1][..., None], found[2][..., None]
+
+
 def with_bus_losses(
     problem: Problem,
     states: StateTable,
@@ -48,12 +61,14 @@ def with_bus_losses(
     shares: FloatArray,
     sums: tuple[FloatArray, FloatArray, FloatArray],
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return energy (kWh), mix and jump power (W) of each bus, (P, 2, B, G), with what the bus itself adds.
+    """Return energy (kWh), mix and jump power (W) of each bus, (P, 2, B, G), with what is not the rails' own.
 
-    The plane loses I^T R I, by the band's mean current and how evenly its rails share it; a bias supply on bus
-    A draws its own power. Both weigh on the schedule: the plane asks for a higher bus at heavy load.
+    A stage that senses its load delivers what its pour loses. The plane loses I^T R I, by the band's mean current
+    and how evenly its rails share it; a bias supply on bus A draws its own power. The plane weighs on the
+    schedule: it asks for a higher bus at heavy load.
     """
-    energy, mix_w, jump_w = sums
+    sensed_kwh, sensed_mix_w, sensed_jump_w = sensed_pours(problem, states, hardware)
+    energy, mix_w, jump_w = sums[0] + sensed_kwh, sums[1] + sensed_mix_w, sums[2] + sensed_jump_w
     board = problem.study.board
     squares = board.bus_shared_squares + board.bus_own_squares * shares
     per_square_amp = (hardware.plane_ohm[..., None] * squares)[..., None] / problem.grid_v**2  # (P, 2, B, G)

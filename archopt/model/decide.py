@@ -27,6 +27,7 @@ from archopt.physics.transient import bus_dip_v
 
 ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
 SAFETY_V = 0.003
+SAFETY_SHARE = 0.999  # of the short-time current: stages draw a little more at the dipped bus than tabled
 LARGEST_STEP_RATIO = 3.0  # of a rail's step in bus power over its own, as the board solution has it
 SETTLING_PASSES = 3
 
@@ -93,7 +94,7 @@ def legal_voltages(
     charge = np.where(moving, hardware.bulk_nominal_f[..., None, None] * converters.slew_v_per_s[index], 0.0)
     charge = np.where(np.arange(legal.shape[2])[:, None] < legal.shape[2] - 1, charge, 0.0)  # the top band never rises
     short = np.maximum(converters.overload_a[index], converters.limit_a[index])
-    legal &= jump_w / dipped + charge <= units * short
+    legal &= jump_w / dipped + charge <= SAFETY_SHARE * units * short
     ohm = np.maximum(converters.output_ohm[index] / units, 1e-6)
     henry = regulated_source_h(ohm, converters.bandwidth_rad_s[index] / (2.0 * np.pi))
     least = least_capacitance_f(ohm, henry, jump_w, dipped)
