@@ -109,7 +109,7 @@ def check_jump(situation: Situation, ledger: Ledger) -> None:
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     solution = situation.solution
     jump = states.of_kind(JUMP)
-    volts, amps = solution.stage_v[:, jump], solution.current_a[:, jump]
+    volts = solution.stage_v[:, jump]
     axes = (situation.state_names(jump), situation.rail_names)
     on = ~states.off[jump]
     spare = jump_spare_v(situation)

@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 from dataclasses import fields, is_dataclass
 from types import NoneType, UnionType
-from typing import Any, Literal, get_args, get_origin, get_type_hints
+from typing import Any, get_args, get_origin, get_type_hints
 
 import numpy as np
 
@@ -42,7 +42,7 @@ def built(kind: Any, value: Any) -> Any:
         return None if value is None else built(next(a for a in get_args(kind) if a is not NoneType), value)
     if kind is float:
         return math.inf if value is None else float(value)
-    return value if origin is Literal or kind in (str, int, bool, object) else value
+    return value
 
 
 def study_of(record: Data) -> ResolvedStudy:
