@@ -8,7 +8,7 @@ from itertools import combinations
 
 import numpy as np
 
-from archopt.physics.arrays import FloatArray
+from archopt.physics.arrays import BoolArray, FloatArray
 from archopt.physics.sheet_grid import cut_faces, default_pitch_m, lay_grid
 from archopt.physics.sheet_neck import neck_stretch
 from archopt.physics.sheet_network import Network, build_network, joined_to
@@ -76,7 +76,8 @@ def shape_findings(sheet: Sheet) -> tuple[SheetFinding, ...]:
 def _without_repeats(corners_m: FloatArray) -> FloatArray:
     """A polygon (m) without corners that repeat the one before."""
     size_m = float(np.ptp(corners_m, axis=0).max())
-    return corners_m[np.linalg.norm(corners_m - np.roll(corners_m, 1, axis=0), axis=1) > ROUNDING * size_m]
+    apart: BoolArray = np.linalg.norm(corners_m - np.roll(corners_m, 1, axis=0), axis=1) > ROUNDING * size_m
+    return corners_m[apart]
 
 
 def _polygon_findings(sheet: Sheet) -> Iterator[SheetFinding]:
@@ -160,8 +161,9 @@ def _lies_on_copper(pad: Pad, sheet: Sheet) -> bool:
         return bool(distance_to_segments(centre, start, end).min() >= pad.reach_m * (1.0 - FLUSH))
     corners = pad.corners_m(FLUSH)
     smaller = replace(pad, width_m=pad.width_m * (1.0 - FLUSH), height_m=pad.height_m * (1.0 - FLUSH))
-    sides = [point[:, None] for point in edges(corners)]
-    clear = not segments_cross(*sides, start, end).any() and not smaller.contains(start).any()
+    first, last = edges(corners)
+    crossed = segments_cross(first[:, None], last[:, None], start, end)
+    clear = not crossed.any() and not smaller.contains(start).any()
     return bool(clear and on_copper(corners, sheet).all())
 
 

@@ -86,6 +86,7 @@ CLAIMS = {
     "stability.bank_impedance_ohm": (WAVES, "test_bank_impedance_at_both_ends", "closed form"),
     "sheet.SheetSolution": (SHEET, "test_density_in_a_strip", "closed form"),
     "sheet.solve": (SHEET, "test_van_der_pauw_on_an_irregular_outline", "Philips Res. Rep. 13, 1958"),
+    "sheet_cut.cut_along": (SHAPES, "test_a_cut_runs_from_edge_to_edge", "closed form"),
     "sheet_fields.NeckFlow": (SHAPES, "test_neck_runs_from_edge_to_edge_around_its_middle", "closed form"),
     "sheet_fields.averaged_density_a_per_m": (SHEET, "test_averaged_density_in_an_annulus", "closed form"),
     "sheet_fields.density_a_per_m": (SHEET, "test_density_in_a_strip", "closed form"),

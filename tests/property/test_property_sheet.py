@@ -40,7 +40,7 @@ def pads(draw: st.DrawFn) -> tuple[Pad, ...]:
 
 @st.composite
 def holes(draw: st.DrawFn, least: float = 0.2) -> FloatArray:
-    """A slanted four-sided hole, from a hair to a sixth of the board, clear of the pads, never right across."""
+    """A slanted four-sided hole, from a hair to a sixth of the board, clear of pads, never right across."""
     centre = np.array([draw(span(17.0, 28.0)), draw(span(10.0, 27.0))])
     along, across, turn = draw(span(least, 3.5)), draw(span(0.05, 3.5)), draw(span(0.0, 3.1))
     turned = np.array([[np.cos(turn), np.sin(turn)], [-np.sin(turn), np.cos(turn)]])
