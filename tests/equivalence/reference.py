@@ -420,11 +420,21 @@ class Reference:
             seen = result.stage_v[k] / row.transformer_ratio
             up = running * max(row.max_duty * seen - rail.voltage_v, 1e-3) / henry
             down = running * rail.voltage_v / henry
-        loop = (row.crossover_khz * 1e3 * TWO_PI, row.delay_ns * 1e-9, net.bank_f, net.bank_ohm)
+        loop = (row.delay_ns * 1e-9, net.bank_f, net.bank_ohm)
+
+        def bandwidth(load: float) -> float:
+            full = row.crossover_khz * 1e3 * TWO_PI
+            if net.coil is None or not isinstance(row, BuckStage) or row.light_load == "forced":
+                return full
+            air = self.study.supply.air_speed_m_s
+            at = buck_phase(row, net.coil, result.stage_v[k], rail.voltage_v, load / running, 25.0, air)
+            return full * (row.folded_crossover_share + (1.0 - row.folded_crossover_share) * at.reach)
+
         slew = rail.slew_a_per_us * 1e6
         wakeup = getattr(row, "wakeup_us", 0.0) * 1e-6
-        droop = float(rail_droop_v(step, up, *loop, slew, deficit, wakeup))
-        return max(droop, float(rail_droop_v(step, down, *loop, slew)))
+        rise, fall = bandwidth(max(after - step, 0.0)), bandwidth(max(mix - step, 0.0))
+        droop = float(rail_droop_v(step, up, rise, *loop, slew, deficit, wakeup))
+        return max(droop, float(rail_droop_v(step, down, fall, *loop, slew)))
 
     def cost(self) -> float:
         """Return the cost of one board."""
