@@ -258,13 +258,13 @@ def parts_command(
 
     For one part the voltages choose where its efficiency is shown.
     """
-    from archopt.inputs.load import load
-    from archopt.inputs.measured_catalogue import read_catalogue
+    from archopt.inputs.measured_catalogue import read_catalogue, study_catalogue
     from archopt.present.part_view import browse
     from archopt.present.tables import console_for, put
 
-    catalogue = read_catalogue() if study is None else load(study).catalogue
-    answer = browse(catalogue, family, name, columns=columns, input_v=input_v, output_v=output_v, current_a=current_a)
+    catalogue, own = (read_catalogue(), None) if study is None else study_catalogue(study)
+    wanted = {"input_v": input_v, "output_v": output_v, "current_a": current_a}
+    answer = browse(catalogue, family, name, columns=columns, own=own, **wanted)
     if as_json:
         print_json(answer.data())
     else:

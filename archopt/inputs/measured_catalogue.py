@@ -1,4 +1,4 @@
-"""The catalogue without a study: the one that comes with archopt, and a folder of own parts over it."""
+"""The catalogue to look at: the one that comes with archopt, and a folder of own parts over it."""
 
 from __future__ import annotations
 
@@ -6,6 +6,7 @@ from pathlib import Path
 
 from archopt.errors import InputError
 from archopt.inputs.catalogue import load_catalogue
+from archopt.inputs.load import load
 from archopt.inputs.problems import Notebook
 from archopt.inputs.resolved import Catalogue
 
@@ -22,3 +23,15 @@ def read_catalogue(own: Path | None = None) -> Catalogue:
     if notebook.problems:
         raise InputError(notebook.problems)
     return catalogue
+
+
+def study_catalogue(study: Path) -> tuple[Catalogue, Path | None]:
+    """Return the catalogue a study uses and its folder of own parts, None when it names none.
+
+    Raises
+    ------
+    InputError : with every problem of the study
+    """
+    loaded = load(study)
+    stated = loaded.study.stated.get("catalogue")
+    return loaded.catalogue, None if stated is None else study.parent / str(stated)

@@ -55,7 +55,12 @@ def places(out: Path, family: str, name: str) -> Places:
     else:
         root = None
     beside = row.parent if root is None else root
-    return Places(row, beside / SOURCES, beside / TABLES / f"{name}.points.csv", root)
+    return Places(row, beside / SOURCES, table_file(beside, name), root)
+
+
+def table_file(folder: Path, name: str) -> Path:
+    """Return where a folder of own parts keeps the loss table of a part."""
+    return folder / TABLES / f"{name}.points.csv"
 
 
 def check_name(name: str, where: str) -> None:

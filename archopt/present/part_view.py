@@ -6,6 +6,7 @@ import inspect
 import math
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any, get_args
 
 import numpy as np
@@ -21,6 +22,7 @@ from archopt.physics.arrays import FloatArray
 from archopt.present.amounts import NONE, fixed, number
 from archopt.present.part_chart import Curve, chart_lines
 from archopt.present.part_losses import RowLosses
+from archopt.present.part_table_view import kept_points, table_data, table_sections
 from archopt.present.plain import Plain, plain
 from archopt.present.tables import pairs, section, table
 
@@ -61,6 +63,7 @@ class Answer:
 def browse(
     catalogue: Catalogue, family: str | None, name: str | None = None, *, columns: bool = False,
     input_v: float | None = None, output_v: float | None = None, current_a: float | None = None,
+    own: Path | None = None,
 ) -> Answer:  # fmt: skip
     """Return the answer to one question of the browser.
 
@@ -70,6 +73,7 @@ def browse(
     family, name : nothing for the families, a family for its rows, a part's name (alone or after its family)
     columns : explain the family's columns instead
     input_v, output_v, current_a : rows that take, make and carry it; for one part where efficiency is shown
+    own : folder of own parts, where a measured part's loss table may be kept
 
     Raises
     ------
@@ -84,9 +88,14 @@ def browse(
     if part_name is not None:
         part = catalogue.families[found][part_name]
         efficiency(catalogue, part, input_v, output_v)  # refuses a voltage before anything is printed
+        points = kept_points(own, part)
+        measured = () if points is None else table_sections(catalogue, part, points)
         return Answer(
-            lambda: part_sections(catalogue, part, input_v, output_v),
-            lambda: plain(part_data(catalogue, part, input_v, output_v)),
+            lambda: (*part_sections(catalogue, part, input_v, output_v), *measured),
+            lambda: {
+                **part_data(catalogue, part, input_v, output_v),
+                "measured_table": table_data(catalogue, part, points),
+            },
         )
     rows = selected(catalogue, found, input_v, output_v, current_a)
     return Answer(lambda: family_sections(catalogue, found, rows), lambda: plain(rows))

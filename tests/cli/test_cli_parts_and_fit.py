@@ -66,6 +66,10 @@ def test_fit_writes_a_part_that_parts_and_check_then_know(run: Run, points: Path
     code, out, err = run("parts", "my_bus", "--study", str(study))
     assert (code, err) == (0, "")
     assert "(measured, " in out
+    assert "Row less measured table" in out
+    table = json.loads(run("parts", "my_bus", "--study", str(study), "--json")[1])["measured_table"]
+    assert len(table["loss_w"]) == 63
+    assert max(map(abs, table["error_points"])) < 0.3
     assert run("parts", "my_bus")[0] == 2
     code, out, err = run("check", str(study), "--json")
     assert (code, err) == (0, "")
