@@ -23,6 +23,8 @@ UNIT = {"input_voltage_v": "V", "output_voltage_v": "V", "current_a": "A", "loss
 BENCH_DEGC = 25.0
 #: Bounds that catch a wrong magnitude.
 MOST_V, MOST_A, MOST_W, LEAST_EFFICIENCY = 1000.0, 10000.0, 100000.0, 0.01
+#: Spread of local air (K) within which points make one table.
+TABLE_AIR_K = 10.0
 #: Settings closer than this are one level: a bench supply does not return to the same millivolt.
 LEVEL_WIDTH = 0.03
 
@@ -200,7 +202,7 @@ def loss_table(points: MeasuredPoints) -> LossTable:
 
     Raises
     ------
-    InputError : the points do not fill the grid; every missing setting is named
+    InputError : the points do not fill the grid (every missing setting is named), or the local air was not one
     """
     axes = (points.input_v, points.output_v, points.current_a)
     numbers = [level_numbers(values) for values in axes]
@@ -210,6 +212,10 @@ def loss_table(points: MeasuredPoints) -> LossTable:
     np.add.at(total, tuple(numbers), points.loss_w)
     np.add.at(count, tuple(numbers), 1.0)
     notebook = Notebook(points.file)
+    low, high = float(points.temperature_degc.min()), float(points.temperature_degc.max())
+    if high - low > TABLE_AIR_K:
+        message = f"runs from {low:g} to {high:g} degC; a table holds for one local air, within {TABLE_AIR_K:g} K"
+        notebook.problem("column temperature_degc", message)
     missing = np.argwhere(count == 0)
     for at in missing[:20]:
         volts_in, volts_out, amperes = (mean[level] for mean, level in zip(means, at, strict=True))

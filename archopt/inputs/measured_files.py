@@ -16,6 +16,7 @@ import numpy as np
 
 from archopt.errors import InputError, OutputError, Problem
 from archopt.inputs.catalogue import SOURCES
+from archopt.inputs.measured import BENCH_DEGC
 from archopt.inputs.parts import FAMILIES, Part, Source
 from archopt.inputs.problems import Notebook
 from archopt.inputs.text_files import read_csv
@@ -24,7 +25,7 @@ from archopt.physics.measured import LossTable
 NAME = re.compile(r"[A-Za-z0-9][\w.+-]*")
 #: Folder of loss tables in a catalogue folder; the catalogue's reader leaves names that begin with _ alone.
 TABLES = "_measured"
-TABLE_COLUMNS = ("input_voltage_v", "output_voltage_v", "current_a", "loss_w")
+TABLE_COLUMNS = ("input_voltage_v", "output_voltage_v", "current_a", "loss_w", "temperature_degc")
 
 
 @dataclass(frozen=True)
@@ -77,8 +78,9 @@ def check_name(name: str, where: str) -> None:
 
 
 def write_part(
-    place: Places, part: Part, title: str, measured_on: date, table: LossTable | None = None, replace: bool = False
-) -> tuple[Path, ...]:
+    place: Places, part: Part, title: str, measured_on: date, table: LossTable | None = None,
+    table_degc: float = BENCH_DEGC, replace: bool = False,
+) -> tuple[Path, ...]:  # fmt: skip
     """Write the row, its source and, when given, its loss table; return the paths written.
 
     Rows of other parts in the same files stay as they are.
@@ -88,6 +90,7 @@ def write_part(
     place : where it goes
     part : the row; its source key gets a row of kind "measured"
     title, measured_on : of the source row
+    table, table_degc : loss table to keep beside the row and the local air it holds at
     replace : replace a row of the same name, source or table that is there
 
     Raises
@@ -102,7 +105,7 @@ def write_part(
     if table is not None:
         if place.table.exists() and not replace:
             raise OutputError(f"{place.table} is there already; replace it by --replace")
-        texts[place.table] = table_text(table)
+        texts[place.table] = table_text(table, table_degc)
     for path, text in texts.items():
         try:
             path.parent.mkdir(parents=True, exist_ok=True)
@@ -151,10 +154,10 @@ def _cell(value: object) -> str:
     return f"{value:.10g}" if isinstance(value, float) else str(value)
 
 
-def table_text(table: LossTable) -> str:
-    """Return a loss table as CSV, one line a point."""
+def table_text(table: LossTable, local_degc: float) -> str:
+    """Return a loss table as CSV, one line a point, in the columns of measured points."""
     lines = [_line(TABLE_COLUMNS)]
     for at, loss in np.ndenumerate(table.loss_w):
         axes = (table.input_v[at[0]], table.output_v[at[1]], table.current_a[at[2]])
-        lines.append(_line([f"{value:.6g}" for value in (*axes, loss)]))
+        lines.append(_line([f"{value:.6g}" for value in (*axes, loss, local_degc)]))
     return "".join(lines)

@@ -87,7 +87,8 @@ def fit_to_files(request: FitRequest) -> FitResult:
         f"Loss fitted to {len(points)} measured points of {request.points.name}, worst error "
         f"{fitted.worst_points:.2f} points of efficiency; what was not measured from {fitted.like}"
     )
-    written = write_part(place, fitted.part, title, date.today(), table, request.replace)
+    local_degc = float(points.temperature_degc.mean())
+    written = write_part(place, fitted.part, title, date.today(), table, local_degc, request.replace)
     return FitResult(fitted, place, written)
 
 

@@ -17,7 +17,7 @@ from archopt.errors import InputError, OutputError
 from archopt.inputs.load import load
 from archopt.inputs.measured import loss_table, read_points, table_left_out_points
 from archopt.inputs.measured_catalogue import read_catalogue
-from archopt.inputs.measured_files import check_name, places, write_part
+from archopt.inputs.measured_files import check_name, places, table_text, write_part
 from archopt.inputs.starter import write_starter
 from archopt.model.compiled import compile_study
 from archopt.present.part_fitting import FitRequest, fit_to_files
@@ -160,3 +160,17 @@ def test_an_existing_table_is_not_overwritten(tmp_path: Path) -> None:
     with pytest.raises(OutputError, match="is there already"):
         write_part(place, part, "title", date(2026, 1, 2), table)
     assert place.table.read_text(encoding="utf-8") == "mine"
+
+
+def test_a_table_holds_for_one_local_air_and_says_which(tmp_path: Path) -> None:
+    catalogue = read_catalogue()
+    row = catalogue.families["bus_converters"]["trim_bus_150w"]
+    warm = measure(catalogue, row, [36, 75], [12], [1.0, 4.0, 12.0], local_degc=(50.0,))
+    text = table_text(loss_table(warm), 50.0)
+    (tmp_path / "table.csv").write_text(text, encoding="utf-8")
+    again = read_points(tmp_path / "table.csv")
+    np.testing.assert_allclose(again.loss_w, warm.loss_w, rtol=1e-5)
+    np.testing.assert_allclose(again.temperature_degc, 50.0, rtol=1e-12)
+    both = measure(catalogue, row, [36, 75], [12], [1.0, 4.0, 12.0], local_degc=(25.0, 50.0))
+    with pytest.raises(InputError, match="runs from 25 to 50 degC"):
+        loss_table(both)
