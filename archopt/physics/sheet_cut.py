@@ -50,7 +50,7 @@ def cut_along(
     along_y = faces.axis[near] == 0
     half = 0.5 * faces.length[near, None] * np.where(along_y[:, None], [0.0, 1.0], [1.0, 0.0])
     tips = np.stack([faces.middle[near] - half, faces.middle[near] + half], axis=1).reshape(-1, 2)
-    open_tip = (np.abs(tips - np.round(tips)) >= SHORTEST).any(axis=1)
+    open_tip: BoolArray = np.abs(tips - np.round(tips)).max(axis=1, initial=0.0) >= SHORTEST
     # faces meet at grid crossings; a tip on the edge of the copper is a place of its own
     named = np.concatenate(
         [np.round(tips), np.where(open_tip, np.arange(1, len(tips) + 1), 0)[:, None]], axis=1
@@ -65,8 +65,9 @@ def cut_along(
     columns = np.concatenate([place[1::2], place[joint[0]], np.full(len(joint[1]), source + 1)])
     costs = np.concatenate([cost, *joint_cost])
     both = csr_array((costs, (rows, columns)), shape=(source + 2, source + 2))
-    length, before = dijkstra(both, directed=False, indices=source, return_predecessors=True)
-    if not np.isfinite(length[source + 1]):
+    lengths, befores = dijkstra(both, directed=False, indices=np.array([source]), return_predecessors=True)
+    before = befores[0].astype(np.int_)
+    if not np.isfinite(lengths[0, source + 1]):
         raise SheetError("the grid does not follow the copper at the neck; use a finer pitch")
     return _walk_back(place.reshape(-1, 2), near, along_y, before, source)
 

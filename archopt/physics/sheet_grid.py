@@ -49,10 +49,9 @@ class Grid:
 
     def centres_m(self) -> tuple[FloatArray, FloatArray]:
         """x of every column's middle, shape (columns,), and y of every row's middle, shape (rows,) (m)."""
-        return (
-            self.x_m + self.pitch_m * (np.arange(self.columns) + 0.5),
-            self.y_m + self.pitch_m * (np.arange(self.rows) + 0.5),
-        )
+        x_m: FloatArray = self.x_m + self.pitch_m * (np.arange(self.columns, dtype=np.float64) + 0.5)
+        y_m: FloatArray = self.y_m + self.pitch_m * (np.arange(self.rows, dtype=np.float64) + 0.5)
+        return x_m, y_m
 
 
 @dataclass(frozen=True, slots=True)

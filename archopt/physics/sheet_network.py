@@ -73,13 +73,15 @@ def build_network(sheet: Sheet, grid: Grid, faces: Faces) -> Network:
     start = faces.middle - np.where(faces.axis[:, None] == np.arange(2), 0.5, 0.0)
     step_m = np.where(faces.axis[:, None] == np.arange(2), grid.pitch_m, 0.0)
     meets = _Meetings(len(faces.length))
-    walls_m = [np.concatenate(ends) for ends in zip(*map(edges, sheet.polygons_m), strict=True)]
+    wall_starts_m, wall_ends_m = (
+        np.concatenate(ends) for ends in zip(*map(edges, sheet.polygons_m), strict=True)
+    )
     for pad in sheet.pads:
         near = (
             np.abs(grid.to_metres(faces.middle) - np.array([pad.x_m, pad.y_m])) <= pad.reach_m + grid.pitch_m
         ).all(axis=1)
         index = np.flatnonzero(near)
-        walls = _walls_near(pad, *walls_m, grid.pitch_m)
+        walls = _walls_near(pad, wall_starts_m, wall_ends_m, grid.pitch_m)
         enter, leave = _span_in_copper(
             pad, walls, grid.to_metres(start[index]), step_m[index], grid.to_metres(faces.middle[index])
         )

@@ -167,9 +167,8 @@ def _parts_by_sight(polygons: list[FloatArray], corner: IntArray, places: FloatA
     copper = np.append(copper, np.ones(len(places), dtype=bool))
     points = np.concatenate([points, places])
     pairs = pairs[copper[pairs].all(axis=1)]
-    seen: BoolArray = ~segments_cross(points[pairs[:, 0], None], points[pairs[:, 1], None], *walls).any(
-        axis=1
-    )
+    crossed = segments_cross(points[pairs[:, 0], None], points[pairs[:, 1], None], *walls)
+    seen: BoolArray = crossed.sum(axis=1) == 0
     size = len(points)
     matrix = coo_array((np.ones(int(seen.sum())), tuple(pairs[seen].T)), shape=(size, size))
     _, part = connected_components(matrix, directed=False)

@@ -48,19 +48,20 @@ class RectanglePad:
         local = np.array([[-1.0, -1.0], [1.0, -1.0], [1.0, 1.0], [-1.0, 1.0]]) * half
         cosine, sine = np.cos(self.angle_rad), np.sin(self.angle_rad)
         turned: FloatArray = local @ np.array([[cosine, sine], [-sine, cosine]])
-        return turned + np.array([self.x_m, self.y_m])
+        placed: FloatArray = turned + np.array([self.x_m, self.y_m])
+        return placed
 
     def _local(self, vector_m: FloatArray) -> FloatArray:
         """A vector, shape (N, 2), along the pad's own sides, in half sides."""
         cosine, sine = np.cos(self.angle_rad), np.sin(self.angle_rad)
         turned: FloatArray = vector_m @ np.array([[cosine, -sine], [sine, cosine]])
-        return turned / (0.5 * np.array([self.width_m, self.height_m]))
+        scaled: FloatArray = turned / (0.5 * np.array([self.width_m, self.height_m]))
+        return scaled
 
     def contains(self, points_m: FloatArray) -> BoolArray:
         """Whether points (m), shape (N, 2), lie on the pad."""
-        inside: BoolArray = (np.abs(self._local(points_m - np.array([self.x_m, self.y_m]))) <= 1.0).all(
-            axis=1
-        )
+        local = np.abs(self._local(points_m - np.array([self.x_m, self.y_m])))
+        inside: BoolArray = (local[:, 0] <= 1.0) & (local[:, 1] <= 1.0)
         return inside
 
     def span(self, start_m: FloatArray, step_m: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -250,4 +251,5 @@ def near_pairs(low: FloatArray, high: FloatArray) -> IntArray:
     other = one + 1 + np.arange(len(one)) - np.repeat(np.cumsum(count) - count, count)
     pairs: IntArray = np.stack([order[one], order[other]], axis=1)
     meet = (low[pairs[:, 0], 1] <= high[pairs[:, 1], 1]) & (low[pairs[:, 1], 1] <= high[pairs[:, 0], 1])
-    return pairs[meet]
+    meeting: IntArray = pairs[meet]
+    return meeting
