@@ -218,6 +218,10 @@ def show_command(
         str | None,
         typer.Argument(metavar="DESIGN", help="Name (D007), number, mark (knee) or incumbent."),
     ] = None,
+    schedule: Annotated[
+        Path | None,
+        typer.Option(metavar="FILE", help="Write the design's voltage schedule as CSV instead of printing it."),
+    ] = None,
     as_json: JsonOption = False,
 ) -> None:
     """Print a result again, or explain one design of it."""
@@ -227,6 +231,11 @@ def show_command(
     from archopt.present.terminal import print_front
 
     front = Front(files.read(directory, archive=design is None), directory)
+    if schedule is not None:
+        if design is None:
+            raise typer.BadParameter("name the design whose schedule is wanted", param_hint="--schedule")
+        write_schedule(front, design, schedule)
+        return
     if design is None:
         if as_json:
             print_json(front.summary())
@@ -238,6 +247,50 @@ def show_command(
         print_json(chosen.as_dict())
     else:
         put(console_for(), [chosen])
+
+
+def write_schedule(front: Front, design: str, path: Path) -> None:
+    """Write a design's voltage schedule as CSV and say so."""
+    from archopt.present.schedule_file import write_rows
+    from archopt.trade.schedule_rows import schedule_rows
+
+    write_rows(schedule_rows(front.record.problem, front.design(design).data), path)
+    typer.echo(f"wrote {path}")
+
+
+@app.command("transient")
+@in_own_words
+def transient_command(
+    directory: Annotated[Path, typer.Argument(metavar="DIR", help="Directory of a result.", show_default=False)],
+    design: Annotated[
+        str, typer.Argument(metavar="DESIGN", help="Name (D007), number, mark (knee) or incumbent.", show_default=False)
+    ],
+    rail: Annotated[str | None, typer.Option(metavar="RAIL", help="Look at one rail's step and release.")] = None,
+    bus: Annotated[str | None, typer.Option(metavar="BUS", help="Look at bus_a or bus_b at its largest step.")] = None,
+    before: Annotated[str | None, typer.Option("--from", metavar="STATE", help="State the load comes from.")] = None,
+    after: Annotated[str | None, typer.Option("--to", metavar="STATE", help="State the load goes to.")] = None,
+    png: Annotated[Path | None, typer.Option(metavar="FILE", help="Draw the waveforms into a picture too.")] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Integrate a design's rail, bus or whole jump in time; the worst point against its closed form and limit.
+
+    Without --rail or --bus everything on the bus jumps, from the band with the least room.
+    """
+    from archopt.present import files
+    from archopt.present.front import Front
+    from archopt.present.tables import console_for, put
+    from archopt.present.waveform_view import view_sections, wave_view, write_png
+
+    front = Front(files.read(directory, archive=False), directory)
+    view = wave_view(front.record.problem, front.design(design).data, rail, bus, before, after)
+    if png is not None:
+        write_png(view, png)
+    if as_json:
+        print_json(view.as_dict())
+        return
+    put(console_for(), view_sections(view))
+    if png is not None:
+        typer.echo(f"wrote {png}")
 
 
 @app.command("parts")

@@ -165,19 +165,25 @@ def board_wave(
         limited = np.isfinite(needs_more) & ~awake
         charging = bus.capacitance_f * command.rate_v_per_s(now_s, bus.bus_v)
         waiting = now_s < bus.delay_s
+        # between kinks loads and command are straight lines
+        load_0, load_rate = loads(start_s), ((now_s >= starts) & (now_s < starts + sizes / slews)) * slews @ of_rail
+        target_0, target_rate = bus.bus_v + command.rise_v(start_s, bus.bus_v), command.rate_v_per_s(now_s, bus.bus_v)
+        per_volt, down = active * per_henry, -active * volts * per_henry
+        watts_per_amp, halted = volts * ratio, bool(limited.any())
 
         def rate(time_s: float, y: FloatArray) -> FloatArray:
-            source, bulk_v, bus_v = y[0], y[1], max(y[2], floor_v)
+            source, bulk_v, bus_v = float(y[0]), float(y[1]), max(float(y[2]), floor_v)
             amps, caps = y[3 : 3 + count], y[3 + count :]
-            load = loads(time_s)
-            stage_v = stage_input(bus_v, amps)
-            up = np.maximum(active * (seen * stage_v - volts) * per_henry, LEAST_SLEW)
+            load = load_0 + load_rate * (time_s - start_s)
+            stage_v = bus_v - drop_ohm * amps * watts_per_amp / bus_v
+            up = np.maximum(per_volt * (seen * stage_v - volts), LEAST_SLEW)
             wanted = load + restoring * (volts - caps)
-            change = np.clip(bandwidth * (wanted - amps), -active * volts * per_henry, up)
-            change = np.where(limited & (amps >= most), np.minimum(change, 0.0), change)
-            change = np.where(moving, change, 0.0)
-            drawn = (float((np.maximum(amps, 0.0) * volts * ratio).sum()) + other_w) / bus_v
-            target = bus.bus_v + command.rise_v(time_s, bus.bus_v)
+            change = np.minimum(np.maximum(bandwidth * (wanted - amps), down), up)
+            if halted:
+                change = np.where(limited & (amps >= most), np.minimum(change, 0.0), change)
+            change = change * moving
+            drawn = (float(np.maximum(amps, 0.0) @ watts_per_amp) + other_w) / bus_v
+            target = target_0 + target_rate * (time_s - start_s)
             if waiting:
                 moved = 0.0
             elif bus.follows:
@@ -187,23 +193,27 @@ def board_wave(
             if source >= bus.limit_a:
                 moved = min(moved, 0.0)
             from_bulk = (bulk_v - bus_v) / bulk_ohm
-            head = [moved, -from_bulk / bulk_f, (source + from_bulk - drawn) / input_f]
-            return np.concatenate([head, change, (amps - load) / farad])
+            out = np.empty(3 + 2 * count)
+            out[0], out[1], out[2] = moved, -from_bulk / bulk_f, (source + from_bulk - drawn) / input_f
+            out[3 : 3 + count] = change
+            out[3 + count :] = (amps - load) / farad
+            return out
 
         return rate
 
     def lost(_: float, y: FloatArray) -> float:
         bus_v = max(float(y[2]), floor_v)
-        return float(np.min(stage_input(np.asarray(bus_v), y[3 : 3 + count]) - lockout, initial=bus_v - floor_v))
+        inputs = bus_v - drop_ohm * y[3 : 3 + count] * volts * ratio / bus_v - lockout
+        return min(float(inputs.min()), bus_v - floor_v) if count else bus_v - floor_v
 
     kinks = [*starts, *(starts + sizes / slews), *(first + delay), *(needs_more + wakeup), bus.delay_s]
     if np.isfinite(command.begins_s):
         kinks += [command.begins_s, command.ends_s(bus.bus_v)]
-    scale = np.concatenate([[max(start_a, 1.0)], [bus.bus_v] * 2, np.maximum(before, 1.0), np.maximum(volts, 0.1)])
+    scale = 10.0 * np.concatenate([[max(start_a, 1.0)], [bus.bus_v] * 2, np.maximum(before, 1.0), volts])
     state = np.concatenate([[start_a, bus.bus_v, bus.bus_v], before, volts])
     time_s, found, lost_s = integrate(
         rate_from, [float(x) for x in state], pieces([float(k) for k in kinks if np.isfinite(k)], end_s),
-        [float(x) for x in scale], lost=lost, method="LSODA", samples=60,
+        [float(x) for x in scale], lost=lost, method="LSODA", samples=40,
     )  # fmt: skip
     amps, caps = found[:, 3 : 3 + count], found[:, 3 + count :]
     return BoardWave(

@@ -85,7 +85,10 @@ def rail_case(
     """Return a rail's circuit and its step (or release) in a band; another step where one is given."""
     terms, hardware = waves.terms, waves.detail.hardware
     shape, place = waves.detail.droop.droop_v.shape, (p, rail, band)
-    value = lambda name: at(getattr(terms, name), shape, place)  # noqa: E731
+
+    def value(name: str) -> float:
+        return at(getattr(terms, name), shape, place)
+
     stage = int(hardware.stage[p, rail])
     running, fitted = int(hardware.running_band[p, rail, band]), int(hardware.phases[p, rail])
     if step is None:
