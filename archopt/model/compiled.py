@@ -6,6 +6,8 @@ from dataclasses import replace
 
 import numpy as np
 
+from archopt.errors import InputError
+from archopt.errors import Problem as InputProblem
 from archopt.inputs.resolved import Catalogue, ResolvedStudy
 from archopt.model.board import DirectStages, solve
 from archopt.model.hardware import unpack
@@ -41,13 +43,31 @@ def first_row(problem: Problem) -> IntArray:
 
 
 def incumbent_row(problem: Problem) -> IntArray | None:
-    """Return today's design as a row without decisions, None where the study gives none."""
+    """Return today's design as a row without decisions, None where the study gives none.
+
+    Raises
+    ------
+    InputError
+        every choice of it that this study does not offer: a forbidden part, one not rated for the input.
+    """
     given = problem.study.incumbent
     if given is None:
         return None
+    space = problem.space
     taps = {rail.name for rail in problem.study.rails if rail.tap_of}
-    named = {name: str(value) for name, value in given.items() if name.rsplit(".", 1)[0] not in taps}
-    return problem.space.encode(named, first_row(problem))
+    row = first_row(problem)
+    faults = []
+    for name, value in given.items():
+        if name.rsplit(".", 1)[0] in taps:
+            continue
+        try:
+            row = space.encode({name: str(value)}, row)
+        except KeyError:
+            text = f"{value} is not on offer in this study: forbidden by its choices, or not rated for its input"
+            faults.append(InputProblem(problem.study.file, f"incumbent.{name}", text))
+    if faults:
+        raise InputError(faults)
+    return row
 
 
 def plain_row(problem: Problem) -> IntArray:
@@ -59,7 +79,7 @@ def plain_row(problem: Problem) -> IntArray:
     second = np.where(stages.second_part >= 0, parts.price[stages.second_part, 1], 0.0)
     unit = parts.price[stages.part, 1] + second
     for r in range(problem.layout.rails):
-        cost = np.where(problem.stage_ok[r], problem.phases_low[r] * unit, np.inf)
+        cost = np.where(problem.feed_ok[r].any(axis=1), problem.phases_low[r] * unit, np.inf)
         on_bus = problem.feed_ok[r, :, BUS_A]
         pick = int(np.where(on_bus, cost, np.inf).argmin()) if on_bus.any() else int(cost.argmin())
         feeds = np.flatnonzero(problem.feed_ok[r, pick])
