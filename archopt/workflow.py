@@ -56,6 +56,7 @@ def check(loaded: LoadedStudy) -> CheckResult:
     """Return how a study is understood, without searching."""
     problem = compile_study(loaded.study, loaded.catalogue)
     study = loaded.study
+    incumbent_row(problem)  # tells what of today's design is not on offer
     volts = np.array([rail.voltage_v for rail in study.rails])
     maxima = float(volts @ np.array([rail.max_current_a for rail in study.rails]))
     _, _, coincident = coincident_maximum(study)
