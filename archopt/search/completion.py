@@ -16,7 +16,7 @@ from archopt.model.space import BANK_COUNTS, BUS_A, PARENT, TWO_LEVELS, Designs
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 from archopt.search.conditions import Conditions, conditions_of, first_conditions
 from archopt.search.copper_choice import choose_pairs
-from archopt.search.genome import Genome, Plan
+from archopt.search.genome import Genome, Plan, at_least, at_most
 from archopt.search.rail_tables import (
     ILLEGAL_KWH,
     NO_COUNT,
@@ -337,5 +337,5 @@ class Completion:
             if not len(low) or not len(high):
                 continue
             lower, upper = designs.bus("lower_v")[:, b], designs.bus("upper_v")[:, b]
-            lower[:] = np.where(follow, np.maximum(lower - ROOM_STEPS, low[0]), lower)
-            upper[:] = np.where(follow, np.minimum(upper + ROOM_STEPS, high[-1]), upper)
+            lower[:] = np.where(follow, at_least(low, lower - ROOM_STEPS), lower)
+            upper[:] = np.where(follow, at_most(high, upper + ROOM_STEPS), upper)

@@ -15,7 +15,7 @@ from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.completion import Completion
 from archopt.search.consolidate import dropped_plans, worth
 from archopt.search.engine import Engine
-from archopt.search.genome import Genome, Plan
+from archopt.search.genome import LEAST_COPPER, LEAST_PRICE, MOST_COPPER, MOST_PRICE, Genome, Plan
 from archopt.search.indicator import Stagnation
 from archopt.search.local import Neighbours
 from archopt.search.rail_tables import CAPS
@@ -24,10 +24,11 @@ from archopt.search.seeds import heuristic_genomes
 
 LEAST_POPULATION = 8
 FORGET_SHARE = 0.5  # of genomes that keep only the approved parts they used
+FAN_SHARE = 0.2  # of completed genomes that come from the archive at other prices
 CONSOLIDATE_EVERY = 4
 CONSOLIDATED = 4
 CONSOLIDATE_ROUNDS = 3
-LOCAL_BATCHES = 1
+LOCAL_SHARE = 0.34  # batches of neighbours a batch of completed genomes
 
 
 @dataclass(frozen=True)
@@ -92,6 +93,7 @@ class Search:
         self.neighbours = Neighbours(evaluator.problem)
         self.engine = Engine(self.genome.genes, self.population, seed, seeds=seeds)
         self.generation = 0
+        self.owed = 0.0
         self.credit: dict[str, tuple[int, int]] = {}
 
     def evaluate(self, rows: IntArray, source: str) -> Evaluation:
@@ -112,7 +114,7 @@ class Search:
         """Advance by one generation: completed genomes, consolidation of the promising, local search."""
         if self.generation == 0 and len(self.given):
             self.evaluate(self.given, "given")
-        genomes = self.engine.ask()
+        genomes = self.fan(self.engine.ask())
         plan = self.genome.decode(genomes)
         rows = self.complete(plan)
         found = self.evaluate(rows, "completion")
@@ -121,9 +123,30 @@ class Search:
         if self.generation % CONSOLIDATE_EVERY == CONSOLIDATE_EVERY - 1:
             self.consolidate(rows, objectives, violation, learned, plan)
         self.engine.tell(objectives, violation, learned)
-        for _ in range(LOCAL_BATCHES):
+        self.owed += LOCAL_SHARE
+        while self.owed >= 1.0:
+            self.owed -= 1.0
             self.climb()
         self.generation += 1
+
+    def fan(self, genomes: FloatArray) -> FloatArray:
+        """Return genomes of which a share is archived designs at other prices, caps and approved parts."""
+        archive = self.record.archive
+        count = int(FAN_SHARE * len(genomes))
+        if not len(archive) or not count:
+            return genomes
+        rng, genome = self.rng, self.genome
+        picked = rng.choice(len(archive), size=count, p=loneliness(archive.objectives))
+        price = np.exp(rng.uniform(np.log(LEAST_PRICE), np.log(MOST_PRICE), count))
+        copper = np.exp(rng.uniform(np.log(LEAST_COPPER), np.log(MOST_COPPER), count))
+        fanned = genome.encode(archive.rows[picked], price, copper, rng.integers(0, len(CAPS), count))
+        # half of them may use any part, half what they use and a tenth of the others
+        chance = np.where(rng.random((count, 1)) < 0.5, 1.0, 0.1)
+        for places in (genome.stage_place, genome.capacitor_place):
+            fanned[:, places] = np.maximum(fanned[:, places], rng.random((count, len(places))) < chance)
+        out = genomes.copy()
+        out[-count:] = self.engine.operators.mutate(fanned, rng)
+        return out
 
     def climb(self) -> None:
         """Evaluate neighbours of archived designs, the lonely and the new ones first."""

@@ -251,6 +251,16 @@ def nearest(values: IntArray, wanted: IntArray) -> IntArray:
     return np.where(wanted - low <= high - wanted, low, high)
 
 
+def at_least(values: IntArray, wanted: IntArray) -> IntArray:
+    """Return the smallest of sorted values not below the wanted one, else the largest."""
+    return np.asarray(values[np.minimum(np.searchsorted(values, wanted), len(values) - 1)])
+
+
+def at_most(values: IntArray, wanted: IntArray) -> IntArray:
+    """Return the largest of sorted values not above the wanted one, else the smallest."""
+    return np.asarray(values[np.maximum(np.searchsorted(values, wanted, side="right") - 1, 0)])
+
+
 def index_of(values: IntArray, wanted: IntArray) -> IntArray:
     """Return the place of each wanted value among sorted values; 0 where it is not there."""
     place = np.clip(np.searchsorted(values, wanted), 0, max(len(values) - 1, 0))

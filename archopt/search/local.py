@@ -12,6 +12,7 @@ import numpy as np
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_A, FOLLOW, PARENT, RAIL_FIELDS, Layout
 from archopt.physics.arrays import IntArray
+from archopt.search.genome import at_least, at_most
 
 PAIRED_SHARE = 0.5
 FOLLOW_ROOM = 4  # grid steps around the used limits of a moving bus that a neighbour's schedule may take
@@ -69,10 +70,9 @@ class Neighbours:
             control = row[self.layout.bus("control").start + b]
             if control != FOLLOW:
                 continue
-            for field, step in (("lower_v", -FOLLOW_ROOM), ("upper_v", FOLLOW_ROOM)):
-                column = self.layout.bus(field).start + b
-                values = self.allowed[column]
-                row[column] = np.clip(row[column] + step, values[0], values[-1])
+            low, high = (self.layout.bus(field).start + b for field in ("lower_v", "upper_v"))
+            row[low] = at_least(self.allowed[low], row[low] - FOLLOW_ROOM)
+            row[high] = at_most(self.allowed[high], row[high] + FOLLOW_ROOM)
 
     def column(self, field: str, r: int) -> int:
         """Return the column of a rail choice."""

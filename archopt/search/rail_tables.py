@@ -200,7 +200,7 @@ class BankCounts:
 
     def fill(self, table: RailTable, cap: int) -> None:
         """Fill one rail's counts under one cap."""
-        evaluator, options = self.evaluator, self.evaluator.options
+        options = self.evaluator.options
         row = options.row[table.option]
         used, place = np.unique(row, return_inverse=True)
         place = place.reshape(row.shape)
