@@ -18,6 +18,7 @@ from archopt.inputs.study import (
     DeratingTable,
     EconomicsTable,
     InputTable,
+    JumpRow,
     LevelRow,
     LimitsTable,
     SearchTable,
@@ -140,6 +141,8 @@ def _table(name: str, content: Mapping[str, Any], notebook: Notebook) -> Any:
         notebook.problem(name, f"needs a table [{name}], found {brief(raw)}")
         return None
     raw = dict(raw)
+    if name == "control" and isinstance(raw.get("jumps"), list):
+        raw["jumps"] = _rows(raw["jumps"], "control.jumps", JumpRow, notebook)
     if name == "input" and isinstance(raw.get("levels"), list):
         raw["levels"] = _rows(raw["levels"], "input.levels", LevelRow, notebook)
     if name == "load" and isinstance(raw.get("states"), list):

@@ -12,6 +12,7 @@ from archopt.inputs.feasibility import check_feasible
 from archopt.inputs.incumbent import resolve_incumbent
 from archopt.inputs.problems import Notebook
 from archopt.inputs.resolve_choices import allowed_families, forbidden_parts, resolve_choices
+from archopt.inputs.resolve_jumps import resolve_jump
 from archopt.inputs.resolve_load import resolve_load
 from archopt.inputs.resolve_rails import resolve_rails
 from archopt.inputs.resolve_supply import (
@@ -40,7 +41,8 @@ def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedS
     supply = resolve_supply(draft, catalogue, unusable, power_w, load.hottest_degc, notebook)
     board = resolve_board(draft, catalogue, unusable, notebook)
     series = load.table is not None and load.table.series
-    control = resolve_control(draft, catalogue, unusable, series, notebook)
+    jump = resolve_jump(draft, rails, load, notebook)
+    control = resolve_control(draft, catalogue, unusable, series, jump, notebook)
     economics = resolve_economics(draft, notebook)
     search = resolve_search(draft, notebook)
     checker = ChoiceChecker(rails, draft.rail_names, catalogue, board)

@@ -7,6 +7,7 @@ import math
 from archopt.inputs.draft import Draft
 from archopt.inputs.parts import BusConverter, InputPath
 from archopt.inputs.problems import Notebook, nearest
+from archopt.inputs.resolve_jumps import ResolvedJump
 from archopt.inputs.resolved import (
     Board,
     Catalogue,
@@ -169,7 +170,7 @@ def resolve_board(draft: Draft, catalogue: Catalogue, forbidden: frozenset[str],
 
 
 def resolve_control(
-    draft: Draft, catalogue: Catalogue, forbidden: frozenset[str], series: bool, notebook: Notebook
+    draft: Draft, catalogue: Catalogue, forbidden: frozenset[str], series: bool, jump: ResolvedJump, notebook: Notebook
 ) -> Control:
     """Return how the bus may be controlled; its range is what the converters offered can make."""
     table, limits, take = draft.control, draft.limits, notebook.take
@@ -198,15 +199,13 @@ def resolve_control(
         bus_min_v=low_v,
         bus_max_v=high_v,
         habitual_v=habitual_v,
-        jump_percent=take(
-            "control.largest_unannounced_jump_percent", table.largest_unannounced_jump_percent, 100.0,
-            "the whole load may come at once until it is known not to",
-        ),
+        jump_percent=jump.percent,
         hysteresis_percent=take("control.hysteresis_percent", table.hysteresis_percent, 5.0, PLAIN),
         response_ms=take("control.response_ms", table.response_ms, 20.0, PLAIN),
         bus_dip_percent=take("limits.bus_dip_percent", limits.bus_dip_percent, 10.0, PLAIN),
         stability_margin=take("limits.stability_margin", limits.stability_margin, 1.5, PLAIN),
         transitions_per_day=transitions,
+        jumps=jump.listed,
     )  # fmt: skip
 
 

@@ -115,6 +115,15 @@ class LoadTable:
 
 
 @dataclass(frozen=True)
+class Jump:
+    """A jump from one listed state of the load to another; an announced one finds the bus raised."""
+
+    before: str
+    after: str
+    announced: bool
+
+
+@dataclass(frozen=True)
 class Control:
     """How the bus voltage may follow the load, and what must be survived."""
 
@@ -129,6 +138,7 @@ class Control:
     bus_dip_percent: float  # permitted dip of the bus
     stability_margin: float  # factor on the least capacitance
     transitions_per_day: float  # nan: take from the series
+    jumps: tuple[Jump, ...] = ()  # where there are any, they stand instead of jump_percent
 
 
 @dataclass(frozen=True)

@@ -68,6 +68,14 @@ class BoardTable(Table):
     max_pairs_per_net: int | None = Field(None, ge=1, le=10, description="layer pairs one net may take; default 4")
 
 
+class JumpRow(Table):
+    """One of ``[[control.jumps]]``: the load may go from one listed state to another at once."""
+
+    before: str = Field(min_length=1, description="state of [[load.states]] the load comes from")
+    after: str = Field(min_length=1, description="state it goes to")
+    announced: bool = Field(False, description="the bus is told and raised before; default false")
+
+
 class ControlTable(Table):
     """``[control]``: how the bus voltage may follow the load, and what must be survived."""
 
@@ -76,6 +84,15 @@ class ControlTable(Table):
     )
     largest_unannounced_jump_percent: float | None = Field(
         None, ge=0, le=100, description="largest sudden rise of the load, of rated load; default 100"
+    )
+    jumps_from_series: bool | None = Field(
+        None,
+        description="take the largest unannounced jump from the load profile: its largest rise from one row to the"
+        " next; default false",
+    )
+    jumps: Annotated[tuple[JumpRow, ...], Field(strict=False)] | None = Field(
+        None,
+        description="[[control.jumps]]: the only jumps between listed states, instead of one largest; default none",
     )
     grid_v: float | None = Field(None, ge=0.05, le=2, description="bus voltage grid; default 0.25")
     bus_min_v: float | None = Field(None, ge=3, le=100, description="default the lowest a converter can make")

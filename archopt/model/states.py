@@ -373,6 +373,23 @@ def jump_currents(study: ResolvedStudy, mix_a: FloatArray, rated_a: FloatArray) 
     return np.minimum(jumped, np.maximum(rated_a, mix_a))
 
 
+def listed_after(
+    study: ResolvedStudy, moments: Moments, band: IntArray, mix_a: FloatArray, rated_a: FloatArray
+) -> FloatArray:
+    """Return (B, R) the highest currents after any unannounced listed jump that begins in each band.
+
+    A band that none begins in is never left at once. Rails that were off wake up in the state jumped to.
+    """
+    place = {label: k for k, label in enumerate(moments.label)}
+    after = mix_a.copy()
+    amps = np.where(moments.off, 0.0, moments.current_a) * study.growth
+    for jump in study.control.jumps:
+        if not jump.announced:
+            start = int(band[place[jump.before]])
+            after[start] = np.maximum(after[start], amps[place[jump.after]])
+    return np.minimum(after, np.maximum(rated_a, mix_a))
+
+
 def assemble(
     study: ResolvedStudy,
     moments: Moments,
@@ -389,7 +406,7 @@ def assemble(
     mix = mix * grown
     maximum, maximum_tap_w, _ = coincident_maximum(study)
     rated = maximum * grown
-    after = jump_currents(study, mix, rated)
+    after = listed_after(study, moments, band, mix, rated) if study.control.jumps else jump_currents(study, mix, rated)
     voltage = np.array([rail.voltage_v for rail in own_rails(study)])
     inlet_hot = supply.hottest_inlet_degc
     mean_inlet = supply.inlet_degc

@@ -85,10 +85,12 @@ def control_text(control: Data) -> str:
     kinds = ", ".join(words.get(str(kind), str(kind)) for kind in control.get("kinds") or [])
     text = f"{kinds}; {number(control.get('bus_min_v'))} to {number(control.get('bus_max_v'))} V"
     text += f" in steps of {number(control.get('grid_v'))} V"
-    return text + (
-        f"; survives an unannounced jump of {number(control.get('jump_percent'))} % of rated load"
-        f" within {number(control.get('response_ms'))} ms"
-    )
+    jumps = control.get("jumps") or []
+    sudden = sum(not jump.get("announced") for jump in jumps)
+    jump_text = f"an unannounced jump of {number(control.get('jump_percent'))} % of rated load"
+    if jumps:
+        jump_text = f"{sudden} unannounced and {len(jumps) - sudden} announced jumps between listed states"
+    return text + f"; survives {jump_text} within {number(control.get('response_ms'))} ms"
 
 
 def money_text(economics: Data) -> str:

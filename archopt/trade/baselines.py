@@ -27,7 +27,7 @@ from archopt.model.parameters import IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_NAMES, FOLLOW, Designs
 from archopt.trade.money import money_per_kwh, payback_years
-from archopt.trade.pinned import evaluate_exactly, pinned_problem, unmet_limits, with_jump
+from archopt.trade.pinned import AS_LISTED, evaluate_exactly, pinned_problem, unmet_limits, with_jump
 from archopt.trade.schedules import (
     Scheduled,
     best_fixed,
@@ -79,7 +79,7 @@ def baselines(problem: Problem, row: IntArray, of: str) -> Baselines:
     ]
     reason = cannot_follow(problem, buses)
     moving: dict[float, Scheduled] = {}
-    study_jump = problem.study.control.jump_percent
+    study_jump = stated_jump(problem)
     for name, jump in (
         (FOLLOWS_UNANNOUNCED, ALL_UNANNOUNCED),
         (FOLLOWS_STUDY, study_jump),
@@ -91,9 +91,16 @@ def baselines(problem: Problem, row: IntArray, of: str) -> Baselines:
         other = Evaluator(with_jump(pinned, jump))
         if jump not in moving:
             moving[jump] = best_schedule(other, row)
-        note = f"jump of {jump:g} % of rated load" if name == FOLLOWS_STUDY else ""
+        stated = "the jumps it lists" if jump == AS_LISTED else f"jump of {jump:g} % of rated load"
+        note = stated if name == FOLLOWS_STUDY else ""
         rows.append(baseline_row(other, name, of, moving[jump], note))
     return Baselines(rows, summary_of(evaluator, of, fixed, moving))
+
+
+def stated_jump(problem: Problem) -> float:
+    """Return the study's largest unannounced jump in percent, or that it lists its jumps."""
+    control = problem.study.control
+    return AS_LISTED if control.jumps else control.jump_percent
 
 
 def habitual(evaluator: Evaluator, row: IntArray, buses: tuple[int, ...]) -> Scheduled:
@@ -193,7 +200,7 @@ def summary_of(
             return None
         return float(fixed.objectives[0] - found.objectives[0])
 
-    jump = problem.study.control.jump_percent
+    jump = stated_jump(problem)
     own = gain(jump)
     out["gain_kwh_per_year"] = own
     out["gain_percent"] = None if own is None else 100.0 * own / float(fixed.objectives[0])

@@ -19,6 +19,7 @@ from archopt.model.states import JUMP, StateTable, jump_currents, own_rails
 from archopt.physics.arrays import FloatArray
 
 BATCH = 64
+AS_LISTED = -1.0  # instead of a percentage: the jumps that the study lists
 
 
 def with_jump(problem: Problem, jump_percent: float) -> Problem:
@@ -27,9 +28,11 @@ def with_jump(problem: Problem, jump_percent: float) -> Problem:
     Parameters
     ----------
     jump_percent : of rated load; 0 where every jump is announced and the bus raised before it, 100 where
-        anything may come at once
+        anything may come at once; ``AS_LISTED`` changes nothing
     """
-    study = replace(problem.study, control=replace(problem.study.control, jump_percent=jump_percent))
+    if jump_percent == AS_LISTED:
+        return problem
+    study = replace(problem.study, control=replace(problem.study.control, jump_percent=jump_percent, jumps=()))
     states = problem.states
     after = jump_currents(study, states.mix_a, states.rated_a)
     jump = states.of_kind(JUMP)

@@ -42,7 +42,7 @@ def test_every_key_of_every_table_is_stated_or_assumed(desk: Desk) -> None:
     silent = {
         "limits.area_cap_cm2", "limits.cost_cap", "choices.forbidden_families", "choices.parts",
         "choices.forbidden_parts", "choices.preferred_parts", "choices.pin", "load.profile", "load.covers",
-        "input.low_v", "input.high_v", "board.area_cm2",
+        "input.low_v", "input.high_v", "board.area_cm2", "control.jumps", "control.jumps_from_series",
     }  # fmt: skip
     for table, model in TABLES.items():
         for key in model.model_fields:
