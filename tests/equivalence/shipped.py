@@ -56,14 +56,16 @@ def sensible_rows(problem: Problem, count: int, rng: np.random.Generator) -> NDA
     return rows
 
 
-def near_rows(problem: Problem, count: int, rng: np.random.Generator) -> NDArray[np.int64]:
+def near_rows(
+    problem: Problem, count: int, rng: np.random.Generator, redrawn: float = 0.15
+) -> NDArray[np.int64]:
     """Return today's design with some choices drawn again, its buses free to move in a wide range."""
     layout, space = problem.layout, problem.space
     start = incumbent_row(problem)
     assert start is not None
     drawn = sensible_rows(problem, count, rng)
     rows = np.repeat(start[None], count, axis=0)
-    again = rng.random(drawn.shape) < 0.15
+    again = rng.random(drawn.shape) < min(0.15, 1.2 / layout.rails)
     rail_fields = [layout.rail(field) for field in ("stage", "feed", "phases", "bank")]
     for r in range(layout.rails):
         together = again[:, layout.rail("stage").start + r]

@@ -17,6 +17,7 @@ from archopt.inputs.parts import BuckStage, CopperFoil, LinearRegulator, SingleS
 from archopt.model.board import DirectStages
 from archopt.model.evaluator import Detail, evaluate_in
 from archopt.model.limits import INDEX, LIMITS, ROOM
+from archopt.model.parameters import LINEAR
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
 from archopt.model.states import FALLBACK, MIX
@@ -63,8 +64,13 @@ def stricter(problem: Problem, limit: str) -> Problem:
         hot = replace(stages.buck, thermal_k_per_w=stages.buck.thermal_k_per_w * 1e3)
         return replace(problem, stages=replace(stages, buck=hot))
     if limit == "headroom":
-        linear = replace(stages.linear, dropout_v=np.full(len(stages.names), 5.0))
+        linear = replace(stages.linear, dropout_v=np.full(len(stages.names), 500.0))
         return replace(problem, stages=replace(stages, linear=linear))
+    if limit == "bus drop":
+        return replace(problem, study=replace(problem.study, board=replace(board, bus_drop_budget_percent=1e-4)))
+    if limit == "bus drop":
+        tight = replace(board, bus_drop_budget_percent=1e-3)
+        return replace(problem, study=replace(problem.study, board=tight))
     if limit == "layer budget":
         thin = replace(board, usable_copper_share=board.usable_copper_share * 0.05)
         return replace(problem, study=replace(problem.study, board=thin))
@@ -93,7 +99,8 @@ def test_every_limit_can_be_broken_and_has_its_size(limit: str) -> None:
         # near today's design, with a linear regulator, a regulated bus and, where one is asked for, a bias supply
         rows = rows_of("industrial_ten")[-COUNT // 3 :]
         fed = (Designs(problem.layout, rows).board("bias") > 0) | (limit != "bias supply power")
-        row = rows[fed][-1]
+        linear = (problem.stages.kind[Designs(problem.layout, rows).rail("stage")] == LINEAR).any(axis=1)
+        row = rows[fed & linear][-1]
     detail = detail_of(changed, row[None])
     worst = detail.ledger.worst[limit]
     rule = LIMITS[INDEX[limit]]
@@ -219,8 +226,15 @@ def hand_stage_current(hand: Hand, where: str) -> Found:
     if where.endswith(" at its own maximum"):
         name = where.removesuffix(" at its own maximum")
         net = hand.reference.nets[hand.reference.place[name]]
-        mine = [r for r in hand.study.rails if name in (r.name, r.tap_of)]
-        most = sum(r.max_current_a for r in mine) * hand.study.growth
+
+        def own_a(rail: str) -> float:
+            return sum(r.max_current_a for r in hand.study.rails if rail in (r.name, r.tap_of)) * hand.study.growth
+
+        most = own_a(name)
+        for c, child in enumerate(hand.reference.nets):
+            if child.feed == name:
+                drawn_w = own_a(child.rail.name) * child.rail.voltage_v * hand.reference.step_ratios[-1][c]
+                most += drawn_w / net.rail.voltage_v
         return most / net.phases, hand.limit_a(net)
     net, k, s = hand.place(where)
     amps = hand.reference.results[s].current_a[k]

@@ -155,7 +155,7 @@ def test_no_legal_neighbour_saves_more_than_a_thousandth(name: str) -> None:
     """Direct physics tries every change of one band by one grid step."""
     evaluator = evaluator_of(name)
     problem, layout = evaluator.problem, evaluator.problem.layout
-    rows = near_rows(problem, 240, np.random.default_rng(2))
+    rows = near_rows(problem, 240, np.random.default_rng(2), redrawn=0.05)
     last = len(problem.grid_v) - 1
     for field, value in (("control", FOLLOW), ("lower_v", 0), ("upper_v", last)):
         rows[:, layout.bus(field).start] = value
