@@ -24,6 +24,7 @@ FAST_PASSES = 3
 EXACT_PASSES = 60
 EXACT_TOLERANCE = 1e-13
 LEAST_STAGE_SHARE = 0.3  # of the set bus voltage: below it the plane has collapsed and a limit says so
+LARGEST_STEP_RATIO = 3.0  # at most this is believed of a stage that hardly carries anything
 STEP_POWER_RATIO = 1.2  # stage input over output power where the worst mix has the rail off
 
 
@@ -42,7 +43,7 @@ class Solution:
     stage_v, stage_in_w, stage_loss_w, current_a, pour_w (P, S, R); bus_v, bus_a, bus_w, converter_loss_w,
     plane_w (P, S, 2); node_v (after the input path), input_a, input_w, loss_w, bias_in_w, bias_out_w,
     supervisor_w, path_w, missing_w (power beyond what the path can deliver), deliverable_w (P, S);
-    dip_v, step_w (P, 2, B).
+    dip_v, step_w (P, 2, B); step_ratio (P, B, R): stage input over output power at the worst mix, for steps.
     """
 
     stage_v: FloatArray
@@ -67,6 +68,7 @@ class Solution:
     missing_w: FloatArray
     dip_v: FloatArray
     step_w: FloatArray
+    step_ratio: FloatArray
 
 
 class DirectStages:
@@ -124,13 +126,19 @@ def bias_power_w(problem: Problem, states: StateTable, hardware: Hardware) -> tu
 
 
 def worst_step_w(problem: Problem, hardware: Hardware, ratio: FloatArray) -> FloatArray:
-    """Return the largest coincident step of bus power in each band, (P, 2, B) W; ratio (P, B, R) in over out."""
+    """Return the largest coincident step of bus power in each band, (P, 2, B) W; ratio (P, B, R) in over out.
+
+    A child's step reaches the bus through its parent, whose own ratio it takes on.
+    """
     rails = problem.rails
-    step_w = rails.step_a * rails.voltage_v * ratio
+    parent = np.maximum(hardware.parent, 0)[:, None, :]
+    onward = np.where(hardware.parent[:, None, :] >= 0, np.take_along_axis(ratio, parent, axis=2), 1.0)
+    step_w = rails.step_a * rails.voltage_v * ratio * onward
+    reached = hardware.steps_on_bus
     groups = int(rails.step_group.max()) + 1
     out = np.zeros((ratio.shape[0], 2, ratio.shape[1]))
     for bus in range(2):
-        here = step_w * hardware.on_bus[:, bus, None, :]
+        here = step_w * reached[:, bus, None, :]
         for group in range(groups):
             out[:, bus] = np.maximum(out[:, bus], here[:, :, rails.step_group == group].sum(axis=2))
     return out
@@ -178,6 +186,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
     bias_node = bias_in - bias_bus
     dip_v = np.zeros(hardware.band_v.shape)
     step_w = np.zeros(hardware.band_v.shape)
+    step_ratio = np.ones((len(hardware.stage), states.bands, len(rails.names)))
     jump_index, jump_band = states.of_kind(JUMP), states.band[states.of_kind(JUMP)]
     current = base_a
     drop = np.zeros((*node_v.shape, len(rails.names)))
@@ -202,7 +211,8 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
             mix = states.of_kind(MIX)[0::2]
             output_w = current[:, mix] * rails.voltage_v
             in_over_out = np.where(output_w > 0, stage_in[:, mix] / np.maximum(output_w, 1e-12), STEP_POWER_RATIO)
-            step_w = worst_step_w(problem, hardware, np.minimum(in_over_out, 3.0))
+            step_ratio = np.minimum(in_over_out, LARGEST_STEP_RATIO)
+            step_w = worst_step_w(problem, hardware, step_ratio)
             band_volts = np.where(
                 hardware.fixed_ratio[..., None], (ratio[:, 0] * problem.study.supply.low_v)[..., None],
                 hardware.band_v,
@@ -279,4 +289,5 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
         missing_w=missing,
         dip_v=dip_v,
         step_w=step_w,
+        step_ratio=step_ratio,
     )

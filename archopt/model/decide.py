@@ -305,17 +305,20 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
 def coincident_step_w(problem: Problem, options: Options, option: IntArray, hardware: Hardware) -> FloatArray:
     """Return the largest coincident step of bus power at the middle of the grid, (P, 2, B) W.
 
-    Each rail's step times its own power in over out at its worst mix.
+    Each rail's step times its own power in over out at its worst mix; a child's also times its parent's.
     """
     rails = problem.rails
     mix_w = options.rows.mix_w
     middle = mix_w[options.row[option], np.arange(mix_w.shape[1]), mix_w.shape[2] // 2]  # (P, R, B)
     output = (rails.voltage_v * problem.states.mix_a).T  # (R, B)
     ratio = np.where(output > 0, middle / np.maximum(output, 1e-12), STEP_POWER_RATIO)
-    step = (rails.step_a * rails.voltage_v)[:, None] * np.minimum(ratio, LARGEST_STEP_RATIO)
+    ratio = np.minimum(ratio, LARGEST_STEP_RATIO)
+    parent = np.broadcast_to(np.maximum(hardware.parent, 0)[..., None], ratio.shape)
+    onward = np.where((hardware.parent >= 0)[..., None], np.take_along_axis(ratio, parent, axis=1), 1.0)
+    step = (rails.step_a * rails.voltage_v)[:, None] * ratio * onward
     largest = np.zeros(hardware.band_v.shape)
     for group in range(int(rails.step_group.max()) + 1):
-        here = hardware.on_bus & (rails.step_group == group)
+        here = hardware.steps_on_bus & (rails.step_group == group)
         largest = np.maximum(largest, np.einsum("pkr,prb->pkb", here.astype(np.float64), step))
     return largest
 

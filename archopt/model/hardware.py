@@ -52,6 +52,18 @@ class Hardware:
     supervisor: IntArray
     stack: IntArray
 
+    @property
+    def steps_on_bus(self) -> BoolArray:
+        """Which rails' load steps reach which bus: those on it and the children of those, (P, 2, R)."""
+        return family_on_bus(self.on_bus, self.parent)
+
+
+def family_on_bus(on_bus: BoolArray, parent: IntArray) -> BoolArray:
+    """Return which rails load which bus, themselves or through their parent, (P, 2, R)."""
+    has_parent = (parent >= 0)[:, None, :]
+    place = np.broadcast_to(np.maximum(parent, 0)[:, None, :], on_bus.shape)
+    return np.where(has_parent, np.take_along_axis(on_bus, place, axis=2), on_bus)
+
 
 def bias_per_phase_w(problem: Problem) -> FloatArray:
     """Return the gate power each stage draws from the separate bias, W a running phase, (N,)."""

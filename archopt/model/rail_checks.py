@@ -51,7 +51,7 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     ledger.add("stage input range", volts, stages.input_max_v[stage], at_most=True, axes=axes, applies=on)
     limit_a = stages.phase_limit_a[stage]
     ledger.add("stage current", per_phase, limit_a, at_most=True, axes=axes, applies=on)
-    own = rails.max_a / hardware.phases
+    own = family_maximum_a(situation) / hardware.phases
     ledger.add(
         "stage current", own, stages.phase_limit_a[hardware.stage], at_most=True,
         axes=(tuple(f"{name} at its own maximum" for name in names),),
@@ -102,6 +102,17 @@ def jump_spare_v(situation: Situation) -> FloatArray:
     spare = np.where(stages.kind[stage] == LINEAR, np.inf, volts * (1.0 - duty / stages.max_duty[stage]))
     spare = np.minimum(spare, volts - stages.input_min_v[stage])
     return np.minimum(spare, headroom_v(stages, stage, volts, rails.voltage_v + drop_v, amps))
+
+
+def family_maximum_a(situation: Situation) -> FloatArray:
+    """Return the current of each rail at its own maximum with its children at theirs, (P, R) A."""
+    rails, hardware = situation.problem.rails, situation.hardware
+    most = np.broadcast_to(rails.max_a, hardware.stage.shape).copy()
+    p, child = np.nonzero(hardware.parent >= 0)
+    parent = hardware.parent[p, child]
+    drawn_w = (rails.max_a * rails.voltage_v)[child] * situation.solution.step_ratio[p, -1, child]
+    np.add.at(most, (p, parent), drawn_w / rails.voltage_v[parent])
+    return most
 
 
 def check_jump(situation: Situation, ledger: Ledger) -> None:

@@ -73,11 +73,34 @@ class DroopTerms:
     wakeup_s: FloatArray
 
 
+def family_step_a(situation: Situation) -> FloatArray:
+    """Return the largest coincident step of each rail with its children in each band, (P, R, B) A.
+
+    A child is a constant power to its parent: its step appears there as current of the parent, at the child's
+    power in over out, all at once. Rails of one step group add, others do not.
+    """
+    rails, hardware = situation.problem.rails, situation.hardware
+    own = np.broadcast_to(rails.step_a[:, None], (*hardware.stage.shape, situation.states.bands))
+    p, child = np.nonzero(hardware.parent >= 0)
+    if not len(p):
+        return own
+    parent = hardware.parent[p, child]
+    drawn_w = (rails.step_a * rails.voltage_v)[child][:, None] * situation.solution.step_ratio[p, :, child]
+    seen_a = drawn_w / rails.voltage_v[parent][:, None]
+    largest = own.copy()
+    for group in np.unique(rails.step_group[child]):
+        together = np.where((rails.step_group == group)[:, None], own, 0.0)
+        mine = rails.step_group[child] == group
+        np.add.at(together, (p[mine], parent[mine]), seen_a[mine])
+        largest = np.maximum(largest, together)
+    return largest
+
+
 def droop_terms(situation: Situation) -> DroopTerms:
     """Return the terms of droop and release of all rails, with the phases running in each band.
 
     The loop is as fast as its lighter end lets it be: a rise starts at the load a step below the highest, a
-    release ends a step below the mix. What children draw stays on the rail before and after.
+    release ends a step below the mix. Children draw from the rail before and after, and step it with their own steps.
     """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     rails, stages = problem.rails, problem.stages
@@ -88,7 +111,7 @@ def droop_terms(situation: Situation) -> DroopTerms:
     volts = rails.voltage_v[:, None]
     extra = np.maximum(situation.solution.current_a[:, jump].transpose(0, 2, 1) - states.after_a.T, 0.0)
     mix = states.mix_a.T + extra
-    step = rails.step_a[:, None]
+    step = family_step_a(situation)
     after = np.minimum(mix + step, np.maximum(rails.max_a[:, None] + extra, mix))
     deficit = np.maximum(after - running * stages.phase_limit_a[stage], 0.0)
     before, left = np.maximum(after - step, 0.0), np.maximum(mix - step, 0.0)

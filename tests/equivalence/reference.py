@@ -119,6 +119,7 @@ class Reference:
         self.buses = [bus for k, name in enumerate(ORDER[1:]) if (bus := self.bus(name, k))]
         self.bias = self.optional("bias_supplies", "board.bias")
         self.supervisor = self.optional("supervisors", "board.supervisor")
+        self.step_ratios: list[list[float]] = []  # by band and rail: power in over out at the worst mix
         self.steps_w = self.largest_steps_w()
         self.dips_v = {bus.name: [self.dip_v(bus, k) for k in range(self.states.bands)] for bus in self.buses}
         self.results = [self.solve(s) for s in range(len(self.states.name))]
@@ -238,6 +239,7 @@ class Reference:
         for s in mixes:
             amps = self.currents(s)
             step: list[float] = []
+            ratios: list[float] = []
             for k, net in enumerate(self.nets):
                 volts = net.rail.voltage_v
                 used = amps[k] * volts
@@ -245,11 +247,17 @@ class Reference:
                 ratio = min(drawn / used, 3.0) if used > 0 else 1.2
                 taps = [rail.step_a for rail in self.study.rails if rail.tap_of == net.rail.name]
                 step.append(max([net.rail.step_a, *taps]) * volts * ratio)
+                ratios.append(ratio)
+            self.step_ratios.append(ratios)
             for bus in self.buses:
                 groups: dict[str, float] = {}
-                for k in bus.rails:
+                for k, net in enumerate(self.nets):
                     group = self.own[k].step_group or f"alone {k}"
-                    groups[group] = groups.get(group, 0.0) + step[k]
+                    above = self.place.get(net.feed, -1)
+                    if k in bus.rails:
+                        groups[group] = groups.get(group, 0.0) + step[k]
+                    elif above in bus.rails:
+                        groups[group] = groups.get(group, 0.0) + step[k] * ratios[above]
                 found[bus.name].append(max(groups.values()))
         return found
 
@@ -396,12 +404,27 @@ class Reference:
                     worst = max(worst, self.deviation_v(s, band, k) / net.rail.droop_budget_v * 100.0)
         return worst
 
+    def family_step_a(self, band: int, k: int) -> float:
+        """Return the largest step of a rail with its children: those of one group together."""
+
+        def own_a(rail: Rail) -> float:
+            return max(r.step_a for r in self.study.rails if rail.name in (r.name, r.tap_of))
+
+        rail = self.own[k]
+        groups = {rail.step_group or f"alone {k}": own_a(rail)}
+        for c, net in enumerate(self.nets):
+            if net.feed == rail.name:
+                group = net.rail.step_group or f"alone {c}"
+                drawn_w = own_a(net.rail) * net.rail.voltage_v * self.step_ratios[band][c]
+                groups[group] = groups.get(group, 0.0) + drawn_w / rail.voltage_v
+        return max(groups.values())
+
     def deviation_v(self, s: int, band: int, k: int) -> float:
         """Return the larger of droop and release of one rail in one band, V."""
         net, result, derating = self.nets[k], self.results[s], self.study.derating
         rail, row, running = net.rail, net.row, net.running[band]
         mine = [r for r in self.study.rails if net.rail.name in (r.name, r.tap_of)]
-        step = max(r.step_a for r in mine)
+        step = self.family_step_a(band, k)
         most = sum(r.max_current_a for r in mine) * self.study.growth
         limit = row.phase_current_a * derating.current
         if net.coil is not None:
