@@ -68,9 +68,6 @@ def stricter(problem: Problem, limit: str) -> Problem:
         return replace(problem, stages=replace(stages, linear=linear))
     if limit == "bus drop":
         return replace(problem, study=replace(problem.study, board=replace(board, bus_drop_budget_percent=1e-4)))
-    if limit == "bus drop":
-        tight = replace(board, bus_drop_budget_percent=1e-3)
-        return replace(problem, study=replace(problem.study, board=tight))
     if limit == "layer budget":
         thin = replace(board, usable_copper_share=board.usable_copper_share * 0.05)
         return replace(problem, study=replace(problem.study, board=thin))
