@@ -13,12 +13,14 @@ from archopt.search.rail_tables import CAPS
 
 LOW_BUS_V = 8.0
 SECOND_BUS_V = 5.0
+MOVING_RISE = 1.2
 PRICES = (0.1, 1.0, 8.0)
-ROOM = 1.25  # converter rating wanted over the rails' power
+ROOM = 1.12  # converter rating wanted over the rails' power
+MOST_CONVERTERS = 7
 
 
 def suited_converters(genome: Genome, most: int) -> list[tuple[int, int]]:
-    """Return (converter value, count) pairs that carry the board: cheapest and least lossy first, in turn."""
+    """Return (converter value, count) pairs that carry the board, least price and loss over its life first."""
     problem = genome.problem
     converters, states = problem.converters, problem.states
     offered = genome.allowed_bus("converter", 0)
@@ -37,48 +39,43 @@ def suited_converters(genome: Genome, most: int) -> list[tuple[int, int]]:
     loss = bus_converter.losses(
         converters.loss.take(index), np.asarray(problem.study.supply.nominal_v), typical, amps, np.asarray(50.0)
     )
-    cheap = np.lexsort((index, price, ~fits))
-    frugal = np.lexsort((index, loss.total_w * count, ~fits))
-    turn = [int(k) for pair in zip(cheap, frugal, strict=True) for k in pair]
-    unique = list(dict.fromkeys(turn))[:most]
-    return [(int(offered[k]), int(min(count[k], converters.max_parallel[index[k]]))) for k in unique]
+    lifetime = price + genome.scale * loss.total_w * count * 8.76
+    order = np.lexsort((index, lifetime, ~fits))[:most]
+    return [(int(offered[k]), int(min(count[k], converters.max_parallel[index[k]]))) for k in order]
 
 
 def heuristic_genomes(genome: Genome, most: int) -> FloatArray:
-    """Return at most ``most`` seeds: habitual and low buses, each control, two buses, none; three prices."""
-    suited = suited_converters(genome, 4)
-    kinds: list[list[float]] = []
+    """Return at most ``most`` seeds: every suited converter on a low and a habitual bus, each control, two buses.
+
+    Price of energy and droop cap take turns, so that neighbouring seeds differ in them.
+    """
+    suited = suited_converters(genome, MOST_CONVERTERS) or [(0, 1)]
     blank = np.zeros(len(genome.genes))
-    blank[genome.stage_place] = 1.0
-    blank[genome.capacitor_place] = 1.0
+    blank[genome.stage_place] = blank[genome.capacitor_place] = 1.0
     blank[genome.place["copper"]] = np.log(0.02)
+    blank[genome.place["price"]] = np.log(genome.scale)
     caps = (len(CAPS) - 1, len(CAPS) // 2, 0)
     habitual = genome.problem.study.control.habitual_v
     layouts: list[tuple[float, int, float | None]] = [
-        (habitual, FIXED, None),
-        (habitual, FOLLOW, None),
-        (LOW_BUS_V, FOLLOW, None),
+        (LOW_BUS_V, TWO_LEVELS, None),
         (LOW_BUS_V, FIXED, None),
-        (habitual, TWO_LEVELS, None),
+        (habitual, FIXED, None),
+        (LOW_BUS_V, FOLLOW, None),
         (habitual, FIXED, SECOND_BUS_V),
+        (habitual, FOLLOW, None),
     ]
-    turn = 0
-    for price in PRICES:
-        for converter in suited or [(0, 1)]:
-            for volts, control, second in layouts:
-                seed = blank.copy()
-                seed[genome.place["price"]] = np.log(price * genome.scale)
-                seed[genome.place["cap"]] = caps[turn % 3]
-                set_bus(genome, seed, 0, converter, volts, control)
-                if second is not None:
-                    set_bus(genome, seed, 1, converter, second, FIXED)
-                kinds.append(list(seed))
-                turn += 1
-    none = blank.copy()
-    none[genome.place["price"]] = np.log(genome.scale)
-    seeds = np.array([list(none), *kinds])
-    step = max(1, -(-len(seeds) // most))
-    return seeds[::step][:most]
+    seeds = [blank]
+    for volts, control, second in layouts:
+        for converter in suited:
+            seed = blank.copy()
+            turn = len(seeds)
+            seed[genome.place["price"]] = np.log(PRICES[turn % 3] * genome.scale)
+            seed[genome.place["cap"]] = caps[(turn // 3) % 3]
+            set_bus(genome, seed, 0, converter, volts, control)
+            if second is not None:
+                set_bus(genome, seed, 1, converter, second, FIXED)
+            seeds.append(seed)
+    return np.array(seeds[:most])
 
 
 def set_bus(
@@ -105,11 +102,13 @@ def set_bus(
         volts = float(
             np.clip(volts, table.output_min_v[converter[0] - 1], table.output_max_v[converter[0] - 1])
         )
+    if control != FIXED:
+        volts *= MOVING_RISE  # the nominal of a moving bus is its upper limit
     put("nominal_v", int(np.abs(problem.grid_v - volts).argmin()))
     if control != FIXED:
         gene = genome.genes[genome.place[f"{name}.down"]]
         step = float(problem.grid_v[1] - problem.grid_v[0]) if len(problem.grid_v) > 1 else 1.0
-        seed[genome.place[f"{name}.down"]] = min(gene.high, round(0.2 * volts / step))
+        seed[genome.place[f"{name}.down"]] = min(gene.high, round((1.0 - 1.0 / MOVING_RISE) * volts / step))
 
 
 def suited_bulk(genome: Genome, b: int, volts: float) -> int:
