@@ -12,7 +12,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from archopt.model.hardware import bias_per_phase_w
-from archopt.model.parameters import BUCK, LINEAR, NO_SHEDDING, THRESHOLD_SHEDDING, FloatArray, IntArray
+from archopt.model.parameters import BUCK, LINEAR, FloatArray, IntArray
+from archopt.model.part_rows import NO_SHEDDING, THRESHOLD_SHEDDING
 from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
 from archopt.model.space import BANK_COUNTS
 from archopt.model.stages import conduction_ratio, loop_bandwidth_rad_s, slew_down_a_per_s, slew_up_a_per_s

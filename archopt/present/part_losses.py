@@ -11,7 +11,7 @@ import numpy as np
 
 from archopt.inputs.parts import BuckStage, LinearRegulator, Part
 from archopt.inputs.resolved import Catalogue
-from archopt.model.parameters import buck_parameters, converter_parameters
+from archopt.model.part_rows import buck_parameters, converter_parameters
 from archopt.physics import buck, bus_converter, linear
 from archopt.physics.arrays import FloatArray, FloatLike
 

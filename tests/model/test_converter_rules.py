@@ -15,7 +15,8 @@ from archopt.model import decide as decisions
 from archopt.model.board import DirectStages
 from archopt.model.evaluator import Detail, evaluate_in
 from archopt.model.hardware import setting_error_v, unpack
-from archopt.model.parameters import FIXED_RATIO, IDEAL_SHEDDING, NO_SHEDDING, REGULATED, THRESHOLD_SHEDDING
+from archopt.model.parameters import FIXED_RATIO, REGULATED
+from archopt.model.part_rows import IDEAL_SHEDDING, NO_SHEDDING, THRESHOLD_SHEDDING
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
 from archopt.model.stages import loop_bandwidth_rad_s
