@@ -96,8 +96,6 @@ class Reference:
         self.study: ResolvedStudy = problem.study
         self.catalogue: Catalogue = problem.catalogue
         self.states: StateTable = problem.states
-        self.own = [rail for rail in self.study.rails if not rail.tap_of]
-        self.place = {rail.name: k for k, rail in enumerate(self.own)}
         self.choices = problem.space.describe(row)  # type: ignore[arg-type]
         designs = Designs(problem.layout, row[None])  # type: ignore[index]
         step = self.study.control.grid_v
@@ -105,6 +103,12 @@ class Reference:
         self.volts = [[(first + int(k)) * step for k in bus] for bus in designs.volts[0]]
         self.units = designs.running_converters[0].tolist()
         self.phases = designs.running_phases[0].tolist()
+        self.build()
+
+    def build(self) -> None:
+        """Compute the design from study, catalogue, states, choices and stored decisions, wherever they are from."""
+        self.own = [rail for rail in self.study.rails if not rail.tap_of]
+        self.place = {rail.name: k for k, rail in enumerate(self.own)}
         self.path = cast(InputPath, self.part("input_paths", self.study.supply.path))
         stack = cast(Stack, self.part("stacks", self.choices["board.stack"]))
         self.stack = stack
