@@ -107,8 +107,16 @@ def states_of(record: Data) -> StateTable:
 
 
 def problem_of(record: Data) -> Problem:
-    """Return the problem of a result with the parts its designs use as the only ones on offer."""
-    return compile_problem(study_of(record), catalogue_of(record), states_of(record))
+    """Return the problem of a result with the parts its designs use as the only ones on offer.
+
+    Raises
+    ------
+    OutputError : the record lacks something that computing takes.
+    """
+    try:
+        return compile_problem(study_of(record), catalogue_of(record), states_of(record))
+    except (KeyError, IndexError, TypeError, ValueError) as error:
+        raise OutputError(f"the result lacks what it takes to compute from ({error}); solve it again") from error
 
 
 def row_of(problem: Problem, design: Data) -> IntArray:

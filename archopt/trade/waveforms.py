@@ -47,7 +47,7 @@ class Finding:
 
     def as_data(self) -> dict[str, Any]:
         """The finding as plain data."""
-        return {name: getattr(self, name) for name in self.__slots__} if hasattr(self, "__slots__") else vars(self)
+        return dict(vars(self))
 
 
 @dataclass(frozen=True)
