@@ -1,0 +1,87 @@
+"""A published design computed again from the two files that hold it, ``problem.json`` and ``designs.json``.
+
+The files are read with nothing but a JSON reader; the scalar reference then computes the design as it computes
+one of a problem in memory. No array of the model, no compiled problem and no study object has a part in it.
+"""
+
+from __future__ import annotations
+
+from types import SimpleNamespace
+from typing import Any, cast
+
+import numpy as np
+
+from archopt.inputs.parts import FAMILIES, Part
+from archopt.inputs.resolved import Catalogue, ResolvedStudy
+from archopt.model.states import KIND_NAMES, MIX, StateTable
+from equivalence.reference import ORDER, Reference
+
+Data = dict[str, Any]
+
+
+def attributes(value: object) -> Any:
+    """Return JSON objects as objects with attributes, at any depth."""
+    if isinstance(value, dict):
+        return SimpleNamespace(**{key: attributes(entry) for key, entry in value.items()})
+    return [attributes(entry) for entry in value] if isinstance(value, list) else value
+
+
+def parts_of(problem: Data) -> dict[str, dict[str, Part]]:
+    """Return the catalogue rows the file holds, by family and name."""
+    return {
+        family: {name: FAMILIES[family].model_validate(row) for name, row in rows.items()}
+        for family, rows in problem["parts"].items()
+    }
+
+
+def states_of(problem: Data) -> StateTable:
+    """Return the states and bands of the file under the names the reference reads them by."""
+    rows, bands, rails = problem["states"], problem["bands"], problem["copper"]["rails"]
+    kind = np.array([KIND_NAMES.index(row["kind"]) for row in rows])
+    off = np.array([[name in row["off"] for name in rails] for row in rows])
+
+    def by_rail(table: list[Data], key: str) -> Any:
+        return np.array([[row[key][name] for name in rails] for row in table])
+
+    given = SimpleNamespace(
+        name=[row["state"] for row in rows],
+        kind=kind,
+        hours=[row["hours"] for row in rows],
+        input_v=[row["input_v"] for row in rows],
+        ambient_degc=[row["ambient_degc"] for row in rows],
+        band=[row["band"] - 1 for row in rows],
+        useful_w=[row["load_w"] for row in rows],
+        tap_w=[row["tap_w"] for row in rows],
+        current_a=by_rail(rows, "current_a"),
+        off=off,
+        bands=len(bands),
+        mix_a=by_rail(bands, "worst_mix_a"),
+        after_a=by_rail(bands, "after_jump_a"),
+        mix_off=off[np.flatnonzero(kind == MIX)[0::2]],
+        transitions_per_year=np.array([row["transitions_per_year"] for row in bands]),
+    )
+    return cast(StateTable, given)
+
+
+class FromFiles(Reference):
+    """One design of a result directory, computed from its files."""
+
+    def __init__(self, problem: Data, design: Data) -> None:
+        self.study = cast(ResolvedStudy, attributes(problem["study"]))
+        self.catalogue = cast(Catalogue, SimpleNamespace(families=parts_of(problem)))
+        self.states = states_of(problem)
+        self.choices = design["choices"]
+        bands = design["bands"]
+        self.volts = [[band["volts"].get(bus, 0.0) for band in bands] for bus in ORDER[1:]]
+        self.units = [[band["converters"].get(bus, 0) for band in bands] for bus in ORDER[1:]]
+        self.phases = [[band["phases"][rail] for band in bands] for rail in problem["copper"]["rails"]]
+        self.build()
+
+    def raise_above_w(self, design: Data) -> list[float]:
+        """Return the board input power at the upper edge of each band but the last, scaled from its worst mix."""
+        mixes = [s for s in range(len(self.results)) if self.states.kind[s] == MIX][0::2]
+        edges = [band["load_to_w"] for band in design["bands"][:-1]]
+        return [
+            edge * self.results[s].input_w / self.states.useful_w[s]
+            for edge, s in zip(edges, mixes[:-1], strict=True)
+        ]
