@@ -123,7 +123,7 @@ def solve(
     record = FrontRecord(
         designs=designs,
         archive=archive_rows(problem, found),
-        problem=compiled_record(problem, designs if incumbent is None else [*designs, incumbent]),
+        problem=compiled_record(problem, [*designs, *beside_front(incumbent, asked.losing)]),
         run=run_record(
             problem,
             seed=used_seed,
@@ -303,6 +303,12 @@ def explain_incumbent(evaluator: Evaluator, today: IntArray | None) -> Data | No
     design = explain_many(evaluator, evaluator.decide(today[None]))[0]
     violated = [limit for limit in design["limits"] if limit["normalised"] < 0]
     return {"design": "incumbent", "roles": ["incumbent"], "violated": violated, **design}
+
+
+def beside_front(incumbent: Data | None, losing: list[Data]) -> list[Data]:
+    """Return the designs explained beside the front: today's and the best of each topology behind the winner."""
+    best = [row["best_design"] for row in losing]
+    return [design for design in (incumbent, *best) if design is not None]
 
 
 def mark(problem: Problem, designs: list[Data], objectives: FloatArray, incumbent: Data | None) -> None:
