@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO
 from archopt.model.hardware import Hardware
 from archopt.model.options import Options, band_hours
 from archopt.model.parameters import FloatArray, IntArray
@@ -11,8 +12,10 @@ from archopt.model.problem import Problem
 from archopt.model.states import ENERGY, StateTable
 
 
-def bus_sums(options: Options, option: IntArray, hardware: Hardware) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return energy, mix and jump power of each bus's rails, (P, 2, B, G)."""
+def bus_sums(
+    problem: Problem, options: Options, option: IntArray, hardware: Hardware
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return energy, mix and jump power of each bus's rails and their children, (P, 2, B, G)."""
     rows = options.rows
     row = options.row[option]
     shape = (len(row), 2, row.shape[2], rows.energy_kwh.shape[2])
@@ -27,7 +30,33 @@ def bus_sums(options: Options, option: IntArray, hardware: Hardware) -> tuple[Fl
             energy[here, bus] += rows.energy_kwh[index, band]
             mix[here, bus] += rows.mix_w[index, band]
             jump[here, bus] += rows.jump_w[index, band]
+    add_children(problem, options, row, hardware, (energy, mix, jump))
     return energy, mix, jump
+
+
+def add_children(
+    problem: Problem, options: Options, row: IntArray, hardware: Hardware,
+    sums: tuple[FloatArray, FloatArray, FloatArray],
+) -> None:  # fmt: skip
+    """Add what children draw from the buses of their parents, at the parent's own power in over out, in place.
+
+    row (P, R, B): table rows of the rails' options.
+    """
+    p, child = np.nonzero(hardware.parent >= 0)
+    parent = hardware.parent[p, child]
+    fed = hardware.on_bus[p, :, parent].any(axis=1)
+    p, child, parent = p[fed], child[fed], parent[fed]
+    if not len(p):
+        return
+    rows, rails = options.rows, problem.rails
+    bus = hardware.on_bus[p, :, parent].argmax(axis=1)
+    band = np.arange(row.shape[2])
+    output = (rails.voltage_v * problem.states.mix_a).T[parent][..., None]
+    drawn = rows.mix_w[row[p, parent], band]
+    ratio = np.where(output > 0, drawn / np.maximum(output, 1e-12), STEP_POWER_RATIO)
+    ratio = np.clip(ratio, 1.0, LARGEST_STEP_RATIO)
+    for total, values in zip(sums, (rows.child_kwh, rows.child_mix_w, rows.child_jump_w), strict=True):
+        np.add.at(total, (p, bus), values[row[p, child], band, parent[:, None]][..., None] * ratio)
 
 
 def rail_shares(options: Options, option: IntArray, hardware: Hardware) -> FloatArray:

@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from archopt.model.board import STEP_POWER_RATIO
+from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
 from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, unpack
@@ -28,7 +28,7 @@ from archopt.physics.transient import bus_dip_v
 ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
 SAFETY_V = 0.003
 SAFETY_SHARE = 0.999  # of the short-time current: stages draw a little more at the dipped bus than tabled
-LARGEST_STEP_RATIO = 3.0  # of a rail's step in bus power over its own, as the board solution has it
+CHILD_MARGIN = 1.02  # what a child draws beyond its table: the copper of its sensed pour
 SETTLING_PASSES = 3
 
 
@@ -229,9 +229,9 @@ def raise_for_children(
     if not len(p):
         return running
     parent = feed[p, r] - 3
-    power = options.rows.mix_w[options.row[option[p, r]], np.arange(running.shape[2]), -1]
+    power = options.rows.child_mix_w[options.row[option[p, r]], np.arange(running.shape[2]), parent[:, None]]
     extra = np.zeros(running.shape)
-    np.add.at(extra, (p, parent), power / problem.rails.voltage_v[parent][:, None])
+    np.add.at(extra, (p, parent), CHILD_MARGIN * power / problem.rails.voltage_v[parent][:, None])
     stage = designs.rail("stage")
     total = problem.states.mix_a.T + extra
     each = np.minimum(problem.stages.phase_limit_a, problem.stages.shed_at_a)[stage]
@@ -268,7 +268,7 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     designs.rows[:, layout.running_phases] = running.reshape(len(designs), -1)
     hardware = unpack(problem, designs, states)
     energy, mix_w, jump_w = with_bus_losses(
-        problem, states, hardware, rail_shares(options, option, hardware), bus_sums(options, option, hardware)
+        problem, states, hardware, rail_shares(options, option, hardware), bus_sums(problem, options, option, hardware)
     )
     units = running_units(problem, states, designs, hardware, energy, mix_w, jump_w)
     units = np.where(hardware.converter[..., None] >= 0, units, 0)

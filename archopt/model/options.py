@@ -33,7 +33,8 @@ class RowTables:
 
     energy_kwh (rows, B, G) and input_kwh (rows, B): stage input energy a year; mix_w, jump_w (rows, B, G);
     need_v, jump_v, high_v (rows, B): window of stage input voltage; droop_percent (rows, K, counts, B, nodes)
-    float32 over droop_nodes_v (rows, nodes).
+    float32 over droop_nodes_v (rows, nodes). child_kwh, child_mix_w, child_jump_w (rows, B, R): the same sums
+    with the stage input at the voltage of each rail, for children of it.
     """
 
     energy_kwh: FloatArray
@@ -45,6 +46,9 @@ class RowTables:
     high_v: FloatArray
     droop_percent: NDArray[np.float32]
     droop_nodes_v: FloatArray
+    child_kwh: FloatArray
+    child_mix_w: FloatArray
+    child_jump_w: FloatArray
 
 
 @dataclass(frozen=True)
@@ -240,6 +244,10 @@ def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Op
     off_mix = states.mix_off.T[tables.row_rail][..., None]
     need, jump_v, high = windows(problem, states, tables)
     droop, nodes = droop_tables(problem, states, tables)
+    at_rails = [
+        at_grid(tables, values, problem.rails.voltage_v)
+        for values in (energy, tables.loss_w[:, mix_low] + useful_mix, tables.loss_w[:, jump] + useful_jump)
+    ]
     rows = RowTables(
         energy_kwh=at_grid(tables, energy, problem.grid_v),
         input_kwh=direct,
@@ -250,6 +258,9 @@ def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Op
         high_v=high,
         droop_percent=droop,
         droop_nodes_v=nodes,
+        child_kwh=at_rails[0],
+        child_mix_w=np.where(off_mix, 0.0, at_rails[1]),
+        child_jump_w=at_rails[2],
     )
     first = np.full(tables.base.shape, -1, dtype=np.int64)
     columns: list[tuple[int, int, int, int]] = []
