@@ -21,9 +21,7 @@ from archopt.present.amounts import fixed, number
 from archopt.present.part_chart import Curve, chart_lines
 from archopt.present.record import BUSES, Data
 from archopt.present.tables import HangingLines, pairs, section, table
-from archopt.trade.rebuilt import detail_of, problem_of, row_of
-from archopt.trade.waveforms import (
-    Finding,
+from archopt.trade.circuits import (
     Waves,
     bus_case,
     bus_step,
@@ -31,8 +29,11 @@ from archopt.trade.waveforms import (
     jump_of,
     rail_case,
     settled_s,
+    tightest_band,
     waves_of,
 )
+from archopt.trade.rebuilt import detail_of, problem_of, row_of
+from archopt.trade.waveforms import Finding
 
 WIDTH = 64
 SPANS = ((1e-9, "ns"), (1e-6, "us"), (1e-3, "ms"), (1.0, "s"))
@@ -252,9 +253,9 @@ def jump_view(waves: Waves, name: str, bus: int, states: tuple[int, int] | None)
     """A bus and all its rails through a jump of everything on it."""
     problem, detail = waves.problem, waves.detail
     if states is None:
-        on = detail.hardware.on_bus[0, bus] & ~problem.states.off[waves.jump_at]
-        room = np.where(on, waves.spare_v[0], np.inf).min(axis=1)
-        band = int(room.argmin())
+        band = tightest_band(waves, 0, bus)
+        if band is None:
+            raise OutputError(f"{BUSES[bus]} carries nothing that could jump")
         jump = jump_of(waves, 0, bus, band)
         words = problem.states.name[int(waves.jump_at[band])]
     else:

@@ -18,11 +18,12 @@ from archopt.model.space import Designs
 from archopt.physics.averaged_bus import bus_wave
 from archopt.present.compiled_record import compiled_record
 from archopt.present.plain import plain
+from archopt.trade.circuits import bus_case, bus_step, jump_of, jump_rises, waves_of
 from archopt.trade.pinned import pinned_problem, unmet_limits, with_jump
 from archopt.trade.rebuilt import detail_of, problem_of, row_of
 from archopt.trade.schedule_rows import schedule_rows
 from archopt.trade.schedules import best_schedule
-from archopt.trade.waveforms import bus_case, bus_step, jump_of, jump_rises, recheck, settled, waves_of
+from archopt.trade.waveforms import recheck, settled
 
 Rows = NDArray[np.int64]
 LEAN = {"bus_a.converter": "wide_bus_150w", "bus_a.bulk": "ceramic_22u_25v", "bus_a.bulk_count": "4"}
