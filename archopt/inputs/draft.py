@@ -52,6 +52,7 @@ class Draft:
     economics: EconomicsTable
     search: SearchTable
     incumbent: dict[str, Any] | None
+    floorplan: str | None = None
     rails: list[RailRow] = field(default_factory=list)
     rail_names: list[str] = field(default_factory=list)
     rail_place: dict[str, tuple[str, str]] = field(default_factory=dict)
@@ -92,6 +93,7 @@ def read_draft(content: dict[str, Any], path: Path, notebook: Notebook) -> Draft
         economics=tables["economics"] or EconomicsTable(),
         search=tables["search"] or SearchTable(),
         incumbent=_mapping(content, "incumbent", notebook),
+        floorplan=_text(content, "floorplan", notebook),
     )
     _read_rails(draft, content.get("rails"), notebook)
     return draft

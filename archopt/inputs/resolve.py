@@ -9,6 +9,7 @@ import numpy as np
 from archopt.inputs.choice_names import ChoiceChecker
 from archopt.inputs.draft import Draft, content_hash
 from archopt.inputs.feasibility import check_feasible
+from archopt.inputs.floorplan import resolve_floorplan
 from archopt.inputs.incumbent import resolve_incumbent
 from archopt.inputs.problems import Notebook
 from archopt.inputs.resolve_choices import allowed_families, forbidden_parts, resolve_choices
@@ -40,6 +41,7 @@ def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedS
     power_w = sum(rail.voltage_v * rail.max_current_a for rail in rails) * load.coincidence
     supply = resolve_supply(draft, catalogue, unusable, power_w, load.hottest_degc, notebook)
     board = resolve_board(draft, catalogue, unusable, notebook)
+    floorplan = resolve_floorplan(draft, rails, board, notebook)
     series = load.table is not None and load.table.series
     jump = resolve_jump(draft, rails, load, notebook)
     control = resolve_control(draft, catalogue, unusable, series, jump, notebook)
@@ -69,9 +71,10 @@ def resolve(draft: Draft, catalogue: Catalogue, notebook: Notebook) -> ResolvedS
         choices=choices,
         search=search,
         incumbent=incumbent,
+        floorplan=floorplan,
         assumed=tuple(notebook.assumptions),
         stated=draft.content,
-        study_hash=content_hash(draft.content, _profile_bytes(draft)),
+        study_hash=content_hash(draft.content, *_file_bytes(draft)),
     )
 
 
@@ -80,6 +83,7 @@ def _with_inlet(load: LoadTable, inlet_degc: float) -> LoadTable:
     return replace(load, inlet_degc=np.where(np.isnan(load.inlet_degc), inlet_degc, load.inlet_degc))
 
 
-def _profile_bytes(draft: Draft) -> bytes:
-    """Return the bytes of the profile, empty when there is none."""
-    return (draft.folder / draft.load.profile).read_bytes() if draft.load.profile else b""
+def _file_bytes(draft: Draft) -> list[bytes]:
+    """Return the bytes of the profile, empty when there is none, and of the floorplan where there is one."""
+    profile = (draft.folder / draft.load.profile).read_bytes() if draft.load.profile else b""
+    return [profile] if draft.floorplan is None else [profile, (draft.folder / draft.floorplan).read_bytes()]

@@ -11,6 +11,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from archopt.inputs.floorplan_shape import Floorplan
 from archopt.inputs.parts import Part, Source
 
 FloatArray = NDArray[np.float64]
@@ -215,6 +216,7 @@ class ResolvedStudy:
     choices: Choices
     search: SearchBudget
     incumbent: dict[str, str] | None  # choice name -> value name, the same names as pins
+    floorplan: Floorplan | None = None
     assumed: tuple[Assumption, ...] = ()
     stated: dict[str, object] = field(default_factory=dict)  # the file's own content, as read
     study_hash: str = ""

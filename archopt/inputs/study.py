@@ -180,6 +180,9 @@ class Study(Table):
     name: str | None = Field(None, min_length=1, description="short name; default the name of the file")
     title: str | None = Field(None, min_length=1, description="one line for the report; default the name")
     catalogue: str | None = Field(None, description="folder of your own parts, which override or add; default none")
+    floorplan: str | None = Field(
+        None, description="TOML file of regions and places, which then give squares and areas; default none"
+    )
     input: InputTable
     board: BoardTable
     rails: str | Annotated[tuple[RailRow, ...], Field(strict=False)] = Field(

@@ -35,9 +35,9 @@ def read_text(path: Path, shown_path: str, what: str, notebook: Notebook) -> str
     return None
 
 
-def read_toml(path: Path, shown_path: str, notebook: Notebook) -> dict[str, Any] | None:
+def read_toml(path: Path, shown_path: str, notebook: Notebook, what: str = "the study") -> dict[str, Any] | None:
     """Return the content of a TOML file, or None after noting what is wrong and on which line."""
-    text = read_text(path, shown_path, "the study", notebook)
+    text = read_text(path, shown_path, what, notebook)
     if text is None:
         return None
     try:
@@ -51,7 +51,7 @@ def read_toml(path: Path, shown_path: str, notebook: Notebook) -> dict[str, Any]
             place, f"is not TOML: {message[:1].lower()}{message[1:]}{f': {line}' if line else ''}", shown_path
         )
     except RecursionError:
-        notebook.problem("", "is not a study: nested too deeply", shown_path)
+        notebook.problem("", f"is not {what}: nested too deeply", shown_path)
     return None
 
 

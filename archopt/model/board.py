@@ -155,6 +155,13 @@ def standing_w(hardware: Hardware, mix_in_w: FloatArray, jump_in_w: FloatArray, 
     return np.asarray(np.maximum(mix, jump - step_w))
 
 
+def via_drop_v(problem: Problem, rail_a: FloatArray, bus: int) -> FloatArray:
+    """Return the drop in a bus's via fields, there and back, from the currents of its rails (..., R) A."""
+    planes = problem.planes
+    shared = planes.source_ohm[bus] * rail_a.sum(axis=-1, keepdims=True)
+    return np.asarray(2.0 * (shared + planes.own_ohm[bus] * rail_a))
+
+
 def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: StageLoss, *, exact: bool) -> Solution:
     """Solve the board for a batch of designs.
 
@@ -232,8 +239,10 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
         fresh_drop = np.zeros_like(drop)
         plane_w = np.empty((*node_v.shape, 2))
         for bus in range(2):
-            part = np.einsum("psq,rq->psr", on_a[:, :, bus], problem.bus_squares)
+            part = np.einsum("psq,rq->psr", on_a[:, :, bus], problem.bus_squares[bus])
             part = part * hardware.plane_ohm[:, bus, None, None] * on_bus[:, :, bus]
+            if problem.planes.with_vias:
+                part += via_drop_v(problem, on_a[:, :, bus], bus) * on_bus[:, :, bus]
             plane_w[..., bus] = (part * on_a[:, :, bus]).sum(axis=2)
             fresh_drop += part
         drop = fresh_drop

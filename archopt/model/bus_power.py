@@ -60,14 +60,25 @@ def add_children(
 
 
 def rail_shares(options: Options, option: IntArray, hardware: Hardware) -> FloatArray:
-    """Return the sum of the squares of the rails' shares of each bus's power, (P, 2, B), at the worst mix."""
+    """Return the rails' shares of each bus's power at the worst mix, (P, 2, B, R)."""
     rows = options.rows
     middle = rows.mix_w.shape[2] // 2
     power = rows.mix_w[options.row[option], np.arange(rows.mix_w.shape[1]), middle]  # (P, R, B)
     on_bus = hardware.on_bus.astype(np.float64)
-    total = np.einsum("pkr,prb->pkb", on_bus, power)
-    square = np.einsum("pkr,prb->pkb", on_bus, power**2)
-    return np.where(total > 0, square / np.maximum(total, 1e-12) ** 2, 1.0)
+    on_it = np.einsum("pkr,prb->pkbr", on_bus, power)
+    return np.asarray(on_it / np.maximum(on_it.sum(axis=3, keepdims=True), 1e-12))
+
+
+def plane_ohm(problem: Problem, hardware: Hardware, shares: FloatArray) -> FloatArray:
+    """Return the loop resistance at which a bus's whole current would lose what its plane does, (P, 2, B) ohm.
+
+    shares (P, 2, B, R): each rail's share u of the current; u^T R u of the plane, and of the via fields.
+    """
+    planes = problem.planes
+    squares = np.einsum("pkbr,kqr,pkbq->pkb", shares, planes.squares, shares)
+    own = np.einsum("pkbr,kr->pkb", shares**2, planes.own_ohm)
+    source = planes.source_ohm[:, None] * shares.sum(axis=3)
+    return np.asarray(hardware.plane_ohm[..., None] * squares + 2.0 * (source + own))
 
 
 def sensed_pours(
@@ -98,9 +109,7 @@ def with_bus_losses(
     """
     sensed_kwh, sensed_mix_w, sensed_jump_w = sensed_pours(problem, states, hardware)
     energy, mix_w, jump_w = sums[0] + sensed_kwh, sums[1] + sensed_mix_w, sums[2] + sensed_jump_w
-    board = problem.study.board
-    squares = board.bus_shared_squares + board.bus_own_squares * shares
-    per_square_amp = (hardware.plane_ohm[..., None] * squares)[..., None] / problem.grid_v**2  # (P, 2, B, G)
+    per_square_amp = plane_ohm(problem, hardware, shares)[..., None] / problem.grid_v**2  # (P, 2, B, G)
     hours = np.maximum(band_hours(states), 1e-6)[:, None]
     mean_w = energy * 1e3 / hours
     bias_w = np.zeros((*hardware.band_v.shape, 1))

@@ -7,7 +7,7 @@ import numpy as np
 from archopt.model.bus_checks import check_buses
 from archopt.model.bus_stability import check_impedance
 from archopt.model.cost import copper_area_m2
-from archopt.model.hardware import plane_limit_a
+from archopt.model.hardware import place_limits_a
 from archopt.model.limits import Ledger
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.rail_checks import check_jump, check_rails
@@ -30,15 +30,31 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
     pairs = situation.designs.rail("pairs")
     limit_a = pairs * current_limit_a(rails.copper_width_m, thickness, board.copper_rise_k, inner=True)
     ledger.add("copper ampacity", amps, limit_a[:, None, :], at_most=True, axes=axes)
-    bus_limit = plane_limit_a(problem, hardware.stack, situation.designs.bus("pairs"))
+    bus_limit = place_limits_a(problem, hardware.stack, situation.designs.bus("pairs"))
     bus_axes = (situation.state_names(steady), tuple(f"{name} plane" for name in BUS_NAMES))
+    through, limit = crowding(situation, steady, bus_limit)
     ledger.add(
-        "copper ampacity", solution.bus_a[:, steady], bus_limit[:, None, :], at_most=True, axes=bus_axes,
+        "copper ampacity", through, limit, at_most=True, axes=bus_axes,
         applies=(hardware.converter >= 0)[:, None, :],
     )  # fmt: skip
     stack_pairs = problem.stacks.pairs[hardware.stack]
     offered = stack_pairs * board.area_cm2 * board.usable_copper_share
     ledger.add("layer budget", 1e4 * copper_area_m2(problem, situation.designs), offered, at_most=True)
+
+
+def crowding(situation: Situation, steady: IntArray, limit_a: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return current and limit at the place of each bus plane where they are nearest, (P, states, 2) A.
+
+    Places are necks and discs of 3 mm; without a floorplan the plane's own width. limit_a (P, 2, K).
+    """
+    planes, solution = situation.problem.planes, situation.solution
+    rail_a = solution.stage_in_w[:, steady] / solution.stage_v[:, steady]
+    on_a = rail_a[:, :, None, :] * situation.hardware.on_bus[:, None, :, :]
+    bias_a = np.maximum(solution.bus_a[:, steady] - on_a.sum(axis=3), 0.0)
+    through = np.einsum("pskr,kcr->pskc", on_a, planes.place_share) + bias_a[..., None] * planes.place_bias
+    spread = np.broadcast_to(limit_a[:, None], through.shape)
+    worst = (through / np.maximum(spread, 1e-12)).argmax(axis=3)[..., None]
+    return np.take_along_axis(through, worst, 3)[..., 0], np.take_along_axis(spread, worst, 3)[..., 0]
 
 
 def check_board(situation: Situation, ledger: Ledger) -> None:

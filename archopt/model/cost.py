@@ -94,5 +94,5 @@ def copper_area_m2(problem: Problem, designs: Designs) -> FloatArray:
     feed = designs.rail("feed")
     pours = (designs.rail("pairs") * problem.rails.copper_area_m2).sum(axis=1)
     used = np.stack([(feed == 1).any(axis=1), (feed == 2).any(axis=1)], axis=1)
-    planes = (designs.bus("pairs") * used).sum(axis=1) * problem.study.board.bus_area_cm2 * 1e-4
+    planes = (designs.bus("pairs") * used * problem.planes.area_m2).sum(axis=1)
     return np.asarray(pours + planes)

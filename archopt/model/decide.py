@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO
+from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO, via_drop_v
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
 from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, unpack
@@ -74,9 +74,9 @@ def crossing(nodes_v: FloatArray, percent: NDArray[Any], bound: float) -> FloatA
 
 def legal_voltages(
     problem: Problem, designs: Designs, option: IntArray, options: Options, hardware: Hardware,
-    mix_w: FloatArray, jump_w: FloatArray, dip_v: FloatArray,
+    mix_w: FloatArray, jump_w: FloatArray, dip_v: FloatArray, shares: FloatArray,
 ) -> BoolArray:  # fmt: skip
-    """Return where a bus voltage is legal for a band, (P, 2, B, G)."""
+    """Return where a bus voltage is legal for a band, (P, 2, B, G); shares (P, 2, B, R) of its current by rail."""
     converters, study = problem.converters, problem.study
     grid = problem.grid_v
     index = np.maximum(hardware.converter, 0)[..., None, None]
@@ -87,7 +87,7 @@ def legal_voltages(
     legal = (grid >= converters.output_min_v[index] - 1e-9) & (grid <= converters.output_max_v[index] + 1e-9)
     legal = legal & (mix_w <= spare * converters.limit_w[index])
     legal &= mix_w / low_v <= spare * converters.limit_a[index]
-    legal &= mix_w / low_v <= plane_limit_a(problem, hardware.stack, designs.bus("pairs"))[..., None, None]
+    legal &= mix_w / low_v <= plane_limit_a(problem, hardware.stack, designs.bus("pairs"), shares)[..., None]
     dipped = np.maximum(low_v - dip_v, 0.1)
     legal &= dip_v <= study.control.bus_dip_percent * 0.01 * grid
     moving = (designs.bus("control") != FIXED)[..., None, None]
@@ -109,8 +109,11 @@ def legal_voltages(
             continue
         on_here = on[here, bus]
         # volts times drop: the drop of a constant power falls with the bus voltage
-        drop_v2 = np.einsum("pqb,rq->prb", rail_w[here] * on_here[..., None], problem.bus_squares)
+        into_w = rail_w[here] * on_here[..., None]
+        drop_v2 = np.einsum("pqb,rq->prb", into_w, problem.bus_squares[bus])
         drop_v2 *= hardware.plane_ohm[here, bus, None, None]
+        if problem.planes.with_vias:
+            drop_v2 += via_drop_v(problem, into_w.transpose(0, 2, 1), bus).transpose(0, 2, 1)
         for r in np.flatnonzero(on_here.any(axis=0)):
             drop = drop_v2[:, r, :, None] / low_v[here, bus]
             at_stage = low_v[here, bus] - drop - SAFETY_V
@@ -267,8 +270,9 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     running = raise_for_children(problem, options, designs, option, options.run[option])
     designs.rows[:, layout.running_phases] = running.reshape(len(designs), -1)
     hardware = unpack(problem, designs, states)
+    shares = rail_shares(options, option, hardware)
     energy, mix_w, jump_w = with_bus_losses(
-        problem, states, hardware, rail_shares(options, option, hardware), bus_sums(problem, options, option, hardware)
+        problem, states, hardware, shares, bus_sums(problem, options, option, hardware)
     )
     units = running_units(problem, states, designs, hardware, energy, mix_w, jump_w)
     units = np.where(hardware.converter[..., None] >= 0, units, 0)
@@ -285,7 +289,7 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
         hardware.bulk_esr_ohm[..., None, None],
         np.maximum(mix_w, jump_w - step_w),
     )
-    legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip)
+    legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip, shares)
     total = energy + converter_energy(problem, states, hardware, energy)
     count, bands, width = len(designs), states.bands, len(problem.grid_v)
     genes = [designs.bus(name).reshape(-1) for name in ("lower_v", "upper_v", "nominal_v", "control")]

@@ -123,7 +123,7 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
         children=children,
         bank_f=effective[rail_index[None, :], bank] * pieces,
         bank_esr_ohm=esr[bank] / pieces,
-        pour_ohm=2.0 * rails.squares * sheet[:, None] / np.maximum(designs.rail("pairs"), 1),
+        pour_ohm=2.0 * (rails.squares * sheet[:, None] / np.maximum(designs.rail("pairs"), 1) + rails.pour_via_ohm),
         converter=converter,
         units=units,
         plane_ohm=2.0 * sheet[:, None] / np.maximum(designs.bus("pairs"), 1),
@@ -167,9 +167,20 @@ def bus_ratio_v(problem: Problem, converter: IntArray) -> FloatArray:
     return problem.converters.ratio[np.maximum(converter, 0)] * problem.study.supply.high_v
 
 
-def plane_limit_a(problem: Problem, stack: IntArray, pairs: IntArray) -> FloatArray:
-    """Return what the bus planes may carry, (P, 2) A: a region as wide as its area over its squares allows."""
-    board = problem.study.board
-    width_m = np.sqrt(board.bus_area_cm2 * 1e-4 / max(board.bus_shared_squares + board.bus_own_squares, 0.1))
-    thickness = problem.stacks.thickness_m[stack][:, None]
-    return np.asarray(pairs * current_limit_a(width_m, thickness, board.copper_rise_k, inner=True))
+def place_limits_a(problem: Problem, stack: IntArray, pairs: IntArray) -> FloatArray:
+    """Return what each place of the bus planes may carry, (P, 2, K) A; pairs (P, 2)."""
+    thickness = problem.stacks.thickness_m[stack][:, None, None]
+    one = current_limit_a(problem.planes.place_width_m, thickness, problem.study.board.copper_rise_k, inner=True)
+    return np.asarray(pairs[..., None] * one)
+
+
+def plane_limit_a(problem: Problem, stack: IntArray, pairs: IntArray, shares: FloatArray) -> FloatArray:
+    """Return what the bus planes may carry in all, (P, 2, B) A, where the rails share it as given.
+
+    Parameters
+    ----------
+    shares : (P, 2, B, R), each rail's share of the bus current
+    """
+    through = np.einsum("pkbr,kcr->pkbc", shares, problem.planes.place_share)
+    limit = place_limits_a(problem, stack, pairs)[:, :, None, :]
+    return np.asarray((limit / np.maximum(through, 1e-9)).min(axis=3))

@@ -26,11 +26,12 @@ from archopt.model.parameters import (
     StageTable,
     SupervisorTable,
 )
+from archopt.model.planes import BusPlanes, bus_planes, copper_degc, with_pours
 from archopt.model.rails import RailArrays, rail_arrays
 from archopt.model.space import BANK_COUNTS, BUS_A, INPUT, PARENT, Layout, Space
 from archopt.model.states import StateTable, own_rails
 from archopt.physics.capacitor import effective_capacitance_f
-from archopt.physics.copper import sheet_resistance_ohm, squares_matrix
+from archopt.physics.copper import sheet_resistance_ohm
 
 BUS_LEAST_MARGIN = 1.15  # a buck stage wants its input this much above its output before drops
 
@@ -65,8 +66,13 @@ class Problem:
     capacitor_ok: BoolArray
     bulk_ok: BoolArray
     sheet_ohm: FloatArray  # (stacks,) one layer, warm
-    bus_squares: FloatArray  # (R, R) one way
+    planes: BusPlanes
     bank_counts: IntArray
+
+    @property
+    def bus_squares(self) -> FloatArray:
+        """Port resistance matrix of each bus in squares, one way, (2, R, R)."""
+        return self.planes.squares
 
     def with_states(self, states: StateTable) -> Problem:
         """Return the same problem in other states (same rails; the layout follows the number of bands)."""
@@ -152,11 +158,13 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
     converters = tables_of.converter_table(study, catalogue, parts)
     capacitors = tables_of.capacitor_table(study, catalogue, parts)
     stacks = tables_of.stack_table(study, catalogue)
-    rails = rail_arrays(study)
+    rails = with_pours(study, rail_arrays(study))
+    planes = bus_planes(study, rails.names)
     grid_v = voltage_grid(study)
     layout = Layout(len(rails.names), states.bands)
     stage_ok, low, high = stage_limits(study, rails, stages)
     feed_ok = feed_limits(study, rails, stages, grid_v, stage_ok)
+    feed_ok[:, :, BUS_A : BUS_A + 2] &= planes.reached.T[:, None, :]
     rated = capacitors.rated_v * study.derating.voltage
     named = [set(rail.capacitors) for rail in own_rails(study)]
     capacitor_ok = (rated[None, :] >= rails.voltage_v[:, None] - 1e-9) & np.array(
@@ -181,8 +189,6 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
     problems = [*empty_rails(study, offers), *empty_choices(study, space)]
     if problems:
         raise InputError(problems)
-    warm_degc = study.supply.inlet_degc + study.supply.local_rise_k + study.board.copper_rise_k
-    own = own_rails(study)
     return Problem(
         study=study,
         catalogue=catalogue,
@@ -205,7 +211,7 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
         feed_ok=feed_ok,
         capacitor_ok=capacitor_ok,
         bulk_ok=bulk_ok,
-        sheet_ohm=np.asarray(sheet_resistance_ohm(stacks.thickness_m, warm_degc)),
-        bus_squares=squares_matrix(study.board.bus_shared_squares, np.full(len(own), study.board.bus_own_squares)),
+        sheet_ohm=np.asarray(sheet_resistance_ohm(stacks.thickness_m, copper_degc(study))),
+        planes=planes,
         bank_counts=np.array(BANK_COUNTS, dtype=np.int64),
     )

@@ -25,6 +25,7 @@ class RailArrays:
     squares: FloatArray
     copper_area_m2: FloatArray
     copper_width_m: FloatArray
+    pour_via_ohm: FloatArray  # via fields at both ends, one way, warm
     drop_budget: FloatArray  # share of the rail voltage
     step_group: IntArray
 
@@ -52,6 +53,7 @@ def rail_arrays(study: ResolvedStudy) -> RailArrays:
         squares=np.array([rail.squares for rail in rails]),
         copper_area_m2=np.array([rail.copper_area_cm2 * 1e-4 for rail in rails]),
         copper_width_m=np.array([rail.copper_width_mm * 1e-3 for rail in rails]),
+        pour_via_ohm=np.zeros(len(rails)),
         drop_budget=np.array([rail.drop_budget_percent * 0.01 for rail in rails]),
         step_group=np.array(group, dtype=np.int64),
     )

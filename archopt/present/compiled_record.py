@@ -9,6 +9,7 @@ import numpy as np
 from archopt.inputs.parts import Part
 from archopt.model.parameters import FloatArray
 from archopt.model.problem import Problem
+from archopt.model.space import BUS_NAMES
 from archopt.model.states import KIND_NAMES
 from archopt.present.record import Data, problem_data
 
@@ -82,9 +83,11 @@ def compiled_record(problem: Problem, designs: list[Data]) -> Data:
         parts=used_parts(problem, designs),
         copper={
             "rails": list(problem.rails.names),
-            "bus_squares_one_way": np.asarray(problem.bus_squares).tolist(),
+            "bus_squares_one_way": dict(zip(BUS_NAMES, problem.bus_squares.tolist(), strict=True)),
+            "bus_area_cm2": dict(zip(BUS_NAMES, (1e4 * problem.planes.area_m2).tolist(), strict=True)),
             "sheet_ohm_one_layer": dict(zip(problem.stacks.names, problem.sheet_ohm.tolist(), strict=True)),
             "pour_squares_one_way": by_rail(problem, problem.rails.squares),
+            "pour_area_cm2": by_rail(problem, 1e4 * problem.rails.copper_area_m2),
         },
     )
     data["bus_grid_v"] = problem.grid_v.tolist()

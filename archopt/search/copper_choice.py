@@ -28,7 +28,8 @@ def least_pairs(problem: Problem, stack: IntArray) -> FloatArray:
     rails, board = problem.rails, problem.study.board
     amps = np.maximum(problem.states.mix_a.max(axis=0), problem.states.rated_a)
     loop_ohm = 2.0 * rails.squares * problem.sheet_ohm[stack][:, None]
-    drop = amps * loop_ohm / (rails.voltage_v * rails.drop_budget)
+    spare_v = rails.voltage_v * rails.drop_budget - 2.0 * amps * rails.pour_via_ohm
+    drop = amps * loop_ohm / np.maximum(spare_v, 1e-6)
     thickness = problem.stacks.thickness_m[stack][:, None]
     one = np.asarray(current_limit_a(rails.copper_width_m, thickness, board.copper_rise_k, inner=True))
     return np.asarray(np.ceil(np.maximum(drop, amps / one) - 1e-9), dtype=np.float64)
@@ -49,7 +50,7 @@ def choose_pairs(problem: Problem, plan: Plan, feed: IntArray, seen: Conditions)
     short = short + np.where(may, 0.0, 1e12)
     area = rails.copper_area_m2
     used = np.stack([(feed == BUS_A + b).any(axis=1) for b in range(2)], axis=1)
-    planes = (np.minimum(plan.bus["pairs"], most[:, 0]) * used).sum(axis=1) * board.bus_area_cm2 * 1e-4
+    planes = (np.minimum(plan.bus["pairs"], most[:, 0]) * used * problem.planes.area_m2).sum(axis=1)
     room = problem.stacks.pairs[stack] * board.area_cm2 * 1e-4 * board.usable_copper_share - planes
     out = np.zeros(feed.shape, dtype=np.int64)
     open_ = np.ones(len(feed), dtype=bool)

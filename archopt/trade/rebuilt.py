@@ -59,7 +59,8 @@ def study_of(record: Data) -> ResolvedStudy:
     load = LoadTable(none, np.zeros((0, 0)), np.zeros((0, 0), dtype=bool), none, none, (), series=False)
     hints = get_type_hints(ResolvedStudy)
     skipped = ("load", "assumed", "stated", "incumbent")
-    words = {f.name: built(hints[f.name], data[f.name]) for f in fields(ResolvedStudy) if f.name not in skipped}
+    there = [f.name for f in fields(ResolvedStudy) if f.name not in skipped and f.name in data]
+    words = {name: built(hints[name], data[name]) for name in there}
     words["choices"] = built(hints["choices"], {**data["choices"], "pins": {}, "forbidden_parts": [], "families": []})
     if data["control"].get("transitions_per_day") is None:
         words["control"] = built(hints["control"], {**data["control"], "transitions_per_day": math.nan})
