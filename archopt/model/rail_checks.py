@@ -105,12 +105,15 @@ def jump_spare_v(situation: Situation) -> FloatArray:
 
 
 def family_maximum_a(situation: Situation) -> FloatArray:
-    """Return the current of each rail at its own maximum with its children at theirs, (P, R) A."""
+    """Return the current of each rail at its own maximum with its children at rated load, (P, R) A.
+
+    One rail may reach its own maximum; that all of a family do at once is what the study's coincidence denies.
+    """
     rails, hardware = situation.problem.rails, situation.hardware
     most = np.broadcast_to(rails.max_a, hardware.stage.shape).copy()
     p, child = np.nonzero(hardware.parent >= 0)
     parent = hardware.parent[p, child]
-    drawn_w = (rails.max_a * rails.voltage_v)[child] * situation.solution.step_ratio[p, -1, child]
+    drawn_w = (situation.states.rated_a * rails.voltage_v)[child] * situation.solution.step_ratio[p, -1, child]
     np.add.at(most, (p, parent), drawn_w / rails.voltage_v[parent])
     return most
 

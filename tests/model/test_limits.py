@@ -230,7 +230,8 @@ def hand_stage_current(hand: Hand, where: str) -> Found:
         most = own_a(name)
         for c, child in enumerate(hand.reference.nets):
             if child.feed == name:
-                drawn_w = own_a(child.rail.name) * child.rail.voltage_v * hand.reference.step_ratios[-1][c]
+                rated_a = own_a(child.rail.name) * hand.study.coincidence
+                drawn_w = rated_a * child.rail.voltage_v * hand.reference.step_ratios[-1][c]
                 most += drawn_w / net.rail.voltage_v
         return most / net.phases, hand.limit_a(net)
     net, k, s = hand.place(where)
