@@ -105,6 +105,7 @@ def _from_profile(
         inlet_degc=profile.inlet_degc,
         label=tuple(f"row {line}" for line in profile.line),
         series=True,
+        repeats=float(hours.sum() / profile.hours.sum()),
     )
 
 

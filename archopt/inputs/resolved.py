@@ -113,6 +113,7 @@ class LoadTable:
     inlet_degc: FloatArray
     label: tuple[str, ...]
     series: bool
+    repeats: float = 1.0  # how often a sampled series comes round in the year
 
 
 @dataclass(frozen=True)

@@ -319,8 +319,7 @@ def transitions(study: ResolvedStudy, load: LoadTable, band: IntArray, bands: in
         moment_band = band[: len(load.hours)]
         np.add.at(table, (moment_band[:-1], moment_band[1:]), 1.0)
         np.fill_diagonal(table, 0.0)
-        covered = float(load.hours.sum())
-        return table if covered <= 0 else table * min(1.0, 8784.0 / covered)
+        return table * load.repeats
     return table
 
 
