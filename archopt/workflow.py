@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
@@ -14,26 +13,21 @@ from archopt.inputs.load import LoadedStudy, load
 from archopt.model.compiled import compile_study, incumbent_row
 from archopt.model.evaluator import Evaluator
 from archopt.model.explain import explain_many, topology
-from archopt.model.limits import INDEX, LIMITS
 from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.states import coincident_maximum
 from archopt.present.compiled_record import compiled_record, space_record
 from archopt.present.front import Front
+from archopt.present.overview import telling_of
 from archopt.present.record import CheckResult, Data, FrontRecord
 from archopt.present.run_record import run_record
-from archopt.search.archive import Archive
 from archopt.search.driver import Progress, SearchResult, search
-from archopt.trade.baselines import baselines
+from archopt.search.published import BATCH, Published, publish
+from archopt.trade.answers import question
 from archopt.trade.cautions import NOT_MODELLED, cautions
-from archopt.trade.fixed_front import fixed_front
-from archopt.trade.leverage import leverage
-from archopt.trade.losing import losing
 from archopt.trade.money import lifetime_costs, payback_years
-from archopt.trade.roles import assign_roles, knee
-
-PUBLISHED = 400
-BATCH = 64
+from archopt.trade.roles import assign_roles
+from archopt.trade.waveforms import Settled, settled
 
 
 class Told(Protocol):
@@ -117,6 +111,13 @@ def solve(
     incumbent = explain_incumbent(evaluator, today)
     mark(problem, designs, published.objectives, incumbent)
     clock.note("explain")
+    say(progress, "the printed designs in time")
+    in_time = look_in_time(evaluator, published, designs)
+    if len(in_time.failed):
+        published = published.take(in_time.kept)
+        designs = named([designs[int(k)] for k in in_time.kept])
+        mark(problem, designs, published.objectives, incumbent)
+    clock.note("time domain")
     say(progress, "baselines and leverage")
     asked = question(evaluator, found, published, designs, today)
     clock.note("questions")
@@ -134,6 +135,8 @@ def solve(
                 "archive": len(found.rows),
                 "recomputed": published.recomputed,
                 "dropped_by_direct_physics": published.dropped,
+                "checked_in_time": len({finding.row for finding in in_time.findings}),
+                "dropped_in_time": len(in_time.failed),
                 "seconds": found.seconds,
             },
             timings_s=clock.times,
@@ -151,61 +154,6 @@ def solve(
         notes=asked.notes,
     )
     return Front(record)
-
-
-@dataclass(frozen=True)
-class Answers:
-    """What is printed beside a front."""
-
-    baselines: list[Data]
-    gains: list[Data]
-    losing: list[Data]
-    leverage: list[Data]
-    notes: list[str]
-
-
-def question(
-    evaluator: Evaluator, found: SearchResult, published: Published, designs: list[Data], today: IntArray | None
-) -> Answers:
-    """Return baselines of the knee and of today's hardware, losing topologies, leverage and remarks."""
-    problem = evaluator.problem
-    best = published.rows[knee(published.objectives)]
-    asked = [baselines(problem, best, "knee")]
-    if today is not None:
-        asked.append(baselines(problem, today, "incumbent"))
-    called = {row.tobytes(): str(design["design"]) for row, design in zip(published.rows, designs, strict=True)}
-    nearest = {name: (kind.row, kind.violation) for name, kind in found.kinds.items() if kind.violation > 0}
-    rows, objectives = everything_kept(found)
-    return Answers(
-        baselines=[row for answer in asked for row in answer.rows],
-        gains=[answer.summary for answer in asked if answer.summary],
-        losing=losing(
-            evaluator, rows, objectives, infeasible=nearest, names=[called.get(row.tobytes(), "") for row in rows]
-        ),
-        leverage=leverage(problem, best),
-        notes=remarks(problem, rows, objectives),
-    )
-
-
-def everything_kept(found: SearchResult) -> tuple[IntArray, FloatArray]:
-    """Return every feasible design the search kept: the archive, the fixed front, the best of each topology."""
-    best = [kind for kind in found.kinds.values() if kind.violation <= 0]
-    rows = np.concatenate([found.rows, found.fixed_rows, *(kind.row[None] for kind in best)])
-    objectives = np.concatenate([found.objectives, found.fixed_objectives, *(kind.objectives[None] for kind in best)])
-    _, first = np.unique(rows, axis=0, return_index=True)
-    return rows[np.sort(first)], objectives[np.sort(first)]
-
-
-def remarks(problem: Problem, rows: IntArray, objectives: FloatArray) -> list[str]:
-    """Return what the front as a whole is worth remarking."""
-    fixed = fixed_front(problem, rows, objectives)
-    if fixed.hypervolume_share is None or fixed.least_loss_kwh is None:
-        return []
-    note = f"Boards chosen for a fixed bus reach {100 * fixed.hypervolume_share:.1f} % of the front's hypervolume"
-    if fixed.energy_more_percent is not None:
-        _, median, most = fixed.energy_more_percent
-        note += f"; at equal cost they lose {median:.1f} % more energy in the median, {most:.1f} % at most"
-    return [note + "."]
 
 
 class Clock:
@@ -238,62 +186,35 @@ def tell(progress: Told, state: Progress) -> None:
     )
 
 
-@dataclass(frozen=True)
-class Published:
-    """The thinned front recomputed by direct physics: decided rows (P, columns), objectives (P, 3)."""
-
-    rows: IntArray
-    objectives: FloatArray
-    recomputed: int
-    dropped: int
-
-
-def publish(evaluator: Evaluator, found: SearchResult) -> Published:
-    """Return the archive thinned, recomputed by direct physics with its stored decisions, and filtered again.
-
-    Raises
-    ------
-    InfeasibleError : nothing is left
-    """
-    if not len(found.rows):
-        raise infeasible(found)
-    thinned = Archive(found.rows.shape[1])
-    thinned.add(found.rows, found.objectives)
-    picked = thinned.rows[thinned.thin(limit=PUBLISHED)]
-    exact = Archive(found.rows.shape[1])
-    dropped = 0
-    for start in range(0, len(picked), BATCH):
-        real = picked[start : start + BATCH]
-        evaluation = evaluator.evaluate(real, exact=True)
-        kept = evaluation.feasible
-        dropped += len(real) - len(kept)
-        if len(kept):
-            exact.add(evaluation.rows[kept], evaluation.objectives[kept])
-    if not len(exact.rows):
-        raise infeasible(found)
-    order = np.lexsort((exact.objectives[:, 2], exact.objectives[:, 1], exact.objectives[:, 0]))
-    return Published(exact.rows[order], exact.objectives[order], len(picked), dropped)
-
-
-def infeasible(found: SearchResult) -> InfeasibleError:
-    """Return the error that names the limits no design could meet and by how much."""
-    never = []
-    for name, excess in sorted(found.excess.items(), key=lambda item: -item[1]):
-        limit = LIMITS[INDEX[name]]
-        size = excess * limit.tolerance
-        text = f"{100 * size:.3g} % of the limit" if limit.relative else f"{size:.3g} {limit.unit}"
-        never.append(f"{name}: missed by at least {text} in every design tried")
-    if not never:
-        never = ["every limit was met by some design, but no design met all of them together"]
-    return InfeasibleError("no design meets every limit", tuple(never))
-
-
 def explain_published(evaluator: Evaluator, rows: IntArray) -> list[Data]:
     """Return the published designs explained, named by their place in the order of energy."""
     designs: list[Data] = []
     for start in range(0, len(rows), BATCH):
         designs += explain_many(evaluator, rows[start : start + BATCH])
-    return [{"design": f"D{k + 1:03d}", "roles": [], **design} for k, design in enumerate(designs)]
+    return named(designs)
+
+
+def named(designs: list[Data]) -> list[Data]:
+    """Return the designs named D001 and on, without marks."""
+    return [{**design, "design": f"D{k + 1:03d}", "roles": []} for k, design in enumerate(designs)]
+
+
+def look_in_time(evaluator: Evaluator, published: Published, designs: list[Data]) -> Settled:
+    """Integrate the designs that will be printed in time; one that fails a limit there gives way to the next.
+
+    Raises
+    ------
+    InfeasibleError : none is left
+    """
+
+    def telling(places: IntArray) -> IntArray:
+        return places[list(telling_of([designs[int(k)] for k in places]).index)] if len(places) else places
+
+    outcome = settled(evaluator, published.rows, telling)
+    if not len(outcome.kept):
+        worst = sorted({f"{finding.limit}, {finding.where}" for finding in outcome.findings if not finding.met})
+        raise InfeasibleError("no design keeps its limits when integrated in time", tuple(worst))
+    return outcome
 
 
 def explain_incumbent(evaluator: Evaluator, today: IntArray | None) -> Data | None:
