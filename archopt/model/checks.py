@@ -26,13 +26,9 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
     amps = solution.current_a[:, steady]
     drop = amps * hardware.pour_ohm[:, None, :] / rails.voltage_v
     ledger.add("rail drop", 100.0 * drop, 100.0 * rails.drop_budget, at_most=True, axes=axes)
-    thickness = problem.stacks.thickness_m[hardware.stack][:, None]
-    pairs = situation.designs.rail("pairs")
-    limit_a = pairs * current_limit_a(rails.copper_width_m, thickness, board.copper_rise_k, inner=True)
-    ledger.add("copper ampacity", amps, limit_a[:, None, :], at_most=True, axes=axes)
-    bus_limit = place_limits_a(problem, hardware.stack, situation.designs.bus("pairs"))
+    ledger.add("copper ampacity", amps, pour_limits_a(situation)[:, None, :], at_most=True, axes=axes)
     bus_axes = (situation.state_names(steady), tuple(f"{name} plane" for name in BUS_NAMES))
-    through, limit = crowding(situation, steady, bus_limit)
+    through, limit = crowding(situation, steady)
     ledger.add(
         "copper ampacity", through, limit, at_most=True, axes=bus_axes,
         applies=(hardware.converter >= 0)[:, None, :],
@@ -42,12 +38,22 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
     ledger.add("layer budget", 1e4 * copper_area_m2(problem, situation.designs), offered, at_most=True)
 
 
-def crowding(situation: Situation, steady: IntArray, limit_a: FloatArray) -> tuple[FloatArray, FloatArray]:
+def pour_limits_a(situation: Situation) -> FloatArray:
+    """Return what the pour of each rail may carry, (P, R) A, by IPC-2221."""
+    problem = situation.problem
+    thickness = problem.stacks.thickness_m[situation.hardware.stack][:, None]
+    rise_k = problem.study.board.copper_rise_k
+    one = current_limit_a(problem.rails.copper_width_m, thickness, rise_k, inner=True)
+    return np.asarray(situation.designs.rail("pairs") * one)
+
+
+def crowding(situation: Situation, steady: IntArray) -> tuple[FloatArray, FloatArray]:
     """Return current and limit at the place of each bus plane where they are nearest, (P, states, 2) A.
 
-    Places are necks and discs of 3 mm; without a floorplan the plane's own width. limit_a (P, 2, K).
+    Places are necks and discs of 3 mm; without a floorplan the plane's own width.
     """
     planes, solution = situation.problem.planes, situation.solution
+    limit_a = place_limits_a(situation.problem, situation.hardware.stack, situation.designs.bus("pairs"))
     rail_a = solution.stage_in_w[:, steady] / solution.stage_v[:, steady]
     on_a = rail_a[:, :, None, :] * situation.hardware.on_bus[:, None, :, :]
     bias_a = np.maximum(solution.bus_a[:, steady] - on_a.sum(axis=3), 0.0)

@@ -30,6 +30,7 @@ from archopt.model.space import Designs
 from archopt.model.states import ENERGY, FALLBACK, JUMP, MIX, StateTable
 from archopt.physics.copper import sheet_resistance_ohm
 from archopt.physics.transient import bus_dip_v, rail_droop_v
+from equivalence.reference_copper import Copper
 from equivalence.reference_stage import Point, buck_phase, converter_unit, linear_unit
 
 TWO_PI = 2.0 * math.pi
@@ -119,6 +120,7 @@ class Reference:
         supply = self.study.supply
         warm = supply.inlet_degc + supply.local_rise_k + self.study.board.copper_rise_k
         self.sheet_ohm = float(sheet_resistance_ohm(foil.finished_um * 1e-6, warm))
+        self.copper = Copper(self.study, self.own)
         self.nets = [self.net(rail, k) for k, rail in enumerate(self.own)]
         self.buses = [bus for k, name in enumerate(ORDER[1:]) if (bus := self.bus(name, k))]
         self.bias = self.optional("bias_supplies", "board.bias")
@@ -162,7 +164,7 @@ class Reference:
             running=[max(n, 1) for n in self.phases[k]],
             bank_f=bank_f,
             bank_ohm=bank_ohm,
-            pour_ohm=2.0 * rail.squares * self.sheet_ohm / int(get("pairs")),
+            pour_ohm=self.copper.pour_ohm(rail, self.sheet_ohm, int(get("pairs"))),
         )
 
     def bus(self, name: str, k: int) -> Bus | None:
@@ -328,13 +330,10 @@ class Reference:
             for bus in self.buses:
                 awake = any(not states.off[s, k] for k in bus.rails)
                 into = {k: out.stage_in_w[k] / out.stage_v[k] for k in bus.rails}
-                board = self.study.board
                 plane = 0.0
-                for k in bus.rails:
-                    fresh[k] = bus.square_ohm * (
-                        board.bus_shared_squares * sum(into.values()) + board.bus_own_squares * into[k]
-                    )
-                    plane += fresh[k] * into[k]
+                for k, drop_v in self.copper.drops_v(bus.name, bus.square_ohm, into).items():
+                    fresh[k] = drop_v
+                    plane += drop_v * into[k]
                 total_a, total_w = sum(into.values()), sum(out.stage_in_w[k] for k in bus.rails) + plane
                 if bus.name == "bus_a" and on_bus:
                     if awake:

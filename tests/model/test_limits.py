@@ -280,6 +280,14 @@ def hand_ampacity(hand: Hand, where: str) -> Found:
     board, reference = hand.study.board, hand.reference
     foils = [f for f in reference.catalogue.families["copper_foils"].values() if isinstance(f, CopperFoil)]
     thick_um = next(f.finished_um for f in foils if f.copper_oz == reference.stack.copper_oz)
+    copper = reference.copper
+    if " plane; " in where and copper.region(where.split(maxsplit=1)[0]) is not None:
+        bus, s = hand.bus_place(where)
+        result = reference.results[s]
+        into = {reference.own[k].name: result.stage_in_w[k] / result.stage_v[k] for k in bus.rails}  # type: ignore[attr-defined]
+        pairs = int(reference.choices[f"{bus.name}.pairs"])  # type: ignore[attr-defined]
+        amps, limit_a = max(copper.crowding(bus.name, into, thick_um), key=lambda place: place[0] / place[1])  # type: ignore[attr-defined]
+        return amps, pairs * limit_a
     if " plane; " in where:
         amps, bus, _ = hand.bus_current_a(where)
         squares = board.bus_shared_squares + board.bus_own_squares
@@ -289,14 +297,18 @@ def hand_ampacity(hand: Hand, where: str) -> Found:
         net, k, s = hand.place(where)
         amps, width_um = reference.results[s].current_a[k], net.rail.copper_width_mm * 1e3
         pairs = int(reference.choices[f"{net.rail.name}.pairs"])
+        if copper.region(net.rail.name) is not None:
+            places = copper.crowding(net.rail.name, {"load": 1.0}, thick_um)
+            return amps, pairs * min(limit_a / share for share, limit_a in places)
     mil2 = (width_um / 25.4) * (thick_um / 25.4)
     return amps, pairs * 0.024 * board.copper_rise_k**0.44 * mil2**0.725
 
 
 def hand_layers(hand: Hand, where: str) -> Found:
-    reference, board = hand.reference, hand.study.board
-    used = sum(int(reference.choices[f"{r.name}.pairs"]) * r.copper_area_cm2 for r in reference.own)
-    used += sum(int(reference.choices[f"{b.name}.pairs"]) * board.bus_area_cm2 for b in reference.buses)
+    reference, board, copper = hand.reference, hand.study.board, hand.reference.copper
+    areas = [(r.name, r.copper_area_cm2) for r in reference.own]
+    areas += [(b.name, board.bus_area_cm2) for b in reference.buses]
+    used = sum(int(reference.choices[f"{name}.pairs"]) * copper.area_cm2(name, stated) for name, stated in areas)
     return used, reference.stack.pairs * board.area_cm2 * board.usable_copper_share
 
 
