@@ -116,7 +116,7 @@ def table(cases: Sequence[Case], prices: Sequence[float]) -> list[str]:
     heads = "".join(f"{f'x{price:g}':>9}" for price in prices)
     lines = [
         f"{len(solved)} of {len(cases)} cases solved; energy price scaled as headed; absent: on no energy-cost front",
-        f"{'topology':42}{heads}{'designs':>9}{'best life':>10}{'absent':>8}{'behind %':>18}{'behind':>18}{'never':>7}",
+        f"{'topology':46}{heads}{'designs':>9}{'best life':>10}{'absent':>8}{'behind %':>18}{'behind':>18}{'never':>7}",
     ]
     for name in sorted(names, key=lambda name: (-stands[name], name)):
         counts = "".join(
@@ -130,7 +130,7 @@ def table(cases: Sequence[Case], prices: Sequence[float]) -> list[str]:
         percent = [100.0 * more / case.winner[1] for more, case in zip(money, absent, strict=True)]
         never = sum(name in case.behind and case.behind[name] is None for case in solved)
         lines.append(
-            f"{name:42}{counts}{share:9.0%}{wins:10}{len(absent):8}{spread(percent):>18}{spread(money):>18}{never:7}"
+            f"{name:46}{counts}{share:9.0%}{wins:10}{len(absent):8}{spread(percent):>18}{spread(money):>18}{never:7}"
         )
     return [
         *lines,
