@@ -25,10 +25,11 @@ from archopt.model.explain import topology
 from archopt.model.parameters import IntArray
 from archopt.model.problem import Problem
 from archopt.search.driver import search
+from archopt.search.published import publish
+from archopt.trade.answers import everything_kept
 from archopt.trade.losing import losing
 from archopt.trade.money import lifetime_costs
 from archopt.trade.roles import energy_cost_front
-from archopt.workflow import everything_kept, publish
 
 FOLDER = Path(__file__).resolve().parents[2] / "studies"
 PRICES = (0.25, 1.0, 4.0)
