@@ -293,6 +293,70 @@ def transient_command(
         typer.echo(f"wrote {png}")
 
 
+@app.command("copper")
+@in_own_words
+def copper_command(
+    directory: Annotated[Path, typer.Argument(metavar="DIR", help="Directory of a result.", show_default=False)],
+    design: Annotated[
+        str, typer.Argument(metavar="DESIGN", help="Name (D007), number, mark (knee) or incumbent.", show_default=False)
+    ],
+    net: Annotated[str | None, typer.Option(metavar="NET", help="Only this net: bus_a, bus_b or a rail.")] = None,
+    reoptimise: Annotated[
+        bool, typer.Option("--reoptimise", help="With each weight share the pairs of the pours out anew.")
+    ] = False,
+    replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier CSV of this design.")] = False,
+    as_json: JsonOption = False,
+) -> None:
+    """Sweep copper weight and layer pairs around one design: loss, cost, drop, heat, break-even.
+
+    Everything else stays as the design has it. The points are written to copper_DESIGN.csv in DIR.
+    """
+    from archopt.present import files
+    from archopt.present.copper_view import CopperRequest, ask_copper, copper_sections, write_copper
+    from archopt.present.front import Front
+    from archopt.present.tables import console_for, put
+
+    front = Front(files.read(directory, archive=False), directory)
+    answer, place = ask_copper(front, CopperRequest(directory, design, net, reoptimise, replace))
+    write_copper(answer, place)
+    if as_json:
+        print_json({**answer.as_dict(), "csv": str(place)})
+        return
+    put(console_for(), copper_sections(answer, front.record.currency))
+    typer.echo(f"wrote {place}")
+
+
+@app.command("floorplan")
+@in_own_words
+def floorplan_command(
+    study: StudyArgument,
+    net: Annotated[
+        str | None, typer.Option(metavar="NET", help="Draw this net's drop: bus_a, bus_b or a rail.")
+    ] = None,
+    density: Annotated[bool, typer.Option("--density", help="Draw current density rather than drop.")] = False,
+    bus_v: Annotated[
+        float | None, typer.Option("--bus-v", min=1.0, metavar="V", help="Bus voltage. [default: the habitual one]")
+    ] = None,
+    out: Annotated[
+        Path | None, typer.Option("--out", "-o", metavar="FILE", help="PNG, SVG or PDF. [default: NAME_floorplan.png]")
+    ] = None,
+    replace: Annotated[bool, typer.Option("--replace", help="Replace the picture if it is there.")] = False,
+) -> None:
+    """Draw a study's floorplan; for one net its drop or current density.
+
+    Prints what the solved copper of every net amounts to.
+    """
+    from archopt import workflow
+    from archopt.present.floorplan_view import draw_floorplan, floorplan_sections, picture_place
+    from archopt.present.tables import console_for, put
+
+    loaded = workflow.load(study)
+    place = picture_place(loaded.study, out, net, density=density, replace=replace)
+    draw_floorplan(loaded.study, loaded.catalogue, place, net, density=density, bus_v=bus_v)
+    put(console_for(), floorplan_sections(loaded.study))
+    typer.echo(f"wrote {place}")
+
+
 @app.command("parts")
 @in_own_words
 def parts_command(

@@ -10,6 +10,7 @@ import os
 import shutil
 import tempfile
 from collections.abc import Iterable
+from fnmatch import fnmatchcase
 from pathlib import Path
 from typing import Any
 
@@ -25,8 +26,8 @@ CSV_DIGITS = 9
 FRONT, ARCHIVE, PROBLEM = "front.csv", "archive.csv", "problem.json"
 DESIGNS, RUN, EXTRAS = "designs.json", "run.json", "extras.json"
 WRITTEN = (FRONT, ARCHIVE, PROBLEM, DESIGNS, EXTRAS, RUN)
-ADDED_LATER = ("report.html",)
-"""Files other commands may add to a result; replacing the result may remove them."""
+ADDED_LATER = ("report.html", "copper_*.csv")
+"""Files (patterns) other commands may add to a result; replacing the result may remove them."""
 
 EXTRA_FIELDS = (
     "incumbent", "baselines", "gains", "losing", "leverage", "not_modelled", "cautions", "merged", "notes",
@@ -199,7 +200,9 @@ def is_ours(directory: Path) -> bool:
 def _refuse_unless_ours(shown: Path, target: Path) -> None:
     if not is_ours(target):
         raise OutputError(f"{shown} holds something that is no result of archopt; choose another directory")
-    foreign = sorted(entry.name for entry in target.iterdir() if entry.name not in (*WRITTEN, *ADDED_LATER))
+    ours = (*WRITTEN, *ADDED_LATER)
+    there = sorted(entry.name for entry in target.iterdir())
+    foreign = [name for name in there if not any(fnmatchcase(name, pattern) for pattern in ours)]
     if foreign:
         names = ", ".join(foreign[:5])
         raise OutputError(f"{shown} also holds {names}, not written by archopt; move it away first")
