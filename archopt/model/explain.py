@@ -16,6 +16,7 @@ from archopt.model.problem import Problem
 from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, PARENT, TWO_LEVELS, Designs
 from archopt.model.stages import mechanisms
 from archopt.model.states import ENERGY, KIND_NAMES, MIX, PRINT, StateTable
+from archopt.model.thresholds import raise_thresholds_w
 from archopt.physics import bus_converter
 
 CONTROL_TEXT = {FIXED: "fixed", TWO_LEVELS: "two levels", FOLLOW: "follows load"}
@@ -160,13 +161,10 @@ def band_records(problem: Problem, detail: Detail, p: int) -> list[dict[str, Any
     states, hardware, solution = problem.states, detail.hardware, detail.solution
     mix_low = states.of_kind(MIX)[0::2]
     hysteresis = problem.study.control.hysteresis_percent * 0.01
+    thresholds_w = raise_thresholds_w(states, solution.input_w[p])
     out = []
     for band in range(states.bands):
-        up = None
-        if band + 1 < states.bands:
-            edge = float(states.edges_w[band + 1])
-            share = float(solution.input_w[p, mix_low[band]]) / max(float(states.useful_w[mix_low[band]]), 1e-9)
-            up = edge * share
+        up = float(thresholds_w[band]) if band + 1 < states.bands else None
         out.append(
             {
                 "band": band + 1,

@@ -78,10 +78,28 @@ class FromFiles(Reference):
         self.build()
 
     def raise_above_w(self, design: Data) -> list[float]:
-        """Return the board input power at the upper edge of each band but the last, scaled from its worst mix."""
-        mixes = [s for s in range(len(self.results)) if self.states.kind[s] == MIX][0::2]
-        edges = [band["load_to_w"] for band in design["bands"][:-1]]
-        return [
-            edge * self.results[s].input_w / self.states.useful_w[s]
-            for edge, s in zip(edges, mixes[:-1], strict=True)
-        ]
+        """Return the input power at the load that ends each band but the last, between its states and the next's."""
+        shares = [KIND_NAMES.index("energy"), KIND_NAMES.index("shown load")]
+
+        def points(band: int) -> list[tuple[float, float]]:
+            """Return input power and load of a band's states with hours, or of the loads shown in it."""
+            for kind in shares:
+                found = [
+                    (result.input_w, float(self.states.useful_w[s])) for s, result in enumerate(self.results)
+                    if self.states.kind[s] == kind and self.states.band[s] == band
+                ]  # fmt: skip
+                if found:
+                    return found
+            raise AssertionError(f"nothing solved in band {band + 1}")
+
+        count = len(design["bands"])
+        found: list[float] = []
+        for band in range(count - 1):
+            (below_w, below_load), (above_w, above_load) = max(points(band)), min(points(band + 1))
+            edge = design["bands"][band]["load_to_w"]
+            share = min(max((edge - below_load) / (above_load - below_load), 0.0), 1.0)
+            least = min(min(points(higher))[0] for higher in range(band + 1, count))
+            found.append(min(below_w + share * (above_w - below_w), least * (1.0 - 1e-6)))
+        for band in range(count - 3, -1, -1):
+            found[band] = min(found[band], found[band + 1] * (1.0 - 1e-6))
+        return found
