@@ -260,7 +260,7 @@ def resolve_search(draft: Draft, notebook: Notebook) -> SearchBudget:
     """Return how long to search."""
     table, take = draft.search, notebook.take
     return SearchBudget(
-        evaluations=take("search.evaluations", table.evaluations, 40_000, PLAIN),
+        evaluations=take("search.evaluations", table.evaluations, 20_000, PLAIN),
         population=take("search.population", table.population, 80, PLAIN),
         seed=take("search.seed", table.seed, 1, PLAIN),
         stagnation_generations=take("search.stagnation_generations", table.stagnation_generations, 40, PLAIN),

@@ -166,7 +166,7 @@ class EconomicsTable(Table):
 class SearchTable(Table):
     """``[search]``: how long to search."""
 
-    evaluations: int | None = Field(None, ge=10, le=100_000_000, description="designs evaluated; default 40000")
+    evaluations: int | None = Field(None, ge=10, le=100_000_000, description="designs evaluated; default 20000")
     population: int | None = Field(None, ge=4, le=2000, description="bus genomes kept; default 80")
     seed: int | None = Field(None, ge=0, le=2**32 - 1, description="of the random numbers; default 1")
     stagnation_generations: int | None = Field(
