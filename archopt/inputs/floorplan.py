@@ -13,7 +13,7 @@ from pydantic import Field, model_validator
 from archopt.inputs.draft import Draft
 from archopt.inputs.floorplan_check import check_floorplan
 from archopt.inputs.floorplan_shape import BUSES, Floorplan, NeckLine, Point, Region, Spot, SpotKind, ViaField
-from archopt.inputs.problems import Notebook, brief, nearest, validated
+from archopt.inputs.problems import Locate, Notebook, brief, nearest, validated
 from archopt.inputs.resolved import Board, Rail
 from archopt.inputs.study import Table
 from archopt.inputs.text_files import read_toml
@@ -168,6 +168,10 @@ class Reader:
             self.wrong("nets", "there is no [[nets]]; without a region of a net a floorplan says nothing")
         return Floorplan(self.file, shape.outline_mm, shape.cutouts_mm, tuple(regions), tuple(spots))
 
+    def under(self, place: str) -> Locate:
+        """Return what places a key of a row, or the row itself where no one key is at fault."""
+        return lambda key: (self.file, f"{place}.{key}" if key else place)
+
     def rows(self, name: str, raw: object) -> list[tuple[str, Any]]:
         """Return the rows of a list that can stand, each with its place."""
         if not isinstance(raw, list):
@@ -183,7 +187,7 @@ class Reader:
             place = f"{name}.{label}" if isinstance(label, str) and label else f"{name}[{number}]"
             seen[place] = seen.get(place, 0) + 1
             place = place if seen[place] == 1 else f"{place}[{seen[place]}]"
-            row = validated(LISTS[name], item, lambda key, at=place: (self.file, f"{at}.{key}"), self.notebook)  # type: ignore[misc]
+            row = validated(LISTS[name], item, self.under(place), self.notebook)
             if row is not None and self.known(place, row):
                 found.append((place, row))
         return found

@@ -169,4 +169,4 @@ def _note(errors: list[Any], model: type[BaseModel], locate: Locate, notebook: N
             continue  # follows from a fault inside it, which is told
         key = loc[0] if loc else ""
         file, place = locate(".".join(loc))
-        notebook.problem(place, explain(error, key if len(loc) == 1 else loc[-1], model), file)
+        notebook.problem(place, explain(error, key if len(loc) <= 1 else loc[-1], model), file)
