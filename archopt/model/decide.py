@@ -16,7 +16,7 @@ from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO, via_drop_v
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
 from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, unpack
-from archopt.model.options import Options, band_hours, option_index
+from archopt.model.options import Options, band_hours, option_index, quiet
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import FIXED, FOLLOW, TWO_LEVELS, Designs
@@ -119,6 +119,7 @@ def legal_voltages(
             at_stage = low_v[here, bus] - drop - SAFETY_V
             ok = (at_stage >= need[here, r, :, None]) & (high_v[here, bus] <= high[here, r, :, None])
             ok &= at_stage - dip_v[here, bus] >= jump[here, r, :, None]
+            ok &= quiet(problem, options, option[here, r], hardware, here, int(r))
             legal[here, bus] &= ok | ~on_here[:, r, None, None]
     return legal
 

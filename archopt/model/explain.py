@@ -13,6 +13,7 @@ from archopt.model.evaluator import Detail, Evaluator
 from archopt.model.limits import INDEX, LIMITS, ROOM
 from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray
 from archopt.model.problem import Problem
+from archopt.model.rail_checks import output_ripple_v
 from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, PARENT, TWO_LEVELS, Designs
 from archopt.model.stages import mechanisms
 from archopt.model.states import ENERGY, KIND_NAMES, MIX, PRINT, StateTable
@@ -310,6 +311,7 @@ def tolerance_records(problem: Problem, detail: Detail, p: int) -> list[dict[str
     states, hardware = problem.states, detail.hardware
     rails: dict[str, Rail] = {rail.name: rail for rail in problem.study.rails}
     steady = states.of_kind(MIX)
+    ripple_v = output_ripple_v(problem, hardware, detail.solution, steady)[p].max(axis=0)
     out = []
     for r, name in enumerate(problem.rails.names):
         rail = rails[name]
@@ -325,7 +327,8 @@ def tolerance_records(problem: Problem, detail: Detail, p: int) -> list[dict[str
                 "voltage_v": rail.voltage_v,
                 "tolerance_mv": volts_mv * rail.tolerance_percent * 0.01,
                 "set_point_mv": volts_mv * rail.set_point_percent * 0.01,
-                "ripple_mv": volts_mv * rail.ripple_percent * 0.01,
+                "ripple_mv": float(ripple_v[r]) * 1e3,
+                "ripple_allowed_mv": volts_mv * rail.ripple_percent * 0.01,
                 "drop_mv": drop,
                 "budget_mv": budget,
                 "droop_mv": droop,

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from archopt.model.parameters import FIXED_RATIO, BoolArray, FloatArray, IntArray
-from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
+from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm, bank_most_f
 from archopt.model.space import BUS_A, PARENT, Designs
 from archopt.model.states import FALLBACK, StateTable
 from archopt.physics.ampacity import current_limit_a
@@ -17,7 +17,8 @@ from archopt.physics.ampacity import current_limit_a
 class Hardware:
     """P designs over S states, R rails, two buses, B bands.
 
-    Rails (P, R): stage, phases, feed, parent (-1 none), bank_f, bank_esr_ohm, pour_ohm (loop), bank_count.
+    Rails (P, R): stage, phases, feed, parent (-1 none), bank_f (least), bank_most_f, bank_esr_ohm, pour_ohm
+    (loop).
     Buses (P, 2): converter (-1 none), units, plane_ohm (loop, a square), bulk_f (with stage inputs), esr_ohm,
     bulk_nominal_f. on_bus (P, 2, R). running (P, S, R) phases, units_running (P, S, 2), set_v (P, S, 2) bus
     voltage set, with its setting error where limits are checked (not used for fixed ratio), band_v (P, 2, B).
@@ -30,6 +31,7 @@ class Hardware:
     parent: IntArray
     children: BoolArray
     bank_f: FloatArray
+    bank_most_f: FloatArray
     bank_esr_ohm: FloatArray
     pour_ohm: FloatArray
     converter: IntArray
@@ -85,6 +87,7 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
     bank = designs.rail("bank")
     pieces = problem.bank_counts[designs.rail("bank_count")]
     effective = bank_effective_f(problem.study, capacitors, rails.voltage_v[:, None])  # (R, K)
+    most = bank_most_f(capacitors, rails.voltage_v[:, None])
     esr = bank_esr_ohm(problem.study, capacitors)
     rail_index = np.arange(len(rails.names))
     on_bus = np.stack([feed == BUS_A, feed == BUS_A + 1], axis=1)
@@ -122,6 +125,7 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
         parent=parent,
         children=children,
         bank_f=effective[rail_index[None, :], bank] * pieces,
+        bank_most_f=most[rail_index[None, :], bank] * pieces,
         bank_esr_ohm=esr[bank] / pieces,
         pour_ohm=2.0 * (rails.squares * sheet[:, None] / np.maximum(designs.rail("pairs"), 1) + rails.pour_via_ohm),
         converter=converter,

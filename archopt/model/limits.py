@@ -30,6 +30,7 @@ class Limit:
 LIMITS = (
     Limit("rail droop", "% of budget", 5.0),
     Limit("rail release", "% of budget", 5.0),
+    Limit("output ripple", "% of rail", 0.1),
     Limit("bus dip", "% of bus", 1.0),
     Limit("stage input range", "V", 0.25),
     Limit("bus output range", "V", 0.25),

@@ -11,14 +11,21 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from archopt.model.hardware import bias_per_phase_w
-from archopt.model.parameters import BUCK, LINEAR, FloatArray, IntArray
+from archopt.model.hardware import Hardware, bias_per_phase_w
+from archopt.model.parameters import BUCK, LINEAR, BoolArray, FloatArray, IntArray
 from archopt.model.part_rows import NO_SHEDDING, THRESHOLD_SHEDDING
-from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm
+from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm, bank_most_f
 from archopt.model.space import BANK_COUNTS
-from archopt.model.stages import conduction_ratio, loop_bandwidth_rad_s, slew_down_a_per_s, slew_up_a_per_s
+from archopt.model.stages import (
+    conduction_ratio,
+    loop_bandwidth_rad_s,
+    output_ripple,
+    slew_down_a_per_s,
+    slew_up_a_per_s,
+)
 from archopt.model.states import ENERGY, JUMP, MIX, StateTable
 from archopt.model.tables import NODES, LossTables, cubic_weights
+from archopt.physics.output_ripple import half_swing_v
 from archopt.physics.transient import rail_droop_v
 
 DROOP_NODES = 12
@@ -34,7 +41,8 @@ class RowTables:
     energy_kwh (rows, B, G) and input_kwh (rows, B): stage input energy a year; mix_w, jump_w (rows, B, G);
     need_v, jump_v, high_v (rows, B): window of stage input voltage; droop_percent (rows, K, counts, B, nodes)
     float32 over droop_nodes_v (rows, nodes). child_kwh, child_mix_w, child_jump_w (rows, B, R): the same sums
-    with the stage input at the voltage of each rail, for children of it.
+    with the stage input at the voltage of each rail, for children of it. swing_a, swing_c (rows, B, G):
+    ripple and charge left to the output bank, peak to peak, at the worst mix.
     """
 
     energy_kwh: FloatArray
@@ -49,6 +57,8 @@ class RowTables:
     child_kwh: FloatArray
     child_mix_w: FloatArray
     child_jump_w: FloatArray
+    swing_a: FloatArray
+    swing_c: FloatArray
 
 
 @dataclass(frozen=True)
@@ -225,13 +235,28 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
         release = rail_droop_v(step, spread(down), fall, *loop, slew)
         worst = np.broadcast_to(np.maximum(droop, release), shape) * (100.0 / rails.budget_v[r])
         effective = bank_f[0, :, :, 0, 0][None]
+        most = (bank_most_f(capacitors, volts_r)[banks][:, None] * counts)[None]
         inside = (effective >= stages.loop_min_f[stage][:, None, None]) & (
-            effective <= stages.loop_max_f[stage][:, None, None]
+            most <= stages.loop_max_f[stage][:, None, None]
         )
         worst = np.where(inside[..., None, None], worst, 1e6)
         worst = np.where(states.mix_off[:, r][:, None], 0.0, worst)
         out[rows[:, None], banks[None, :]] = worst
     return out, nodes_v
+
+
+def row_swing(
+    problem: Problem, states: StateTable, tables: LossTables, rows: IntArray, volts: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Return ripple (A) and charge (C), peak to peak, that table rows leave to their bank, (rows, B, V) at the mix.
+
+    volts (V, 1) or (V, rows): stage input voltages.
+    """
+    rail, stage = tables.row_rail[rows], tables.row_stage[rows]
+    load = states.mix_a.T[rail][:, :, None]
+    at = np.broadcast_to(volts, (len(volts), len(rows))).T[:, None, :]
+    stage, running = stage[:, None, None], tables.row_running[rows][:, None, None]
+    return output_ripple(problem.stages, stage, running, at, problem.rails.voltage_v[rail][:, None, None], load)
 
 
 def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Options:
@@ -244,6 +269,7 @@ def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Op
     off_mix = states.mix_off.T[tables.row_rail][..., None]
     need, jump_v, high = windows(problem, states, tables)
     droop, nodes = droop_tables(problem, states, tables)
+    swing = row_swing(problem, states, tables, np.arange(len(tables.row_stage)), problem.grid_v[:, None])
     at_rails = [
         at_grid(tables, values, problem.rails.voltage_v)
         for values in (energy, tables.loss_w[:, mix_low] + useful_mix, tables.loss_w[:, jump] + useful_jump)
@@ -261,6 +287,8 @@ def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Op
         child_kwh=at_rails[0],
         child_mix_w=np.where(off_mix, 0.0, at_rails[1]),
         child_jump_w=at_rails[2],
+        swing_a=swing[0],
+        swing_c=swing[1],
     )
     first = np.full(tables.base.shape, -1, dtype=np.int64)
     columns: list[tuple[int, int, int, int]] = []
@@ -281,6 +309,17 @@ def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Op
         row=tables.base[rail, stage][:, None] + run - 1,
         rows=rows,
     )
+
+
+def quiet(
+    problem: Problem, options: Options, option: IntArray, hardware: Hardware, designs: IntArray, rail: int
+) -> BoolArray:
+    """Return at which bus voltages a rail of some designs keeps its output ripple, (designs, B, G); undropped."""
+    rows = options.rows
+    row, band = options.row[option], np.arange(rows.swing_a.shape[1])
+    esr_ohm, bank_f = (values[designs, rail, None, None] for values in (hardware.bank_esr_ohm, hardware.bank_f))
+    swing_v = half_swing_v(rows.swing_a[row, band], rows.swing_c[row, band], bank_f, esr_ohm)
+    return np.asarray(swing_v <= problem.rails.ripple_v[rail])
 
 
 def band_hours(states: StateTable) -> FloatArray:

@@ -140,6 +140,13 @@ def bank_effective_f(study: ResolvedStudy, capacitors: CapacitorTable, bias_v: F
     )
 
 
+def bank_most_f(capacitors: CapacitorTable, bias_v: FloatArray | float) -> FloatArray:
+    """Return one piece's greatest capacitance under bias: new, at the top of its tolerance; broadcasts on (K,)."""
+    return np.asarray(
+        effective_capacitance_f(capacitors.capacitance_f, bias_v, capacitors.half_v, -capacitors.tolerance)
+    )
+
+
 def bank_esr_ohm(study: ResolvedStudy, capacitors: CapacitorTable) -> FloatArray:
     """Return one piece's series resistance at end of life, (K,)."""
     return capacitors.esr_ohm * study.derating.esr_end_of_life

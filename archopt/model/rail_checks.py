@@ -4,12 +4,16 @@ from __future__ import annotations
 
 import numpy as np
 
+from archopt.model.board import Solution
+from archopt.model.hardware import Hardware
 from archopt.model.limits import Ledger
-from archopt.model.parameters import BUCK, LINEAR, FloatArray
+from archopt.model.parameters import BUCK, LINEAR, FloatArray, IntArray
+from archopt.model.problem import Problem
 from archopt.model.situation import Droop, Situation
 from archopt.model.space import BUS_NAMES, FIXED
-from archopt.model.stages import conduction_ratio, headroom_v, ripple_square_a2, thermal_gain
+from archopt.model.stages import conduction_ratio, headroom_v, output_ripple, ripple_square_a2, thermal_gain
 from archopt.model.states import FALLBACK, JUMP, MIX
+from archopt.physics.output_ripple import half_swing_v
 
 
 def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
@@ -68,22 +72,39 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     pieces = problem.bank_counts[situation.designs.rail("bank_count")]
     permitted = pieces * capacitors.ripple_a[bank] * problem.study.derating.current
     ledger.add("capacitor ripple", ripple, permitted[:, None, :], at_most=True, axes=axes, applies=on)
-    bank_uf = 1e6 * hardware.bank_f
+    swing = output_ripple_v(problem, hardware, solution, steady)
+    ledger.add(
+        "output ripple", 100.0 * swing / rails.voltage_v, 100.0 * rails.ripple_v / rails.voltage_v, at_most=True,
+        axes=axes, applies=on,
+    )  # fmt: skip
     rail_axes = (names,)
     ledger.add(
         "loop capacitance range",
-        bank_uf,
+        1e6 * hardware.bank_f,
         1e6 * stages.loop_min_f[hardware.stage],
         at_most=False,
         axes=rail_axes,
     )
     ledger.add(
         "loop capacitance range",
-        bank_uf,
+        1e6 * hardware.bank_most_f,
         1e6 * stages.loop_max_f[hardware.stage],
         at_most=True,
         axes=rail_axes,
     )
+
+
+def output_ripple_v(problem: Problem, hardware: Hardware, solution: Solution, index: IntArray) -> FloatArray:
+    """Return how far the output ripple takes each rail from its mean in some states, (P, states, R) V.
+
+    With the bank as it is at the end of its life, half of what swings.
+    """
+    volts = solution.stage_v[:, index]
+    stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
+    ripple_a, charge_c = output_ripple(
+        problem.stages, stage, hardware.running[:, index], volts, problem.rails.voltage_v, solution.current_a[:, index]
+    )
+    return half_swing_v(ripple_a, charge_c, hardware.bank_f[:, None, :], hardware.bank_esr_ohm[:, None, :])
 
 
 def jump_spare_v(situation: Situation) -> FloatArray:

@@ -21,6 +21,7 @@ class RailArrays:
     step_a: FloatArray
     load_slew_a_per_s: FloatArray
     budget_v: FloatArray
+    ripple_v: FloatArray  # allowed either side of the mean
     remote_sense: BoolArray
     squares: FloatArray
     copper_area_m2: FloatArray
@@ -49,6 +50,7 @@ def rail_arrays(study: ResolvedStudy) -> RailArrays:
         step_a=step,
         load_slew_a_per_s=np.array([rail.slew_a_per_us * 1e6 for rail in rails]),
         budget_v=np.array([rail.droop_budget_v for rail in rails]),
+        ripple_v=np.array([rail.ripple_percent * 0.01 * rail.voltage_v for rail in rails]),
         remote_sense=np.array([rail.remote_sense for rail in rails], dtype=bool),
         squares=np.array([rail.squares for rail in rails]),
         copper_area_m2=np.array([rail.copper_area_cm2 * 1e-4 for rail in rails]),

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray, StageTable
 from archopt.physics import buck, bus_converter, linear
 from archopt.physics.buck_light_load import crossover_share, pulses
+from archopt.physics.output_ripple import summed_ripple
 from archopt.physics.transient import buck_slew_a_per_s
 
 LINEAR_SLEW_A_PER_S = 1e12  # a linear regulator has no inductor: only its loop limits it
@@ -193,6 +194,34 @@ def ripple_square_a2(
         )
         out = np.where(kind == SINGLE, single * single / 12.0, out)
     return out
+
+
+def output_ripple(
+    stages: StageTable,
+    index: IntArray,
+    running: NDArray[Any],
+    input_v: FloatArray,
+    output_v: FloatArray,
+    current_a: FloatArray,
+) -> tuple[FloatArray, FloatArray]:
+    """Return current (A) and charge (C), peak to peak, that whole stages leave their output bank to smooth.
+
+    Buck phases interleave; single stages in parallel are not in step, and at worst add. Linear regulators: none.
+    """
+    kind = stages.kind[index]
+    per_phase_a = current_a / running
+    shape = np.broadcast_shapes(kind.shape, np.shape(input_v), np.shape(per_phase_a))
+    ripple, charge = np.zeros(shape), np.zeros(shape)
+    if np.any(kind == BUCK):
+        summed, moved = summed_ripple(stages.buck.take(index), input_v, output_v, per_phase_a, running)
+        ripple, charge = np.where(kind == BUCK, summed, ripple), np.where(kind == BUCK, moved, charge)
+    if np.any(kind == SINGLE):
+        duty = np.clip(output_v * stages.turns[index] / np.maximum(input_v, 1e-3), 0.0, 1.0)
+        frequency = stages.frequency_hz[index]
+        single = running * output_v * (1.0 - duty) / (np.nan_to_num(stages.inductance_h[index], nan=1.0) * frequency)
+        ripple = np.where(kind == SINGLE, single, ripple)
+        charge = np.where(kind == SINGLE, single / (8.0 * frequency), charge)
+    return ripple, charge
 
 
 def loop_bandwidth_rad_s(

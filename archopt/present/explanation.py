@@ -158,8 +158,8 @@ def tolerance_table(rows: list[Data]) -> WordTable:
     """How each rail's tolerance is spent."""
     words = {
         "tolerance_mv": "tolerance +-", "set_point_mv": "set point", "ripple_mv": "ripple",
-        "drop_mv": "drop", "budget_mv": "budget", "droop_mv": "droop", "release_mv": "release",
-        "left_mv": "left",
+        "ripple_allowed_mv": "of", "drop_mv": "drop", "budget_mv": "budget", "droop_mv": "droop",
+        "release_mv": "release", "left_mv": "left",
     }  # fmt: skip
     cells = [[str(row.get("rail", NONE)), *(fixed(row.get(key), 1) for key in words)] for row in rows]
     return table(["rail", *words.values()], cells, left=["rail"])

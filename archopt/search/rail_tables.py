@@ -9,10 +9,12 @@ from numpy.typing import NDArray
 
 from archopt.model.evaluator import Evaluator
 from archopt.model.hardware import bias_per_phase_w
-from archopt.model.options import band_energy
+from archopt.model.options import band_energy, row_swing
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
+from archopt.model.problem import bank_effective_f, bank_esr_ohm
 from archopt.model.space import BANK_COUNTS, BUS_A, INPUT, PARENT
 from archopt.model.states import ENERGY, MIX
+from archopt.physics.output_ripple import half_swing_v
 from archopt.search.archive import significant
 
 Float32Array = NDArray[np.float32]
@@ -24,6 +26,7 @@ ILLEGAL_KWH = 1e6  # marks an energy at a voltage the option may not see
 DROP_SHARE, DROP_V = 0.003, 0.01  # bus voltage lost on the way to a stage, assumed before a design is known
 BELOW_GRID_V = 4.0  # how far below the lowest bus voltage a dip is still tabled
 RIPPLE_ROOM_V = 1.0  # ripple is read this far above the dipped voltage
+LEAST_RIPPLE_V = 1e-9  # keeps a rail that allows no ripple finite
 
 
 @dataclass(frozen=True)
@@ -229,6 +232,12 @@ class BankCounts:
         """Return the voltages a rail's counts are tabled at: the dipped grid, then its unmoving supplies."""
         return np.concatenate([self.volts, [spot.volts for spot in table.places]])
 
+    def ripple_volts_of(self, table: RailTable) -> FloatArray:
+        """Return the voltages ripple is read at: above the dipped grid, and the highest of the board input."""
+        high_v = self.evaluator.problem.study.supply.high_v
+        places = [high_v if spot.feed == INPUT else spot.volts for spot in table.places]
+        return np.concatenate([self.volts + RIPPLE_ROOM_V, places])
+
     def ripple_counts(self, table: RailTable, used: IntArray) -> ByteArray:
         """Return the least count index each bank needs to stand the ripple, (V, U, B, K), made once."""
         if table.rail not in self.ripple:
@@ -237,14 +246,27 @@ class BankCounts:
             rms = np.sqrt(evaluator.tables.ripple_square[used][:, mix])  # (U, B, nodes)
             stage = evaluator.tables.row_stage[used]
             start, step = evaluator.tables.start_v[stage], evaluator.tables.step_v[stage]
-            node = np.rint((self.volts_of(table)[:, None] + RIPPLE_ROOM_V - start) / step)
+            node = np.rint((self.ripple_volts_of(table)[:, None] - start) / step)
             node = np.clip(node, 0, rms.shape[2] - 1).astype(np.int64)  # (V, U)
             permitted = evaluator.problem.capacitors.ripple_a[table.banks]
             permitted = permitted * evaluator.problem.study.derating.current
             pieces = rms[np.arange(len(rms)), :, node][..., None] / permitted
+            pieces = np.maximum(pieces, self.quiet_pieces(table, used))
             index = np.searchsorted(np.array(BANK_COUNTS, dtype=np.float64), pieces - 1e-9)
             self.ripple[table.rail] = index.astype(np.uint8)
         return self.ripple[table.rail]
+
+
+    def quiet_pieces(self, table: RailTable, used: IntArray) -> FloatArray:
+        """Return how many pieces of each bank keep the output ripple within its allowance, (V, U, B, K)."""
+        evaluator = self.evaluator
+        problem, rail = evaluator.problem, table.rail
+        volts = self.ripple_volts_of(table)[:, None]
+        ripple_a, charge_c = row_swing(problem, evaluator.states, evaluator.tables, used, volts)  # (U, B, V)
+        piece_f = bank_effective_f(problem.study, problem.capacitors, float(problem.rails.voltage_v[rail]))
+        esr_ohm = bank_esr_ohm(problem.study, problem.capacitors)
+        one_v = half_swing_v(ripple_a[..., None], charge_c[..., None], piece_f[table.banks], esr_ohm[table.banks])
+        return np.asarray(one_v.transpose(2, 0, 1, 3) / max(float(problem.rails.ripple_v[rail]), LEAST_RIPPLE_V))
 
 
 def least_voltage(nodes: FloatArray, percent: Float32Array, cap: float, counts: BoolArray) -> FloatArray:

@@ -19,6 +19,7 @@ class Point:
     """One phase or unit: what its input loses, what a separate bias delivers, ripple, duty, temperature.
 
     square_a2: mean square of what one phase sends into the output bank; reach: load over that of zero valley.
+    ripple_a: peak to peak where current never stops; pulse_a, pulse_s: height and length of a pulse where it does.
     """
 
     loss_w: float
@@ -27,6 +28,9 @@ class Point:
     reach: float = 1.0
     duty: float = 0.0
     temperature_degc: float = 0.0
+    ripple_a: float = 0.0
+    pulse_a: float = 0.0
+    pulse_s: float = 0.0
 
 
 def thermal_k_per_w(row: Part, air_m_s: float) -> float:
@@ -94,7 +98,8 @@ def buck_phase(
     degc = settle(conduction + copper + steady + bias, per_k, ambient, k_per_w)
     loss = steady + conduction * max(1.0 + row.resistance_per_k * (degc - 25.0), 0.2)
     loss += copper * max(1.0 + COPPER_PER_K * (degc - 25.0), 0.2)
-    return Point(loss, bias, rms2 - amps**2, reach, asked, degc)
+    stopped = (peak, high_pulse / f) if reach < 1.0 else (0.0, 0.0)
+    return Point(loss, bias, rms2 - amps**2, reach, asked, degc, ripple, *stopped)
 
 
 def converter_unit(
@@ -115,7 +120,7 @@ def converter_unit(
         ratio = min(max(vout * turns / vin, 0.0), 1.0)
         ripple = vout * (1.0 - ratio) / (row.inductance_nh * 1e-9 * row.frequency_khz * 1e3)
         duty = (vout + amps * row.resistance_mohm * 1e-3) * turns / vin
-    return Point(loss, square_a2=ripple**2 / 12.0, duty=duty, temperature_degc=degc)
+    return Point(loss, square_a2=ripple**2 / 12.0, duty=duty, temperature_degc=degc, ripple_a=ripple)
 
 
 def linear_unit(row: LinearRegulator, vin: float, vout: float, amps: float, ambient: float, air_m_s: float) -> Point:

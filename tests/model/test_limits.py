@@ -10,10 +10,11 @@ from functools import cache
 import numpy as np
 import pytest
 from equivalence.reference import Net, Reference
+from equivalence.reference_stage import converter_unit
 from equivalence.shipped import decided, evaluator_of
 from numpy.typing import NDArray
 
-from archopt.inputs.parts import BuckStage, CopperFoil, LinearRegulator, SingleStage
+from archopt.inputs.parts import BuckStage, Capacitor, CopperFoil, LinearRegulator, SingleStage
 from archopt.model.board import DirectStages
 from archopt.model.evaluator import Detail, evaluate_in
 from archopt.model.limits import INDEX, LIMITS, ROOM
@@ -336,10 +337,53 @@ def hand_ripple(hand: Hand, where: str) -> Found:
     return rms, pieces * capacitor.ripple_a * hand.study.derating.current  # type: ignore[attr-defined]
 
 
+def summed_swing_a(ripple_a: float, duty: float, phases: int) -> float:
+    """Return the swing of triangles spread over the period: their sum is straight between the corners of all."""
+
+    def one(at: float) -> float:
+        x = at % 1.0
+        return ripple_a * (x / duty if x <= duty else (1.0 - x) / (1.0 - duty))
+
+    corners = [k / phases + shift for k in range(phases) for shift in (0.0, duty)]
+    sums = [sum(one(corner - k / phases) for k in range(phases)) for corner in corners]
+    return max(sums) - min(sums)
+
+
+def hand_output_ripple(hand: Hand, where: str) -> Found:
+    net, k, s = hand.place(where)
+    reference, result = hand.reference, hand.reference.results[s]
+    running, amps, row = reference.running_in(s, net), result.current_a[k], net.row
+    ambient = float(reference.states.ambient_degc[s])
+    assert isinstance(row, BuckStage | SingleStage)
+    period_s = 1e-3 / row.frequency_khz
+    if isinstance(row, SingleStage):
+        air = hand.study.supply.air_speed_m_s
+        unit = converter_unit(row, result.stage_v[k], net.rail.voltage_v, amps / running, ambient, air)
+        swing, charge = running * unit.ripple_a, running * unit.ripple_a * period_s / 8.0
+    else:
+        point = reference.point(net, running, result.stage_v[k], amps, ambient)
+        swing = summed_swing_a(point.ripple_a, point.duty, running)
+        charge = swing * period_s / running / 8.0
+        if point.pulse_a:  # what of the triangle lies above the load
+            above = point.pulse_a - amps / running
+            swing, charge = point.pulse_a, 0.5 * above * point.pulse_s * above / point.pulse_a
+    half_v = 0.5 * (swing * net.bank_ohm + charge / net.bank_f)
+    return 100.0 * half_v / net.rail.voltage_v, net.rail.ripple_percent
+
+
 def hand_loop(hand: Hand, where: str) -> Found:
-    net = hand.reference.nets[hand.reference.place[where]]
-    uf = net.bank_f * 1e6
-    return uf, net.row.loop_min_uf if uf < net.row.loop_min_uf else net.row.loop_max_uf
+    """At least with the bank aged and at the bottom of its tolerance, at most with it new and at the top."""
+    reference = hand.reference
+    net = reference.nets[reference.place[where]]
+    row = reference.catalogue.families["capacitors"][reference.choices[f"{where}.bank"]]
+    assert isinstance(row, Capacitor)
+    most_uf = row.capacitance_uf * (1.0 + row.tolerance_percent / 100.0) * int(reference.choices[f"{where}.bank_count"])
+    most_uf /= 1.0 + (net.rail.voltage_v / row.half_capacitance_v) ** 2
+    least_uf = net.bank_f * 1e6
+    short, over = net.row.loop_min_uf - least_uf, most_uf - net.row.loop_max_uf
+    if short / net.row.loop_min_uf > over / net.row.loop_max_uf:
+        return least_uf, net.row.loop_min_uf
+    return most_uf, net.row.loop_max_uf
 
 
 BY_HAND: dict[str, Callable[[Hand, str], Found]] = {
@@ -360,6 +404,7 @@ BY_HAND: dict[str, Callable[[Hand, str], Found]] = {
     "start-up capacitance": hand_start_up,
     "input current": hand_input_current,
     "capacitor ripple": hand_ripple,
+    "output ripple": hand_output_ripple,
     "loop capacitance range": hand_loop,
 }
 
