@@ -125,14 +125,15 @@ def assumed_text(problem: Data) -> str:
     return f"{counted(count, 'value')} nobody stated (archopt check lists them)" if count else "nothing"
 
 
-def rails_table(rails: list[Data]) -> WordTable:
-    """Every rail as it will be solved."""
+def rails_table(rails: list[Data], squares: Data) -> WordTable:
+    """Every rail as it will be solved; squares of its pour by rail, where a floorplan gives others than the study."""
     rows = [
         [
             str(rail.get("name", NONE)), number(rail.get("voltage_v")), number(rail.get("max_current_a")),
             number(rail.get("typical_current_a")), number(rail.get("tolerance_percent")),
             number(rail.get("step_a")), number(rail.get("slew_a_per_us")),
-            number(1000 * real(rail.get("droop_budget_v"))), number(rail.get("squares")),
+            number(1000 * real(rail.get("droop_budget_v"))),
+            number(squares.get(str(rail.get("name")), rail.get("squares"))),
             "sensed at the load" if rail.get("remote_sense") else "", _feeds(rail),
         ]
         for rail in rails
@@ -169,7 +170,8 @@ def check_sections(result: CheckResult) -> Iterable[RenderableType]:
     study: Data = problem.get("study") or {}
     yield from section("Understood", understood(problem))
     if study.get("rails"):
-        yield from section("Rails", rails_table(study["rails"]))
+        copper: Data = problem.get("copper") or {}
+        yield from section("Rails", rails_table(study["rails"], copper.get("pour_squares_one_way") or {}))
     if problem.get("states"):
         yield from section("States", load_states_table(problem["states"]))
     if result.power:
