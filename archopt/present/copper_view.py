@@ -202,14 +202,15 @@ def verdict(points: Sequence[CopperPoint], life_months: float, unit: str, step: 
         return "no point meets every limit"
     after = points.index(best) + 1
     if after == len(points):
-        first = next(point for point in points if not point.missed)
+        known = {name for point in points if point.here for name in point.missed}
+        first = next(point for point in points if set(point.missed) <= known)
         start = "" if first is points[0] else f" from {number(first.amount)} {unit}, the least that meets every limit,"
         comma = "," if start else ""
         return f"every {step} on offer{comma}{start} pays within the board's life of {number(life_months)} months"
     onward = points[after]
     why = (
-        f"misses {', '.join(onward.missed)}" if onward.missed
-        else "saves nothing" if onward.months is None
+        "saves nothing" if onward.months is None
+        else f"misses {', '.join(onward.missed)}" if onward.months <= life_months
         else f"takes {number(onward.months, 3)} months, the board lives {number(life_months)}"
     )  # fmt: skip
     return f"stops paying at {number(best.amount)} {unit}: the next {step} {why}"

@@ -351,14 +351,16 @@ def with_months(points: Sequence[CopperPoint], money_kwh: float) -> list[CopperP
 def last_worth(points: Sequence[CopperPoint], life_months: float) -> CopperPoint | None:
     """Return the point after which the next step no longer pays within the life of the board.
 
-    Steps are taken from the first point that meets every limit; None where none does.
+    Steps are taken from the first point that meets every limit, or misses no other than the design itself does;
+    None where none is.
     """
-    sound = [k for k, point in enumerate(points) if not point.missed]
+    known = {name for point in points if point.here for name in point.missed}
+    sound = [k for k, point in enumerate(points) if set(point.missed) <= known]
     if not sound:
         return None
     best = points[sound[0]]
     for point in points[sound[0] + 1 :]:
-        if point.months is None or point.months > life_months or point.missed:
+        if point.months is None or point.months > life_months or not set(point.missed) <= known:
             break
         best = point
     return best

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from functools import cache
 
 import numpy as np
@@ -135,6 +136,14 @@ def test_steps_that_cost_nothing_save_nothing_or_are_no_design() -> None:
     assert best is not None
     assert best.amount == 2
     assert last_worth([points[0]], 60.0) is None
+
+
+def test_a_limit_the_design_misses_itself_stops_no_step() -> None:
+    own = replace(point(1, 100, 10, ("rail drop",)), here=True)
+    points = with_months([own, point(2, 90, 10, ("rail drop",)), point(3, 80, 10, ("rail drop", "bus drop"))], 0.5)
+    best = last_worth(points, 60.0)
+    assert best is not None
+    assert best.amount == 2
 
 
 def test_a_net_that_bursts_its_stack_moves_and_pays() -> None:
