@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO, via_drop_v
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
-from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, unpack
+from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, short_time_a, unpack
 from archopt.model.options import Options, band_hours, option_index, quiet
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
@@ -29,6 +29,7 @@ ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest il
 SAFETY_V = 0.003
 SAFETY_SHARE = 0.999  # of the short-time current: stages draw a little more at the dipped bus than tabled
 CHILD_MARGIN = 1.02  # what a child draws beyond its table: the copper of its sensed pour
+DIPPED_SHARE = 0.9  # of the bus voltage, left after a dip not known yet
 SETTLING_PASSES = 3
 
 
@@ -93,7 +94,7 @@ def legal_voltages(
     moving = (designs.bus("control") != FIXED)[..., None, None]
     charge = np.where(moving, hardware.bulk_nominal_f[..., None, None] * converters.slew_v_per_s[index], 0.0)
     charge = np.where(np.arange(legal.shape[2])[:, None] < legal.shape[2] - 1, charge, 0.0)  # the top band never rises
-    short = np.maximum(converters.overload_a[index], converters.limit_a[index])
+    short = short_time_a(problem, index, dipped, guaranteed=True)
     legal &= jump_w / dipped + charge <= SAFETY_SHARE * units * short
     ohm = np.maximum(converters.output_ohm[index] / units, 1e-6)
     henry = regulated_source_h(ohm, converters.bandwidth_rad_s[index] / (2.0 * np.pi))
@@ -141,6 +142,8 @@ def running_units(
     mean_w = mean_w * 1e3 / hours
     mix = np.take_along_axis(mix_w, np.broadcast_to(at, (*mix_w.shape[:3], 1)), 3)[..., 0]
     jump = np.take_along_axis(jump_w, np.broadcast_to(at, (*jump_w.shape[:3], 1)), 3)[..., 0]
+    dipped_v = DIPPED_SHARE * low_v
+    short = short_time_a(problem, index[..., None], dipped_v, guaranteed=True)
     input_v = np.full(1, problem.study.supply.nominal_v)
     best = np.broadcast_to(units[..., None], mean_w.shape).copy()
     best_w = np.full(mean_w.shape, np.inf)
@@ -152,7 +155,7 @@ def running_units(
         fits = (mix <= carry * converters.limit_w[index][..., None]) & (
             mix / low_v <= carry * converters.limit_a[index][..., None]
         )
-        fits &= jump / (0.9 * low_v) <= running * converters.overload_a[index][..., None]
+        fits &= jump / dipped_v <= running * short
         can = (running == units[..., None]) | (
             fits & (running < units[..., None]) & (designs.bus("fewest") == 0)[..., None]
         )

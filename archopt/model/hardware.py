@@ -166,6 +166,21 @@ def setting_error_v(problem: Problem, converter: IntArray, set_v: FloatArray) ->
     return np.where(sets, table.accuracy[index] * set_v + rounded, 0.0)
 
 
+def short_time_a(
+    problem: Problem, converter: IntArray, bus_v: FloatArray, *, guaranteed: BoolArray | bool
+) -> FloatArray:
+    """Return what one converter carries at a bus voltage for a short time, A; shapes broadcast.
+
+    The smaller of the overload current and the overload power over the voltage; the overload power is as far above
+    the rated power as the overload current is above the rated current (common practice). Where a jump lasts longer
+    than the overload is guaranteed for, what it carries for ever.
+    """
+    table, index = problem.converters, np.maximum(converter, 0)
+    amps = np.where(guaranteed, np.maximum(table.overload_a, table.limit_a)[index], table.limit_a[index])
+    power_takes_over_v = (table.limit_w / table.limit_a)[index]
+    return np.asarray(amps * np.minimum(power_takes_over_v / np.maximum(bus_v, 1e-3), 1.0))
+
+
 def bus_ratio_v(problem: Problem, converter: IntArray) -> FloatArray:
     """Return the unloaded bus voltage of fixed-ratio converters at the highest input, V."""
     return problem.converters.ratio[np.maximum(converter, 0)] * problem.study.supply.high_v

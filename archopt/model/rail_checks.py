@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 
 from archopt.model.board import Solution
-from archopt.model.hardware import Hardware
+from archopt.model.hardware import Hardware, short_time_a
 from archopt.model.limits import Ledger
-from archopt.model.parameters import BUCK, LINEAR, FloatArray, IntArray
+from archopt.model.parameters import BUCK, LINEAR, BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.situation import Droop, Situation
 from archopt.model.space import BUS_NAMES, FIXED
@@ -161,11 +161,9 @@ def check_jump(situation: Situation, ledger: Ledger) -> None:
     wait_s = np.where(units < top_units, converters.wakeup_s[index], 0.0)
     charge_a = np.where(rising, hardware.bulk_nominal_f[..., None] * slew, 0.0)
     bus_a = solution.bus_a[:, jump].transpose(0, 2, 1) + charge_a
-    bound = units * np.where(
-        np.maximum(rise_s, wait_s) <= converters.overload_s[index],
-        np.maximum(converters.overload_a[index], converters.limit_a[index]),
-        converters.limit_a[index],
-    )
+    in_time: BoolArray = np.maximum(rise_s, wait_s) <= converters.overload_s[index]
+    bus_v = solution.bus_v[:, jump].transpose(0, 2, 1)
+    bound = units * short_time_a(problem, index, bus_v, guaranteed=in_time)
     names = tuple(f"{name} converter" for name in BUS_NAMES)
     ledger.add(
         "jump survival: short-time current", bus_a, bound, at_most=True,

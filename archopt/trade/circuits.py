@@ -12,6 +12,7 @@ import numpy as np
 
 from archopt.model.bus_stability import stage_input_f
 from archopt.model.evaluator import Detail
+from archopt.model.hardware import short_time_a
 from archopt.model.parameters import FIXED_RATIO, LINEAR, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.rail_checks import jump_spare_v
@@ -94,9 +95,10 @@ def rail_case(
 
 def source_limit_a(waves: Waves, p: int, bus: int, band: int) -> float:
     """Return the short-time current of the converters that run in a band, A."""
-    converters, index = waves.problem.converters, int(waves.detail.hardware.converter[p, bus])
-    unit_a = max(float(converters.overload_a[index]), float(converters.limit_a[index]))
-    return unit_a * int(waves.detail.hardware.units_band[p, bus, band])
+    hardware = waves.detail.hardware
+    bus_v = waves.detail.solution.bus_v[p, waves.jump_at[band], bus]
+    unit_a = short_time_a(waves.problem, hardware.converter[p, bus], bus_v, guaranteed=True)
+    return float(unit_a) * int(hardware.units_band[p, bus, band])
 
 
 def bus_case(waves: Waves, p: int, bus: int, band: int) -> BusCircuit:
