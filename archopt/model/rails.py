@@ -18,7 +18,7 @@ class RailArrays:
     names: tuple[str, ...]
     voltage_v: FloatArray
     max_a: FloatArray  # own maximum with its taps, grown
-    step_a: FloatArray
+    step_a: FloatArray  # largest of its own and its taps', grown
     load_slew_a_per_s: FloatArray
     budget_v: FloatArray
     ripple_v: FloatArray  # allowed either side of the mean
@@ -47,7 +47,7 @@ def rail_arrays(study: ResolvedStudy) -> RailArrays:
         names=tuple(rail.name for rail in rails),
         voltage_v=np.array([rail.voltage_v for rail in rails]),
         max_a=maximum * study.growth,
-        step_a=step,
+        step_a=step * study.growth,
         load_slew_a_per_s=np.array([rail.slew_a_per_us * 1e6 for rail in rails]),
         budget_v=np.array([rail.droop_budget_v for rail in rails]),
         ripple_v=np.array([rail.ripple_percent * 0.01 * rail.voltage_v for rail in rails]),

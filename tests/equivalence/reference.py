@@ -251,8 +251,7 @@ class Reference:
                 used = amps[k] * volts
                 drawn = self.stage_in(s, k, self.undropped_v(s, net), amps[k])[0] if used > 0 else 0.0
                 ratio = min(drawn / used, 3.0) if used > 0 else 1.2
-                taps = [rail.step_a for rail in self.study.rails if rail.tap_of == net.rail.name]
-                step.append(max([net.rail.step_a, *taps]) * volts * ratio)
+                step.append(self.own_step_a(net.rail) * volts * ratio)
                 ratios.append(ratio)
             self.step_ratios.append(ratios)
             for bus in self.buses:
@@ -407,18 +406,19 @@ class Reference:
                     worst = max(worst, self.deviation_v(s, band, k) / net.rail.droop_budget_v * 100.0)
         return worst
 
+    def own_step_a(self, rail: Rail) -> float:
+        """Return the largest step of a rail or one of its taps; a current in a limit, so it grows."""
+        return max(r.step_a for r in self.study.rails if rail.name in (r.name, r.tap_of)) * self.study.growth
+
     def family_step_a(self, band: int, k: int) -> float:
         """Return the largest step of a rail with its children: those of one group together."""
 
-        def own_a(rail: Rail) -> float:
-            return max(r.step_a for r in self.study.rails if rail.name in (r.name, r.tap_of))
-
         rail = self.own[k]
-        groups = {rail.step_group or f"alone {k}": own_a(rail)}
+        groups = {rail.step_group or f"alone {k}": self.own_step_a(rail)}
         for c, net in enumerate(self.nets):
             if net.feed == rail.name:
                 group = net.rail.step_group or f"alone {c}"
-                drawn_w = own_a(net.rail) * net.rail.voltage_v * self.step_ratios[band][c]
+                drawn_w = self.own_step_a(net.rail) * net.rail.voltage_v * self.step_ratios[band][c]
                 groups[group] = groups.get(group, 0.0) + drawn_w / rail.voltage_v
         return max(groups.values())
 

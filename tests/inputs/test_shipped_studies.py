@@ -119,8 +119,9 @@ def deviation_percent(
     loop = (2e3 * math.pi * stage.crossover_khz, stage.delay_ns * 1e-9, capacitance_f, esr_ohm)
     load_slew = rail.slew_a_per_us * 1e6
     slew = buck_slew_a_per_s(phases, stage.max_duty, at_v, rail.voltage_v, inductance_h)
-    droop = rail_droop_v(rail.step_a, slew, *loop, load_slew)
-    release = release_v(rail.step_a, phases, rail.voltage_v, inductance_h, *loop, load_slew)
+    step_a = rail.step_a * study.growth
+    droop = rail_droop_v(step_a, slew, *loop, load_slew)
+    release = release_v(step_a, phases, rail.voltage_v, inductance_h, *loop, load_slew)
     return 100 * max(float(droop), float(release)) / rail.droop_budget_v
 
 
@@ -229,7 +230,7 @@ def test_every_rail_can_hold_its_step_at_a_low_and_a_high_bus(shipped: Shipped, 
 
 @pytest.mark.parametrize("name", NAMES)
 def test_incumbent_keeps_its_rails_within_their_budgets(shipped: Shipped, name: str) -> None:
-    """Today's design is plausible: legal stages, enough phases, droop of a third to all of its budget."""
+    """Today's design is plausible: legal stages, enough phases, droop of a fifth to all of its budget (ripple asks for more bank)."""
     loaded = shipped[name]
     design = loaded.study.incumbent
     assert design is not None
@@ -247,4 +248,4 @@ def test_incumbent_keeps_its_rails_within_their_budgets(shipped: Shipped, name: 
             assert stage.loop_min_uf <= 0.64 * count * bank.capacitance_uf, rail.name
             assert count * bank.capacitance_uf <= stage.loop_max_uf, rail.name
             percent = deviation_percent(loaded, rail, stage, phases, bank, count, 11.4)
-            assert 30 < percent <= 100, (rail.name, percent)
+            assert 20 < percent <= 100, (rail.name, percent)
