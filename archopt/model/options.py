@@ -30,7 +30,6 @@ from archopt.physics.transient import rail_droop_v
 
 DROOP_NODES = 12
 LEAST_HEADROOM_V = 0.05  # of the lowest droop node above the voltage at which the stage cannot raise its current
-LEAST_V = 1e-3  # keeps the search for the highest voltage finite where a stage has no duty
 IDLE_HOURS = 1e-6  # weight of a band's worst mix, so that a band without hours still has a preference
 
 
@@ -140,13 +139,9 @@ def windows(problem: Problem, states: StateTable, tables: LossTables) -> tuple[F
     need = np.maximum(least(states.mix_a), stages.input_min_v[stage])
     jump = np.maximum(least(states.after_a), stages.input_min_v[stage])
     high = stages.input_max_v[stage].copy()
-    light = states.mix_a.T[rail] / running
-    volts = high.copy()
     least_duty = np.maximum(stages.min_on_s[stage] * stages.frequency_hz[stage], 1e-4)
-    for _ in range(8):
-        duty = conduction_ratio(stages, stage, volts, output, light)
-        volts = np.clip(volts * duty / least_duty, LEAST_V, 1e3)
-    high = np.where(stages.kind[stage] == BUCK, np.minimum(high, volts), high)
+    shortest = rails.voltage_v[rail][:, None] / least_duty  # without load, where nothing drops
+    high = np.where(stages.kind[stage] == BUCK, np.minimum(high, shortest), high)
     return need, jump, np.minimum(high, hottest(problem, states, tables))
 
 

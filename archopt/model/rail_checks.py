@@ -39,8 +39,9 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
         "duty", 100.0 * duty, 100.0 * stages.max_duty[stage], at_most=True, axes=axes,
         applies=on & (stages.kind[stage] != LINEAR),
     )  # fmt: skip
+    idle = conduction_ratio(stages, stage, volts, rails.voltage_v, np.zeros_like(per_phase))  # the shortest on-time
     ledger.add(
-        "on-time", 1e9 * duty / frequency, 1e9 * stages.min_on_s[stage], at_most=False, axes=axes,
+        "on-time", 1e9 * idle / frequency, 1e9 * stages.min_on_s[stage], at_most=False, axes=axes,
         applies=on & is_buck,
     )  # fmt: skip
     ledger.add(

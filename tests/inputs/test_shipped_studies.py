@@ -230,7 +230,7 @@ def test_every_rail_can_hold_its_step_at_a_low_and_a_high_bus(shipped: Shipped, 
 
 @pytest.mark.parametrize("name", NAMES)
 def test_incumbent_keeps_its_rails_within_their_budgets(shipped: Shipped, name: str) -> None:
-    """Today's design is plausible: legal stages, enough phases, droop of a fifth to all of its budget (ripple asks for more bank)."""
+    """Today's design is plausible: legal stages, enough phases, droop of a fifth to all of its budget."""
     loaded = shipped[name]
     design = loaded.study.incumbent
     assert design is not None

@@ -206,8 +206,10 @@ def hand_duty(hand: Hand, where: str) -> Found:
 
 
 def hand_on_time(hand: Hand, where: str) -> Found:
-    duty, net = hand.duty(where)
+    """Shortest without load, where nothing drops: output over input."""
+    net, k, s = hand.place(where)
     assert isinstance(net.row, BuckStage)
+    duty = net.rail.voltage_v / hand.reference.results[s].stage_v[k]
     return 1e6 * duty / net.row.frequency_khz, max(net.row.min_on_ns, hand.study.derating.min_on_ns)
 
 
