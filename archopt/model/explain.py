@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 
 from archopt.inputs.resolved import Rail
+from archopt.model.board import bank_loss_w
 from archopt.model.canonical import buses_used
 from archopt.model.cost import unit_price
 from archopt.model.evaluator import Detail, Evaluator
@@ -277,9 +278,11 @@ def heat_records(problem: Problem, detail: Detail, p: int) -> list[dict[str, Any
     states, hardware, solution = problem.states, detail.hardware, detail.solution
     steady = states.of_kind(MIX)
     limit = problem.study.derating.junction_degc
+    bank_w = bank_loss_w(problem, hardware, solution.stage_v, solution.current_a)
     out = []
     for r, name in enumerate(problem.rails.names):
-        heat = solution.stage_loss_w[p, steady, r] / hardware.running[p, steady, r] + hardware.bias_w[p, r]
+        own_w = solution.stage_loss_w[p, steady, r] - bank_w[p, steady, r]
+        heat = own_w / hardware.running[p, steady, r] + hardware.bias_w[p, r]
         degc = states.ambient_degc[steady] + problem.stages.thermal_k_per_w[hardware.stage[p, r]] * heat
         k = int(degc.argmax())
         out.append(

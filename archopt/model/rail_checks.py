@@ -61,18 +61,19 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
         "stage current", own, stages.phase_limit_a[hardware.stage], at_most=True,
         axes=(tuple(f"{name} at its own maximum" for name in names),),
     )  # fmt: skip
-    heat = solution.stage_loss_w[:, steady] / running + hardware.bias_w[:, None, :]
+    square = running * ripple_square_a2(stages, stage, volts, rails.voltage_v, per_phase)
+    bank_w = hardware.bank_esr_ohm[:, None, :] * square  # warms the bank, not the stage
+    heat = (solution.stage_loss_w[:, steady] - bank_w) / running + hardware.bias_w[:, None, :]
     temperature = states.ambient_degc[steady][:, None] + stages.thermal_k_per_w[stage] * heat
     junction = problem.study.derating.junction_degc
     ledger.add("stage temperature", temperature, junction, at_most=True, axes=axes, applies=on)
     gain = thermal_gain(stages, stage, volts, rails.voltage_v, per_phase)
     ledger.add("thermal gain", gain, 1.0, at_most=True, axes=axes, applies=on)
-    ripple = np.sqrt(running * ripple_square_a2(stages, stage, volts, rails.voltage_v, per_phase))
     capacitors = problem.capacitors
     bank = situation.designs.rail("bank")
     pieces = problem.bank_counts[situation.designs.rail("bank_count")]
     permitted = pieces * capacitors.ripple_a[bank] * problem.study.derating.current
-    ledger.add("capacitor ripple", ripple, permitted[:, None, :], at_most=True, axes=axes, applies=on)
+    ledger.add("capacitor ripple", np.sqrt(square), permitted[:, None, :], at_most=True, axes=axes, applies=on)
     swing = output_ripple_v(problem, hardware, solution, steady)
     ledger.add(
         "output ripple", 100.0 * swing / rails.voltage_v, 100.0 * rails.ripple_v / rails.voltage_v, at_most=True,

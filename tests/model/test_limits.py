@@ -249,7 +249,7 @@ def hand_temperature(hand: Hand, where: str) -> Found:
     ambient = float(reference.states.ambient_degc[s])
     point = reference.point(net, running, result.stage_v[k], result.current_a[k], ambient)
     k_per_w = net.row.thermal_k_per_w * math.sqrt(max(net.row.air_speed_m_s, 0.2) / max(air, 0.2))
-    heat = (point.loss_w + point.bias_w) / running
+    heat = (point.loss_w + point.bias_w) / running - net.bank_ohm * point.square_a2  # the bank warms itself
     return float(reference.states.ambient_degc[s]) + k_per_w * heat, hand.study.derating.junction_degc
 
 
