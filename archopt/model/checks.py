@@ -118,8 +118,7 @@ def bias_misfits(situation: Situation) -> IntArray:
     index = np.maximum(hardware.bias, 0)
     supply = problem.study.supply
     biases = problem.biases
-    low_bus = hardware.band_v[:, 0].min(axis=1) - hardware_dip(situation)
-    high_bus = hardware.band_v[:, 0].max(axis=1)
+    low_bus, high_bus = bus_a_span_v(situation)
     on_bus = hardware.bias_on_bus
     low = np.where(on_bus, low_bus, supply.low_v)
     high = np.where(on_bus, high_bus, supply.high_v)
@@ -129,9 +128,20 @@ def bias_misfits(situation: Situation) -> IntArray:
     return np.asarray(needs & ~((hardware.bias >= 0) & fits), dtype=np.int64)
 
 
-def hardware_dip(situation: Situation) -> FloatArray:
-    """Return the deepest dip of bus A, V, (P,)."""
-    return np.asarray(situation.solution.dip_v[:, 0].max(axis=1))
+def bus_a_span_v(situation: Situation) -> tuple[FloatArray, FloatArray]:
+    """Return the lowest voltage of bus A in its deepest dip and its highest, V, (P,).
+
+    A regulated bus is at its nominal when it starts and falls back; a fixed ratio follows the input.
+    """
+    problem, hardware = situation.problem, situation.hardware
+    nominal_v = problem.grid_v[situation.designs.bus("nominal_v")[:, 0]]
+    low = np.minimum(hardware.band_v[:, 0].min(axis=1), nominal_v)
+    high = np.maximum(hardware.band_v[:, 0].max(axis=1), nominal_v)
+    if len(problem.converters.names):
+        ratio, supply = problem.converters.ratio[np.maximum(hardware.converter[:, 0], 0)], problem.study.supply
+        follows = hardware.fixed_ratio[:, 0]
+        low, high = np.where(follows, ratio * supply.low_v, low), np.where(follows, ratio * supply.high_v, high)
+    return low - situation.solution.dip_v[:, 0].max(axis=1), high
 
 
 def supervisor_misfits(situation: Situation, used: BoolArray) -> IntArray:
