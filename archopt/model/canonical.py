@@ -131,6 +131,11 @@ def tidy_bias(problem: Problem, designs: Designs) -> None:
     from_input &= table.isolated | (not supply.isolation)
     low = problem.grid_v[designs.bus("lower_v")[:, 0]]
     high = problem.grid_v[designs.bus("upper_v")[:, 0]]
+    if len(problem.converters.names):
+        converter = np.maximum(designs.bus("converter")[:, 0] - 1, 0)
+        follows = (problem.converters.kind[converter] == FIXED_RATIO) & on_bus_a
+        ratio = problem.converters.ratio[converter]
+        low, high = np.where(follows, ratio * supply.low_v, low), np.where(follows, ratio * supply.high_v, high)
     from_bus = (table.input_min_v <= 0.95 * low[:, None]) & (table.input_max_v >= high[:, None])
     from_bus &= on_bus_a[:, None]
     options = problem.space.allowed[column]
