@@ -24,7 +24,7 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
     steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
     axes = (situation.state_names(steady), situation.rail_names)
     amps = solution.current_a[:, steady]
-    drop = amps * hardware.pour_ohm[:, None, :] / rails.voltage_v
+    drop = (amps * hardware.pour_ohm[:, None, :] + rails.tap_drop_v) / rails.voltage_v  # to the farthest tap
     ledger.add("rail drop", 100.0 * drop, 100.0 * rails.drop_budget, at_most=True, axes=axes)
     ledger.add("copper ampacity", amps, pour_limits_a(situation)[:, None, :], at_most=True, axes=axes)
     bus_axes = (situation.state_names(steady), tuple(f"{name} plane" for name in BUS_NAMES))

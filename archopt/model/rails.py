@@ -28,6 +28,7 @@ class RailArrays:
     copper_width_m: FloatArray
     pour_via_ohm: FloatArray  # via fields at both ends, one way, warm
     drop_budget: FloatArray  # share of the rail voltage
+    tap_drop_v: FloatArray  # largest of its taps', at the coincident maximum, grown
     step_group: IntArray
 
 
@@ -37,10 +38,13 @@ def rail_arrays(study: ResolvedStudy) -> RailArrays:
     place = {rail.name: k for k, rail in enumerate(rails)}
     maximum = np.array([rail.max_current_a for rail in rails])
     step = np.array([rail.step_a for rail in rails])
+    tap_drop = np.zeros(len(rails))
     for rail in study.rails:
         if rail.tap_of:
             maximum[place[rail.tap_of]] += rail.max_current_a
             step[place[rail.tap_of]] = max(step[place[rail.tap_of]], rail.step_a)
+            lost_v = rail.tap_mohm * 1e-3 * rail.max_current_a * study.coincidence * study.growth
+            tap_drop[place[rail.tap_of]] = max(tap_drop[place[rail.tap_of]], lost_v)
     groups: dict[str, int] = {}
     group = [groups.setdefault(rail.step_group or f" {rail.name}", len(groups)) for rail in rails]
     return RailArrays(
@@ -57,5 +61,6 @@ def rail_arrays(study: ResolvedStudy) -> RailArrays:
         copper_width_m=np.array([rail.copper_width_mm * 1e-3 for rail in rails]),
         pour_via_ohm=np.zeros(len(rails)),
         drop_budget=np.array([rail.drop_budget_percent * 0.01 for rail in rails]),
+        tap_drop_v=tap_drop,
         step_group=np.array(group, dtype=np.int64),
     )

@@ -275,7 +275,9 @@ def hand_bus_drop(hand: Hand, where: str) -> Found:
 def hand_rail_drop(hand: Hand, where: str) -> Found:
     net, k, s = hand.place(where)
     amps = hand.reference.results[s].current_a[k]
-    return 100.0 * amps * net.pour_ohm / net.rail.voltage_v, net.rail.drop_budget_percent
+    share = hand.study.coincidence * hand.study.growth
+    taps = [r.tap_mohm * 1e-3 * r.max_current_a * share for r in hand.study.rails if r.tap_of == net.rail.name]
+    return 100.0 * (amps * net.pour_ohm + max(taps, default=0.0)) / net.rail.voltage_v, net.rail.drop_budget_percent
 
 
 def hand_ampacity(hand: Hand, where: str) -> Found:
