@@ -127,6 +127,15 @@ def feed_limits(
     return out
 
 
+def awake_with(states: StateTable) -> BoolArray:
+    """Return which rails are on whenever another is, (R, R): child first; no other rail can be its parent.
+
+    A parent that carries nothing of its own but still feeds a child is at 0 A, not off.
+    """
+    left_alone = (~states.off[:, :, None]) & states.off[:, None, :]
+    return np.asarray(~left_alone.any(axis=0))
+
+
 def bank_effective_f(study: ResolvedStudy, capacitors: CapacitorTable, bias_v: FloatArray | float) -> FloatArray:
     """Return one piece's capacitance under bias, at its tolerance and end of life; shapes broadcast on (K,)."""
     return np.asarray(
@@ -172,6 +181,7 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
     stage_ok, low, high = stage_limits(study, rails, stages)
     feed_ok = feed_limits(study, rails, stages, grid_v, stage_ok)
     feed_ok[:, :, BUS_A : BUS_A + 2] &= planes.reached.T[:, None, :]
+    feed_ok[:, :, PARENT:] &= awake_with(states)[:, None, :]
     rated = capacitors.rated_v * study.derating.voltage
     named = [set(rail.capacitors) for rail in own_rails(study)]
     capacitor_ok = (rated[None, :] >= rails.voltage_v[:, None] - 1e-9) & np.array(

@@ -10,6 +10,7 @@ from tempfile import TemporaryDirectory
 import numpy as np
 import pytest
 from equivalence.reference import Reference
+from equivalence.shipped import evaluator_of
 from numpy.typing import NDArray
 
 from archopt.inputs.load import load
@@ -20,6 +21,7 @@ from archopt.model.evaluator import Detail, Evaluator, evaluate_in
 from archopt.model.explain import all_losses
 from archopt.model.options import option_index
 from archopt.model.parameters import LINEAR
+from archopt.model.problem import compile_problem
 from archopt.model.space import PARENT, Designs
 from archopt.model.states import JUMP, MIX
 
@@ -212,3 +214,15 @@ def test_the_schedule_counts_what_children_draw() -> None:
         read = np.array([tabled[0, 0, band, places[band]] for band in problem.states.band[kind]])
         np.testing.assert_allclose(read, exact, rtol=0.03)
         assert (read > 1.1 * np.array([alone[1][0, 0, b, places[b]] for b in problem.states.band[kind]])).all()
+
+
+def test_a_rail_that_is_off_feeds_nobody_who_is_on() -> None:
+    problem = evaluator_of("industrial_ten").problem
+    states, names = problem.states, problem.rails.names
+    child, parent = names.index("clock_1v1"), names.index("logic_1v8")
+    assert problem.feed_ok[child, :, PARENT + parent].any()
+    for together in (True, False):
+        off = states.off.copy()
+        off[0, parent], off[0, child] = True, together
+        changed = compile_problem(problem.study, problem.catalogue, replace(states, off=off))
+        assert changed.feed_ok[child, :, PARENT + parent].any() == together
