@@ -19,8 +19,10 @@ LEAST_BUS_V = 1e-3  # keeps the losses of a collapsed bus finite
 def check_buses(situation: Situation, ledger: Ledger) -> None:
     """Check range, current, power, temperature, dip, drop, start-up and stability of every bus.
 
-    Where the study asks for spare converters, those left after as many have failed carry every load alone, keep
-    cool and start into all of the bus capacitance. The losses of a year are those of all that run.
+    Where the study asks for spare converters, those left after as many have failed carry every load alone, through a
+    jump too, keep cool and start into all of the bus capacitance. Dip and stability are those with all that run: a
+    source without its spares is a little softer, and is not asked to meet them. The losses of a year
+    are those of all that run.
     """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     solution, converters, study = situation.solution, problem.converters, problem.study

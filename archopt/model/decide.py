@@ -95,7 +95,7 @@ def legal_voltages(
     charge = np.where(moving, hardware.bulk_nominal_f[..., None, None] * converters.slew_v_per_s[index], 0.0)
     charge = np.where(np.arange(legal.shape[2])[:, None] < legal.shape[2] - 1, charge, 0.0)  # the top band never rises
     short = short_time_a(problem, index, dipped, guaranteed=True)
-    legal &= jump_w / dipped + charge <= SAFETY_SHARE * units * short
+    legal &= jump_w / dipped + charge <= SAFETY_SHARE * spare * short
     ohm = np.maximum(converters.output_ohm[index] / units, 1e-6)
     henry = regulated_source_h(ohm, converters.bandwidth_rad_s[index] / (2.0 * np.pi))
     least = least_capacitance_f(ohm, henry, jump_w, dipped)
@@ -155,7 +155,7 @@ def running_units(
         fits = (mix <= carry * converters.limit_w[index][..., None]) & (
             mix / low_v <= carry * converters.limit_a[index][..., None]
         )
-        fits &= jump / dipped_v <= running * short
+        fits &= jump / dipped_v <= carry * short
         can = (running == units[..., None]) | (
             fits & (running < units[..., None]) & (designs.bus("fewest") == 0)[..., None]
         )

@@ -142,7 +142,10 @@ def family_maximum_a(situation: Situation) -> FloatArray:
 
 
 def check_jump(situation: Situation, ledger: Ledger) -> None:
-    """Check that every stage and converter lives through the largest unannounced jump at the dipped bus."""
+    """Check that every stage and converter lives through the largest unannounced jump at the dipped bus.
+
+    Where the study asks for spare converters, those left after as many have failed take the jump.
+    """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     solution = situation.solution
     jump = states.of_kind(JUMP)
@@ -165,7 +168,8 @@ def check_jump(situation: Situation, ledger: Ledger) -> None:
     bus_a = solution.bus_a[:, jump].transpose(0, 2, 1) + charge_a
     in_time: BoolArray = np.maximum(rise_s, wait_s) <= converters.overload_s[index]
     bus_v = solution.bus_v[:, jump].transpose(0, 2, 1)
-    bound = units * short_time_a(problem, index, bus_v, guaranteed=in_time)
+    carrying = np.maximum(units - problem.study.derating.spare_converters, 0.5)
+    bound = carrying * short_time_a(problem, index, bus_v, guaranteed=in_time)
     names = tuple(f"{name} converter" for name in BUS_NAMES)
     ledger.add(
         "jump survival: short-time current", bus_a, bound, at_most=True,

@@ -175,6 +175,17 @@ def test_a_lone_converter_has_no_spare() -> None:
     assert after.value[0] == pytest.approx(2.0 * float(before.value[0]), rel=1e-9)
 
 
+def test_spares_are_not_counted_in_a_jump() -> None:
+    problem = evaluator_of(STUDY).problem
+    pair = on_bus_a(problem, REGULATED, count=2)[:1]
+    all_of, spared = detail_of(problem, pair), detail_of(with_derating(problem, spare_converters=1), pair)
+    limit = "jump survival: short-time current"
+    running = all_of.hardware.units_band[0, 0]
+    assert running.min() == 2
+    before, after = (float(detail.ledger.worst[limit].bound[0]) for detail in (all_of, spared))
+    assert after == pytest.approx(0.5 * before, rel=1e-9)
+
+
 def test_a_shed_converter_must_wake_within_the_overload() -> None:
     problem = evaluator_of(STUDY).problem
     row = on_bus_a(problem, REGULATED, count=2)[:1].copy()
