@@ -24,6 +24,10 @@ UNITS = {
     "ma": "mA", "mw": "mW", "nc": "nC", "oz": "oz", "v": "V", "a": "A", "w": "W", "k": "K",
 }  # fmt: skip
 THOUSANDTH = {"V": "mV", "A": "mA", "W": "mW"}
+FORM = {
+    "name": "of a name: letters a to z and A to Z, digits, _, + and -; a letter or digit first",
+    "dated": "of a date: year-month-day as in 2026-01-31",
+}
 
 
 def unit_of(key: str) -> str:
@@ -136,7 +140,7 @@ def explain(error: Mapping[str, Any], key: str, model: type[BaseModel]) -> str:
     if kind == "string_too_short":
         return "is empty"
     if kind == "string_pattern_mismatch":
-        return f"{brief(given)} does not have the form {context['pattern']}"
+        return f"{brief(given)} does not have the form {FORM.get(key, context['pattern'])}"
     return f"{error['msg'][:1].lower()}{error['msg'][1:]}, found {brief(given)}"
 
 

@@ -75,7 +75,7 @@ def test_byte_order_mark_is_no_fault(desk: Desk, study_text: str) -> None:
         ("max_current_a = 6", "", ("rails.io.max_current_a: missing", "most the load draws")),
         ('name = "io"', 'name = "core"', ("there are two rails 'core'",)),
         ('name = "io"', 'name = "bus_a"', ("rails.bus_a.name", "take another")),
-        ('name = "io"', 'name = "3.3 V"', ("does not have the form",)),
+        ('name = "io"', 'name = "3.3 V"', ("does not have the form of a name: letters",)),
         (
             'name = "io"',
             'name = "io"\ncapacitors = ["ceramic_10"]',
