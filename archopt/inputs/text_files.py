@@ -90,9 +90,10 @@ def read_csv(path: Path, shown_path: str, what: str, notebook: Notebook) -> CsvR
     if header is None:
         notebook.problem("", f"is empty; {what} is wanted, first row the column names", shown_path)
         return None
-    if len(header) == 1 and ";" in header[0]:
-        notebook.problem("row 1", "columns are separated by ';'; separate them by ','", shown_path)
-        return None
+    for mark, named in ((";", "';'"), ("\t", "tabs")):
+        if len(header) == 1 and mark in header[0]:
+            notebook.problem("row 1", f"columns are separated by {named}; separate them by ','", shown_path)
+            return None
     for line, count in wrong[:10]:
         notebook.problem(f"row {line}", f"has {count} cells where the header has {len(header)}", shown_path)
     if len(wrong) > 10:

@@ -46,6 +46,7 @@ def test_profile_fault(desk: Desk, study_text: str, rows: str, told: str) -> Non
         ("hour,core_a,io_a", ["did you mean 'hours'?", "column hours is missing"]),
         ("hours,utilisation,io_a", ["utilisation and io_a are both there"]),
         ("hours;core_a;io_a", ["separate them by ','"]),
+        ("hours\tcore_a\tio_a", ["columns are separated by tabs; separate them by ','"]),
         ("hours,core_a,core_a", ["column core_a is there twice", "column io_a missing"]),
     ],
 )
