@@ -140,6 +140,8 @@ class Front:
         OutputError : there is no such design; the message says which there are.
         """
         data = find_design(self.record.designs, self.record.incumbent, wanted)
+        if data is None and str(wanted).strip().lower() == "incumbent":
+            raise OutputError(f"the study has no [incumbent], so no design of today is here: {self._names()}")
         if data is None:
             raise OutputError(f"no design {wanted!r} in this front: {self._names()}")
         return Design(data, self.record.problem)
@@ -183,7 +185,7 @@ class Front:
         roles = sorted({str(role) for design in self.record.designs for role in design.get("roles") or []})
         text = f"{names[0]} to {names[-1]}" if len(names) > 1 else names[0]
         more = [*roles, *(["incumbent"] if self.record.incumbent is not None else [])]
-        return f"designs are {text}" + (f"; or ask for {', '.join(more)}" if more else "")
+        return f"designs are {text}" + (f"; or ask for {' / '.join(more)}" if more else "")
 
 
 def _cell(value: object) -> str:

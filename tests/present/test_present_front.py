@@ -48,6 +48,8 @@ def test_the_incumbent_is_a_design_too(record: FrontRecord) -> None:
     assert front.incumbent is not None
     assert front.design("incumbent").data == front.incumbent.data
     assert Front(dataclasses.replace(record, incumbent=None)).incumbent is None
+    with pytest.raises(OutputError, match=r"the study has no \[incumbent\].*D001 to D005"):
+        Front(dataclasses.replace(record, incumbent=None)).design("incumbent")
 
 
 def test_telling_and_length(record: FrontRecord) -> None:
