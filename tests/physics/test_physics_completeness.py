@@ -24,6 +24,7 @@ WAVES = "property/test_property_time_domain.py"
 CAPACITOR = "physics/test_physics_capacitor.py"
 MEASURED = "physics/test_physics_measured.py"
 PARAMETERS = "physics/test_physics_parameters.py"
+RIPPLE = "physics/test_output_ripple.py"
 SHAPES = "physics/test_physics_sheet.py"
 SHEET = "published/test_published_sheet.py"
 THERMAL = "physics/test_physics_thermal.py"
@@ -82,6 +83,8 @@ CLAIMS = {
     "linear.losses": (PARAMETERS, "test_linear_by_hand", "closed form"),
     "measured.LossTable": (MEASURED, "test_equals_scipy_inside", "scipy RegularGridInterpolator"),
     "measured.table_loss_w": (MEASURED, "test_exact_for_products_of_linear_functions", "closed form"),
+    "output_ripple.half_swing_v": (RIPPLE, "test_half_the_swing_is_never_optimistic", "numerical integration"),
+    "output_ripple.summed_ripple": (RIPPLE, "test_ripple_and_charge_are_those_of_the_waveform", "waveform"),
     "parameters.Gatherable": (PARAMETERS, "test_take_gathers_every_field_and_keeps_plain_numbers", "numpy"),
     "stability.bank_impedance_ohm": (WAVES, "test_bank_impedance_at_both_ends", "closed form"),
     "sheet.SheetSolution": (SHEET, "test_density_in_a_strip", "closed form"),

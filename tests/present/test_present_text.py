@@ -269,7 +269,7 @@ def test_an_explained_design_says_everything(record: FrontRecord) -> None:
         "     1           20    60             66             -     8.00           1",
         "  core                 1       2",
         "  bus A converter, fixed       21.02       1.20       2.40        4.80       6.00",
-        "  core          45.0        9.0     4.5   0.0    31.5   26.3     20.0   5.2",
+        " 45.0        9.0     2.9  4.5   0.0    31.5   26.3     20.0   5.2",
         "  one board in all  80.00",
         "  Input power equals load plus listed losses within 2e-12 of itself.",
     ):
