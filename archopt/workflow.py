@@ -29,6 +29,9 @@ from archopt.trade.money import lifetime_costs, payback_years
 from archopt.trade.roles import assign_roles
 from archopt.trade.waveforms import Settled, settled
 
+SETTLED_GENERATIONS = 60
+"""Searches shorter than this are said to be unfinished: the hypervolume still grows by percents."""
+
 
 class Told(Protocol):
     """Told how far the search is."""
@@ -151,9 +154,19 @@ def solve(
         leverage=asked.leverage,
         not_modelled=list(NOT_MODELLED),
         cautions=cautions(problem, designs),
-        notes=asked.notes,
+        notes=[*unfinished(found), *asked.notes],
     )
     return Front(record)
+
+
+def unfinished(found: SearchResult) -> list[str]:
+    """Return a remark where a search was ended before it had stopped finding."""
+    if found.ended == "no more growth" or found.generations >= SETTLED_GENERATIONS:
+        return []
+    return [
+        f"The search ended after {found.generations} generations, before it had settled: the front is unfinished,"
+        " and a longer search would find better designs."
+    ]
 
 
 class Clock:

@@ -23,6 +23,7 @@ from archopt.model.parameters import (
 from archopt.model.rails import RailArrays
 from archopt.model.space import (
     BANK_COUNTS,
+    BUS_A,
     BUS_NAMES,
     CONTROL_NAMES,
     FEWEST_NAMES,
@@ -183,4 +184,22 @@ def empty_choices(study: ResolvedStudy, space: Space) -> list[InputProblem]:
         elif not len(space.allowed[space.names.index(name)]):
             text = f"none of {', '.join(wanted)} is possible here"
             problems.append(InputProblem(study.file, f"choices.pin.{name}", text))
+    return problems
+
+
+def contradictions(study: ResolvedStudy, offers: Offers, space: Space) -> list[InputProblem]:
+    """Return a problem for every rail whose pins, with those of the buses, leave no feed and stage together."""
+    problems = []
+    layout = space.layout
+    for r, rail in enumerate(own_rails(study)):
+        feeds = space.allowed[layout.rail("feed").start + r]
+        stages = space.allowed[layout.rail("stage").start + r]
+        for bus in range(2):
+            if not (space.allowed[layout.bus("converter").start + bus] > 0).any():
+                feeds = feeds[feeds != BUS_A + bus]
+        if not offers.feed_ok[r][np.ix_(stages, feeds)].any():
+            named = [name for name in study.choices.pins if name.split(".")[0] in (rail.name, *BUS_NAMES)]
+            text = "nothing offered can feed it"
+            text += f" while {', '.join(named)} are pinned as they are" if named else ""
+            problems.append(InputProblem(study.file, f"rails.{rail.name}", text))
     return problems

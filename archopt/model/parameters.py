@@ -291,15 +291,24 @@ def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) ->
     )
 
 
-def converter_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) -> ConverterTable:
-    """Return the bus converters that take the study's whole input range and its isolation."""
-    rows = [
+def bus_converters_offered(study: ResolvedStudy, catalogue: Catalogue) -> list[BusConverter]:
+    """Return the rows that the study allows and that take its whole input range and its isolation."""
+    return [
         row
         for row in cast("list[BusConverter]", allowed(study, catalogue, "bus_converters"))
         if row.input_min_v <= study.supply.low_v
         and row.input_max_v >= study.supply.high_v
         and (row.isolated or not study.supply.isolation)
     ]
+
+
+def converter_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) -> ConverterTable:
+    """Return the bus converters that take the study's whole input range and its isolation.
+
+    Where there is none the first of the catalogue stands in, so that arrays have a shape; no bus is then offered.
+    """
+    rows = bus_converters_offered(study, catalogue)
+    rows = rows or cast("list[BusConverter]", list(catalogue.families["bus_converters"].values()))[:1]
     plain: list[Part] = list(rows)
     kinds = {"regulated": REGULATED, "fixed_ratio": FIXED_RATIO, "non_isolated": NON_ISOLATED}
     return ConverterTable(

@@ -10,7 +10,7 @@ import numpy as np
 from archopt.errors import InputError
 from archopt.inputs.resolved import Catalogue, ResolvedStudy
 from archopt.model import parameters as tables_of
-from archopt.model.offers import Offers, build_space, empty_choices, empty_rails
+from archopt.model.offers import Offers, build_space, contradictions, empty_choices, empty_rails
 from archopt.model.parameters import (
     LINEAR,
     SINGLE,
@@ -169,6 +169,8 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
     InputError
         every rail nothing can make, every pin that leaves nothing, every choice without an offer.
     """
+    if not tables_of.bus_converters_offered(study, catalogue):
+        study = replace(study, choices=replace(study.choices, max_buses=0))
     parts = tables_of.part_table(study, catalogue)
     stages = tables_of.stage_table(study, catalogue, parts)
     converters = tables_of.converter_table(study, catalogue, parts)
@@ -204,6 +206,7 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
     )
     space = build_space(study, layout, offers)
     problems = [*empty_rails(study, offers), *empty_choices(study, space)]
+    problems = problems or contradictions(study, offers, space)
     if problems:
         raise InputError(problems)
     return Problem(

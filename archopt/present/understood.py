@@ -24,7 +24,7 @@ def understood(problem: Data) -> Table:
         ("input", supply_text(study.get("supply") or {})),
         ("rails", rails_text(study)),
         ("load", load_text(problem)),
-        ("bus control", control_text(study.get("control") or {})),
+        ("bus control", bus_text(study)),
         ("money", money_text(study.get("economics") or {})),
         ("surroundings", air_text(study.get("supply") or {})),
         ("today's design", "given; it seeds the search" if study.get("incumbent") else "not given"),
@@ -75,6 +75,13 @@ def load_text(problem: Data) -> str:
         text += f"; mean load {number(mean)} W, highest of a state {number(max(loads))} W"
     bands = problem.get("bands") or []
     return text + (f"; {counted(len(bands), 'band')} of load" if bands else "")
+
+
+def bus_text(study: Data) -> str:
+    """What the buses may do; that there is none where no converter can make one."""
+    if (study.get("choices") or {}).get("max_buses") == 0:
+        return "no intermediate bus: the study allows none, or no bus converter offered takes this input"
+    return control_text(study.get("control") or {})
 
 
 def control_text(control: Data) -> str:
