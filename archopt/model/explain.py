@@ -12,14 +12,13 @@ from archopt.model.canonical import buses_used
 from archopt.model.cost import unit_price
 from archopt.model.evaluator import Detail, Evaluator
 from archopt.model.limits import INDEX, LIMITS, ROOM
-from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray
+from archopt.model.loss_lists import all_losses
+from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.rail_checks import output_ripple_v
 from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, PARENT, TWO_LEVELS, Designs
-from archopt.model.stages import mechanisms
 from archopt.model.states import ENERGY, KIND_NAMES, MIX, PRINT, StateTable
 from archopt.model.thresholds import raise_thresholds_w
-from archopt.physics import bus_converter
 
 CONTROL_TEXT = {FIXED: "fixed", TWO_LEVELS: "two levels", FOLLOW: "follows load"}
 HOURS_PER_YEAR = 8760.0
@@ -46,82 +45,6 @@ def topology(problem: Problem, rows: IntArray) -> list[str]:
             words.append("fixed ratio" if ratio else CONTROL_TEXT[int(control[p, bus])])
         unique = list(dict.fromkeys(words))
         out.append(", ".join([name, *([" and ".join(unique)] if unique else [])]))
-    return out
-
-
-def stage_mechanisms(problem: Problem, detail: Detail) -> list[dict[str, FloatArray]]:
-    """Return each stage kind's losses by mechanism over the batch, (P, S, R) W, zero where another kind is."""
-    states, hardware, solution = problem.states, detail.hardware, detail.solution
-    shape = solution.stage_v.shape
-    stage = np.broadcast_to(hardware.stage[:, None, :], shape)
-    ambient = np.broadcast_to(states.ambient_degc[:, None], shape)
-    output_v = np.broadcast_to(problem.rails.voltage_v, shape)
-    on = np.broadcast_to(~states.off, shape)
-    out = []
-    for kind in (BUCK, SINGLE, LINEAR):
-        here = on & (problem.stages.kind[stage] == kind)
-        index = np.nonzero(here)
-        arrays: dict[str, FloatArray] = {}
-        if len(index[0]):
-            found = mechanisms(
-                problem.stages, kind, stage[index], hardware.running[index], solution.stage_v[index],
-                output_v[index], solution.current_a[index], ambient[index],
-            )  # fmt: skip
-            for name, values in found.items():
-                arrays[name] = np.zeros(shape)
-                arrays[name][index] = values
-            arrays["output bank"] = np.where(here, solution.stage_loss_w - sum(arrays.values()), 0.0)
-        out.append(arrays)
-    return out
-
-
-def converter_mechanisms(problem: Problem, detail: Detail) -> dict[str, FloatArray]:
-    """Return the bus converters' losses by mechanism, (P, S, 2) W."""
-    states, hardware, solution = problem.states, detail.hardware, detail.solution
-    if not len(problem.converters.names):
-        return {}
-    index = np.maximum(hardware.converter, 0)[:, None, :]
-    loss = bus_converter.losses(
-        problem.converters.loss.take(index),
-        solution.node_v[..., None],
-        np.maximum(solution.bus_v, 1e-3),
-        solution.bus_a / hardware.units_running,
-        states.ambient_degc[:, None],
-    )
-    running = np.where(solution.bus_a > 0, hardware.units_running, 0)
-    return {word(key): getattr(loss, key) * running for key in bus_converter.MECHANISMS}
-
-
-def word(field: str) -> str:
-    """Return a mechanism's name in words."""
-    return field.removesuffix("_w").replace("_", " ")
-
-
-def all_losses(problem: Problem, detail: Detail) -> list[dict[str, dict[str, FloatArray]]]:
-    """Return every loss of each design by part and mechanism over the states, (S,) W; together they balance."""
-    states, hardware, solution = problem.states, detail.hardware, detail.solution
-    by_kind = stage_mechanisms(problem, detail)
-    converters = converter_mechanisms(problem, detail)
-    out = []
-    for p in range(len(detail.designs)):
-        parts: dict[str, dict[str, FloatArray]] = {}
-        for r, name in enumerate(problem.rails.names):
-            kind = int(problem.stages.kind[hardware.stage[p, r]])
-            parts[f"{name} stage"] = {key: values[p, :, r] for key, values in by_kind[kind].items()}
-            parts[f"{name} pour"] = {"copper": solution.pour_w[p, :, r]}
-        for bus in np.flatnonzero(hardware.converter[p] >= 0):
-            parts[f"{BUS_NAMES[bus]} converter"] = {key: w[p, :, bus] for key, w in converters.items()}
-            parts[f"{BUS_NAMES[bus]} plane"] = {"copper": solution.plane_w[p, :, bus]}
-        if hardware.bias[p] >= 0:
-            delivered = solution.bias_out_w[p]
-            parts["bias supply"] = {"gates": delivered, "conversion": solution.bias_in_w[p] - delivered}
-        if hardware.supervisor[p] >= 0:
-            parts["supervisor"] = {"supply": solution.supervisor_w[p]}
-        own = np.full(len(states.name), problem.path.power_w)
-        parts["input path"] = {"resistance": solution.path_w[p] - own, "supply": own}
-        if states.tap_w.any():
-            parts["taps"] = {"series resistance": states.tap_w}
-        out.append(parts)
     return out
 
 

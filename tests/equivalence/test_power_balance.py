@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from archopt.model.evaluator import Detail, Evaluator
-from archopt.model.explain import all_losses
+from archopt.model.loss_lists import all_losses
 from equivalence.shipped import STUDIES, decided, evaluator_of
 
 BALANCE = 1e-9

@@ -18,7 +18,7 @@ from archopt.model.board import DirectStages
 from archopt.model.bus_power import bus_sums
 from archopt.model.compiled import compile_study
 from archopt.model.evaluator import Detail, Evaluator, evaluate_in
-from archopt.model.explain import all_losses
+from archopt.model.loss_lists import all_losses
 from archopt.model.options import option_index
 from archopt.model.parameters import LINEAR
 from archopt.model.problem import compile_problem
