@@ -64,7 +64,8 @@ def infeasible(found: SearchResult) -> InfeasibleError:
     for name, excess in sorted(found.excess.items(), key=lambda item: -item[1]):
         limit = LIMITS[INDEX[name]]
         size = excess * limit.tolerance
-        text = f"{100 * size:.3g} % of the limit" if limit.relative else f"{size:.3g} {limit.unit}"
+        share = f"{100 * size:,.0f}" if size >= 1.0 else f"{100 * size:.2g}"
+        text = f"{share} % of the limit" if limit.relative else f"{size:.3g} {limit.unit}"
         never.append(f"{name}: missed by at least {text} in every design tried")
     if not never:
         never = ["every limit was met by some design, but no design met all of them together"]
