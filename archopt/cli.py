@@ -272,7 +272,9 @@ def transient_command(
     png: Annotated[Path | None, typer.Option(metavar="FILE", help="Draw the waveforms into a picture too.")] = None,
     as_json: JsonOption = False,
 ) -> None:
-    """Integrate a design's rail, bus or whole jump in time; the worst point against its closed form and limit.
+    """Integrate a rail, a bus or a jump of a design in time.
+
+    Prints the worst point against its closed form and limit.
 
     Without --rail or --bus everything on the bus jumps, from the band with the least room.
     """
@@ -307,7 +309,9 @@ def copper_command(
     replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier CSV of this design.")] = False,
     as_json: JsonOption = False,
 ) -> None:
-    """Sweep copper weight and layer pairs around one design: loss, cost, drop, heat, break-even.
+    """Ask what more or less copper of a design is worth.
+
+    Sweeps weight and layer pairs: loss, cost, drop, heat, months to break even.
 
     Everything else stays as the design has it. The points are written to copper_DESIGN.csv in DIR.
     """
@@ -342,7 +346,7 @@ def floorplan_command(
     ] = None,
     replace: Annotated[bool, typer.Option("--replace", help="Replace the picture if it is there.")] = False,
 ) -> None:
-    """Draw a study's floorplan; for one net its drop or current density.
+    """Draw a floorplan; for one net its drop or density.
 
     Prints what the solved copper of every net amounts to.
     """
@@ -371,7 +375,7 @@ def parts_command(
     current_a: Annotated[float | None, typer.Option("--current-a", metavar="A", help="Rated for this.")] = None,
     as_json: JsonOption = False,
 ) -> None:
-    """Browse the catalogue: families, rows of one, a part with its efficiency.
+    """Browse the catalogue: families, rows, one part.
 
     For one part the voltages choose where its efficiency is shown.
     """
