@@ -21,8 +21,6 @@ from archopt.model.states import ENERGY, KIND_NAMES, MIX, PRINT, StateTable
 from archopt.model.thresholds import raise_thresholds_w
 
 CONTROL_TEXT = {FIXED: "fixed", TWO_LEVELS: "two levels", FOLLOW: "follows load"}
-HOURS_PER_YEAR = 8760.0
-BINDING_SLACK = 1e3  # normalised: a limit with more room than this binds nothing
 
 
 def topology(problem: Problem, rows: IntArray) -> list[str]:
@@ -359,4 +357,4 @@ def explain_one(problem: Problem, detail: Detail, p: int, losses: dict[str, dict
     }
 
 
-__all__ = ["HOURS_PER_YEAR", "explain", "explain_many", "topology"]
+__all__ = ["explain", "explain_many", "topology"]

@@ -74,11 +74,6 @@ class Problem:
         """Port resistance matrix of each bus in squares, one way, (2, R, R)."""
         return self.planes.squares
 
-    def with_states(self, states: StateTable) -> Problem:
-        """Return the same problem in other states (same rails; the layout follows the number of bands)."""
-        layout = Layout(self.layout.rails, states.bands)
-        return replace(self, states=states, layout=layout, space=replace(self.space, layout=layout))
-
 
 def voltage_grid(study: ResolvedStudy) -> FloatArray:
     """Return the bus voltages a design may use: whole multiples of the study's grid."""

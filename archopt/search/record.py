@@ -41,7 +41,6 @@ class Record:
     feasible: int = 0
     least_row: IntArray | None = None
     least_sum: float = np.inf
-    least_objectives: FloatArray | None = None
     least_excess: FloatArray = field(default_factory=lambda: np.full(len(LIMITS), np.inf))
     kinds: dict[str, BestOfKind] = field(default_factory=dict)
 
@@ -62,7 +61,7 @@ class Record:
         worst = int(violation.argmin())
         if violation[worst] < self.least_sum:
             self.least_sum = float(violation[worst])
-            self.least_row, self.least_objectives = rows[worst].copy(), objectives[worst].copy()
+            self.least_row = rows[worst].copy()
         self.note_kinds(rows, objectives, violation)
         if not len(ok):
             return 0
