@@ -12,7 +12,8 @@ from typing import Any
 
 import pytest
 
-from archopt.cli import StopRequest, default_place
+from archopt.cli.solve import default_place
+from archopt.cli.stopping import StopRequest
 from archopt.errors import InfeasibleError, InputError, Problem
 from archopt.present import files
 from archopt.present.record import FrontRecord
