@@ -11,10 +11,12 @@ from moocore import is_nondominated
 
 from archopt.model.evaluator import Evaluation, Evaluator
 from archopt.model.limits import LIMITS
+from archopt.model.space import BUS_FIELDS
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.completion import Completion
 from archopt.search.consolidate import dropped_plans, worth
 from archopt.search.engine import Engine
+from archopt.search.fold import Fold, promising
 from archopt.search.genome import LEAST_COPPER, LEAST_PRICE, MOST_COPPER, MOST_PRICE, Genome, Plan
 from archopt.search.indicator import Stagnation
 from archopt.search.local import Neighbours
@@ -29,6 +31,8 @@ CONSOLIDATE_EVERY = 4
 CONSOLIDATED = 4
 CONSOLIDATE_ROUNDS = 3
 LOCAL_SHARE = 0.34  # batches of neighbours a batch of completed genomes
+FOLD_EVERY = 3
+FOLDED = 2  # archived designs folded around each time
 
 
 @dataclass(frozen=True)
@@ -91,6 +95,7 @@ class Search:
             own = self.genome.encode(self.given, one, 0.02 * one, np.full(len(one), len(CAPS) - 1))
             seeds = np.concatenate([own, seeds])[: self.population]
         self.neighbours = Neighbours(evaluator.problem)
+        self.folding = Fold(self.completion)
         self.engine = Engine(self.genome.genes, self.population, seed, seeds=seeds)
         self.generation = 0
         self.owed = 0.0
@@ -123,6 +128,8 @@ class Search:
         if self.generation % CONSOLIDATE_EVERY == CONSOLIDATE_EVERY - 1:
             self.consolidate(rows, objectives, violation, learned, plan)
         self.engine.tell(objectives, violation, learned)
+        if self.generation % FOLD_EVERY == FOLD_EVERY - 1:
+            self.fold()
         self.owed += LOCAL_SHARE
         while self.owed >= 1.0:
             self.owed -= 1.0
@@ -157,6 +164,22 @@ class Search:
         picked = self.rng.choice(len(archive), size=self.population, p=chance)
         rows = self.evaluator.decide(self.neighbours.draw(archive.rows[picked], self.rng))
         self.evaluate(rows, "local")
+
+    def fold(self) -> None:
+        """Fold around a few archived designs of different buses and evaluate what promises to enter the archive."""
+        archive = self.record.archive
+        if not len(archive):
+            return
+        held, objectives = archive.rows, archive.objectives
+        layout = self.evaluator.problem.layout
+        buses = held[:, layout.bus(BUS_FIELDS[0]).start : layout.choices]
+        order = self.rng.choice(len(held), size=len(held), replace=False, p=loneliness(objectives))
+        _, first = np.unique(buses[order], axis=0, return_index=True)
+        picked = order[np.sort(first)[:FOLDED]]
+        rows, predicted = self.folding.propose(held[picked], objectives[picked])
+        chosen = promising(predicted, objectives, self.population)
+        if len(chosen):
+            self.evaluate(self.evaluator.decide(rows[chosen]), "fold")
 
     def consolidate(
         self, rows: IntArray, objectives: FloatArray, violation: FloatArray,
