@@ -3,25 +3,26 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from typing import Any
 
 import numpy as np
 from moocore import is_nondominated
+from numpy.typing import NDArray
 
 from archopt.model.evaluator import Evaluation, Evaluator
-from archopt.model.limits import LIMITS
 from archopt.model.space import BUS_FIELDS
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.completion import Completion
 from archopt.search.consolidate import dropped_plans, worth
-from archopt.search.engine import Engine
+from archopt.search.engine import Engine, generator_from_words, generator_words
 from archopt.search.fold import Fold, promising
 from archopt.search.genome import LEAST_COPPER, LEAST_PRICE, MOST_COPPER, MOST_PRICE, Genome, Plan
 from archopt.search.indicator import Stagnation
 from archopt.search.local import Neighbours
+from archopt.search.outcome import NO_GROWTH, Keep, Progress, SearchResult, progress_of, result_of
 from archopt.search.rail_tables import CAPS
-from archopt.search.record import BestOfKind, Record
+from archopt.search.record import Record
 from archopt.search.seeds import heuristic_genomes
 
 LEAST_POPULATION = 8
@@ -33,46 +34,6 @@ CONSOLIDATE_ROUNDS = 3
 LOCAL_SHARE = 0.34  # batches of neighbours a batch of completed genomes
 FOLD_EVERY = 3
 FOLDED = 2  # archived designs folded around each time
-
-
-@dataclass(frozen=True)
-class Progress:
-    """Where a search stands; ``seconds_left`` is an estimate, ``budget`` the evaluations allowed."""
-
-    generation: int
-    evaluations: int
-    feasible: int
-    archive: int
-    hypervolume: float
-    seconds: float
-    seconds_left: float
-    budget: int
-
-
-@dataclass(frozen=True)
-class SearchResult:
-    """What a search found.
-
-    rows, objectives: the archive (designs, columns) and (designs, 3); fixed_rows, fixed_objectives: the front
-    of designs no bus of which moves. evaluations: completed designs evaluated. least_row: the least violated
-    design, with least_violation. excess: limit -> least normalised excess seen in any design, for the limits
-    no design met. kinds: topology -> its best design. ended: why the search stopped.
-    """
-
-    rows: IntArray
-    objectives: FloatArray
-    fixed_rows: IntArray
-    fixed_objectives: FloatArray
-    evaluations: int
-    feasible: int
-    generations: int
-    seconds: float
-    ended: str
-    least_row: IntArray | None
-    least_violation: float
-    excess: dict[str, float]
-    kinds: dict[str, BestOfKind]
-    history: FloatArray
 
 
 class Search:
@@ -224,6 +185,39 @@ class Search:
             parts.append(self.completion.complete(plan.take(padded))[: len(index)])
         return np.concatenate(parts)
 
+    def state(self) -> dict[str, NDArray[Any]]:
+        """Everything needed to go on bit for bit between two generations, as plain arrays for :meth:`restore`."""
+        return {
+            **{f"engine.{name}": values for name, values in self.engine.state().items()},
+            **{f"record.{name}": values for name, values in self.record.state().items()},
+            "generator": generator_words(self.rng),
+            "generation": np.array([self.generation], dtype=np.int64),
+            "owed": np.array([self.owed]),
+            "credit_names": np.array(list(self.credit), dtype=np.str_),
+            "credit": np.array(list(self.credit.values()), dtype=np.int64).reshape(-1, 2),
+        }
+
+    def restore(self, state: Mapping[str, NDArray[Any]]) -> None:
+        """Go on from a :meth:`state` of a search of the same problem, population and seed.
+
+        Raises
+        ------
+        ValueError : arrays that do not fit this search
+        """
+        self.engine.restore(part_of(state, "engine"))
+        self.record.restore(part_of(state, "record"))
+        self.rng = generator_from_words(state["generator"])
+        self.generation = int(state["generation"][0])
+        self.owed = float(state["owed"][0])
+        credit = zip(state["credit_names"], state["credit"], strict=True)
+        self.credit = {str(name): (int(tried), int(won)) for name, (tried, won) in credit}
+
+
+def part_of(state: Mapping[str, NDArray[Any]], part: str) -> dict[str, NDArray[Any]]:
+    """Return the arrays of one part of a state, ``part.name`` under ``name``."""
+    start = f"{part}."
+    return {name.removeprefix(start): values for name, values in state.items() if name.startswith(start)}
+
 
 def loneliness(objectives: FloatArray) -> FloatArray:
     """Return chances to be picked, (P,): large where a front is sparse, never nought."""
@@ -266,73 +260,72 @@ def search(
     seconds: float | None = None,
     progress: Callable[[Progress], None] | None = None,
     stop: Callable[[], bool] | None = None,
+    keep: Keep | None = None,
+    resume: Mapping[str, NDArray[Any]] | None = None,
 ) -> SearchResult:
     """Search a problem until the budget is spent, the archive stops growing, or somebody stops it.
 
     The same problem, budget and seed give the same archive; ``seconds`` and ``stop`` are outside that promise.
-    An interrupt from the keyboard ends the search and keeps what it found.
+    An interrupt from the keyboard ends the search and keeps what it found. After each generation ``keep`` is
+    offered the state, and told to take it when the search is stopped early; a search that goes on from one
+    (``resume``) ends like one never stopped.
+
+    Raises
+    ------
+    ValueError : a state to resume that does not fit this search
     """
     began = time.monotonic()
     run = Search(evaluator, population=population, seed=seed, seeds_rows=seeds_rows)
     stagnation = Stagnation(stagnation_generations)
-    ended = "budget spent"
+    ended, early, spent_before, tried_before = "", False, 0.0, 0
+    if resume is not None:
+        ended, spent_before = restore_search(run, stagnation, resume)
+        tried_before = run.record.evaluations
+
+    def spent() -> float:
+        return spent_before + time.monotonic() - began
+
+    def state() -> dict[str, NDArray[Any]]:
+        return search_state(run, stagnation, "" if early else ended, spent())
+
     try:
-        while run.record.evaluations < evaluations:
+        while not ended:
             run.step()
-            still = stagnation.update(run.record.archive.objectives)
-            spent = time.monotonic() - began
+            if stagnation.update(run.record.archive.objectives):
+                ended = NO_GROWTH
+            elif run.record.evaluations >= evaluations:
+                ended = "budget spent"
+            now = time.monotonic() - began
             if progress is not None:
-                progress(progress_of(run, stagnation, spent, evaluations, seconds))
-            if still:
-                ended = "no more growth"
-                break
-            if seconds is not None and spent >= seconds:
-                ended = "time spent"
-                break
-            if stop is not None and stop():
-                ended = "stopped"
-                break
+                pace = (run.record.evaluations - tried_before) / max(now, 1e-9)
+                standing = (run.record, run.generation, stagnation.history)
+                progress(progress_of(*standing, spent(), pace, evaluations, seconds))
+            if not ended and seconds is not None and now >= seconds:
+                ended, early = "time spent", True
+            if not ended and stop is not None and stop():
+                ended, early = "stopped", True
+            if keep is not None:
+                keep(run.record.evaluations, state, at_once=early)
     except KeyboardInterrupt:
         ended = "interrupted"
-    return result_of(run, stagnation, time.monotonic() - began, ended)
+    return result_of(run.record, run.generation, stagnation.history, spent(), ended)
 
 
-def progress_of(
-    run: Search, stagnation: Stagnation, spent: float, budget: int, seconds: float | None
-) -> Progress:
-    """Return where the search stands."""
-    record = run.record
-    rate = record.evaluations / max(spent, 1e-9)
-    left = max(budget - record.evaluations, 0) / max(rate, 1e-9)
-    if seconds is not None:
-        left = min(left, max(seconds - spent, 0.0))
-    volume = float(stagnation.history[-1]) if len(stagnation.history) else 0.0
-    return Progress(
-        run.generation, record.evaluations, record.feasible, len(record.archive), volume, spent, left, budget
-    )
-
-
-def result_of(run: Search, stagnation: Stagnation, spent: float, ended: str) -> SearchResult:
-    """Return what the search found."""
-    record = run.record
-    excess = {
-        limit.name: float(least)
-        for limit, least in zip(LIMITS, record.least_excess, strict=True)
-        if np.isfinite(least) and least > 0.0
+def search_state(run: Search, stagnation: Stagnation, ended: str, spent: float) -> dict[str, NDArray[Any]]:
+    """Return the state of a search between two generations; ``ended`` where it will not go on."""
+    return {
+        **{f"search.{name}": values for name, values in run.state().items()},
+        **{f"stagnation.{name}": values for name, values in stagnation.state().items()},
+        "ended": np.array([ended], dtype=np.str_),
+        "spent_s": np.array([spent]),
     }
-    return SearchResult(
-        rows=record.archive.rows.copy(),
-        objectives=record.archive.objectives.copy(),
-        fixed_rows=record.fixed.rows.copy(),
-        fixed_objectives=record.fixed.objectives.copy(),
-        evaluations=record.evaluations,
-        feasible=record.feasible,
-        generations=run.generation,
-        seconds=spent,
-        ended=ended,
-        least_row=record.least_row,
-        least_violation=record.least_sum,
-        excess=excess,
-        kinds=dict(sorted(record.kinds.items())),
-        history=stagnation.history,
-    )
+
+
+def restore_search(run: Search, stagnation: Stagnation, state: Mapping[str, NDArray[Any]]) -> tuple[str, float]:
+    """Bring a search to a :func:`search_state`; return why it had ended, or nothing, and the seconds spent."""
+    run.restore(part_of(state, "search"))
+    stagnation.restore(part_of(state, "stagnation"))
+    return str(state["ended"][0]), float(state["spent_s"][0])
+
+
+__all__ = ["Keep", "Progress", "Search", "SearchResult", "search"]

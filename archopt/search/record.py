@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from archopt.model.evaluator import Evaluation
 from archopt.model.limits import LIMITS
@@ -84,6 +87,52 @@ class Record:
                 self.kinds[name] = BestOfKind(
                     rows[best].copy(), objectives[best].copy(), float(violation[best])
                 )
+
+    def state(self) -> dict[str, NDArray[Any]]:
+        """Everything recorded, as plain arrays for :meth:`restore`."""
+        kinds = [self.kinds[name] for name in self.kinds]
+        width = self.problem.layout.width
+        none = np.zeros((0, width), dtype=np.int64)
+        return {
+            **{f"archive_{name}": values for name, values in self.archive.state().items()},
+            **{f"fixed_{name}": values for name, values in self.fixed.state().items()},
+            "counts": np.array([self.evaluations, self.feasible], dtype=np.int64),
+            "least_row": none if self.least_row is None else self.least_row[None],
+            "least_sum": np.array([self.least_sum]),
+            "least_excess": self.least_excess.copy(),
+            "kind_names": np.array(list(self.kinds), dtype=np.str_),
+            "kind_rows": np.array([best.row for best in kinds], dtype=np.int64).reshape(-1, width),
+            "kind_objectives": np.array([best.objectives for best in kinds], dtype=np.float64).reshape(-1, 3),
+            "kind_violation": np.array([best.violation for best in kinds], dtype=np.float64),
+        }
+
+    def restore(self, state: Mapping[str, NDArray[Any]]) -> None:
+        """Go on from a :meth:`state` of a record of the same problem.
+
+        Raises
+        ------
+        ValueError : arrays that do not fit
+        """
+        self.archive, self.fixed = (
+            Archive.from_state({name: state[f"{which}_{name}"] for name in ("rows", "objectives")})
+            for which in ("archive", "fixed")
+        )
+        least = np.asarray(state["least_row"], dtype=np.int64)
+        excess = np.asarray(state["least_excess"], dtype=np.float64)
+        width = self.problem.layout.width
+        if {least.shape[1], state["kind_rows"].shape[1], state["archive_rows"].shape[1]} != {width}:
+            raise ValueError(f"a record of rows that are not {width} columns wide does not fit this problem")
+        if excess.shape != self.least_excess.shape:
+            raise ValueError(f"a record of {len(excess)} limits does not fit {len(LIMITS)}")
+        self.evaluations, self.feasible = (int(count) for count in state["counts"])
+        self.least_row = least[0] if len(least) else None
+        self.least_sum = float(state["least_sum"][0])
+        self.least_excess = excess
+        columns = (state["kind_names"], state["kind_rows"], state["kind_objectives"], state["kind_violation"])
+        self.kinds = {
+            str(name): BestOfKind(row.astype(np.int64), values.astype(np.float64), float(violation))
+            for name, row, values, violation in zip(*columns, strict=True)
+        }
 
     def score_of(self, best: BestOfKind) -> float:
         """Return what a best design is compared by: lifetime cost, or its violation where infeasible."""
