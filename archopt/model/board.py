@@ -11,13 +11,14 @@ from typing import Protocol
 
 import numpy as np
 
+from archopt.model.converter_loss import ConverterLoss
+from archopt.model.copper_heat import CopperHeat
 from archopt.model.hardware import Hardware
 from archopt.model.parameters import FloatArray
 from archopt.model.problem import Problem
 from archopt.model.space import INPUT
 from archopt.model.stages import operate, ripple_square_a2
-from archopt.model.states import JUMP, MIX, StateTable
-from archopt.physics import bus_converter
+from archopt.model.states import JUMP, StateTable
 from archopt.physics.transient import bus_dip_v
 
 FAST_PASSES = 3
@@ -29,10 +30,18 @@ STEP_POWER_RATIO = 1.2  # stage input over output power where the worst mix has 
 
 
 class StageLoss(Protocol):
-    """Returns the loss of every stage in every state, (P, S, R) W."""
+    """Gives the loss of every stage of one batch in every state, (P, S, R) W."""
 
-    def __call__(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
+    def __call__(self, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
         """Return losses at the given stage inputs (V) and stage output currents (A)."""
+        ...
+
+
+class StageLosses(Protocol):
+    """Gives the stage losses of any batch of designs."""
+
+    def of(self, hardware: Hardware) -> StageLoss:
+        """Return those of one batch."""
         ...
 
 
@@ -40,10 +49,11 @@ class StageLoss(Protocol):
 class Solution:
     """The solved board: P designs, S states, R rails, two buses.
 
-    stage_v, stage_in_w, stage_loss_w, current_a, pour_w (P, S, R); bus_v, bus_a, bus_w, converter_loss_w,
-    plane_w (P, S, 2); node_v (after the input path), input_a, input_w, loss_w, bias_in_w, bias_out_w,
-    supervisor_w, path_w, missing_w (power beyond what the path can deliver), deliverable_w (P, S);
-    dip_v, step_w (P, 2, B); step_ratio (P, B, R): stage input over output power at the worst mix, for steps.
+    stage_v, stage_in_w, stage_loss_w, current_a, pour_w, pour_ohm (loop, as warm as it runs), pour_rise_k (P, S, R);
+    bus_v, bus_a, bus_w, converter_loss_w, plane_w, plane_rise_k (P, S, 2); node_v (after the input path), input_a,
+    input_w, loss_w, bias_in_w, bias_out_w, supervisor_w, path_w, missing_w (power beyond what the path can deliver),
+    deliverable_w (P, S);
+    dip_v, step_w (P, 2, B + 1); step_ratio (P, B + 1, R): stage input over output power at the worst mix, for steps.
     """
 
     stage_v: FloatArray
@@ -51,12 +61,15 @@ class Solution:
     stage_loss_w: FloatArray
     current_a: FloatArray
     pour_w: FloatArray
+    pour_ohm: FloatArray
+    pour_rise_k: FloatArray
     bus_v: FloatArray
     bus_a: FloatArray
     bus_w: FloatArray
     converter_loss_w: FloatArray
     converter_degc: FloatArray
     plane_w: FloatArray
+    plane_rise_k: FloatArray
     node_v: FloatArray
     input_a: FloatArray
     input_w: FloatArray
@@ -78,12 +91,16 @@ class DirectStages:
         self.problem = problem
         self.states = states
 
-    def __call__(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
-        """Return losses by evaluating every stage."""
+    def of(self, hardware: Hardware) -> StageLoss:
+        """Return what evaluates every stage of a batch."""
+        return lambda stage_v, current_a: self.loss_w(hardware, stage_v, current_a)
+
+    def loss_w(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
+        """Return losses by evaluating every stage, (P, S, R) W."""
         problem = self.problem
         point = operate(
             problem.stages,
-            np.broadcast_to(hardware.stage[:, None, :], stage_v.shape),
+            hardware.stage[:, None, :],
             hardware.running,
             stage_v,
             problem.rails.voltage_v,
@@ -162,7 +179,7 @@ def via_drop_v(problem: Problem, rail_a: FloatArray, bus: int) -> FloatArray:
     return np.asarray(2.0 * (shared + planes.own_ohm[bus] * rail_a))
 
 
-def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: StageLoss, *, exact: bool) -> Solution:
+def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: StageLosses, *, exact: bool) -> Solution:
     """Solve the board for a batch of designs.
 
     With ``exact`` the fixed point is iterated until nothing moves by more than 1e-13 relative, else a fixed
@@ -178,7 +195,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
     node_v = np.broadcast_to(states.input_v, (len(hardware.stage), len(states.hours))).copy()
     index = np.maximum(hardware.converter, 0)
     has_converter = hardware.converter >= 0
-    loss_of = converters.loss.take(index[:, None, :])
+    converter_losses = ConverterLoss.of(converters, index[:, None, :])
     on_bus = hardware.on_bus[:, None, :, :]
     alive = (on_bus & ~off[None, :, None, :]).any(axis=3) & has_converter[:, None, :]
     ratio = converters.ratio[index][:, None, :]
@@ -193,9 +210,14 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
     bias_node = bias_in - bias_bus
     dip_v = np.zeros(hardware.band_v.shape)
     step_w = np.zeros(hardware.band_v.shape)
-    step_ratio = np.ones((len(hardware.stage), states.bands, len(rails.names)))
+    step_ratio = np.ones((len(hardware.stage), states.places, len(rails.names)))
     jump_index, jump_band = states.of_kind(JUMP), states.band[states.of_kind(JUMP)]
     current = base_a
+    stage_loss = stages.of(hardware)
+    heat = CopperHeat(problem, states, hardware)
+    pour_rise = heat.pour_rise_k()
+    pour_ohm = heat.pour_ohm(pour_rise)
+    plane_rise, plane_factor = np.zeros((*node_v.shape, 2)), np.ones((*node_v.shape, 2))
     drop = np.zeros((*node_v.shape, len(rails.names)))
     previous = np.full_like(node_v, np.inf)
     passes = EXACT_PASSES if exact else FAST_PASSES
@@ -204,18 +226,20 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
         stage_v = np.maximum(feed_v - drop, LEAST_STAGE_SHARE * feed_v)
         stage_v = np.where(direct[:, None, :], node_v[..., None], stage_v)
         stage_v = np.maximum(np.where(has_parent[:, None, :], parent_v[:, None, :], stage_v), 1e-3)
-        stage_loss_w = stage_loss(hardware, stage_v, current)
-        pour_w = current**2 * hardware.pour_ohm[:, None, :]
+        stage_loss_w = stage_loss(stage_v, current)
+        pour_w = current**2 * pour_ohm
         delivered = current * rails.voltage_v + np.where(rails.remote_sense, pour_w, 0.0)
         stage_in = delivered + stage_loss_w
         if with_children and (turn == 0 or exact):
             current = base_a + children_current_a(problem, hardware, stage_in)
-            stage_loss_w = stage_loss(hardware, stage_v, current)
-            pour_w = current**2 * hardware.pour_ohm[:, None, :]
+            stage_loss_w = stage_loss(stage_v, current)
+            heat.with_children(pour_rise, current)
+            pour_ohm = heat.pour_ohm(pour_rise)
+            pour_w = current**2 * pour_ohm
             delivered = current * rails.voltage_v + np.where(rails.remote_sense, pour_w, 0.0)
             stage_in = delivered + stage_loss_w
         if turn == 0:
-            mix = states.of_kind(MIX)[0::2]
+            mix = states.mix_low
             output_w = current[:, mix] * rails.voltage_v
             in_over_out = np.where(output_w > 0, stage_in[:, mix] / np.maximum(output_w, 1e-12), STEP_POWER_RATIO)
             step_ratio = np.minimum(in_over_out, LARGEST_STEP_RATIO)
@@ -229,31 +253,35 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
                 band_volts,
                 converters.bandwidth_rad_s[index][..., None],
                 converters.delay_s[index][..., None],
-                hardware.bulk_f[..., None],
+                hardware.bulk_f,
                 hardware.bulk_esr_ohm[..., None],
                 standing_w(hardware, stage_in[:, mix], stage_in[:, jump_index], step_w),
             )
             dip_v = np.where(has_converter[..., None], dip_v, 0.0)
         rail_a = stage_in / stage_v
         on_a = rail_a[:, :, None, :] * on_bus
+        bias_a = np.where(alive[..., 0], bias_bus / np.maximum(bus_v[..., 0], 1e-3), 0.0)
+        if exact or turn == passes - 2:  # a pass late is near enough: the drop moves the current by per cents
+            plane_rise = heat.plane_rise_k(on_a, bias_a)
+            plane_factor = heat.factor(plane_rise)
         fresh_drop = np.zeros_like(drop)
         plane_w = np.empty((*node_v.shape, 2))
         for bus in range(2):
             part = np.einsum("psq,rq->psr", on_a[:, :, bus], problem.bus_squares[bus])
-            part = part * hardware.plane_ohm[:, bus, None, None] * on_bus[:, :, bus]
+            part *= hardware.plane_ohm[:, bus, None, None]
             if problem.planes.with_vias:
-                part += via_drop_v(problem, on_a[:, :, bus], bus) * on_bus[:, :, bus]
+                part += via_drop_v(problem, on_a[:, :, bus], bus)
+            part *= plane_factor[..., bus, None] * on_bus[:, :, bus]
             plane_w[..., bus] = (part * on_a[:, :, bus]).sum(axis=2)
             fresh_drop += part
         drop = fresh_drop
-        bias_a = np.where(alive[..., 0], bias_bus / np.maximum(bus_v[..., 0], 1e-3), 0.0)
         bus_a = on_a.sum(axis=3)
         bus_a[..., 0] += bias_a
         bus_w = (stage_in[:, :, None, :] * on_bus).sum(axis=3) + plane_w
         bus_w[..., 0] += np.where(alive[..., 0], bias_bus, 0.0)
         per_unit = bus_a / hardware.units_running
-        converter = bus_converter.losses(
-            loss_of, node_v[..., None], np.maximum(bus_v, 1e-3), per_unit, states.ambient_degc[:, None]
+        converter = converter_losses(
+            node_v[..., None], np.maximum(bus_v, 1e-3), per_unit, states.ambient_degc[:, None]
         )
         converter_loss = np.where(alive, converter.total_w * hardware.units_running, 0.0)
         converter_in = np.where(alive, bus_w + converter_loss, 0.0)
@@ -281,12 +309,15 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stage_loss: 
         stage_loss_w=stage_loss_w,
         current_a=current,
         pour_w=pour_w,
+        pour_ohm=pour_ohm,
+        pour_rise_k=pour_rise,
         bus_v=bus_v,
         bus_a=bus_a,
         bus_w=bus_w,
         converter_loss_w=converter_loss,
         converter_degc=np.asarray(converter.temperature_degc),
         plane_w=plane_w,
+        plane_rise_k=plane_rise,
         node_v=node_v,
         input_a=input_a,
         input_w=input_w,

@@ -9,6 +9,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from archopt.model.hardware import Hardware
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
@@ -18,21 +19,26 @@ from archopt.model.stages import operate, ripple_square_a2
 from archopt.model.states import StateTable
 
 NODES = 32
+CHUNK = 400_000  # operating points worked out at once while tables are made
+HALF, SIXTH, OUTER = np.float32(0.5), np.float32(1.0 / 6.0), np.float32(1.5)
 REACH_BELOW_BUS = 0.80  # of the lowest bus voltage: how far drop and dip may pull a stage input
+
+SingleArray = NDArray[np.float32]
 
 
 @dataclass(frozen=True)
 class LossTables:
-    """Tables of a problem in its states.
+    """Tables of a problem in its states, in single precision: a cubic between nodes is worth less than that.
 
     base (R, N): first row of a rail's stage, -1 where it has none; row = base + running - 1.
-    loss_w (rows, S, K): loss without bank; ripple_square (rows, S, K): mean square of the ripple of all running phases.
-    start_v, step_v (N,): voltage of the first node and between nodes, a stage.
+    loss (rows, K, S): loss without bank, W; ripple (rows, K, S): mean square of the ripple of all running phases, A^2;
+    states last, as those of a band are read together. start_v, step_v (N,): voltage of the first node and between
+    nodes, a stage.
     """
 
     base: IntArray
-    loss_w: FloatArray
-    ripple_square: FloatArray
+    loss: SingleArray
+    ripple: SingleArray
     start_v: FloatArray
     step_v: FloatArray
     row_stage: IntArray
@@ -40,9 +46,19 @@ class LossTables:
     row_running: IntArray
 
     @property
+    def loss_w(self) -> SingleArray:
+        """Loss without bank, (rows, S, K) W: a view."""
+        return self.loss.transpose(0, 2, 1)
+
+    @property
+    def ripple_square(self) -> SingleArray:
+        """Mean square of the ripple of all running phases, (rows, S, K) A^2: a view."""
+        return self.ripple.transpose(0, 2, 1)
+
+    @property
     def bytes(self) -> int:
         """Memory the tables take."""
-        return int(self.loss_w.nbytes + self.ripple_square.nbytes)
+        return int(self.loss.nbytes + self.ripple.nbytes)
 
 
 def stage_reach(problem: Problem) -> tuple[FloatArray, FloatArray]:
@@ -86,24 +102,24 @@ def make_tables(problem: Problem, states: StateTable) -> LossTables:
             base[r, s] = len(rows)
             rows += [(r, int(s), running) for running in range(1, int(problem.phases_high[r, s]) + 1)]
     row = np.array(rows, dtype=np.int64).reshape(-1, 3)
-    loss = np.empty((len(row), len(states.hours), NODES))
+    loss = np.empty((len(row), NODES, len(states.hours)), dtype=np.float32)
     ripple = np.empty_like(loss)
-    chunk = max(1, 400_000 // (loss.shape[1] * NODES))
-    node = np.arange(NODES)
+    chunk = max(1, CHUNK // (len(states.hours) * NODES))
+    node = np.arange(NODES)[:, None]
     for start in range(0, len(row), chunk):
         part = row[start : start + chunk]
         rail, stage, running = part[:, 0, None, None], part[:, 1, None, None], part[:, 2, None, None]
         volts = low[stage] + step[stage] * node
-        current = states.current_a.T[part[:, 0]][:, :, None]
+        current = states.current_a.T[part[:, 0]][:, None, :]
         output_v = problem.rails.voltage_v[rail]
-        point = operate(problem.stages, stage, running, volts, output_v, current, states.ambient_degc[:, None])
+        point = operate(problem.stages, stage, running, volts, output_v, current, states.ambient_degc)
         loss[start : start + chunk] = point.loss_w
         per_phase = current / running
         ripple[start : start + chunk] = running * ripple_square_a2(problem.stages, stage, volts, output_v, per_phase)
     return LossTables(
         base=base,
-        loss_w=loss,
-        ripple_square=ripple,
+        loss=loss,
+        ripple=ripple,
         start_v=low,
         step_v=step,
         row_stage=row[:, 1],
@@ -124,47 +140,101 @@ def cubic_weights(t: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, Fl
 
 
 class TableStages:
-    """Stage losses read from the tables; rails with children, whose current is not the state's, by physics."""
+    """Stage losses read from the tables."""
 
     def __init__(self, problem: Problem, states: StateTable, tables: LossTables) -> None:
         self.problem = problem
         self.states = states
         self.tables = tables
 
-    def __call__(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
-        """Return losses by interpolation, (P, S, R) W."""
-        tables, states = self.tables, self.states
-        stage = hardware.stage
-        rail = np.arange(stage.shape[1])
-        base = tables.base[rail, stage]
-        row = np.maximum(base, 0)[:, None, :] + hardware.running - 1
-        row = np.minimum(row, len(tables.row_stage) - 1)
-        place = (stage_v - tables.start_v[stage][:, None, :]) / tables.step_v[stage][:, None, :]
-        node = np.clip(place.astype(np.int64), 1, NODES - 3)
-        t = np.clip(place - node, -1.5, 2.5)
-        flat = (row * len(states.hours) + np.arange(len(states.hours))[:, None]) * NODES + node
-        weights = cubic_weights(t)
-        values = tables.loss_w.ravel()
-        loss = values[flat - 1] * weights[0]
-        loss += values[flat] * weights[1]
-        loss += values[flat + 1] * weights[2]
-        loss += values[flat + 2] * weights[3]
-        ripple = tables.ripple_square.ravel()
-        square = ripple[flat] * (1.0 - t) + ripple[flat + 1] * t
-        loss += hardware.bank_esr_ohm[:, None, :] * square
-        if hardware.children.any():
-            self.correct_parents(hardware, stage_v, current_a, loss)
-        return np.where(states.off | (base < 0)[:, None, :], 0.0, np.maximum(loss, 0.0))
+    def of(self, hardware: Hardware) -> TableReader:
+        """Return what reads the losses of one batch of designs."""
+        return TableReader(self.problem, self.states, self.tables, hardware)
 
-    def correct_parents(self, hardware: Hardware, stage_v: FloatArray, current_a: FloatArray, loss: FloatArray) -> None:
-        """Replace the losses of rails with children by direct physics, in place."""
-        problem = self.problem
-        p, r = np.nonzero(hardware.children)
-        stage = hardware.stage[p, r][:, None]
-        running = hardware.running[p, :, r]
+
+class TableReader:
+    """Reads the stage losses of one batch; rails with children, whose current is not the state's, by physics.
+
+    The four nodes around an operating point are gathered once and kept as a cubic: while the board is solved the
+    point hardly moves, and where it stays between the outer nodes the cubic still interpolates.
+    Arrays are (P, R, S) here.
+    """
+
+    def __init__(self, problem: Problem, states: StateTable, tables: LossTables, hardware: Hardware) -> None:
+        self.problem, self.states, self.tables, self.hardware = problem, states, tables, hardware
+        stage = hardware.stage
+        base = tables.base[np.arange(stage.shape[1]), stage]
+        row = np.maximum(base, 0)[..., None] + hardware.running.transpose(0, 2, 1) - 1
+        self.stride = len(states.hours)
+        self.first = np.minimum(row, len(tables.row_stage) - 1) * (NODES * self.stride) + np.arange(self.stride)
+        self.start_v = tables.start_v[stage][..., None].astype(np.float32)
+        self.per_volt = (1.0 / tables.step_v[stage])[..., None].astype(np.float32)
+        self.esr_ohm = hardware.bank_esr_ohm[..., None].astype(np.float32)
+        self.silent = states.off.T | (base < 0)[..., None] if states.off.any() or (base < 0).any() else None
+        self.parents = np.nonzero(hardware.children)
+        self.node: SingleArray | None = None
+        self.cubic: list[SingleArray] = []
+
+    def __call__(self, stage_v: FloatArray, current_a: FloatArray) -> FloatArray:
+        """Return losses by interpolation, (P, S, R) W, at stage inputs (V) and stage output currents (A)."""
+        place = (stage_v.transpose(0, 2, 1).astype(np.float32) - self.start_v) * self.per_volt
+        if self.node is None:
+            self.node = nearest(place)
+            self.cubic = self.gather(self.first, self.node, self.esr_ohm)
+        offset = place - self.node
+        outside = np.flatnonzero(np.abs(offset - HALF) > OUTER)
+        if len(outside):
+            self.move(outside, place)
+            offset = np.clip(place - self.node, -OUTER, OUTER + 1)
+        constant, linear, square, cube = self.cubic
+        loss = cube * offset
+        for coefficient in (square, linear, constant):
+            loss += coefficient
+            if coefficient is not constant:
+                loss *= offset
+        out = np.maximum(loss, 0.0, dtype=np.float64)
+        if len(self.parents[0]):
+            self.by_physics(stage_v, current_a, out)
+        if self.silent is not None:
+            out[self.silent] = 0.0
+        return out.transpose(0, 2, 1)
+
+    def gather(self, first: IntArray, node: SingleArray, esr_ohm: SingleArray) -> list[SingleArray]:
+        """Return the cubic through four nodes, from the constant up, of the distance from ``node`` in steps."""
+        flat = first + node.astype(np.int64) * self.stride
+        loss, ripple = self.tables.loss.reshape(-1), self.tables.ripple.reshape(-1)
+        here, after = loss.take(flat), loss.take(flat + self.stride)
+        before, beyond = loss.take(flat - self.stride), loss.take(flat + 2 * self.stride)
+        square_a2 = ripple.take(flat)
+        bank, slope = esr_ohm * square_a2, esr_ohm * (ripple.take(flat + self.stride) - square_a2)
+        rise = after - here
+        square = HALF * (before - here + rise)
+        cube = SIXTH * (beyond - before) - HALF * rise
+        linear = rise - square - cube
+        return [here + bank, linear + slope, square, cube]
+
+    def move(self, outside: IntArray, place: SingleArray) -> None:
+        """Gather anew where the operating point has left its nodes."""
+        assert self.node is not None
+        shape = place.shape
+        node = nearest(place.reshape(-1)[outside])
+        esr = np.broadcast_to(self.esr_ohm, shape).reshape(-1)[outside]
+        self.node.reshape(-1)[outside] = node
+        for kept, fresh in zip(self.cubic, self.gather(self.first.reshape(-1)[outside], node, esr), strict=True):
+            kept.reshape(-1)[outside] = fresh
+
+    def by_physics(self, stage_v: FloatArray, current_a: FloatArray, loss: FloatArray) -> None:
+        """Replace the losses of rails with children, in place."""
+        problem, hardware = self.problem, self.hardware
+        p, r = self.parents
+        stage, running = hardware.stage[p, r][:, None], hardware.running[p, :, r]
         volts, amps = stage_v[p, :, r], current_a[p, :, r]
         output_v = problem.rails.voltage_v[r][:, None]
         point = operate(problem.stages, stage, running, volts, output_v, amps, self.states.ambient_degc)
         square = ripple_square_a2(problem.stages, stage, volts, output_v, amps / running)
-        esr = hardware.bank_esr_ohm[p, r][:, None]
-        loss[p, :, r] = point.loss_w + esr * running * square
+        loss[p, r] = point.loss_w + hardware.bank_esr_ohm[p, r][:, None] * running * square
+
+
+def nearest(place: SingleArray) -> SingleArray:
+    """Return the node below each place, as far from the ends as a cubic through four nodes needs."""
+    return np.asarray(np.clip(np.floor(place), 1, NODES - 3))
