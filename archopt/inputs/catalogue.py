@@ -11,10 +11,12 @@ from pydantic import BaseModel
 
 from archopt.errors import InputError, Problem
 from archopt.inputs.catalogue_checks import check_family, check_parts
-from archopt.inputs.parts import FAMILIES, Part, Source
+from archopt.inputs.measured import named_table
+from archopt.inputs.parts import FAMILIES, MAY_LACK, Part, Source
 from archopt.inputs.problems import Notebook, nearest, validated
 from archopt.inputs.resolved import Catalogue
 from archopt.inputs.text_files import CsvRows, read_csv
+from archopt.physics.measured import LossTable
 
 SOURCES = "sources.csv"
 
@@ -44,6 +46,7 @@ class _Reading:
     sources: dict[str, Source] = field(default_factory=dict)
     file_of: dict[str, str] = field(default_factory=dict)
     place_of: dict[str, tuple[str, int]] = field(default_factory=dict)
+    measured: dict[str, LossTable] = field(default_factory=dict)
     digest: Any = field(default_factory=hashlib.sha256)
     complete: bool = True
 
@@ -71,7 +74,7 @@ def load_catalogue(root: Path | None, own: Path | None, own_shown: str, notebook
     reading.complete = reading.complete and len(notebook.problems) == before
     check_parts(reading.families, reading.sources, reading.place_of, notebook)
     content_hash = str(reading.digest.hexdigest())
-    return Catalogue(reading.families, reading.sources, reading.file_of, content_hash)
+    return Catalogue(reading.families, reading.sources, reading.file_of, content_hash, reading.measured)
 
 
 def _read_folder(root: Path, shown: str, reading: _Reading, notebook: Notebook, override: bool) -> None:
@@ -94,6 +97,7 @@ def _read_folder(root: Path, shown: str, reading: _Reading, notebook: Notebook, 
         for file in (file for file in files if file.suffix == ".csv"):
             shown_file = f"{shown}/{file.relative_to(root).as_posix()}"
             _read_family(FAMILIES[family], file, shown_file, reading, seen, notebook)
+    _read_tables(root, shown, seen, reading, notebook)
 
 
 def _is_folder(path: Path) -> bool:
@@ -124,7 +128,7 @@ def _read_rows(path: Path, shown: str, model: type[BaseModel], reading: _Reading
         if column not in columns:
             hint = nearest(column, columns, 40)
             notebook.problem(f"row 1, column {column or '(no name)'}", f"unknown; {hint}", shown)
-    missing = [column for column in columns if column not in table.header]
+    missing = [column for column in columns if column not in table.header and column not in MAY_LACK]
     if missing:
         notebook.problem("row 1", f"column {', '.join(missing)} missing", shown)
     if missing or any(column not in columns for column in table.header):
@@ -174,6 +178,22 @@ def _read_family(
         reading.file_of[name] = shown
         reading.place_of[name] = (shown, line)
         check_family(part, shown, line, notebook)
+
+
+def _read_tables(root: Path, shown: str, names: set[str], reading: _Reading, notebook: Notebook) -> None:
+    """Read the measured points that the rows of one catalogue folder name; a row that overrides loses the other's."""
+    for rows in reading.families.values():
+        for part in (rows[name] for name in rows if name in names):
+            reading.measured.pop(part.name, None)
+            named = str(getattr(part, "measured_points", ""))
+            if not named:
+                continue
+            file, line = reading.place_of[part.name]
+            path = root / named
+            table = named_table(part, path, f"{shown}/{named}", (file, f"row {line}, column measured_points"), notebook)
+            if table is not None:
+                reading.measured[part.name] = table
+                reading.digest.update(path.name.encode() + path.read_bytes())
 
 
 def _row_place(shown: str, line: int) -> Any:

@@ -9,11 +9,12 @@ from pathlib import Path
 
 import numpy as np
 
-from archopt.errors import InputError
+from archopt.errors import InputError, Problem
+from archopt.inputs.parts import BusConverter, Part
 from archopt.inputs.problems import Notebook, brief, nearest
 from archopt.inputs.text_files import CsvRows, read_csv
 from archopt.physics.arrays import FloatArray, IntArray
-from archopt.physics.measured import LossTable, table_loss_w
+from archopt.physics.measured import EDGE_WIDTH, LossTable, beyond_table, table_loss_w
 
 NEEDED = ("input_voltage_v", "output_voltage_v", "current_a")
 RESULTS = ("efficiency", "loss_w")
@@ -85,7 +86,7 @@ def settings(points: MeasuredPoints) -> IntArray:
     return np.unique(numbers, axis=0, return_inverse=True)[1].reshape(-1).astype(np.int_)
 
 
-def read_points(path: str | Path, units: int = 1) -> MeasuredPoints:
+def read_points(path: str | Path, units: int = 1, shown: str = "") -> MeasuredPoints:
     """Return the measured points of a CSV file, per unit.
 
     Parameters
@@ -93,13 +94,14 @@ def read_points(path: str | Path, units: int = 1) -> MeasuredPoints:
     path : CSV with input_voltage_v, output_voltage_v, current_a, either efficiency (0 to 1) or loss_w, and
         optionally temperature_degc, the local air (25 degC where the column is not there)
     units : how many units or phases shared the current when it was measured; current and loss are divided by it
+    shown : the path as problems name it; as given where empty
 
     Raises
     ------
     InputError : with every fault of the file
     """
-    notebook = Notebook(str(path))
-    table = read_csv(Path(path), str(path), "measured points", notebook)
+    notebook = Notebook(shown or str(path))
+    table = read_csv(Path(path), notebook.file, "measured points", notebook)
     if table is None:
         raise InputError(notebook.problems)
     _check_header(table.header, notebook)
@@ -120,7 +122,7 @@ def read_points(path: str | Path, units: int = 1) -> MeasuredPoints:
         loss = column["output_voltage_v"] * current * (1.0 / column["efficiency"] - 1.0)
     stated = "temperature_degc" in column
     return MeasuredPoints(
-        file=str(path),
+        file=notebook.file,
         lines=tuple(line for line, _ in table.rows),
         input_v=column["input_voltage_v"],
         output_v=column["output_voltage_v"],
@@ -197,16 +199,21 @@ def _check_point(line: int, values: dict[str, float], notebook: Notebook) -> Non
         note("temperature_degc", f"{temperature:g} degC is out of range; it must be -60 to 150, the local air")
 
 
-def loss_table(points: MeasuredPoints) -> LossTable:
+def loss_table(points: MeasuredPoints, output_follows: bool = False) -> LossTable:
     """Return the points as a table over input voltage, output voltage and current, repeats averaged.
+
+    Parameters
+    ----------
+    output_follows : of a fixed ratio, whose output is what the input makes of it: a table over input and current
 
     Raises
     ------
     InputError : the points do not fill the grid (every missing setting is named), or the local air was not one
     """
     axes = (points.input_v, points.output_v, points.current_a)
-    numbers = [level_numbers(values) for values in axes]
-    means = [level_means(values) for values in axes]
+    widths = (LEVEL_WIDTH, math.inf if output_follows else LEVEL_WIDTH, LEVEL_WIDTH)
+    numbers = [level_numbers(values, width) for values, width in zip(axes, widths, strict=True)]
+    means = [level_means(values, width) for values, width in zip(axes, widths, strict=True)]
     total = np.zeros([len(mean) for mean in means])
     count = np.zeros_like(total)
     np.add.at(total, tuple(numbers), points.loss_w)
@@ -225,7 +232,57 @@ def loss_table(points: MeasuredPoints) -> LossTable:
         notebook.problem("", f"{len(missing) - 20} more combinations have no point")
     if notebook.problems:
         raise InputError(notebook.problems)
-    return LossTable(means[0], means[1], means[2], total / count)
+    local = float(points.temperature_degc.mean())
+    return LossTable(means[0], means[1], means[2], total / count, local, output_follows)
+
+
+def part_table(part: Part, points: MeasuredPoints) -> LossTable:
+    """Return the loss table of a part's points.
+
+    Raises
+    ------
+    InputError : no table comes of them, or the part's own ranges reach beyond it, where nothing was measured
+    """
+    fixed_ratio = isinstance(part, BusConverter) and part.kind == "fixed_ratio"
+    table = loss_table(points, fixed_ratio)
+    values = part.model_dump()
+    current = "max_current_a" if "max_current_a" in values else "phase_current_a"
+    notebook = Notebook(points.file)
+    if not table.current_a[-1] > 0:
+        raise InputError([Problem(points.file, "column current_a", "has no loaded point")])
+    for low, high in (("input_min_v", "input_max_v"), ("output_min_v", "output_max_v"), (current, current)):
+        which = {"input_max_v": 0, "output_max_v": 1, current: 2}[high]
+        axis = (table.input_v, table.output_v, table.current_a)[which]
+        for column in dict.fromkeys((low, high)):
+            at = [axis[-1] for axis in (table.input_v, table.output_v, table.current_a)]
+            at[which] = values[column]
+            if beyond_table(table, *at)[which] > EDGE_WIDTH:
+                message = f"{part.name} is stated to {column} {values[column]:g}, measured {axis[0]:g} to {axis[-1]:g}"
+                notebook.problem("", f"{message}; a measured part is used only where it was measured")
+    if notebook.problems:
+        raise InputError(notebook.problems)
+    return table
+
+
+def named_table(
+    part: Part, path: Path, shown: str, place: tuple[str, str], notebook: Notebook
+) -> LossTable | None:
+    """Return the loss table a catalogue row names, or None after noting every fault of it.
+
+    Parameters
+    ----------
+    path, shown : the file of points, and its path as problems name it
+    place : file and place of the row that names it
+    """
+    if not path.is_file():
+        notebook.problem(place[1], f"there is no file {shown}", place[0])
+        return None
+    try:
+        return part_table(part, read_points(path, shown=shown))
+    except InputError as error:
+        for problem in error.problems:
+            notebook.problem(problem.place, problem.message, problem.file)
+        return None
 
 
 def table_left_out_points(table: LossTable) -> float:

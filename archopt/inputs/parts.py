@@ -18,6 +18,14 @@ SHEDDING = (
 )
 
 
+MEASURED_POINTS = (
+    "CSV of measured points, path from this catalogue folder; losses are then read from these points, between them and "
+    "never beyond. Empty, or no such column: losses follow from the row's own numbers"
+)
+#: Columns a file need not have.
+MAY_LACK = ("measured_points",)
+
+
 class Part(BaseModel):
     """Columns every family has.
 
@@ -103,6 +111,7 @@ class BuckStage(Part):
     loop_max_uf: Positive = Field(description="most output capacitance the loop can be compensated for")
     thermal_k_per_w: Positive = Field(description="local air to junction, per phase, at air_speed_m_s")
     air_speed_m_s: Positive = Field(description="air speed that thermal_k_per_w holds at")
+    measured_points: str = Field("", description=MEASURED_POINTS)
 
 
 class Inductor(Part):
@@ -164,6 +173,7 @@ class BusConverter(Part):
     startup_max_uf: Positive = Field(description="largest output capacitance it starts into, per unit")
     wakeup_ms: NotNegative = Field(description="delay until a paralleled unit that was off carries current")
     max_parallel: int = Field(ge=1, le=8, description="most units in parallel")
+    measured_points: str = Field("", description=MEASURED_POINTS)
 
 
 class SingleStage(Part):
@@ -207,6 +217,7 @@ class SingleStage(Part):
     loop_min_uf: NotNegative = Field(description="least output capacitance the loop can be compensated for")
     loop_max_uf: Positive = Field(description="most output capacitance the loop can be compensated for")
     input_capacitance_uf: NotNegative = Field(description="the stage's own input capacitance under bias, per unit")
+    measured_points: str = Field("", description=MEASURED_POINTS)
 
 
 class LinearRegulator(Part):

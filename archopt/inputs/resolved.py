@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from archopt.inputs.floorplan_shape import Floorplan
 from archopt.inputs.parts import Part, Source
+from archopt.physics.measured import LossTable
 
 FloatArray = NDArray[np.float64]
 
@@ -225,9 +226,13 @@ class ResolvedStudy:
 
 @dataclass(frozen=True)
 class Catalogue:
-    """Every part offered, by family and name; sources by key; ``file_of`` says where a part came from."""
+    """Every part offered, by family and name; sources by key; ``file_of`` says where a part came from.
+
+    ``measured`` holds the loss tables of the parts, by name, that name measured points.
+    """
 
     families: dict[str, dict[str, Part]]
     sources: dict[str, Source]
     file_of: dict[str, str]
     content_hash: str
+    measured: dict[str, LossTable] = field(default_factory=dict)

@@ -4,13 +4,20 @@ from __future__ import annotations
 
 import numpy as np
 
+from archopt.model.converter_loss import (
+    BEYOND,
+    ConverterLoss,
+    any_measured,
+    beyond_percent,
+    edge_percent,
+    is_measured,
+)
 from archopt.model.hardware import setting_error_v
 from archopt.model.limits import Ledger
 from archopt.model.parameters import BoolArray, IntArray
 from archopt.model.situation import Situation
 from archopt.model.space import BUS_NAMES
-from archopt.model.states import FALLBACK, JUMP, MIX
-from archopt.physics import bus_converter
+from archopt.model.states import ENERGY, FALLBACK, JUMP, MIX
 from archopt.physics.stability import least_capacitance_f, regulated_source_h, resistance_limit_ohm
 
 LEAST_BUS_V = 1e-3  # keeps the losses of a collapsed bus finite
@@ -46,9 +53,9 @@ def check_buses(situation: Situation, ledger: Ledger) -> None:
         "converter power", bus_w / carrying, converters.limit_w[index][:, None, :], at_most=True, axes=axes,
         applies=here,
     )  # fmt: skip
-    unit = bus_converter.losses(
-        converters.loss.take(index[:, None, :]), solution.node_v[:, steady, None],
-        np.maximum(solution.bus_v[:, steady], LEAST_BUS_V), bus_a / carrying, states.ambient_degc[steady][:, None],
+    unit = ConverterLoss.of(converters, index[:, None, :])(
+        solution.node_v[:, steady, None], np.maximum(solution.bus_v[:, steady], LEAST_BUS_V), bus_a / carrying,
+        states.ambient_degc[steady][:, None],
     )  # fmt: skip
     ledger.add(
         "converter temperature", unit.temperature_degc, study.derating.junction_degc, at_most=True,
@@ -100,7 +107,31 @@ def check_buses(situation: Situation, ledger: Ledger) -> None:
     top_v = np.where(hardware.fixed_ratio, converters.ratio[index] * study.supply.high_v, top_v)
     bulk_rated = problem.capacitors.rated_v[situation.designs.bus("bulk")] * study.derating.voltage
     ledger.add("capacitor voltage", top_v, bulk_rated, at_most=True, axes=(BUS_NAMES,), applies=used)
+    check_measured(situation, ledger, index, used)
     check_stability(situation, ledger, index, used)
+
+
+def check_measured(situation: Situation, ledger: Ledger, index: IntArray, used: BoolArray) -> None:
+    """Check that no measured converter is used beyond its points, in any state and with spares failed."""
+    problem, states, hardware = situation.problem, situation.states, situation.hardware
+    solution, converters = situation.solution, problem.converters
+    if not any_measured(converters.measured):
+        return
+    running = hardware.units_running
+    carrying = np.maximum(running - problem.study.derating.spare_converters, 0.5)
+    axes = (states.name, tuple(f"{name} converter {what}" for name in BUS_NAMES for what in BEYOND))
+    on = used[:, None, :] & is_measured(converters.measured, index)[:, None, :] & (solution.bus_a > 0)
+    limit = np.broadcast_to(edge_percent(converters.accuracy[index])[:, None], (*on.shape, len(BEYOND)))
+    for units, states_checked in ((running, np.ones(len(states.name), dtype=bool)), (carrying, states.kind != ENERGY)):
+        beyond = beyond_percent(
+            converters.measured, index[:, None, :], solution.node_v[..., None], solution.bus_v, solution.bus_a / units
+        )
+        applies = np.broadcast_to((on & states_checked[:, None])[..., None], beyond.shape)
+        shape = (*on.shape[:2], -1)
+        ledger.add(
+            "measured range", beyond.reshape(shape), limit.reshape(shape), at_most=True, axes=axes,
+            applies=applies.reshape(shape),
+        )  # fmt: skip
 
 
 def check_stability(situation: Situation, ledger: Ledger, index: IntArray, used: BoolArray) -> None:

@@ -15,13 +15,13 @@ from numpy.typing import NDArray
 from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO, via_drop_v
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
+from archopt.model.converter_loss import ConverterLoss
 from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, short_time_a, unpack
 from archopt.model.options import Options, band_hours, option_index, quiet
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import FIXED, FOLLOW, TWO_LEVELS, Designs
 from archopt.model.states import StateTable
-from archopt.physics import bus_converter
 from archopt.physics.stability import least_capacitance_f, regulated_source_h
 from archopt.physics.transient import bus_dip_v
 
@@ -148,7 +148,7 @@ def running_units(
     best = np.broadcast_to(units[..., None], mean_w.shape).copy()
     best_w = np.full(mean_w.shape, np.inf)
     spare = problem.study.derating.spare_converters
-    loss_of = converters.loss.take(index[..., None])
+    converter_losses = ConverterLoss.of(converters, index[..., None])
     ambient = problem.study.supply.inlet_degc + problem.study.supply.local_rise_k
     for running in range(int(units.max(initial=1)), 0, -1):
         carry = max(running - spare, 0.5)
@@ -159,7 +159,7 @@ def running_units(
         can = (running == units[..., None]) | (
             fits & (running < units[..., None]) & (designs.bus("fewest") == 0)[..., None]
         )
-        loss = bus_converter.losses(loss_of, input_v, volts, mean_w / volts / running, np.asarray(ambient))
+        loss = converter_losses(input_v, volts, mean_w / volts / running, np.asarray(ambient))
         total = np.where(can, loss.total_w * running, np.inf)
         better = total < best_w
         best = np.where(better, running, best)
@@ -176,7 +176,7 @@ def converter_energy(problem: Problem, states: StateTable, hardware: Hardware, e
     supply = problem.study.supply
     ambient = np.asarray(supply.inlet_degc + supply.local_rise_k)
     mean_v = np.asarray(sum(level.voltage_v * level.share for level in supply.levels) or supply.nominal_v)
-    loss = bus_converter.losses(problem.converters.loss.take(index), mean_v, problem.grid_v, current, ambient)
+    loss = ConverterLoss.of(problem.converters, index)(mean_v, problem.grid_v, current, ambient)
     return loss.total_w * units * hours * 1e-3
 
 

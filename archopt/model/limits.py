@@ -46,6 +46,7 @@ LIMITS = (
     Limit("thermal gain", "ratio", 0.05),
     Limit("jump survival: stage input", "V", 0.25),
     Limit("jump survival: short-time current", "A", 0.05, relative=True),
+    Limit("measured range", "% beyond", 2.0),
     Limit("bus drop", "% of bus", 0.5),
     Limit("rail drop", "% of rail", 0.5),
     Limit("copper ampacity", "A", 0.05, relative=True),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from archopt.model.converter_loss import ConverterLoss
 from archopt.model.evaluator import Detail
 from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray
 from archopt.model.problem import Problem
@@ -44,15 +45,20 @@ def converter_mechanisms(problem: Problem, detail: Detail) -> dict[str, FloatArr
     if not len(problem.converters.names):
         return {}
     index = np.maximum(hardware.converter, 0)[:, None, :]
-    loss = bus_converter.losses(
-        problem.converters.loss.take(index),
+    loss = ConverterLoss.of(problem.converters, index)(
         solution.node_v[..., None],
         np.maximum(solution.bus_v, 1e-3),
         solution.bus_a / hardware.units_running,
         states.ambient_degc[:, None],
     )
     running = np.where(solution.bus_a > 0, hardware.units_running, 0)
-    return {word(key): getattr(loss, key) * running for key in bus_converter.MECHANISMS}
+    keys = bus_converter.MECHANISMS if loss.measured_w is None else (*bus_converter.MECHANISMS, "measured_w")
+    return {word(key): getattr(loss, key) * running for key in keys}
+
+
+def told(losses: dict[str, FloatArray], measured: bool) -> dict[str, FloatArray]:
+    """Return the mechanisms of one part: a measured part's loss is one number, of others no measured one is told."""
+    return {key: values for key, values in losses.items() if key == "output bank" or (key == "measured") == measured}
 
 
 def word(field: str) -> str:
@@ -70,10 +76,12 @@ def all_losses(problem: Problem, detail: Detail) -> list[dict[str, dict[str, Flo
         parts: dict[str, dict[str, FloatArray]] = {}
         for r, name in enumerate(problem.rails.names):
             kind = int(problem.stages.kind[hardware.stage[p, r]])
-            parts[f"{name} stage"] = {key: values[p, :, r] for key, values in by_kind[kind].items()}
+            tabled = problem.stages.measured[hardware.stage[p, r]] is not None
+            parts[f"{name} stage"] = told({key: values[p, :, r] for key, values in by_kind[kind].items()}, tabled)
             parts[f"{name} pour"] = {"copper": solution.pour_w[p, :, r]}
         for bus in np.flatnonzero(hardware.converter[p] >= 0):
-            parts[f"{BUS_NAMES[bus]} converter"] = {key: w[p, :, bus] for key, w in converters.items()}
+            tabled = problem.converters.measured[hardware.converter[p, bus]] is not None
+            parts[f"{BUS_NAMES[bus]} converter"] = told({key: w[p, :, bus] for key, w in converters.items()}, tabled)
             parts[f"{BUS_NAMES[bus]} plane"] = {"copper": solution.plane_w[p, :, bus]}
         if hardware.bias[p] >= 0:
             delivered = solution.bias_out_w[p]

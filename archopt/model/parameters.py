@@ -23,6 +23,7 @@ from archopt.inputs.parts import (
     Supervisor,
 )
 from archopt.inputs.resolved import Catalogue, ResolvedStudy
+from archopt.model.converter_loss import Tables, measured_tables
 from archopt.model.part_rows import (
     allowed,
     array,
@@ -64,7 +65,10 @@ class PartTable:
 
 @dataclass(frozen=True)
 class StageTable:
-    """Every rail stage offered: buck phases, single stages from the input, linear regulators (N rows)."""
+    """Every rail stage offered: buck phases, single stages from the input, linear regulators (N rows).
+
+    measured: loss tables of one phase, None where a row's own terms say what it loses.
+    """
 
     names: tuple[str, ...]
     kind: IntArray
@@ -97,11 +101,12 @@ class StageTable:
     input_capacitance_f: FloatArray
     part: IntArray
     second_part: IntArray  # inductor, -1 where none
+    measured: Tables
 
 
 @dataclass(frozen=True)
 class ConverterTable:
-    """Bus converters (N rows)."""
+    """Bus converters (N rows); measured: loss tables of one unit, None where a row's own terms say what it loses."""
 
     names: tuple[str, ...]
     kind: IntArray
@@ -124,6 +129,7 @@ class ConverterTable:
     wakeup_s: FloatArray
     max_parallel: IntArray
     part: IntArray
+    measured: Tables
 
 
 @dataclass(frozen=True)
@@ -288,6 +294,7 @@ def stage_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable) ->
         input_capacitance_f=np.nan_to_num(array(rows, "input_capacitance_uf", 1e-6)),
         part=np.array([parts.index(part_number(r)) for r in rows], dtype=np.int64),
         second_part=np.array([parts.index(i.name) if i else -1 for i in inductors], dtype=np.int64),
+        measured=measured_tables(catalogue, rows),
     )
 
 
@@ -310,6 +317,8 @@ def converter_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable
     rows = bus_converters_offered(study, catalogue)
     rows = rows or cast("list[BusConverter]", list(catalogue.families["bus_converters"].values()))[:1]
     plain: list[Part] = list(rows)
+    measured = measured_tables(catalogue, rows)
+    most_a = np.array([np.inf if table is None else table.current_a[-1] for table in measured])
     kinds = {"regulated": REGULATED, "fixed_ratio": FIXED_RATIO, "non_isolated": NON_ISOLATED}
     return ConverterTable(
         names=tuple(row.name for row in rows),
@@ -320,7 +329,7 @@ def converter_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable
         ratio=array(plain, "ratio"),
         limit_a=array(plain, "max_current_a", study.derating.current),
         limit_w=array(plain, "max_power_w", study.derating.current),
-        overload_a=array(plain, "overload_a"),
+        overload_a=np.minimum(array(plain, "overload_a"), most_a),  # no more than was measured
         overload_s=array(plain, "overload_ms", 1e-3),
         thermal_k_per_w=np.asarray(
             thermal_resistance_at(
@@ -337,6 +346,7 @@ def converter_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable
         wakeup_s=array(plain, "wakeup_ms", 1e-3),
         max_parallel=np.array([row.max_parallel for row in rows], dtype=np.int64),
         part=np.array([parts.index(row.name) for row in rows], dtype=np.int64),
+        measured=measured,
     )
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from archopt.model.board import Solution
+from archopt.model.converter_loss import BEYOND, any_measured, beyond_percent, edge_percent, is_measured
 from archopt.model.hardware import Hardware, short_time_a
 from archopt.model.limits import Ledger
 from archopt.model.parameters import BUCK, LINEAR, BoolArray, FloatArray, IntArray
@@ -79,6 +80,7 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
         "output ripple", 100.0 * swing / rails.voltage_v, 100.0 * rails.ripple_v / rails.voltage_v, at_most=True,
         axes=axes, applies=on,
     )  # fmt: skip
+    check_measured(situation, ledger)
     rail_axes = (names,)
     ledger.add(
         "loop capacitance range",
@@ -94,6 +96,26 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
         at_most=True,
         axes=rail_axes,
     )
+
+
+def check_measured(situation: Situation, ledger: Ledger) -> None:
+    """Check that no measured stage is used beyond its points, in any state."""
+    states, hardware, solution = situation.states, situation.hardware, situation.solution
+    stages = situation.problem.stages
+    if not any_measured(stages.measured):
+        return
+    stage = np.broadcast_to(hardware.stage[:, None, :], solution.stage_v.shape)
+    beyond = beyond_percent(
+        stages.measured, stage, solution.stage_v, situation.problem.rails.voltage_v,
+        solution.current_a / hardware.running,
+    )  # fmt: skip
+    on = is_measured(stages.measured, stage) & ~states.off
+    shape = (*on.shape[:2], -1)
+    ledger.add(
+        "measured range", beyond.reshape(shape), float(edge_percent()[0]), at_most=True,
+        axes=(states.name, tuple(f"{name} stage {what}" for name in situation.rail_names for what in BEYOND)),
+        applies=np.broadcast_to(on[..., None], beyond.shape).reshape(shape),
+    )  # fmt: skip
 
 
 def output_ripple_v(problem: Problem, hardware: Hardware, solution: Solution, index: IntArray) -> FloatArray:

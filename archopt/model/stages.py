@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from archopt.model.converter_loss import ConverterLoss, any_measured, is_measured, table_w
 from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray, StageTable
 from archopt.physics import buck, bus_converter, linear
 from archopt.physics.buck_light_load import crossover_share, pulses
@@ -90,8 +91,14 @@ def operate_kind(
         loss, temperature, gain, bias = (
             result.total_w, result.temperature_degc, result.thermal_gain, result.bias_w,
         )  # fmt: skip
+        if any_measured(stages.measured):
+            tabled = measured_phase_w(stages, index, input_v, output_v, per_phase_a, ambient_degc)
+            mine = is_measured(stages.measured, index)
+            loss = np.where(mine, tabled, loss)
+            temperature = np.where(mine, ambient_degc + stages.thermal_k_per_w[index] * (tabled + bias), temperature)
     elif kind == SINGLE:
-        unit = bus_converter.losses(stages.single.take(index), input_v, output_v, per_phase_a, ambient_degc)
+        converter_losses = ConverterLoss(stages.single, stages.measured, index)
+        unit = converter_losses(input_v, output_v, per_phase_a, ambient_degc)
         loss, temperature, gain = unit.total_w, unit.temperature_degc, unit.thermal_gain
     else:
         series = linear.losses(stages.linear.take(index), input_v, output_v, per_phase_a, ambient_degc)
@@ -104,6 +111,23 @@ def operate_kind(
     )
 
 
+def measured_phase_w(
+    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray,
+    ambient_degc: FloatArray,
+) -> FloatArray:  # fmt: skip
+    """Return the loss of one buck phase read from its table, W; 0 where a row has none."""
+    at = (input_v, output_v, per_phase_a, ambient_degc)
+    shape = np.broadcast_shapes(index.shape, *(np.shape(values) for values in at))
+    rows = np.broadcast_to(index, shape)
+
+    def terms_w(
+        volts: FloatArray, out: FloatArray, amps: FloatArray, degc: FloatArray, place: IntArray
+    ) -> FloatArray:
+        return buck.losses(stages.buck.take(rows.ravel()[place]), volts, out, amps, degc).total_w
+
+    return table_w(stages.measured, rows, at, terms_w)
+
+
 def mechanisms(
     stages: StageTable,
     kind: int,
@@ -114,7 +138,10 @@ def mechanisms(
     current_a: FloatArray,
     ambient_degc: FloatArray,
 ) -> dict[str, FloatArray]:
-    """Return whole stages' losses by mechanism in words, W, where every stage is of one kind (flat arrays)."""
+    """Return whole stages' losses by mechanism in words, W, where every stage is of one kind (flat arrays).
+
+    Of stages read from measured tables there is one, "measured".
+    """
     per_phase_a = current_a / running
     result: Any
     names: tuple[str, ...]
@@ -127,7 +154,15 @@ def mechanisms(
     else:
         result = linear.losses(stages.linear.take(index), input_v, output_v, per_phase_a, ambient_degc)
         names = linear.MECHANISMS
-    return {name.removesuffix("_w").replace("_", " "): getattr(result, name) * running for name in names}
+    found = {name.removesuffix("_w").replace("_", " "): getattr(result, name) * running for name in names}
+    mine = is_measured(stages.measured, index)
+    if kind == LINEAR or not mine.any():
+        return found
+    whole = operate_kind(
+        stages, kind, index, running, input_v, output_v, current_a, ambient_degc, per_phase_a.shape
+    ).loss_w
+    by_terms = {name: np.where(mine, 0.0, values) for name, values in found.items()}
+    return {**by_terms, "measured": np.where(mine, whole, 0.0)}
 
 
 def conduction_ratio(

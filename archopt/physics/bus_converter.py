@@ -46,7 +46,8 @@ MECHANISMS = ("fixed_w", "switching_w", "linear_w", "resistive_w")
 class ConverterLosses:
     """Watts per unit by mechanism, in the broadcast shape of the operating point (some are read-only views).
 
-    thermal_gain of 1 or more is thermal runaway; losses are then those of a gain of 0.95.
+    measured_w stands instead of all mechanisms where a unit's loss is read from a measured table; None where no
+    unit's is. thermal_gain of 1 or more is thermal runaway; losses are then those of a gain of 0.95.
     """
 
     fixed_w: FloatArray
@@ -55,11 +56,13 @@ class ConverterLosses:
     resistive_w: FloatArray
     temperature_degc: FloatArray
     thermal_gain: FloatArray
+    measured_w: FloatArray | None = None
 
     @property
     def total_w(self) -> FloatArray:
         """Sum of all mechanisms (W)."""
-        return self.fixed_w + self.switching_w + self.linear_w + self.resistive_w
+        sum_w = self.fixed_w + self.switching_w + self.linear_w + self.resistive_w
+        return sum_w if self.measured_w is None else sum_w + self.measured_w
 
 
 def thermal_gain(p: ConverterParameters, current_a: FloatLike) -> FloatArray:

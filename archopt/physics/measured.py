@@ -16,13 +16,17 @@ EDGE_WIDTH = 0.01
 class LossTable:
     """Measured loss of one unit; axes rise strictly, one level on an axis is allowed.
 
-    input_v (a,), output_v (b,) in V, current_a (c,) in A of one unit, loss_w (a, b, c) in W.
+    input_v (a,), output_v (b,) in V, current_a (c,) in A of one unit, loss_w (a, b, c) in W; local_degc is the
+    local air it was measured in. Where output_follows, the output is what the input makes of it (a fixed ratio):
+    output_v has one level, which is not looked at.
     """
 
     input_v: FloatArray
     output_v: FloatArray
     current_a: FloatArray
     loss_w: FloatArray
+    local_degc: float = 25.0
+    output_follows: bool = False
 
 
 def table_loss_w(
@@ -45,18 +49,32 @@ def table_loss_w(
     """
     point = np.broadcast_arrays(np.asarray(input_v), np.asarray(output_v), np.asarray(current_a))
     loss = np.zeros(point[0].shape)
-    inside: BoolArray = np.ones(point[0].shape, dtype=bool)
     steps = []
     for axis, value in zip((table.input_v, table.output_v, table.current_a), point, strict=True):
         below, share = _between(axis, value)
         steps.append(((below, 1.0 - share), (np.minimum(below + 1, len(axis) - 1), share)))
-        inside &= (value >= axis[0] * (1.0 - EDGE_WIDTH)) & (value <= axis[-1] * (1.0 + EDGE_WIDTH))
+    inside: BoolArray = np.asarray((beyond_table(table, *point) <= EDGE_WIDTH).all(axis=-1))
     for at_input, input_share in steps[0]:
         for at_output, output_share in steps[1]:
             for at_current, current_share in steps[2]:
                 corner = table.loss_w[at_input, at_output, at_current]
                 loss = loss + corner * input_share * output_share * current_share
     return loss, inside
+
+
+def beyond_table(table: LossTable, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike) -> FloatArray:
+    """Return how far input voltage, output voltage and current lie beyond the table, (..., 3), as shares of its ends.
+
+    Above 0 outside the table, below 0 inside it, -1 where there is no end (a current from 0 A, an output that
+    follows). Arguments as in :func:`table_loss_w`. Closed form.
+    """
+    point = np.broadcast_arrays(np.asarray(input_v), np.asarray(output_v), np.asarray(current_a))
+    found = np.full((*point[0].shape, 3), -1.0)
+    for k, (axis, value) in enumerate(zip((table.input_v, table.output_v, table.current_a), point, strict=True)):
+        if k == 1 and table.output_follows:
+            continue
+        found[..., k] = np.maximum(value / axis[-1] - 1.0, 1.0 - value / axis[0] if axis[0] > 0 else -1.0)
+    return found
 
 
 def _between(axis: FloatArray, value: FloatArray) -> tuple[IntArray, FloatArray]:

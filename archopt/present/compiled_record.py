@@ -74,6 +74,19 @@ def used_parts(problem: Problem, designs: list[Data]) -> dict[str, dict[str, Dat
     return out
 
 
+def measured_parts(problem: Problem, parts: dict[str, dict[str, Data]]) -> dict[str, Data]:
+    """Return the loss tables of the parts that are read from one, by part."""
+    return {
+        name: {
+            "input_v": table.input_v.tolist(), "output_v": table.output_v.tolist(),
+            "current_a": table.current_a.tolist(), "loss_w": table.loss_w.tolist(),
+            "local_degc": table.local_degc, "output_follows": table.output_follows,
+        }
+        for rows in parts.values() for name in rows
+        if (table := problem.catalogue.measured.get(name)) is not None
+    }  # fmt: skip
+
+
 def compiled_record(problem: Problem, designs: list[Data]) -> Data:
     """Return the problem record of a solve: study, assumptions, states, bands, parts, copper."""
     data = problem_data(
@@ -90,6 +103,9 @@ def compiled_record(problem: Problem, designs: list[Data]) -> Data:
             "pour_area_cm2": by_rail(problem, 1e4 * problem.rails.copper_area_m2),
         },
     )
+    measured = measured_parts(problem, data["parts"])
+    if measured:
+        data["measured"] = measured
     data["bus_grid_v"] = problem.grid_v.tolist()
     data["cluster_error"] = problem.states.cluster_error
     data["sources"] = {key: row.model_dump() for key, row in problem.catalogue.sources.items()}

@@ -6,13 +6,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from archopt.model.converter_loss import ConverterLoss
 from archopt.model.decide import coincident_step_w
 from archopt.model.evaluator import Evaluator
 from archopt.model.hardware import Hardware, unpack
 from archopt.model.options import band_hours, option_index
 from archopt.model.parameters import FIXED_RATIO
 from archopt.model.space import FIXED, TWO_LEVELS, Designs
-from archopt.physics import bus_converter
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.physics.transient import bus_dip_v
 from archopt.search.genome import Plan
@@ -164,11 +164,11 @@ def marginal_energy(
     problem = evaluator.problem
     supply = problem.study.supply
     ambient = np.asarray(supply.inlet_degc + supply.local_rise_k)
-    loss_of = problem.converters.loss.take(index[..., None])
+    converter_losses = ConverterLoss.of(problem.converters, index[..., None])
     input_v = np.asarray(supply.nominal_v)
     step = 0.02 * mean_w + 0.1
     at = [
-        bus_converter.losses(loss_of, input_v, set_v, power / set_v / units, ambient).total_w * units
+        converter_losses(input_v, set_v, power / set_v / units, ambient).total_w * units
         for power in (mean_w, mean_w + step)
     ]
     return np.asarray(1.0 + np.clip((at[1] - at[0]) / step, 0.0, 1.0))

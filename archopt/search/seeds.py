@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 
+from archopt.model.converter_loss import ConverterLoss
 from archopt.model.parameters import FIXED_RATIO
 from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, TWO_LEVELS
-from archopt.physics import bus_converter
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.genome import Genome, index_of, nearest
 from archopt.search.rail_tables import CAPS
@@ -36,8 +36,8 @@ def suited_converters(genome: Genome, most: int) -> list[tuple[int, int]]:
     typical = np.clip(problem.study.control.habitual_v, converters.output_min_v[index],
                       converters.output_max_v[index])  # fmt: skip
     amps = 0.4 * power / typical / count
-    loss = bus_converter.losses(
-        converters.loss.take(index), np.asarray(problem.study.supply.nominal_v), typical, amps, np.asarray(50.0)
+    loss = ConverterLoss.of(converters, index)(
+        np.asarray(problem.study.supply.nominal_v), typical, amps, np.asarray(50.0)
     )
     lifetime = price + genome.scale * loss.total_w * count * 8.76
     order = np.lexsort((index, lifetime, ~fits))[:most]

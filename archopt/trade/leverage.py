@@ -231,6 +231,8 @@ def loss_numbers(problem: Problem, row: IntArray) -> Iterator[Number]:
     for family, name in used_rows(problem, row):
         part = catalogue.families[family][name]
         source = source_text(catalogue, part)
+        if name in catalogue.measured:  # its loss is what was measured, of no number of its row
+            continue
         for column in LOSS_COLUMNS[family]:
             value = float(getattr(part, column))
             if value != 0.0 and part.spread_percent > 0:

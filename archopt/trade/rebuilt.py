@@ -24,6 +24,7 @@ from archopt.model.parameters import IntArray
 from archopt.model.problem import Problem, compile_problem
 from archopt.model.space import BUS_NAMES, Designs
 from archopt.model.states import KIND_NAMES, MIX, StateTable
+from archopt.physics.measured import LossTable
 
 Data = dict[str, Any]
 
@@ -74,7 +75,14 @@ def catalogue_of(record: Data) -> Catalogue:
         for family, rows in record["parts"].items()
         if family in FAMILIES
     }
-    return Catalogue({**{name: {} for name in FAMILIES}, **families}, {}, {}, "")
+    measured = {
+        name: LossTable(
+            np.array(table["input_v"]), np.array(table["output_v"]), np.array(table["current_a"]),
+            np.array(table["loss_w"]), float(table["local_degc"]), bool(table["output_follows"]),
+        )
+        for name, table in record.get("measured", {}).items()
+    }  # fmt: skip
+    return Catalogue({**{name: {} for name in FAMILIES}, **families}, {}, {}, "", measured)
 
 
 def states_of(record: Data) -> StateTable:
