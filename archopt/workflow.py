@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
+from pathlib import Path
 from typing import Protocol
 
 import numpy as np
@@ -20,9 +21,13 @@ from archopt.present.compiled_record import compiled_record, space_record
 from archopt.present.front import Front
 from archopt.present.overview import telling_of
 from archopt.present.record import CheckResult, Data, FrontRecord
-from archopt.present.run_record import run_record
-from archopt.search.driver import Progress, SearchResult, search
-from archopt.search.published import BATCH, Published, publish
+from archopt.present.run_record import package_versions, run_record
+from archopt.search import checkpoint
+from archopt.search.checkpoint import Keeper
+from archopt.search.outcome import Progress, SearchResult
+from archopt.search.published import BATCH, Published, infeasible, publish
+from archopt.search.replicates import EARLY, Settings, facts_of, search_all, spread
+from archopt.trade.adaptive_limits import adaptive_limits
 from archopt.trade.answers import question
 from archopt.trade.cautions import NOT_MODELLED, cautions
 from archopt.trade.money import lifetime_costs, payback_years
@@ -44,6 +49,7 @@ class Told(Protocol):
         evaluations: int | None = None,
         feasible: int | None = None,
         hypervolume: float | None = None,
+        seconds_left: float | None = None,
     ) -> None:
         """Take note of the progress."""
         ...
@@ -77,15 +83,29 @@ def solve(
     *,
     seed: int | None = None,
     evaluations: int | None = None,
+    replicates: int = 1,
     progress: Told | None = None,
     stop: Callable[[], str] | None = None,
+    keep_in: Path | None = None,
+    resume: bool = False,
 ) -> Front:
     """Search a study and return its front, recomputed by direct physics and questioned.
+
+    Parameters
+    ----------
+    loaded : the study
+    seed, evaluations : in place of the study's own
+    replicates : searches with seeds one after another, merged; each may try that many evaluations
+    progress : told how far it is
+    stop : asked between generations; why to stop, or nothing
+    keep_in : directory in which the run is put by now and then; a result written there takes its place
+    resume : go on from the run put by there, if there is one
 
     Raises
     ------
     InputError : what shows only when study and catalogue meet
     InfeasibleError : no design meets every limit; names the limits none could meet
+    OutputError : the run to go on from is damaged, or not this one
     """
     clock = Clock()
     study = loaded.study
@@ -94,17 +114,28 @@ def solve(
     clock.note("compile")
     today = incumbent_row(problem)
     used_seed = study.search.seed if seed is None else seed
-    found = search(
-        evaluator,
+    settings = Settings(
         evaluations=study.search.evaluations if evaluations is None else evaluations,
         population=study.search.population,
         seed=used_seed,
         stagnation_generations=study.search.stagnation_generations,
+        replicates=replicates,
+    )
+    facts = facts_of(problem, settings, package_versions())
+    keeper = None if keep_in is None else Keeper(keep_in, facts)
+    searched = search_all(
+        evaluator,
+        settings,
         seeds_rows=None if today is None else today[None],
         progress=None if progress is None else lambda state: tell(progress, state),
         stop=None if stop is None else lambda: bool(stop()),
+        keeper=keeper,
+        resume=unfinished_run(keep_in, facts) if resume and keep_in is not None else None,
     )
+    found = searched.together
     reason = stop() if stop is not None and found.ended == "stopped" else ""
+    if not len(found.rows):
+        raise nothing_found(found)
     clock.note("search")
     say(progress, "direct physics")
     published = publish(evaluator, found)
@@ -122,8 +153,10 @@ def solve(
         mark(problem, designs, published.objectives, incumbent)
     clock.note("time domain")
     say(progress, "baselines and leverage")
+    tell_adaptive_limits(problem, published.rows, designs)
     asked = question(evaluator, found, published, designs, today)
     clock.note("questions")
+    apart = spread(searched, published.rows)
     record = FrontRecord(
         designs=designs,
         archive=archive_rows(problem, found),
@@ -144,6 +177,8 @@ def solve(
             },
             timings_s=clock.times,
             stop_reason=reason or found.ended,
+            same_bytes=found.ended not in EARLY,
+            replicates=None if apart is None else apart.as_dict(),
             interrupted=found.ended == "interrupted" or reason == "interrupted",
         ),
         incumbent=incumbent,
@@ -154,9 +189,51 @@ def solve(
         leverage=asked.leverage,
         not_modelled=list(NOT_MODELLED),
         cautions=cautions(problem, designs),
-        notes=[*unfinished(found), *asked.notes],
+        notes=[
+            *unfinished(found),
+            *ended_early(found, reason, keeper),
+            *([] if apart is None else [apart.words()]),
+            *asked.notes,
+        ],
     )
     return Front(record)
+
+
+def unfinished_run(directory: Path, facts: checkpoint.Facts) -> checkpoint.Checkpoint | None:
+    """Return the unfinished run in a directory, None where there is none.
+
+    Raises
+    ------
+    OutputError : it is damaged, or not of the run with these facts
+    """
+    if not checkpoint.is_there(directory):
+        return None
+    found = checkpoint.read(directory)
+    found.check(facts, directory)
+    return found
+
+
+def nothing_found(found: SearchResult) -> InfeasibleError:
+    """Return the error of a search without a feasible design; one stopped early may still find one."""
+    error = infeasible(found)
+    if found.ended in EARLY:
+        return InfeasibleError("stopped before any design met every limit", error.limits)
+    return error
+
+
+def ended_early(found: SearchResult, reason: str, keeper: checkpoint.Keeper | None) -> list[str]:
+    """Return remarks on a search that was stopped: what does not repeat, and how to go on."""
+    remarks = []
+    if found.ended in EARLY:
+        remarks.append(
+            f"The search was stopped ({reason or found.ended}) after {found.evaluations:,} designs: another run"
+            " with the same seed may be stopped elsewhere and find others."
+        )
+    if keeper is not None and keeper.trouble:
+        remarks.append(f"The run could not be put by, so that it cannot be gone on with: {keeper.trouble}.")
+    elif keeper is not None and found.ended in EARLY:
+        remarks.append("The same command with --resume goes on where this run was stopped.")
+    return remarks
 
 
 def unfinished(found: SearchResult) -> list[str]:
@@ -192,10 +269,12 @@ def say(progress: Told | None, stage: str) -> None:
 def tell(progress: Told, state: Progress) -> None:
     """Pass a search's progress on."""
     progress(
+        stage="search" if state.replicates == 1 else f"search {state.replicate + 1} of {state.replicates}",
         generation=state.generation,
         evaluations=state.evaluations,
         feasible=state.feasible,
         hypervolume=state.hypervolume,
+        seconds_left=state.seconds_left,
     )
 
 
@@ -253,6 +332,13 @@ def mark(problem: Problem, designs: list[Data], objectives: FloatArray, incumben
     for design, role, years in zip(designs, roles, payback_years(problem.study, objectives, today), strict=True):
         design["roles"] = role
         design["beside"]["payback_years"] = years
+
+
+def tell_adaptive_limits(problem: Problem, rows: IntArray, designs: list[Data]) -> None:
+    """Write into the designs that are printed or marked what sets their adaptive limits."""
+    marked = {k for k, design in enumerate(designs) if design["roles"]}
+    for k in sorted(marked | set(telling_of(designs).index)):
+        designs[k]["adaptive_limits"] = adaptive_limits(problem, rows[k])
 
 
 def archive_rows(problem: Problem, found: SearchResult) -> list[Data]:

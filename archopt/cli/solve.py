@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import re
 import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -12,7 +14,7 @@ import typer
 from archopt.cli.leaving import INTERRUPTED
 from archopt.cli.stopping import StopRequest
 from archopt.cli.words import JsonOption, StudyArgument, print_json
-from archopt.errors import OutputError
+from archopt.errors import InfeasibleError, OutputError
 
 if TYPE_CHECKING:
     from archopt.present.front import Front
@@ -32,14 +34,27 @@ def solve_command(
     evaluations: Annotated[
         int | None, typer.Option(min=1, metavar="N", help="Designs to try. [default: the study's]")
     ] = None,
-    seconds: Annotated[float | None, typer.Option(min=1.0, metavar="S", help="End the search after S seconds.")] = None,
+    seconds: Annotated[
+        float | None,
+        typer.Option(
+            min=1.0, metavar="S", help="End the search after S seconds; the same seed then need not find the same."
+        ),
+    ] = None,
+    replicates: Annotated[
+        int, typer.Option(min=1, max=100, metavar="N", help="Search N times, one seed after another, and merge.")
+    ] = 1,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress, no tables; only the files.")] = False,
     replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier result in DIR.")] = False,
+    resume: Annotated[
+        bool, typer.Option("--resume", help="Go on with the unfinished run in DIR, given the same options as it was.")
+    ] = False,
     as_json: JsonOption = False,
 ) -> None:
-    """Search all choices at once; print and write the front."""
+    """Search all choices at once; print and write the front.
+
+    A run is put by in DIR every few seconds; one that was interrupted or killed can be gone on with.
+    """
     from archopt import workflow
-    from archopt.present import files
     from archopt.present.front import Front
     from archopt.present.progress import SearchProgress
     from archopt.present.tables import console_for
@@ -47,13 +62,18 @@ def solve_command(
 
     loaded = workflow.load(study)
     place = default_place(loaded.study.name) if out is None else out
-    files.check_target(place, replace=replace)
+    check_place(place, replace=replace, resume=resume)
     stop = StopRequest(seconds)
     planned = evaluations if evaluations is not None else loaded.study.search.evaluations
-    progress = SearchProgress(console_for(sys.stderr), evaluations=planned, seconds=seconds, quiet=quiet)
-    with stop.on_interrupt(), progress:
-        front = workflow.solve(loaded, seed=seed, evaluations=evaluations, progress=progress, stop=stop)
-    place = write_or_aside(front, place, replace=replace)
+    progress = SearchProgress(
+        console_for(sys.stderr), evaluations=replicates * planned, seconds=seconds, quiet=quiet
+    )
+    with stop.on_interrupt(), progress, put_by_only_while_unfinished(place, stop):
+        front = workflow.solve(
+            loaded, seed=seed, evaluations=evaluations, replicates=replicates, progress=progress, stop=stop,
+            keep_in=place, resume=resume,
+        )  # fmt: skip
+    place = write_or_aside(front, place, replace=replace, unfinished=not front.record.run.get("same_bytes", True))
     if as_json:
         print_json({**Front(front.record, place).summary(), "directory": str(place)})
     elif quiet:
@@ -69,12 +89,45 @@ def default_place(name: str) -> Path:
     return RUNS / (re.sub(r"[^\w.+-]+", "-", name).strip("-.") or "study")
 
 
-def write_or_aside(front: Front, place: Path, *, replace: bool) -> Path:
-    """Write a result; if its place was taken while the search ran, write beside it rather than lose it."""
+def check_place(place: Path, *, replace: bool, resume: bool) -> None:
+    """Tell before a long search whether its result could be written, and whether there is a run to go on with.
+
+    Raises
+    ------
+    OutputError : the place holds what must not be replaced; says what to do
+    """
+    from archopt.present import files
+    from archopt.search import checkpoint
+
+    if replace and resume:
+        raise typer.BadParameter("go on with the unfinished run or replace it, not both", param_hint="--resume")
+    files.check_target(place, replace=replace, go_on=resume)
+    if resume and not checkpoint.is_there(place):
+        print(f"{place} holds no unfinished run; starting at the beginning.", file=sys.stderr)
+
+
+@contextmanager
+def put_by_only_while_unfinished(place: Path, stop: StopRequest) -> Iterator[None]:
+    """Let what was put by go when a search ran to its end and no design met every limit."""
+    try:
+        yield
+    except InfeasibleError:
+        from archopt.search import checkpoint
+
+        if not stop():
+            checkpoint.forget(place)
+        raise
+
+
+def write_or_aside(front: Front, place: Path, *, replace: bool, unfinished: bool) -> Path:
+    """Write a result; if its place was taken while the search ran, write beside it rather than lose it.
+
+    ``unfinished``: keep beside it what the run needs to go on.
+    """
     from archopt.present import files
 
     try:
-        return files.write(front.record, place, replace=replace)
+        return files.write(front.record, place, replace=replace, go_on=True, unfinished=unfinished)
     except OutputError as error:
         beside = files.free_sibling(place)
         print(f"{error}\nWriting the result to {beside} instead.", file=sys.stderr)

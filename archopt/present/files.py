@@ -17,6 +17,7 @@ from typing import Any
 from archopt.errors import OutputError
 from archopt.present.plain import plain, plain_dict, significant
 from archopt.present.record import Data, FrontRecord
+from archopt.search import checkpoint
 
 FORMAT = "archopt result"
 FORMAT_VERSION = 1
@@ -34,13 +35,18 @@ EXTRA_FIELDS = (
 )  # fmt: skip
 
 
-def check_target(directory: Path, *, replace: bool = False) -> None:
+UNFINISHED = (checkpoint.NAME, checkpoint.PARTIAL)
+"""What a run that is not finished puts by where its result will be."""
+
+
+def check_target(directory: Path, *, replace: bool = False, go_on: bool = False) -> None:
     """Tell before a long search whether its result could be written; creates nothing.
 
     Parameters
     ----------
     directory : where the result shall be
-    replace : an earlier result of ours there may be replaced
+    replace : an earlier result of ours there, or an unfinished run, may be replaced
+    go_on : the unfinished run there, and what it had found when it was interrupted, may be replaced
 
     Raises
     ------
@@ -52,12 +58,10 @@ def check_target(directory: Path, *, replace: bool = False) -> None:
     if target.exists():
         if not target.is_dir():
             raise OutputError(f"{directory}: a file of that name is in the way")
-        if any(target.iterdir()):
+        if {entry.name for entry in target.iterdir()} - {checkpoint.PARTIAL}:
             _refuse_unless_ours(directory, target)
-            if not replace:
-                raise OutputError(
-                    f"{directory} holds an earlier result: choose another directory or replace it (--replace)"
-                )
+            if not (replace or (go_on and checkpoint.is_there(target))):
+                _refuse_ours(directory, target, go_on=go_on)
     parent = target.parent
     while not parent.exists():
         parent = parent.parent
@@ -65,7 +69,9 @@ def check_target(directory: Path, *, replace: bool = False) -> None:
         raise OutputError(f"{directory}: cannot write in {parent}")
 
 
-def write(record: FrontRecord, directory: Path, *, replace: bool = False) -> Path:
+def write(
+    record: FrontRecord, directory: Path, *, replace: bool = False, go_on: bool = False, unfinished: bool = False
+) -> Path:
     """Write a result whole, or leave everything as it was.
 
     The files are written to a temporary directory beside the target, which then takes the target's name.
@@ -75,7 +81,8 @@ def write(record: FrontRecord, directory: Path, *, replace: bool = False) -> Pat
     ----------
     record : the result
     directory : the directory that shall hold it
-    replace : an earlier result of ours there may be replaced
+    replace, go_on : as :func:`check_target`
+    unfinished : keep beside the result what its run needs to go on; otherwise that goes
 
     Returns
     -------
@@ -85,7 +92,7 @@ def write(record: FrontRecord, directory: Path, *, replace: bool = False) -> Pat
     ------
     OutputError : as :func:`check_target`, or writing failed.
     """
-    check_target(directory, replace=replace)
+    check_target(directory, replace=replace, go_on=go_on)
     target = _real(directory)
     contents = file_contents(record)
     try:
@@ -98,6 +105,8 @@ def write(record: FrontRecord, directory: Path, *, replace: bool = False) -> Pat
         fresh.mkdir()  # with the rights the person's umask gives, not those of a temporary directory
         for name, content in contents.items():
             _write_through(fresh / name, content)
+        if unfinished and checkpoint.is_there(target):
+            _write_through(fresh / checkpoint.NAME, (target / checkpoint.NAME).read_bytes())
         _put_in_place(fresh, target, work / "earlier")
     except OSError as error:
         raise OutputError(f"{directory}: cannot be written: {error.strerror or error}") from error
@@ -197,11 +206,27 @@ def is_ours(directory: Path) -> bool:
     return True
 
 
+def _refuse_ours(shown: Path, target: Path, *, go_on: bool) -> None:
+    """Say what of ours is in the way, and what can be done about it."""
+    if not checkpoint.is_there(target):
+        nothing = "; it holds no unfinished run to go on with" if go_on else ""
+        raise OutputError(
+            f"{shown} holds an earlier result{nothing}: choose another directory or replace it (--replace)"
+        )
+    found = checkpoint.read(target)
+    raise OutputError(
+        f"{shown} holds an unfinished run ({checkpoint.told(found)}): go on with it (--resume),"
+        " or start afresh (--replace)"
+    )
+
+
 def _refuse_unless_ours(shown: Path, target: Path) -> None:
+    there = sorted(entry.name for entry in target.iterdir())
+    if set(there) <= set(UNFINISHED):
+        return
     if not is_ours(target):
         raise OutputError(f"{shown} holds something that is no result of archopt; choose another directory")
-    ours = (*WRITTEN, *ADDED_LATER)
-    there = sorted(entry.name for entry in target.iterdir())
+    ours = (*WRITTEN, *UNFINISHED, *ADDED_LATER)
     foreign = [name for name in there if not any(fnmatchcase(name, pattern) for pattern in ours)]
     if foreign:
         names = ", ".join(foreign[:5])

@@ -60,6 +60,7 @@ class SearchProgress:
         evaluations: int | None = None,
         feasible: int | None = None,
         hypervolume: float | None = None,
+        seconds_left: float | None = None,
     ) -> None:
         """Tell how far the search is.
 
@@ -68,11 +69,23 @@ class SearchProgress:
         stage : what is being done, in a word or two
         generation, evaluations, feasible : counts so far
         hypervolume : of the archive, as a share of the box it is measured in
+        seconds_left : until the designs to try are tried; a search that stops growing ends before
         """
         passed_s = time.monotonic() - self._began_s
+        if evaluations is None:
+            self._line.update(self._task, description=f"searched; {stage}", completed=1.0, said="")
+            return
         share = self.share(evaluations, passed_s)
-        said = said_line(generation, evaluations, feasible, hypervolume, left_s(share, passed_s))
+        left = self.left_s(seconds_left, passed_s)
+        said = said_line(generation, evaluations, feasible, hypervolume, left)
         self._line.update(self._task, description=stage, completed=share, said=said)
+
+    def left_s(self, seconds_left: float | None, passed_s: float) -> float | None:
+        """Seconds the search may take at most: until its designs are tried or its time is up."""
+        if self.seconds is None:
+            return seconds_left
+        by_time = max(self.seconds - passed_s, 0.0)
+        return by_time if seconds_left is None else min(by_time, seconds_left)
 
     def share(self, evaluations: int | None, passed_s: float) -> float:
         """The share of the budget used, whichever of designs and time is nearer its end."""
@@ -82,11 +95,6 @@ class SearchProgress:
         if self.seconds:
             shares.append(passed_s / self.seconds)
         return min(max(shares), 1.0)
-
-
-def left_s(share: float, passed_s: float) -> float | None:
-    """Seconds left at the pace so far; None before there is a pace."""
-    return None if share <= 0.01 else passed_s * (1.0 - share) / share
 
 
 def said_line(
@@ -108,5 +116,5 @@ def said_line(
         words.append(f"hypervolume {hypervolume:.4f}")
     if remaining_s is not None:
         minutes, seconds = divmod(round(remaining_s), 60)
-        words.append(f"{minutes}:{seconds:02d} left")
+        words.append(f"at most {minutes}:{seconds:02d} of search left")
     return ", ".join(words)

@@ -131,6 +131,15 @@ def read(directory: Path) -> Checkpoint:
         ) from error
 
 
+def forget(directory: Path) -> None:
+    """Remove the unfinished run from a directory, and the directory where nothing else is in it."""
+    for name in (NAME, PARTIAL):
+        with contextlib.suppress(OSError):
+            (directory / name).unlink()
+    with contextlib.suppress(OSError):
+        directory.rmdir()
+
+
 def told(checkpoint: Checkpoint) -> str:
     """Return in words how far an unfinished run is."""
     facts, reached = checkpoint.facts, checkpoint.reached
@@ -177,14 +186,6 @@ class Keeper:
         took = self._clock() - began
         self._due_s = self._clock() + max(self.every_s, LEAST_SHARE * took)
         return not self.trouble
-
-    def forget(self) -> None:
-        """Remove what was put by, and the directory where nothing else is in it."""
-        for name in (NAME, PARTIAL):
-            with contextlib.suppress(OSError):
-                (self.directory / name).unlink()
-        with contextlib.suppress(OSError):
-            self.directory.rmdir()
 
     def _write(self, content: bytes) -> None:
         self.directory.mkdir(parents=True, exist_ok=True)

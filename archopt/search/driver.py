@@ -10,6 +10,7 @@ import numpy as np
 from moocore import is_nondominated
 from numpy.typing import NDArray
 
+from archopt.errors import OutputError
 from archopt.model.evaluator import Evaluation, Evaluator
 from archopt.model.space import BUS_FIELDS
 from archopt.physics.arrays import FloatArray, IntArray
@@ -272,7 +273,7 @@ def search(
 
     Raises
     ------
-    ValueError : a state to resume that does not fit this search
+    OutputError : a state to resume that does not fit this search
     """
     began = time.monotonic()
     run = Search(evaluator, population=population, seed=seed, seeds_rows=seeds_rows)
@@ -322,10 +323,18 @@ def search_state(run: Search, stagnation: Stagnation, ended: str, spent: float) 
 
 
 def restore_search(run: Search, stagnation: Stagnation, state: Mapping[str, NDArray[Any]]) -> tuple[str, float]:
-    """Bring a search to a :func:`search_state`; return why it had ended, or nothing, and the seconds spent."""
-    run.restore(part_of(state, "search"))
-    stagnation.restore(part_of(state, "stagnation"))
-    return str(state["ended"][0]), float(state["spent_s"][0])
+    """Bring a search to a :func:`search_state`; return why it had ended, or nothing, and the seconds spent.
+
+    Raises
+    ------
+    OutputError : the state does not fit this search
+    """
+    try:
+        run.restore(part_of(state, "search"))
+        stagnation.restore(part_of(state, "stagnation"))
+        return str(state["ended"][0]), float(state["spent_s"][0])
+    except (KeyError, ValueError, IndexError) as error:
+        raise OutputError(f"the unfinished run does not fit this study ({error}); start afresh") from error
 
 
 __all__ = ["Keep", "Progress", "Search", "SearchResult", "search"]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any, Protocol
 
@@ -28,7 +28,11 @@ class Keep(Protocol):
 
 @dataclass(frozen=True)
 class Progress:
-    """Where a search stands; ``seconds_left`` is an estimate, ``budget`` the evaluations allowed."""
+    """Where a search stands; ``budget``: the evaluations allowed.
+
+    seconds_left: at the pace of late, until the budget is spent; a search that stops growing ends before.
+    replicate, replicates: which of how many searches this is.
+    """
 
     generation: int
     evaluations: int
@@ -38,6 +42,8 @@ class Progress:
     seconds: float
     seconds_left: float
     budget: int
+    replicate: int = 0
+    replicates: int = 1
 
 
 @dataclass(frozen=True)
@@ -102,4 +108,55 @@ def result_of(record: Record, generations: int, history: FloatArray, spent: floa
         excess=excess,
         kinds=dict(sorted(record.kinds.items())),
         history=history,
+    )
+
+
+def state_of(found: SearchResult) -> dict[str, NDArray[Any]]:
+    """Return what a search found as plain arrays, for :func:`found_again`."""
+    kinds = list(found.kinds.values())
+    width = found.rows.shape[1]
+    none = np.zeros((0, width), dtype=np.int64)
+    return {
+        "rows": found.rows,
+        "objectives": found.objectives,
+        "fixed_rows": found.fixed_rows,
+        "fixed_objectives": found.fixed_objectives,
+        "counts": np.array([found.evaluations, found.feasible, found.generations], dtype=np.int64),
+        "seconds": np.array([found.seconds]),
+        "ended": np.array([found.ended], dtype=np.str_),
+        "least_row": none if found.least_row is None else found.least_row[None],
+        "least_violation": np.array([found.least_violation]),
+        "excess_names": np.array(list(found.excess), dtype=np.str_),
+        "excess": np.array(list(found.excess.values()), dtype=np.float64),
+        "kind_names": np.array(list(found.kinds), dtype=np.str_),
+        "kind_rows": np.array([best.row for best in kinds], dtype=np.int64).reshape(-1, width),
+        "kind_objectives": np.array([best.objectives for best in kinds], dtype=np.float64).reshape(-1, 3),
+        "kind_violation": np.array([best.violation for best in kinds], dtype=np.float64),
+        "history": found.history,
+    }
+
+
+def found_again(state: Mapping[str, NDArray[Any]]) -> SearchResult:
+    """Return the result whose :func:`state_of` is given."""
+    evaluations, feasible, generations = (int(count) for count in state["counts"])
+    least = state["least_row"]
+    kinds = (state["kind_names"], state["kind_rows"], state["kind_objectives"], state["kind_violation"])
+    return SearchResult(
+        rows=state["rows"],
+        objectives=state["objectives"],
+        fixed_rows=state["fixed_rows"],
+        fixed_objectives=state["fixed_objectives"],
+        evaluations=evaluations,
+        feasible=feasible,
+        generations=generations,
+        seconds=float(state["seconds"][0]),
+        ended=str(state["ended"][0]),
+        least_row=least[0] if len(least) else None,
+        least_violation=float(state["least_violation"][0]),
+        excess={str(name): float(size) for name, size in zip(state["excess_names"], state["excess"], strict=True)},
+        kinds={
+            str(name): BestOfKind(row, values, float(violation))
+            for name, row, values, violation in zip(*kinds, strict=True)
+        },
+        history=state["history"],
     )

@@ -83,7 +83,7 @@ class Record:
             best = here[score[here].argmin()]
             name = topology_name(int(kind))
             known = self.kinds.get(name)
-            if known is None or score[best] < self.score_of(known):
+            if known is None or score[best] < score_of(known, self.price):
                 self.kinds[name] = BestOfKind(
                     rows[best].copy(), objectives[best].copy(), float(violation[best])
                 )
@@ -134,11 +134,12 @@ class Record:
             for name, row, values, violation in zip(*columns, strict=True)
         }
 
-    def score_of(self, best: BestOfKind) -> float:
-        """Return what a best design is compared by: lifetime cost, or its violation where infeasible."""
-        if best.violation <= 0.0:
-            return float(best.objectives[1] + self.price * best.objectives[0])
-        return 1e9 + min(best.violation, 1e9)
+
+def score_of(best: BestOfKind, price: float) -> float:
+    """Return what a best design is compared by: lifetime cost, or its violation where infeasible."""
+    if best.violation <= 0.0:
+        return float(best.objectives[1] + price * best.objectives[0])
+    return 1e9 + min(best.violation, 1e9)
 
 
 def topology(problem: Problem, rows: IntArray) -> IntArray:

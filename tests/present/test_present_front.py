@@ -15,7 +15,7 @@ from rich.console import Console
 from archopt.errors import OutputError
 from archopt.present.front import Front
 from archopt.present.plain import plain, plain_dict
-from archopt.present.progress import SearchProgress, left_s, said_line
+from archopt.present.progress import SearchProgress, said_line
 from archopt.present.record import FrontRecord, summary
 
 
@@ -105,11 +105,19 @@ def test_progress_share_is_of_the_nearer_end() -> None:
     assert progress.share(250, 10.0) == pytest.approx(0.25, rel=1e-12)
     assert progress.share(250, 60.0) == pytest.approx(0.6, rel=1e-12)
     assert progress.share(5000, 60.0) == 1.0
-    assert left_s(0.25, 30.0) == pytest.approx(90.0, rel=1e-12)
-    assert left_s(0.0, 30.0) is None
     assert said_line(3, 250, 200, 0.8125, 90.4) == (
-        "generation 3, 250 designs tried, 200 feasible, hypervolume 0.8125, 1:30 left"
+        "generation 3, 250 designs tried, 200 feasible, hypervolume 0.8125, at most 1:30 of search left"
     )
+
+
+def test_time_left_is_to_the_nearer_end() -> None:
+    by_designs = SearchProgress(Console(file=StringIO()), evaluations=1000)
+    assert by_designs.left_s(90.0, 30.0) == 90.0
+    assert by_designs.left_s(None, 30.0) is None
+    by_both = SearchProgress(Console(file=StringIO()), evaluations=1000, seconds=100.0)
+    assert by_both.left_s(90.0, 30.0) == pytest.approx(70.0, rel=1e-12)
+    assert by_both.left_s(20.0, 30.0) == 20.0
+    assert by_both.left_s(None, 130.0) == 0.0
 
 
 def test_a_front_writes_itself(record: FrontRecord, tmp_path: Path) -> None:

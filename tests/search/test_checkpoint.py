@@ -126,7 +126,7 @@ def test_put_by_now_and_then_and_whole(tmp_path: Path) -> None:
     assert keeper.offer(REACHED, lambda: state_of(5), at_once=True)
     assert len(checkpoint.read(place).state["values"]) == 5
     assert [entry.name for entry in place.iterdir()] == [checkpoint.NAME]
-    keeper.forget()
+    checkpoint.forget(place)
     assert not place.exists()
 
 
