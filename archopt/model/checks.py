@@ -6,6 +6,7 @@ import numpy as np
 
 from archopt.model.bus_checks import check_buses
 from archopt.model.bus_stability import check_impedance
+from archopt.model.copper_heat import rise_k
 from archopt.model.cost import copper_area_m2
 from archopt.model.hardware import place_limits_a
 from archopt.model.limits import Ledger
@@ -14,7 +15,6 @@ from archopt.model.rail_checks import check_jump, check_rails
 from archopt.model.situation import Droop, Situation
 from archopt.model.space import BUS_NAMES
 from archopt.model.states import FALLBACK, JUMP, MIX
-from archopt.physics.ampacity import current_limit_a
 
 
 def check_copper(situation: Situation, ledger: Ledger) -> None:
@@ -24,13 +24,21 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
     steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
     axes = (situation.state_names(steady), situation.rail_names)
     amps = solution.current_a[:, steady]
-    drop = (amps * hardware.pour_ohm[:, None, :] + rails.tap_drop_v) / rails.voltage_v  # to the farthest tap
+    drop = (amps * solution.pour_ohm[:, steady] + rails.tap_drop_v) / rails.voltage_v  # to the farthest tap
     ledger.add("rail drop", 100.0 * drop, 100.0 * rails.drop_budget, at_most=True, axes=axes)
     ledger.add("copper ampacity", amps, pour_limits_a(situation)[:, None, :], at_most=True, axes=axes)
+    permitted_k = board.copper_rise_k
+    rise = solution.pour_rise_k[:, steady]
+    ledger.add("copper temperature rise", rise, permitted_k, at_most=True, axes=axes)
     bus_axes = (situation.state_names(steady), tuple(f"{name} plane" for name in BUS_NAMES))
     through, limit = crowding(situation, steady)
     ledger.add(
         "copper ampacity", through, limit, at_most=True, axes=bus_axes,
+        applies=(hardware.converter >= 0)[:, None, :],
+    )  # fmt: skip
+    plane_rise = rise_k(problem, through / np.maximum(limit, 1e-12))
+    ledger.add(
+        "copper temperature rise", plane_rise, permitted_k, at_most=True, axes=bus_axes,
         applies=(hardware.converter >= 0)[:, None, :],
     )  # fmt: skip
     stack_pairs = problem.stacks.pairs[hardware.stack]
@@ -40,11 +48,8 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
 
 def pour_limits_a(situation: Situation) -> FloatArray:
     """Return what the pour of each rail may carry, (P, R) A, by IPC-2221."""
-    problem = situation.problem
-    thickness = problem.stacks.thickness_m[situation.hardware.stack][:, None]
-    rise_k = problem.study.board.copper_rise_k
-    one = current_limit_a(problem.rails.copper_width_m, thickness, rise_k, inner=True)
-    return np.asarray(situation.designs.rail("pairs") * one)
+    hardware = situation.hardware
+    return np.asarray(hardware.pairs * situation.problem.pour_limit_a[hardware.stack])
 
 
 def crowding(situation: Situation, steady: IntArray) -> tuple[FloatArray, FloatArray]:
@@ -134,9 +139,7 @@ def bus_a_span_v(situation: Situation) -> tuple[FloatArray, FloatArray]:
     A regulated bus is at its nominal when it starts and falls back; a fixed ratio follows the input.
     """
     problem, hardware = situation.problem, situation.hardware
-    nominal_v = problem.grid_v[situation.designs.bus("nominal_v")[:, 0]]
-    low = np.minimum(hardware.band_v[:, 0].min(axis=1), nominal_v)
-    high = np.maximum(hardware.band_v[:, 0].max(axis=1), nominal_v)
+    low, high = hardware.band_v[:, 0].min(axis=1), hardware.band_v[:, 0].max(axis=1)
     if len(problem.converters.names):
         ratio, supply = problem.converters.ratio[np.maximum(hardware.converter[:, 0], 0)], problem.study.supply
         follows = hardware.fixed_ratio[:, 0]
@@ -157,9 +160,9 @@ def supervisor_misfits(situation: Situation, used: BoolArray) -> IntArray:
     return np.asarray((needed > 0) & ~((hardware.supervisor >= 0) & fits), dtype=np.int64)
 
 
-def check_all(situation: Situation, droop: Droop, *, explain: bool = False) -> Ledger:
-    """Check every limit of a batch of solved designs."""
-    ledger = Ledger(len(situation.designs), explain=explain, states=frozenset(situation.states.name))
+def check_all(situation: Situation, droop: Droop, *, explain: bool = False, bare: bool = False) -> Ledger:
+    """Check every limit of a batch of solved designs; ``bare`` keeps the normalised slack alone."""
+    ledger = Ledger(len(situation.designs), explain=explain, bare=bare, states=frozenset(situation.states.name))
     check_rails(situation, droop, ledger)
     check_jump(situation, ledger)
     check_buses(situation, ledger)

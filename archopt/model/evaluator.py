@@ -72,7 +72,7 @@ def transition_kwh(problem: Problem, states: StateTable, hardware: Hardware) -> 
     counts = states.transitions_per_year
     if not counts.any():
         return np.zeros(len(hardware.stage))
-    volts = hardware.band_v  # (P, 2, B)
+    volts = hardware.band_v[..., : states.bands]  # (P, 2, B)
     moved = transition_energy_j(hardware.bulk_nominal_f[..., None, None], volts[..., :, None], volts[..., None, :])
     rising = volts[..., None, :] > volts[..., :, None]
     used = (hardware.converter >= 0) & ~hardware.fixed_ratio
@@ -98,10 +98,14 @@ class Evaluator:
 
     def evaluate(self, rows: IntArray, *, exact: bool = False) -> Evaluation:
         """Evaluate decided rows by the tables, or with ``exact`` by direct physics."""
-        return self.detail(rows, exact=exact).evaluation
+        return self.evaluated(rows, exact=exact, explain=False, bare=True).evaluation
 
     def detail(self, rows: IntArray, *, exact: bool = True, explain: bool = False) -> Detail:
         """Evaluate decided rows and keep every intermediate result."""
+        return self.evaluated(rows, exact=exact, explain=explain, bare=False)
+
+    def evaluated(self, rows: IntArray, *, exact: bool, explain: bool, bare: bool) -> Detail:
+        """Evaluate decided rows, ``bare`` without the places of the limits."""
         return evaluate_in(
             self.problem,
             self.states,
@@ -109,6 +113,7 @@ class Evaluator:
             self.direct_stages if exact else self.table_stages,
             exact=exact,
             explain=explain,
+            bare=bare,
         )
 
 
@@ -120,6 +125,7 @@ def evaluate_in(
     *,
     exact: bool,
     explain: bool = False,
+    bare: bool = False,
 ) -> Detail:
     """Evaluate decided designs over given states."""
     hardware = unpack(problem, designs, states)
@@ -127,7 +133,7 @@ def evaluate_in(
     board_bill = bill(problem, designs)
     situation = Situation(problem, states, designs, hardware, solution, board_bill)
     droop = rail_droop(situation)
-    ledger = check_all(situation, droop, explain=explain)
+    ledger = check_all(situation, droop, explain=explain, bare=bare)
     moving = transition_kwh(problem, states, hardware)
     energy = (solution.loss_w * states.hours).sum(axis=1) * 1e-3 + moving
     exact_percent = np.maximum(droop.droop_percent, droop.release_percent).max(axis=(1, 2))

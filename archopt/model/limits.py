@@ -50,6 +50,7 @@ LIMITS = (
     Limit("bus drop", "% of bus", 0.5),
     Limit("rail drop", "% of rail", 0.5),
     Limit("copper ampacity", "A", 0.05, relative=True),
+    Limit("copper temperature rise", "K", 5.0),
     Limit("layer budget", "cm2", 0.05, relative=True),
     Limit("stability", "ratio", 0.1),
     Limit("impedance margin", "dB", 1.0),
@@ -88,12 +89,17 @@ class Worst:
 
 @dataclass
 class Ledger:
-    """Collects the worst slack of every limit over P designs; remembers places when ``explain``."""
+    """Collects the worst slack of every limit over P designs; remembers places when ``explain``.
+
+    A ``bare`` one keeps nothing but the normalised slack, which is all a search asks for.
+    """
 
     count: int
     explain: bool = False
+    bare: bool = False
     states: frozenset[str] = frozenset()  # state names, so that a place reads part first, state last
     worst: dict[str, Worst] = field(default_factory=dict)
+    least: dict[str, FloatArray] = field(default_factory=dict)  # normalised slack of a bare one, (P,)
 
     def add(
         self,
@@ -107,6 +113,11 @@ class Ledger:
     ) -> None:
         """Record one check; value and bound broadcast to (P, *axes), in the limit's unit."""
         limit = LIMITS[INDEX[name]]
+        if self.bare:
+            found_least = least_slack(limit, value, bound, at_most=at_most, applies=applies)
+            known = self.least.get(name)
+            self.least[name] = found_least if known is None else np.minimum(known, found_least)
+            return
         shape = (self.count, *(len(labels) for labels in axes))
         bound_full = np.broadcast_to(bound, shape)
         slack = (bound_full - value) if at_most else (value - bound_full)
@@ -140,9 +151,28 @@ class Ledger:
     def normalised(self) -> FloatArray:
         """Return (P, limits) normalised slack, room where a limit was never checked."""
         out = np.full((self.count, len(LIMITS)), ROOM)
+        for name, least in self.least.items():
+            out[:, INDEX[name]] = least
         for name, worst in self.worst.items():
             out[:, INDEX[name]] = worst.normalised
         return out
+
+
+def least_slack(
+    limit: Limit, value: NDArray[Any], bound: NDArray[Any] | float, *, at_most: bool, applies: BoolArray | bool
+) -> FloatArray:
+    """Return the least normalised slack of each design, (P,), and no place: :meth:`Ledger.add` without its records.
+
+    A tolerance that is one number divides the least slack alone.
+    """
+    slack = np.subtract(bound, value) if at_most else np.subtract(value, bound)
+    if limit.relative:
+        slack = slack / (limit.tolerance * np.maximum(np.abs(bound), 1e-9))
+    if applies is not True:
+        slack = np.where(applies, slack, np.inf)
+    least = slack.min(axis=tuple(range(1, slack.ndim))) if slack.ndim > 1 else slack
+    scaled = least if limit.relative else least / limit.tolerance
+    return np.nan_to_num(scaled, nan=-ROOM, posinf=ROOM, neginf=-ROOM)
 
 
 def text_of(axes: tuple[tuple[str, ...], ...], place: int, states: frozenset[str]) -> str:
