@@ -124,17 +124,16 @@ def bank_loss_w(problem: Problem, hardware: Hardware, stage_v: FloatArray, curre
 
 def children_current_a(problem: Problem, hardware: Hardware, stage_in_w: FloatArray) -> FloatArray:
     """Return the current children draw from each parent rail, (P, S, R) A."""
-    extra = np.zeros_like(stage_in_w)
-    rows, rails = np.nonzero(hardware.parent >= 0)
-    for p, r in zip(rows, rails, strict=True):
-        j = hardware.parent[p, r]
-        extra[p, :, j] += stage_in_w[p, :, r] / problem.rails.voltage_v[j]
-    return extra
+    p, child = np.nonzero(hardware.parent >= 0)
+    parent = hardware.parent[p, child]
+    extra = np.zeros((*hardware.stage.shape, stage_in_w.shape[1]))
+    np.add.at(extra, (p, parent), stage_in_w[p, :, child] / problem.rails.voltage_v[parent][:, None])
+    return extra.transpose(0, 2, 1)
 
 
 def bias_power_w(problem: Problem, states: StateTable, hardware: Hardware) -> tuple[FloatArray, FloatArray]:
     """Return what the bias supply delivers to gates and what it draws, (P, S) W."""
-    delivered = np.where(states.off, 0.0, hardware.running * hardware.bias_w[:, None, :]).sum(axis=2)
+    delivered = np.einsum("psr,sr,pr->ps", hardware.running.astype(np.float64), ~states.off * 1.0, hardware.bias_w)
     if not len(problem.biases.names):
         return delivered, delivered
     index = np.maximum(hardware.bias, 0)
@@ -179,56 +178,130 @@ def via_drop_v(problem: Problem, rail_a: FloatArray, bus: int) -> FloatArray:
     return np.asarray(2.0 * (shared + planes.own_ohm[bus] * rail_a))
 
 
+class Feeds:
+    """Where the stages of a batch take their input from: bus A, bus B, the input node or a parent rail.
+
+    Weights and loads keep states last in memory, where all rails of a bus have the same source.
+    """
+
+    def __init__(self, problem: Problem, hardware: Hardware) -> None:
+        self.problem, self.hardware = problem, hardware
+        self.source = np.where(hardware.feed == INPUT, 2, hardware.on_bus[:, 1].astype(np.int64))
+        self.child = np.nonzero(hardware.parent >= 0)
+        self.parent_v = problem.rails.voltage_v[hardware.parent[self.child]]
+        self.direct = (hardware.feed == INPUT).astype(np.float64)
+        self.on_bus = hardware.on_bus.astype(np.float64)
+        self.buses = [bus for bus in range(2) if hardware.on_bus[:, bus].any()]
+
+    def stage_v(self, bus_v: FloatArray, node_v: FloatArray, drop_v: FloatArray) -> FloatArray:
+        """Return the stage inputs, (P, S, R) V, from buses (P, S, 2), input node (P, S) and drops (P, S, R)."""
+        sources = np.concatenate([bus_v.transpose(0, 2, 1), node_v[:, None]], axis=1)
+        fed_v = sources[np.arange(len(sources))[:, None], self.source]
+        stage_v = np.maximum(fed_v - drop_v.transpose(0, 2, 1), LEAST_STAGE_SHARE * fed_v)
+        stage_v[self.child] = self.parent_v[:, None]
+        return stage_v.transpose(0, 2, 1)
+
+    def bus_sum(self, values: FloatArray) -> FloatArray:
+        """Return what the rails of each bus sum to, (P, S, 2), from (P, S, R)."""
+        out = np.zeros((len(values), 2, values.shape[1]))
+        for bus in self.buses:
+            out[:, bus] = np.einsum("psr,pr->ps", values, self.on_bus[:, bus])
+        return out.transpose(0, 2, 1)
+
+    def plane_drops(self, rail_a: FloatArray, warmth: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Return the drop to every stage, (P, S, R) V, and the loss of both planes, (P, S, 2) W.
+
+        rail_a : (P, S, R) stage input currents; warmth : (P, S, 2) resistance over that at the reference
+        """
+        problem, hardware = self.problem, self.hardware
+        drop = np.zeros_like(rail_a)
+        plane_w = np.zeros((len(rail_a), 2, rail_a.shape[1])).transpose(0, 2, 1)
+        for bus in self.buses:
+            on_bus = self.on_bus[:, bus, None]
+            on_a = rail_a * on_bus
+            part = problem.planes.square_drop(bus, on_a)
+            part *= hardware.plane_ohm[:, bus, None, None]
+            if problem.planes.with_vias:
+                part += via_drop_v(problem, on_a, bus)
+            part *= warmth[..., bus, None]
+            part *= on_bus
+            plane_w[..., bus] = np.einsum("psr,psr->ps", part, on_a)
+            drop += part
+        return drop, plane_w
+
+
+class BusUnits:
+    """The converters of a batch: their losses, asked only where there is one."""
+
+    def __init__(self, problem: Problem, states: StateTable, hardware: Hardware) -> None:
+        self.states, self.hardware = states, hardware
+        self.here = np.nonzero(hardware.converter >= 0)
+        self.losses = ConverterLoss.of(problem.converters, hardware.converter[self.here][:, None])
+
+    def __call__(self, node_v: FloatArray, bus_v: FloatArray, bus_a: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Return loss of all running units, W, and temperature of one, degC, (P, S, 2); local air without one."""
+        p, bus = self.here
+        running = self.hardware.units_running[p, :, bus]
+        found = self.losses(
+            node_v[p], np.maximum(bus_v[p, :, bus], 1e-3), bus_a[p, :, bus] / running, self.states.ambient_degc
+        )
+        shape = (len(node_v), 2, node_v.shape[1])
+        loss_w, degc = np.zeros(shape), np.broadcast_to(self.states.ambient_degc, shape).copy()
+        loss_w[p, bus] = found.total_w * running
+        degc[p, bus] = found.temperature_degc
+        return loss_w.transpose(0, 2, 1), degc.transpose(0, 2, 1)
+
+
 def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: StageLosses, *, exact: bool) -> Solution:
     """Solve the board for a batch of designs.
 
     With ``exact`` the fixed point is iterated until nothing moves by more than 1e-13 relative, else a fixed
     number of passes is made. Never raises on a collapsing design: ``missing_w`` and low voltages say so.
+    Arrays over states and rails are (P, S, R) with states last in memory.
     """
     rails, converters, path = problem.rails, problem.converters, problem.path
-    off = states.off
-    base_a = np.broadcast_to(states.current_a, (len(hardware.stage), *states.current_a.shape))
-    has_parent = hardware.parent >= 0
-    with_children = bool(has_parent.any())
-    parent_v = rails.voltage_v[np.maximum(hardware.parent, 0)]
-    direct = hardware.feed == INPUT
-    node_v = np.broadcast_to(states.input_v, (len(hardware.stage), len(states.hours))).copy()
+    count = len(hardware.stage)
+    base_a = np.broadcast_to(np.ascontiguousarray(states.current_a.T), (*hardware.stage.shape, len(states.hours)))
+    base_a = base_a.transpose(0, 2, 1)
+    with_children = bool((hardware.parent >= 0).any())
+    feeds, units = Feeds(problem, hardware), BusUnits(problem, states, hardware)
+    node_v = np.broadcast_to(states.input_v, (count, len(states.hours))).copy()
     index = np.maximum(hardware.converter, 0)
     has_converter = hardware.converter >= 0
-    converter_losses = ConverterLoss.of(converters, index[:, None, :])
-    on_bus = hardware.on_bus[:, None, :, :]
-    alive = (on_bus & ~off[None, :, None, :]).any(axis=3) & has_converter[:, None, :]
+    alive = (feeds.bus_sum(np.broadcast_to(~states.off, base_a.shape)) > 0) & has_converter[:, None, :]
     ratio = converters.ratio[index][:, None, :]
     droop_ohm = converters.output_ohm[index][:, None, :] / hardware.units_running
     set_v = hardware.set_v
-    bus_v = np.where(hardware.fixed_ratio[:, None, :], node_v[..., None] * ratio, set_v)
+    fixed_ratio = hardware.fixed_ratio[:, None, :]
+    bus_v = np.where(fixed_ratio, node_v[..., None] * ratio, set_v)
+    least_bus_v = LEAST_STAGE_SHARE * np.where(np.isfinite(set_v), set_v, 1.0)
     supervisor_w = np.where(
         hardware.supervisor >= 0, problem.supervisors.power_w[np.maximum(hardware.supervisor, 0)], 0.0
-    ) if len(problem.supervisors.names) else np.zeros(len(hardware.stage))  # fmt: skip
+    ) if len(problem.supervisors.names) else np.zeros(count)  # fmt: skip
     bias_out, bias_in = bias_power_w(problem, states, hardware)
     bias_bus = np.where(hardware.bias_on_bus[:, None], bias_in, 0.0)
     bias_node = bias_in - bias_bus
+    bias_bus = np.where(alive[..., 0], bias_bus, 0.0)
     dip_v = np.zeros(hardware.band_v.shape)
     step_w = np.zeros(hardware.band_v.shape)
-    step_ratio = np.ones((len(hardware.stage), states.places, len(rails.names)))
+    step_ratio = np.ones((count, states.places, len(rails.names)))
     jump_index, jump_band = states.of_kind(JUMP), states.band[states.of_kind(JUMP)]
+    mix = states.mix_low
     current = base_a
     stage_loss = stages.of(hardware)
+    sensed = rails.remote_sense.astype(np.float64)
     heat = CopperHeat(problem, states, hardware)
     pour_rise = heat.pour_rise_k()
     pour_ohm = heat.pour_ohm(pour_rise)
+    pour_w = current**2 * pour_ohm
+    delivered = current * rails.voltage_v + pour_w * sensed
     plane_rise, plane_factor = np.zeros((*node_v.shape, 2)), np.ones((*node_v.shape, 2))
-    drop = np.zeros((*node_v.shape, len(rails.names)))
+    drop = np.zeros_like(pour_w)
     previous = np.full_like(node_v, np.inf)
     passes = EXACT_PASSES if exact else FAST_PASSES
     for turn in range(passes):
-        feed_v = np.where(on_bus[:, :, 0], bus_v[..., 0:1], np.where(on_bus[:, :, 1], bus_v[..., 1:2], 0.0))
-        stage_v = np.maximum(feed_v - drop, LEAST_STAGE_SHARE * feed_v)
-        stage_v = np.where(direct[:, None, :], node_v[..., None], stage_v)
-        stage_v = np.maximum(np.where(has_parent[:, None, :], parent_v[:, None, :], stage_v), 1e-3)
+        stage_v = feeds.stage_v(bus_v, node_v, drop)
         stage_loss_w = stage_loss(stage_v, current)
-        pour_w = current**2 * pour_ohm
-        delivered = current * rails.voltage_v + np.where(rails.remote_sense, pour_w, 0.0)
         stage_in = delivered + stage_loss_w
         if with_children and (turn == 0 or exact):
             current = base_a + children_current_a(problem, hardware, stage_in)
@@ -236,12 +309,12 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
             heat.with_children(pour_rise, current)
             pour_ohm = heat.pour_ohm(pour_rise)
             pour_w = current**2 * pour_ohm
-            delivered = current * rails.voltage_v + np.where(rails.remote_sense, pour_w, 0.0)
+            delivered = current * rails.voltage_v + pour_w * sensed
             stage_in = delivered + stage_loss_w
         if turn == 0:
-            mix = states.mix_low
+            mix_in, jump_in = stage_in[:, mix], stage_in[:, jump_index]
             output_w = current[:, mix] * rails.voltage_v
-            in_over_out = np.where(output_w > 0, stage_in[:, mix] / np.maximum(output_w, 1e-12), STEP_POWER_RATIO)
+            in_over_out = np.where(output_w > 0, mix_in / np.maximum(output_w, 1e-12), STEP_POWER_RATIO)
             step_ratio = np.minimum(in_over_out, LARGEST_STEP_RATIO)
             step_w = worst_step_w(problem, hardware, step_ratio)
             band_volts = np.where(
@@ -255,53 +328,39 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
                 converters.delay_s[index][..., None],
                 hardware.bulk_f,
                 hardware.bulk_esr_ohm[..., None],
-                standing_w(hardware, stage_in[:, mix], stage_in[:, jump_index], step_w),
+                standing_w(hardware, mix_in, jump_in, step_w),
             )
             dip_v = np.where(has_converter[..., None], dip_v, 0.0)
         rail_a = stage_in / stage_v
-        on_a = rail_a[:, :, None, :] * on_bus
-        bias_a = np.where(alive[..., 0], bias_bus / np.maximum(bus_v[..., 0], 1e-3), 0.0)
+        bias_a = bias_bus / np.maximum(bus_v[..., 0], 1e-3)
         if exact or turn == passes - 2:  # a pass late is near enough: the drop moves the current by per cents
-            plane_rise = heat.plane_rise_k(on_a, bias_a)
+            plane_rise = heat.plane_rise_k(rail_a, bias_a)
             plane_factor = heat.factor(plane_rise)
-        fresh_drop = np.zeros_like(drop)
-        plane_w = np.empty((*node_v.shape, 2))
-        for bus in range(2):
-            part = np.einsum("psq,rq->psr", on_a[:, :, bus], problem.bus_squares[bus])
-            part *= hardware.plane_ohm[:, bus, None, None]
-            if problem.planes.with_vias:
-                part += via_drop_v(problem, on_a[:, :, bus], bus)
-            part *= plane_factor[..., bus, None] * on_bus[:, :, bus]
-            plane_w[..., bus] = (part * on_a[:, :, bus]).sum(axis=2)
-            fresh_drop += part
-        drop = fresh_drop
-        bus_a = on_a.sum(axis=3)
+        drop, plane_w = feeds.plane_drops(rail_a, plane_factor)
+        bus_a, bus_w = feeds.bus_sum(rail_a), feeds.bus_sum(stage_in) + plane_w
         bus_a[..., 0] += bias_a
-        bus_w = (stage_in[:, :, None, :] * on_bus).sum(axis=3) + plane_w
-        bus_w[..., 0] += np.where(alive[..., 0], bias_bus, 0.0)
-        per_unit = bus_a / hardware.units_running
-        converter = converter_losses(
-            node_v[..., None], np.maximum(bus_v, 1e-3), per_unit, states.ambient_degc[:, None]
-        )
-        converter_loss = np.where(alive, converter.total_w * hardware.units_running, 0.0)
+        bus_w[..., 0] += bias_bus
+        if exact or turn != passes - 2:  # a pass late is near enough: it moves the input by a ten-thousandth
+            converter_loss, converter_degc = units(node_v, bus_v, bus_a)
+            converter_loss = np.where(alive, converter_loss, 0.0)
         converter_in = np.where(alive, bus_w + converter_loss, 0.0)
-        node_w = converter_in.sum(axis=2) + (stage_in * direct[:, None, :]).sum(axis=2)
+        node_w = converter_in.sum(axis=2) + np.einsum("psr,pr->ps", stage_in, feeds.direct)
         node_w += bias_node + supervisor_w[:, None]
         most = states.input_v**2 / (4.0 * max(path.resistance_ohm, 1e-12))
         missing = np.maximum(node_w - most, 0.0)
         root = np.sqrt(np.maximum(states.input_v**2 - 4.0 * path.resistance_ohm * node_w, 0.0))
         node_v = 0.5 * (states.input_v + root)
         input_a = (node_w - missing) / node_v
-        moving = np.where(hardware.fixed_ratio[:, None, :], node_v[..., None] * ratio - droop_ohm * bus_a, set_v)
+        moving = np.where(fixed_ratio, node_v[..., None] * ratio - droop_ohm * bus_a, set_v)
         moving[:, jump_index] -= dip_v.transpose(0, 2, 1)[:, jump_band]
-        bus_v = np.maximum(moving, LEAST_STAGE_SHARE * np.where(np.isfinite(set_v), set_v, 1.0))
+        bus_v = np.maximum(moving, least_bus_v)
         input_w = node_w + path.resistance_ohm * input_a**2 + path.power_w
         if exact:
             change = np.abs(input_w - previous) / np.maximum(np.abs(input_w), 1e-12)
             previous = input_w
             if turn > 2 and float(change.max(initial=0.0)) <= EXACT_TOLERANCE:
                 break
-    unsensed = np.where(rails.remote_sense, 0.0, pour_w).sum(axis=2)
+    unsensed = np.einsum("psr,r->ps", pour_w, 1.0 - sensed)
     loss_w = input_w - (states.useful_w - unsensed - states.tap_w)
     return Solution(
         stage_v=stage_v,
@@ -315,7 +374,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
         bus_a=bus_a,
         bus_w=bus_w,
         converter_loss_w=converter_loss,
-        converter_degc=np.asarray(converter.temperature_degc),
+        converter_degc=converter_degc,
         plane_w=plane_w,
         plane_rise_k=plane_rise,
         node_v=node_v,

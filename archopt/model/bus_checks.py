@@ -62,12 +62,9 @@ def check_buses(situation: Situation, ledger: Ledger) -> None:
         axes=axes, applies=here,
     )  # fmt: skip
     ledger.add("thermal gain", unit.thermal_gain, 1.0, at_most=True, axes=axes, applies=here)
-    bands = tuple(f"band {k + 1}" for k in range(states.bands))
-    bus_axes = (BUS_NAMES, bands)
+    bus_axes = (BUS_NAMES, states.place_names)
     band_v = hardware.band_v
-    nominal_v = problem.grid_v[situation.designs.bus("nominal_v")]
-    low_v = np.minimum(band_v.min(axis=2), nominal_v)
-    high_v = np.maximum(band_v.max(axis=2), nominal_v)
+    low_v, high_v = band_v.min(axis=2), band_v.max(axis=2)
     ledger.add(
         "bus output range",
         low_v,
@@ -150,7 +147,7 @@ def check_stability(situation: Situation, ledger: Ledger, index: IntArray, used:
     source_h = np.where(fixed_ratio, path.inductance_h * ratio**2, regulated_source_h(output_ohm, bandwidth_hz))
     source_ohm = np.maximum(source_ohm, 1e-6)
     least = least_capacitance_f(source_ohm, source_h, power, volts)
-    margin = np.minimum(hardware.bulk_f[..., None] / np.maximum(least, 1e-12), 1e6)
+    margin = np.minimum(hardware.bulk_f / np.maximum(least, 1e-12), 1e6)
     resistive = np.minimum(resistance_limit_ohm(power, volts) / source_ohm, 1e6)
     bound = problem.study.control.stability_margin
     axes = (BUS_NAMES, situation.state_names(jump))

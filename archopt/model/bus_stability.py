@@ -27,19 +27,12 @@ FOLLOWS_AT_ONCE = 1e12
 Impedance = Callable[[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray], FloatArray]
 
 
-def stage_input_f(situation: Situation) -> FloatArray:
-    """Return the input capacitance of the stages on each bus, (P, 2) F."""
-    hardware = situation.hardware
-    own_f = situation.problem.stages.input_capacitance_f[hardware.stage] * hardware.phases
-    return np.asarray((hardware.on_bus * own_f[:, None, :]).sum(axis=2))
-
-
 @dataclass(frozen=True)
 class Sources:
     """Resistance and inductance of each bus's source with the units running in each band, and what is beside it.
 
     Regulated: the output impedance, held up to the bandwidth. Fixed ratio: droop resistance and the input path
-    behind it, referred to the bus. ohm, henry (P, 2, B); bulk_f, esr_ohm, input_f (P, 2).
+    behind it, referred to the bus. ohm, henry, bulk_f, bus_v, units (P, 2, B + 1); esr_ohm, input_f (P, 2).
     """
 
     ohm: FloatArray
@@ -47,20 +40,25 @@ class Sources:
     bulk_f: FloatArray
     esr_ohm: FloatArray
     input_f: FloatArray
+    bus_v: FloatArray
     units: IntArray
 
-    def by_units(self, of: Impedance, here: BoolArray) -> FloatArray:
-        """Return a property of the source and its banks, (P, 2, B); asked once a count of running units."""
+    def each(self, of: Impedance, here: BoolArray) -> FloatArray:
+        """Return a property of the source and its banks, (P, 2, B + 1); asked once a bus, voltage and units running."""
         out = np.zeros(self.ohm.shape)
-        for count in np.unique(self.units[here]):
-            found = (self.units == count) & here[..., None]
-            p, bus = np.nonzero(found.any(axis=2))
-            band = found[p, bus].argmax(axis=1)
-            value = of(
-                self.ohm[p, bus, band], self.henry[p, bus, band], self.bulk_f[p, bus], self.esr_ohm[p, bus],
-                self.input_f[p, bus],
-            )  # fmt: skip
-            out[p, bus] = np.where(found[p, bus], value[:, None], out[p, bus])
+        p, bus = np.nonzero(here)
+        _, volts = np.unique(self.bus_v[p, bus], return_inverse=True)
+        lane = np.arange(len(p))[:, None]
+        units = self.units[p, bus]
+        key = (lane * (int(units.max()) + 1) + units) * (int(volts.max()) + 1) + volts.reshape(units.shape)
+        _, first, which = np.unique(key, return_index=True, return_inverse=True)
+        row, place = np.unravel_index(first, key.shape)
+        q, b = p[row], bus[row]
+        value = of(
+            self.ohm[q, b, place], self.henry[q, b, place], self.bulk_f[q, b, place], self.esr_ohm[q, b],
+            self.input_f[q, b],
+        )  # fmt: skip
+        out[p, bus] = value[which.reshape(key.shape)]
         return out
 
 
@@ -75,19 +73,19 @@ def sources(situation: Situation) -> Sources:
     bandwidth_hz = converters.bandwidth_rad_s[index] / (2.0 * np.pi)
     ohm = np.where(fixed, output_ohm + path.resistance_ohm * ratio**2, output_ohm)
     henry = np.where(fixed, path.inductance_h * ratio**2, regulated_source_h(output_ohm, bandwidth_hz))
-    beside_f = stage_input_f(situation)
     return Sources(
         ohm=np.maximum(ohm, LEAST_OHM),
         henry=np.asarray(henry),
-        bulk_f=np.maximum(hardware.bulk_f - beside_f, LEAST_F),
+        bulk_f=np.maximum(hardware.bulk_f - hardware.input_f[..., None], LEAST_F),
         esr_ohm=hardware.bulk_esr_ohm,
-        input_f=beside_f,
+        input_f=hardware.input_f,
+        bus_v=hardware.band_v,
         units=hardware.units_band,
     )
 
 
 def open_bus_v(situation: Situation) -> FloatArray:
-    """Return the bus voltage without load in each band at the lowest input, (P, 2, B) V."""
+    """Return the bus voltage without load in each band at the lowest input, (P, 2, B + 1) V."""
     problem, hardware = situation.problem, situation.hardware
     ratio_v = problem.converters.ratio[np.maximum(hardware.converter, 0)] * problem.study.supply.low_v
     return np.where(hardware.fixed_ratio[..., None], ratio_v[..., None], hardware.band_v)
@@ -111,7 +109,7 @@ def check_impedance(situation: Situation, ledger: Ledger) -> None:
     power_w = np.maximum(solution.bus_w[:, jump].transpose(0, 2, 1), LEAST_W)
     volts = np.maximum(solution.bus_v[:, jump].transpose(0, 2, 1), LEAST_V)
     source, applies = sources(situation), used[..., None]
-    margin_db = impedance_margin_db(source.by_units(output_peak_ohm, used), power_w, volts)
+    margin_db = impedance_margin_db(source.each(output_peak_ohm, used), power_w, volts)
     ledger.add(
         "impedance margin", np.minimum(margin_db, LARGEST_DB), bound_db, at_most=False, axes=axes, applies=applies
     )
@@ -121,12 +119,12 @@ def check_impedance(situation: Situation, ledger: Ledger) -> None:
     fixed: BoolArray = used & hardware.fixed_ratio
     if not fixed.any():
         return
-    peak = source.by_units(source_peak_ohm, fixed)
+    peak = source.each(source_peak_ohm, fixed)
     standing_w = np.maximum(power_w - solution.step_w, 0.0)
-    dip = bus_dip_v(solution.step_w, open_v, FOLLOWS_AT_ONCE, 0.0, hardware.bulk_f[..., None], 0.0, standing_w, peak)
+    dip = bus_dip_v(solution.step_w, open_v, FOLLOWS_AT_ONCE, 0.0, hardware.bulk_f, 0.0, standing_w, peak)
     ledger.add(
         "bus dip", 100.0 * dip / np.maximum(open_v, LEAST_V), control.bus_dip_percent, at_most=True,
-        axes=(BUS_NAMES, tuple(f"band {k + 1}" for k in range(states.bands))), applies=fixed[..., None],
+        axes=(BUS_NAMES, states.place_names), applies=fixed[..., None],
     )  # fmt: skip
 
 

@@ -2,7 +2,8 @@
 
 The schedule is a non-decreasing function of the band on the study's grid, within the adaptive limits, chosen
 to waste least over the year among the voltages legal for the band. It reads tables only, each bus alone and
-at its undropped input; it is never chosen again by the evaluation.
+at its undropped input; it is never chosen again by the evaluation. Arrays over B hold the fall-back behind the
+bands: no voltage is chosen there, it is the nominal.
 """
 
 from __future__ import annotations
@@ -16,7 +17,7 @@ from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO, via_drop_v
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
 from archopt.model.converter_loss import ConverterLoss
-from archopt.model.hardware import Hardware, plane_limit_a, setting_error_v, short_time_a, unpack
+from archopt.model.hardware import Hardware, bulk_effective_f, plane_limit_a, setting_error_v, short_time_a, unpack
 from archopt.model.options import Options, band_hours, option_index, quiet
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
@@ -93,13 +94,14 @@ def legal_voltages(
     legal &= dip_v <= study.control.bus_dip_percent * 0.01 * grid
     moving = (designs.bus("control") != FIXED)[..., None, None]
     charge = np.where(moving, hardware.bulk_nominal_f[..., None, None] * converters.slew_v_per_s[index], 0.0)
-    charge = np.where(np.arange(legal.shape[2])[:, None] < legal.shape[2] - 1, charge, 0.0)  # the top band never rises
+    rises = np.arange(legal.shape[2])[:, None] < legal.shape[2] - 2  # neither the top band nor the fall-back ever does
+    charge = np.where(rises, charge, 0.0)
     short = short_time_a(problem, index, dipped, guaranteed=True)
     legal &= jump_w / dipped + charge <= SAFETY_SHARE * spare * short
     ohm = np.maximum(converters.output_ohm[index] / units, 1e-6)
     henry = regulated_source_h(ohm, converters.bandwidth_rad_s[index] / (2.0 * np.pi))
     least = least_capacitance_f(ohm, henry, jump_w, dipped)
-    legal &= hardware.bulk_f[..., None, None] >= study.control.stability_margin * least
+    legal &= bulk_on_grid_f(problem, designs, hardware) >= study.control.stability_margin * least
     need, jump, high = rail_windows(problem, options, designs, option)
     middle = len(grid) // 2
     on = hardware.on_bus
@@ -134,11 +136,12 @@ def running_units(
     index = np.maximum(hardware.converter, 0)
     units = designs.bus("count")
     nominal = designs.bus("nominal_v")
+    energy_kwh, mix_w, jump_w = (values[:, :, : states.bands] for values in (energy_kwh, mix_w, jump_w))
     volts = problem.grid_v[nominal][..., None]
     low_v = volts - setting_error_v(problem, hardware.converter[..., None], volts)
     at = nominal[..., None, None]
     mean_w = np.take_along_axis(energy_kwh, np.broadcast_to(at, (*energy_kwh.shape[:3], 1)), 3)[..., 0]
-    hours = np.maximum(band_hours(states), 1e-6)
+    hours = np.maximum(band_hours(states)[: states.bands], 1e-6)
     mean_w = mean_w * 1e3 / hours
     mix = np.take_along_axis(mix_w, np.broadcast_to(at, (*mix_w.shape[:3], 1)), 3)[..., 0]
     jump = np.take_along_axis(jump_w, np.broadcast_to(at, (*jump_w.shape[:3], 1)), 3)[..., 0]
@@ -272,7 +275,7 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
         options, designs.rail("stage"), designs.rail("phases"), designs.rail("fewest"), problem.phases_high
     )
     running = raise_for_children(problem, options, designs, option, options.run[option])
-    designs.rows[:, layout.running_phases] = running.reshape(len(designs), -1)
+    designs.rows[:, layout.running_phases] = running[..., : states.bands].reshape(len(designs), -1)
     hardware = unpack(problem, designs, states)
     shares = rail_shares(options, option, hardware)
     energy, mix_w, jump_w = with_bus_losses(
@@ -289,13 +292,14 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
         problem.grid_v,
         problem.converters.bandwidth_rad_s[index],
         problem.converters.delay_s[index],
-        hardware.bulk_f[..., None, None],
+        bulk_on_grid_f(problem, designs, hardware),
         hardware.bulk_esr_ohm[..., None, None],
         np.maximum(mix_w, jump_w - step_w),
     )
     legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip, shares)
     total = energy + converter_energy(problem, states, hardware, energy)
     count, bands, width = len(designs), states.bands, len(problem.grid_v)
+    total, legal = total[:, :, :bands], legal[:, :, :bands]
     genes = [designs.bus(name).reshape(-1) for name in ("lower_v", "upper_v", "nominal_v", "control")]
     volts = choose_schedule(
         total.reshape(2 * count, bands, width), legal.reshape(2 * count, bands, width), *genes
@@ -308,6 +312,11 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     snap_fewest(problem, designs)
     unsettled = (designs.bus("nominal_v") != before).any(axis=1)
     return designs, unsettled | (canonical(problem, designs).rows != designs.rows).any(axis=1)
+
+
+def bulk_on_grid_f(problem: Problem, designs: Designs, hardware: Hardware) -> FloatArray:
+    """Return what holds each bus up at every voltage of the grid, F, (P, 2, 1, G)."""
+    return np.asarray((bulk_effective_f(problem, designs, problem.grid_v) + hardware.input_f[..., None])[:, :, None])
 
 
 def coincident_step_w(problem: Problem, options: Options, option: IntArray, hardware: Hardware) -> FloatArray:

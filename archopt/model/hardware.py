@@ -9,19 +9,21 @@ import numpy as np
 from archopt.model.parameters import FIXED_RATIO, BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm, bank_most_f
 from archopt.model.space import BUS_A, PARENT, Designs
-from archopt.model.states import FALLBACK, StateTable
-from archopt.physics.ampacity import current_limit_a
+from archopt.model.states import StateTable
+from archopt.physics.capacitor import effective_capacitance_f
 
 
 @dataclass(frozen=True)
 class Hardware:
-    """P designs over S states, R rails, two buses, B bands.
+    """P designs over S states, R rails, two buses, B bands and the fall-back behind them: B + 1 places.
 
-    Rails (P, R): stage, phases, feed, parent (-1 none), bank_f (least), bank_most_f, bank_esr_ohm, pour_ohm
-    (loop).
-    Buses (P, 2): converter (-1 none), units, plane_ohm (loop, a square), bulk_f (with stage inputs), esr_ohm,
-    bulk_nominal_f. on_bus (P, 2, R). running (P, S, R) phases, units_running (P, S, 2), set_v (P, S, 2) bus
-    voltage set, with its setting error where limits are checked (not used for fixed ratio), band_v (P, 2, B).
+    Rails (P, R): stage, phases, feed, parent (-1 none), bank_f (least), bank_most_f, bank_esr_ohm, pairs,
+    pour_ohm (loop). pour_ohm and plane_ohm are those of copper as warm as it may be.
+    Buses (P, 2): converter (-1 none), units, bus_pairs, plane_ohm (loop, a square), esr_ohm, bulk_nominal_f,
+    input_f (stage inputs); by place
+    (P, 2, B + 1): band_v voltage set, bulk_f (with stage inputs, the bank biased at that voltage), units_band.
+    on_bus (P, 2, R). running (P, S, R) phases, running_band (P, R, B + 1), units_running (P, S, 2), set_v (P, S, 2)
+    bus voltage set, with its setting error where limits are checked (not used for fixed ratio).
     bias, bias_on_bus, supervisor, stack: (P,).
     """
 
@@ -33,11 +35,14 @@ class Hardware:
     bank_f: FloatArray
     bank_most_f: FloatArray
     bank_esr_ohm: FloatArray
+    pairs: IntArray
     pour_ohm: FloatArray
     converter: IntArray
     units: IntArray
+    bus_pairs: IntArray
     plane_ohm: FloatArray
     bulk_f: FloatArray
+    input_f: FloatArray
     bulk_nominal_f: FloatArray
     bulk_esr_ohm: FloatArray
     on_bus: BoolArray
@@ -97,27 +102,24 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
     bias_on_bus = (designs.board("bias_feed") == 1) & (bias >= 0)
     converter = np.where(used, converter, -1)
     fixed_ratio = (converter >= 0) & (problem.converters.kind[np.maximum(converter, 0)] == FIXED_RATIO)
-    band_v = problem.grid_v[designs.volts]
-    nominal_v = problem.grid_v[designs.bus("nominal_v")]
-    fallback = states.kind == FALLBACK
-    set_v = np.where(fallback[None, :, None], nominal_v[:, None, :], band_v.transpose(0, 2, 1)[:, states.band])
+    nominal, units = designs.bus("nominal_v"), designs.bus("count")
+    band_v = problem.grid_v[np.concatenate([designs.volts, nominal[..., None]], axis=2)]
+    set_v = band_v[:, :, states.band].transpose(0, 2, 1)
     set_v = set_v + states.setting_side[None, :, None] * setting_error_v(problem, converter[:, None, :], set_v)
-    running_band = designs.running_phases
-    running = np.where(fallback[None, :, None], phases[:, None, :], running_band.transpose(0, 2, 1)[:, states.band])
-    units_band = designs.running_converters
-    units = designs.bus("count")
-    units_running = np.where(fallback[None, :, None], units[:, None, :], units_band.transpose(0, 2, 1)[:, states.band])
+    running_band = np.concatenate([designs.running_phases, phases[..., None]], axis=2)
+    running = running_band[:, :, states.band].transpose(0, 2, 1)
+    units_band = np.concatenate([designs.running_converters, units[..., None]], axis=2)
+    units_running = units_band[:, :, states.band].transpose(0, 2, 1)
     bulk = designs.bus("bulk")
     bulk_pieces = problem.bank_counts[designs.bus("bulk_count")]
-    reference_v = np.where(fixed_ratio, bus_ratio_v(problem, converter), nominal_v)
-    bulk_piece_f = bank_effective_f(problem.study, capacitors, reference_v[..., None])
-    bulk_piece_f = np.take_along_axis(bulk_piece_f, bulk[..., None], axis=2)[..., 0]
+    bias_v = np.where(fixed_ratio[..., None], bus_ratio_v(problem, converter)[..., None], band_v)
     stage_input_f = problem.stages.input_capacitance_f[stage] * phases
     input_f = (on_bus * stage_input_f[:, None, :]).sum(axis=2)
     children = np.zeros((count, len(rails.names)), dtype=bool)
     where, which = np.nonzero(parent >= 0)
     children[where, parent[where, which]] = True
     nominal_f = capacitors.capacitance_f * (1.0 + capacitors.tolerance)
+    pairs, bus_pairs = np.maximum(designs.rail("pairs"), 1), np.maximum(designs.bus("pairs"), 1)
     return Hardware(
         stage=stage,
         phases=phases,
@@ -127,11 +129,14 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
         bank_f=effective[rail_index[None, :], bank] * pieces,
         bank_most_f=most[rail_index[None, :], bank] * pieces,
         bank_esr_ohm=esr[bank] / pieces,
-        pour_ohm=2.0 * (rails.squares * sheet[:, None] / np.maximum(designs.rail("pairs"), 1) + rails.pour_via_ohm),
+        pairs=pairs,
+        pour_ohm=2.0 * (rails.squares * sheet[:, None] / pairs + rails.pour_via_ohm),
         converter=converter,
         units=units,
-        plane_ohm=2.0 * sheet[:, None] / np.maximum(designs.bus("pairs"), 1),
-        bulk_f=bulk_piece_f * bulk_pieces + input_f,
+        bus_pairs=bus_pairs,
+        plane_ohm=2.0 * sheet[:, None] / bus_pairs,
+        bulk_f=bulk_effective_f(problem, designs, bias_v) + input_f[..., None],
+        input_f=input_f,
         bulk_nominal_f=nominal_f[bulk] * bulk_pieces + input_f,
         bulk_esr_ohm=esr[bulk] / bulk_pieces,
         on_bus=on_bus,
@@ -148,6 +153,19 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
         supervisor=designs.board("supervisor") - 1,
         stack=stack,
     )
+
+
+def bulk_effective_f(problem: Problem, designs: Designs, bias_v: FloatArray) -> FloatArray:
+    """Return each bus's bulk bank at its tolerance, end of life and the voltage on it, F, (P, 2, places or 1).
+
+    A ceramic holds less at a higher bus: the voltage set is taken, not the dipped one.
+    """
+    table, bulk = problem.capacitors, designs.bus("bulk")[..., None]
+    one_f = effective_capacitance_f(
+        table.capacitance_f[bulk], bias_v, table.half_v[bulk], table.tolerance[bulk],
+        problem.study.derating.capacitance_end_of_life,
+    )  # fmt: skip
+    return np.asarray(one_f * problem.bank_counts[designs.bus("bulk_count")][..., None])
 
 
 def setting_error_v(problem: Problem, converter: IntArray, set_v: FloatArray) -> FloatArray:
@@ -188,9 +206,7 @@ def bus_ratio_v(problem: Problem, converter: IntArray) -> FloatArray:
 
 def place_limits_a(problem: Problem, stack: IntArray, pairs: IntArray) -> FloatArray:
     """Return what each place of the bus planes may carry, (P, 2, K) A; pairs (P, 2)."""
-    thickness = problem.stacks.thickness_m[stack][:, None, None]
-    one = current_limit_a(problem.planes.place_width_m, thickness, problem.study.board.copper_rise_k, inner=True)
-    return np.asarray(pairs[..., None] * one)
+    return np.asarray(pairs[..., None] * problem.place_limit_a[stack])
 
 
 def plane_limit_a(problem: Problem, stack: IntArray, pairs: IntArray, shares: FloatArray) -> FloatArray:

@@ -1,4 +1,4 @@
-"""What each rail option does in each band: the sums and windows the schedule and the completion read.
+"""What each rail option does in each band and at the fall-back: the sums and windows schedule and completion read.
 
 An option is a stage, its phase count and the fewest phases left running. Its running phases in a band are
 decided here once: the count that loses least over the band among those that carry the band's worst mix.
@@ -23,7 +23,7 @@ from archopt.model.stages import (
     slew_down_a_per_s,
     slew_up_a_per_s,
 )
-from archopt.model.states import ENERGY, JUMP, MIX, StateTable
+from archopt.model.states import ENERGY, JUMP, StateTable
 from archopt.model.tables import NODES, LossTables, cubic_weights
 from archopt.physics.output_ripple import half_swing_v
 from archopt.physics.transient import rail_droop_v
@@ -36,6 +36,8 @@ IDLE_HOURS = 1e-6  # weight of a band's worst mix, so that a band without hours 
 @dataclass(frozen=True)
 class RowTables:
     """Per table row (rail, stage, running count): kWh and W over the bus grid, and legal windows.
+
+    B here counts the bands and the fall-back behind them, where no hours are spent.
 
     energy_kwh (rows, B, G) and input_kwh (rows, B): stage input energy a year; mix_w, jump_w (rows, B, G);
     need_v, jump_v, high_v (rows, B): window of stage input voltage; droop_percent (rows, K, counts, B, nodes)
@@ -94,13 +96,13 @@ def at_grid(tables: LossTables, values: FloatArray, volts: FloatArray) -> FloatA
 
 def band_energy(problem: Problem, states: StateTable, tables: LossTables) -> tuple[FloatArray, FloatArray]:
     """Return (rows, B, K) and, at each state's own input, (rows, B) stage input energy, kWh a year."""
-    bands = states.bands
+    bands = states.places
     rows = len(tables.row_stage)
     energy = np.zeros((rows, bands, NODES))
     direct = np.zeros((rows, bands))
     voltage = problem.rails.voltage_v[tables.row_rail]
     start, step = tables.start_v[tables.row_stage], tables.step_v[tables.row_stage]
-    mix_low = states.of_kind(MIX)[0::2]
+    mix_low = states.mix_low
     weights = states.hours.copy()
     weights[mix_low] = IDLE_HOURS
     for s in np.concatenate([states.of_kind(ENERGY), mix_low]):
@@ -120,7 +122,7 @@ def band_energy(problem: Problem, states: StateTable, tables: LossTables) -> tup
 def windows(problem: Problem, states: StateTable, tables: LossTables) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return the least steady, least after-jump and highest legal stage input of each row, (rows, B) V."""
     stages, rails = problem.stages, problem.rails
-    stage = np.broadcast_to(tables.row_stage[:, None], (len(tables.row_stage), states.bands))
+    stage = np.broadcast_to(tables.row_stage[:, None], (len(tables.row_stage), states.places))
     rail, running = tables.row_rail, tables.row_running[:, None]
     output = rails.voltage_v[rail][:, None] * (
         1.0 + np.where(rails.remote_sense, 0.5 * rails.drop_budget, 0.0)[rail][:, None]
@@ -148,7 +150,7 @@ def windows(problem: Problem, states: StateTable, tables: LossTables) -> tuple[F
 def hottest(problem: Problem, states: StateTable, tables: LossTables) -> FloatArray:
     """Return the highest node voltage at which each row stays within its junction limit, (rows, B) V."""
     stages = problem.stages
-    mix_high = states.of_kind(MIX)[1::2]
+    mix_high = states.mix_high
     loss = tables.loss_w[:, mix_high] / tables.row_running[:, None, None]  # (rows, B, K)
     stage = tables.row_stage
     buck = stages.buck
@@ -191,7 +193,7 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
     last = np.maximum(top[tables.row_stage] - no_headroom_v, 2.0 * LEAST_HEADROOM_V)
     nodes_v = no_headroom_v[:, None] + first[:, None] * (last / first)[:, None] ** node
     out = np.full(
-        (len(tables.row_stage), len(capacitors.names), len(counts), states.bands, DROOP_NODES),
+        (len(tables.row_stage), len(capacitors.names), len(counts), states.places, DROOP_NODES),
         1e6,
         np.float32,
     )
@@ -205,7 +207,7 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
         piece_f = bank_effective_f(problem.study, capacitors, volts_r)[banks]
         stage = tables.row_stage[rows]
         running = tables.row_running[rows]
-        shape = (len(rows), len(banks), len(counts), states.bands, DROOP_NODES)
+        shape = (len(rows), len(banks), len(counts), states.places, DROOP_NODES)
         bank_f = (piece_f[:, None] * counts)[None, :, :, None, None]
         esr = (esr_piece[banks][:, None] / counts)[None, :, :, None, None]
 
@@ -257,7 +259,7 @@ def row_swing(
 def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Options:
     """Return every rail's options with their band sums and windows."""
     energy, direct = band_energy(problem, states, tables)
-    mix_low, jump = states.of_kind(MIX)[0::2], states.of_kind(JUMP)
+    mix_low, jump = states.mix_low, states.of_kind(JUMP)
     voltage = problem.rails.voltage_v[tables.row_rail]
     useful_mix = (voltage[:, None] * states.mix_a.T[tables.row_rail])[..., None]
     useful_jump = (voltage[:, None] * states.after_a.T[tables.row_rail])[..., None]
@@ -318,8 +320,8 @@ def quiet(
 
 
 def band_hours(states: StateTable) -> FloatArray:
-    """Return the hours a year in each band, (B,)."""
-    hours = np.zeros(states.bands)
+    """Return the hours a year at each place, (B + 1,); none at the fall-back."""
+    hours = np.zeros(states.places)
     energy = states.of_kind(ENERGY)
     np.add.at(hours, states.band[energy], states.hours[energy])
     return hours
@@ -354,7 +356,9 @@ def running_phases(
     kind = stages.shedding[stage][:, None]
     best = np.where(kind == THRESHOLD_SHEDDING, by_threshold, np.where(kind == NO_SHEDDING, phases[:, None], best))
     off = states.mix_off.T[rail]
-    return np.where(off, phases[:, None], best)
+    best = np.where(off, phases[:, None], best)
+    best[:, states.bands] = phases  # all are running when the board falls back
+    return best
 
 
 def option_index(options: Options, stage: IntArray, phases: IntArray, fewest: IntArray, most: IntArray) -> IntArray:

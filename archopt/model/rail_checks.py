@@ -22,9 +22,9 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     solution, stages, rails = situation.solution, problem.stages, problem.rails
     names = situation.rail_names
-    bands = tuple(f"band {k + 1}" for k in range(states.bands))
-    ledger.add("rail droop", droop.droop_percent, 100.0, at_most=True, axes=(names, bands))
-    ledger.add("rail release", droop.release_percent, 100.0, at_most=True, axes=(names, bands))
+    places = (names, states.place_names)
+    ledger.add("rail droop", droop.droop_percent, 100.0, at_most=True, axes=places)
+    ledger.add("rail release", droop.release_percent, 100.0, at_most=True, axes=places)
     steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
     axes = (situation.state_names(steady), names)
     volts, amps = solution.stage_v[:, steady], solution.current_a[:, steady]
@@ -32,7 +32,7 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
     on = ~states.off[steady]
     per_phase = amps / running
-    drop_v = np.where(rails.remote_sense, amps * hardware.pour_ohm[:, None, :], 0.0)
+    drop_v = np.where(rails.remote_sense, amps * solution.pour_ohm[:, steady], 0.0)
     duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
     frequency = stages.frequency_hz[stage]
     is_buck = stages.kind[stage] == BUCK
@@ -142,7 +142,7 @@ def jump_spare_v(situation: Situation) -> FloatArray:
     volts, amps = solution.stage_v[:, jump], solution.current_a[:, jump]
     stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
     per_phase = np.minimum(amps / hardware.running[:, jump], stages.phase_limit_a[stage])
-    drop_v = np.where(rails.remote_sense, amps * hardware.pour_ohm[:, None, :], 0.0)
+    drop_v = np.where(rails.remote_sense, amps * solution.pour_ohm[:, jump], 0.0)
     duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
     spare = np.where(stages.kind[stage] == LINEAR, np.inf, volts * (1.0 - duty / stages.max_duty[stage]))
     spare = np.minimum(spare, volts - stages.input_min_v[stage])
@@ -181,9 +181,10 @@ def check_jump(situation: Situation, ledger: Ledger) -> None:
     applies = (hardware.converter >= 0)[..., None]
     fixed = (situation.designs.bus("control") == FIXED)[..., None]
     band_v, units = hardware.band_v, hardware.units_band
-    top_v, top_units = band_v[..., -1:], units[..., -1:]
+    top = states.bands - 1
+    top_v, top_units = band_v[..., top, None], units[..., top, None]
     slew = np.maximum(converters.slew_v_per_s[index], 1e-3)
-    rising = (top_v > band_v) & ~fixed
+    rising = (top_v > band_v) & ~fixed & (np.arange(states.places) < states.bands)  # nothing moves the fall-back
     rise_s = np.where(rising, problem.study.control.response_ms * 1e-3 + (top_v - band_v) / slew, 0.0)
     wait_s = np.where(units < top_units, converters.wakeup_s[index], 0.0)
     charge_a = np.where(rising, hardware.bulk_nominal_f[..., None] * slew, 0.0)

@@ -40,7 +40,7 @@ class Situation:
 
 @dataclass(frozen=True)
 class Droop:
-    """Droop and release of every rail in every band, V, (P, R, B), and as a share of the budget in percent."""
+    """Droop and release of every rail at every place, V, (P, R, B + 1), and as a share of the budget in percent."""
 
     droop_v: FloatArray
     release_v: FloatArray
@@ -50,7 +50,7 @@ class Droop:
 
 @dataclass(frozen=True)
 class DroopTerms:
-    """What droop and release of every rail in every band follow from, (P, R, B) or broadcasting to it; SI.
+    """What droop and release of every rail at every place follow from, (P, R, B + 1) or broadcasting to it; SI.
 
     before, after : load before and after the step; left : load after the release from the mix, mix : before it
     rise, fall : loop bandwidth at the lighter end of each; deficit : load beyond what runs
@@ -80,7 +80,7 @@ def family_step_a(situation: Situation) -> FloatArray:
     power in over out, all at once. Rails of one step group add, others do not.
     """
     rails, hardware = situation.problem.rails, situation.hardware
-    own = np.broadcast_to(rails.step_a[:, None], (*hardware.stage.shape, situation.states.bands))
+    own = np.broadcast_to(rails.step_a[:, None], (*hardware.stage.shape, situation.states.places))
     p, child = np.nonzero(hardware.parent >= 0)
     if not len(p):
         return own

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, fields
+from functools import cached_property
 
 import numpy as np
 
 from archopt.inputs.resolved import LoadTable, Rail, ResolvedStudy
 from archopt.model.clusters import cluster, split_groups
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
+from archopt.physics.ampacity import RISE_EXPONENT
 
 ENERGY, MIX, JUMP, FALLBACK, PRINT = 0, 1, 2, 3, 4
 KIND_NAMES = ("energy", "worst mix", "after jump", "rated at nominal", "shown load")
@@ -17,6 +19,7 @@ MAX_BANDS = 8
 MAX_CLUSTERS = 24
 CLUSTER_TOLERANCE = 0.005
 SHOWN_SHARES = (0.3, 0.5, 1.0)
+FALLBACK_NAME = "fall-back"
 
 
 @dataclass(frozen=True)
@@ -25,8 +28,11 @@ class StateTable:
 
     hours (S,), input_v (S,), ambient_degc (S,) local air, current_a (S, R), off (S, R), band (S,), kind (S,),
     tap_w (S,) loss in taps, useful_w (S,) rail voltage times current with taps, edges_w (B + 1,) load power,
-    mix_a (B, R) and after_a (B, R) worst mix and currents after a jump (both grown), rated_a (R,) grown,
-    mix_off (B, R), transitions_per_year (B, B), cluster_error : share of the plain design's annual loss.
+    mix_a (B + 1, R) and after_a (B + 1, R) worst mix and currents after a jump (both grown), rated_a (R,) grown,
+    mix_off (B + 1, R), transitions_per_year (B, B), cluster_error : share of the plain design's annual loss.
+
+    The place behind the last band is the fall-back: the rated load with every bus at its nominal voltage and all
+    phases and converters running. Limits are checked there as in a band; no hours are spent there.
     """
 
     name: tuple[str, ...]
@@ -51,6 +57,11 @@ class StateTable:
         """Return the indices of the states of one kind, in order."""
         return np.flatnonzero(self.kind == kind)
 
+    @cached_property
+    def warming(self) -> FloatArray:
+        """How the rise of copper goes with the current of each rail, (S, R): amperes to the power of IPC-2221."""
+        return np.asarray(np.where(self.off, 0.0, self.current_a) ** (1.0 / RISE_EXPONENT))
+
     @property
     def setting_side(self) -> FloatArray:
         """Where in its setting accuracy a regulated bus stands, (S,): 0 as set, -1 lowest, 1 highest.
@@ -69,6 +80,26 @@ class StateTable:
     def bands(self) -> int:
         """Number of bands."""
         return len(self.edges_w) - 1
+
+    @property
+    def places(self) -> int:
+        """Number of places limits are checked at: the bands, then the fall-back."""
+        return self.bands + 1
+
+    @property
+    def place_names(self) -> tuple[str, ...]:
+        """Names of the places limits are checked at."""
+        return (*(f"band {k + 1}" for k in range(self.bands)), FALLBACK_NAME)
+
+    @cached_property
+    def mix_low(self) -> IntArray:
+        """States of the worst mix at the lowest input, a place each, (B + 1,)."""
+        return np.concatenate([self.of_kind(MIX)[0::2], self.of_kind(FALLBACK)[:1]])
+
+    @cached_property
+    def mix_high(self) -> IntArray:
+        """States of the worst mix at the highest input, a place each, (B + 1,)."""
+        return np.concatenate([self.of_kind(MIX)[1::2], self.of_kind(FALLBACK)[1:]])
 
 
 @dataclass(frozen=True)
@@ -377,9 +408,10 @@ def assemble(
     for k in range(bands):
         name = f"band {k + 1} after jump, low input"
         extra.append((name, JUMP, supply.low_v, inlet_hot, after[k], mix_off[k] & (after[k] <= 0), k))
+    extra.append(("fall-back after step, low input", JUMP, supply.low_v, inlet_hot, rated, nothing_off, bands))
     for label, volts in (("low", supply.low_v), ("high", supply.high_v)):
-        name = f"rated load at nominal bus, {label} input"
-        extra.append((name, FALLBACK, volts, inlet_hot, rated, nothing_off, bands - 1))
+        name = f"fall-back: rated load at nominal bus, {label} input"
+        extra.append((name, FALLBACK, volts, inlet_hot, rated, nothing_off, bands))
     shown_band = band_of(np.array([share * float(maximum @ voltage) for share in SHOWN_SHARES]), edges)
     for share, where in zip(SHOWN_SHARES, shown_band, strict=True):
         name = f"{share:.0%} load".replace("%", " %")
@@ -400,9 +432,9 @@ def assemble(
         tap_w=np.concatenate([energy.tap_w, extra_tap]),
         useful_w=np.concatenate([energy.useful_w, extra_current @ voltage]),
         edges_w=edges,
-        mix_a=mix,
-        after_a=after,
-        mix_off=mix_off,
+        mix_a=np.vstack([mix, rated]),
+        after_a=np.vstack([after, rated]),
+        mix_off=np.vstack([mix_off, nothing_off]),
         rated_a=rated,
         transitions_per_year=transitions(study, study.load, band, bands),
         cluster_error=error,

@@ -171,7 +171,8 @@ def rail_point(
     value = (wave.droop_v if rises else wave.release_v) * scale
     name = "rail droop" if rises else "rail release"
     where = waves.problem.rails.names[rail]
-    return Finding(0, name, where, f"band {band + 1}", value, closed, 100.0, "% of budget", value <= 100.1)
+    place = waves.problem.states.place_names[band]
+    return Finding(0, name, where, place, value, closed, 100.0, "% of budget", value <= 100.1)
 
 
 def bus_view(waves: Waves, name: str, bus: int, states: tuple[int, int] | None) -> WaveView:
@@ -195,8 +196,9 @@ def bus_view(waves: Waves, name: str, bus: int, states: tuple[int, int] | None) 
     value = 100.0 * wave.dip_v / circuit.bus_v
     met = wave.survives and value <= bound * 1.001
     point = Finding(
-        0, "bus dip", BUSES[bus], f"band {band + 1}", value, 100.0 * closed_v / circuit.bus_v, bound, "% of bus", met
-    )
+        0, "bus dip", BUSES[bus], problem.states.place_names[band], value, 100.0 * closed_v / circuit.bus_v, bound,
+        "% of bus", met,
+    )  # fmt: skip
     facts = (
         ("power", f"{fixed(train.before_w, 1)} to {fixed(train.after_w, 1)} W in {train.steps} step(s)"),
         ("bus before", f"{fixed(circuit.bus_v, 3)} V"),
@@ -280,8 +282,9 @@ def jump_view(waves: Waves, name: str, bus: int, states: tuple[int, int] | None)
             bool(percent[deep] <= 100.1),
         ),
     )  # fmt: skip
+    place = problem.states.place_names[band]
     facts = (
-        ("from", f"band {band + 1}, {fixed(float(wave.power_w[0]), 1)} W on the bus at {fixed(wave.bus_v[0], 3)} V"),
+        ("from", f"{place}, {fixed(float(wave.power_w[0]), 1)} W on the bus at {fixed(wave.bus_v[0], 3)} V"),
         ("to", f"{fixed(float(wave.power_w[-1]), 1)} W at {fixed(wave.bus_v[-1], 3)} V"),
         ("lowest bus", f"{fixed(float(wave.bus_v.min()), 3)} V"),
         ("most from the source", f"{fixed(float(wave.source_a.max()), 2)} A of {fixed(jump.circuit.limit_a, 1)} A"),

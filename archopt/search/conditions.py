@@ -24,7 +24,7 @@ FIRST_OVERHEAD = 1.12  # stage input over output before a design is known
 
 @dataclass(frozen=True)
 class Conditions:
-    """P designs, two buses, B bands.
+    """P designs, two buses, B places: the bands and the fall-back behind them.
 
     volts, top_volts (P, 2, B): grid index at the lowest and at the highest input (they differ for fixed
     ratio); dipped (P, 2, B): index of the dipped grid; marginal (P, 2, B): board input energy per energy on
@@ -52,8 +52,8 @@ def straight_line(plan: Plan, bands: int) -> IntArray:
 def first_conditions(evaluator: Evaluator, plan: Plan) -> Conditions:
     """Return the conditions assumed before a design is known: a straight line, a small dip, all rails on a bus."""
     problem, states = evaluator.problem, evaluator.states
-    bands = states.bands
-    volts = within_converter(evaluator, plan, straight_line(plan, bands))
+    line = np.concatenate([straight_line(plan, states.bands), plan.bus["nominal_v"][..., None]], axis=2)
+    volts = within_converter(evaluator, plan, line)
     useful = (problem.rails.voltage_v * states.mix_a).sum(axis=1) * FIRST_OVERHEAD * 0.7
     both = (plan.bus["converter"] > 0).all(axis=1)
     mean_w = useful[None, None, :] * np.where(both, 0.5, 1.0)[:, None, None]
@@ -80,12 +80,13 @@ def conditions_of(evaluator: Evaluator, designs: Designs, unused: Conditions) ->
     problem, states, options = evaluator.problem, evaluator.states, evaluator.options
     hardware = unpack(problem, designs, states)
     used = hardware.converter >= 0
-    volts = np.where(used[..., None], designs.volts, unused.volts)
+    decided = np.concatenate([designs.volts, designs.bus("nominal_v")[..., None]], axis=2)
+    volts = np.where(used[..., None], decided, unused.volts)
     option = option_index(
         options, designs.rail("stage"), designs.rail("phases"), designs.rail("fewest"), problem.phases_high
     )
     row = options.row[option]
-    band = np.arange(states.bands)
+    band = np.arange(states.places)
     hours = np.maximum(band_hours(states), 1e-6)
     mean_w, mix_w = np.zeros(volts.shape), np.zeros(volts.shape)
     for b in range(2):
@@ -119,7 +120,7 @@ def dips(
             set_v,
             converters.bandwidth_rad_s[index],
             converters.delay_s[index],
-            hardware.bulk_f[..., None],
+            hardware.bulk_f,
             hardware.bulk_esr_ohm[..., None],
             mix_w,
         )

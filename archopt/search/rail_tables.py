@@ -13,7 +13,7 @@ from archopt.model.options import band_energy, row_swing
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import bank_effective_f, bank_esr_ohm
 from archopt.model.space import BANK_COUNTS, BUS_A, INPUT, PARENT
-from archopt.model.states import ENERGY, MIX
+from archopt.model.states import ENERGY
 from archopt.physics.output_ripple import half_swing_v
 from archopt.search.archive import significant
 
@@ -130,7 +130,7 @@ def make_rail_table(
             kwh = parent_band_kwh(evaluator, row, nodes_kwh, feed - PARENT)
             places.append(Place(int(feed), ok[:, feed] & fits, kwh.astype(np.float32), volts))
     running = options.run[ids].astype(np.float64)
-    band_h = np.zeros(states.bands)
+    band_h = np.zeros(states.places)
     np.add.at(band_h, states.band, hours)
     square = evaluator.tables.ripple_square[row, :, middle]  # (O, B, S)
     ripple = np.einsum("obs,s,bs->o", square, hours, states.band[None, :] == band[:, None])
@@ -187,7 +187,7 @@ class BankCounts:
         self.tables = tables
         self.volts = dipped_grid_v(evaluator)
         self.ripple: dict[int, ByteArray] = {}
-        bands = evaluator.states.bands
+        bands = evaluator.states.places
         for table in tables:
             shape = (len(table.option), len(table.banks))
             table.bus_counts = np.zeros((len(CAPS), bands, len(self.volts), *shape), np.uint8)
@@ -242,7 +242,7 @@ class BankCounts:
         """Return the least count index each bank needs to stand the ripple, (V, U, B, K), made once."""
         if table.rail not in self.ripple:
             evaluator = self.evaluator
-            mix = evaluator.states.of_kind(MIX)[1::2]
+            mix = evaluator.states.mix_high
             rms = np.sqrt(evaluator.tables.ripple_square[used][:, mix])  # (U, B, nodes)
             stage = evaluator.tables.row_stage[used]
             start, step = evaluator.tables.start_v[stage], evaluator.tables.step_v[stage]

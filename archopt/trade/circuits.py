@@ -10,7 +10,6 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from archopt.model.bus_stability import stage_input_f
 from archopt.model.evaluator import Detail
 from archopt.model.hardware import short_time_a
 from archopt.model.parameters import FIXED_RATIO, LINEAR, FloatArray, IntArray
@@ -18,7 +17,7 @@ from archopt.model.problem import Problem
 from archopt.model.rail_checks import jump_spare_v
 from archopt.model.situation import DroopTerms, Situation, droop_terms
 from archopt.model.space import FIXED
-from archopt.model.states import JUMP, MIX
+from archopt.model.states import JUMP
 from archopt.physics.averaged import RESTORING, LoadStep, RailCircuit
 from archopt.physics.averaged_board import BoardWave, Rise, StageCircuit, board_wave
 from archopt.physics.averaged_bus import STAYS, BusCircuit, Command, PowerTrain
@@ -34,9 +33,8 @@ class Waves:
     detail: Detail
     situation: Situation
     terms: DroopTerms
-    spare_v: FloatArray  # (P, B, R)
-    input_f: FloatArray  # (P, 2)
-    mix_at: IntArray = field(repr=False)  # (B,) states
+    spare_v: FloatArray  # (P, B + 1, R)
+    mix_at: IntArray = field(repr=False)  # (B + 1,) states, the fall-back last
     jump_at: IntArray = field(repr=False)
 
 
@@ -45,8 +43,8 @@ def waves_of(problem: Problem, detail: Detail) -> Waves:
     states = problem.states
     situation = Situation(problem, states, detail.designs, detail.hardware, detail.solution, detail.bill)
     return Waves(
-        problem, detail, situation, droop_terms(situation), jump_spare_v(situation), stage_input_f(situation),
-        states.of_kind(MIX)[0::2], states.of_kind(JUMP),
+        problem, detail, situation, droop_terms(situation), jump_spare_v(situation), states.mix_low,
+        states.of_kind(JUMP),
     )  # fmt: skip
 
 
@@ -117,10 +115,10 @@ def bus_case(waves: Waves, p: int, bus: int, band: int) -> BusCircuit:
     else:
         henry = ohm / w
         volts = float(hardware.set_v[p, waves.jump_at[band], bus])
-    beside = float(waves.input_f[p, bus])
+    beside = float(hardware.input_f[p, bus])
     return BusCircuit(
         bus_v=volts,
-        bulk_f=float(hardware.bulk_f[p, bus]) - beside,
+        bulk_f=float(hardware.bulk_f[p, bus, band]) - beside,
         bulk_esr_ohm=float(hardware.bulk_esr_ohm[p, bus]),
         input_f=beside,
         bandwidth_rad_s=w,
@@ -154,6 +152,7 @@ def command_of(waves: Waves, p: int, bus: int, band: int, to_band: int) -> Comma
     problem, hardware = waves.problem, waves.detail.hardware
     control, index = problem.study.control, int(hardware.converter[p, bus])
     moves = waves.detail.designs.bus("control")[p, bus] != FIXED and not hardware.fixed_ratio[p, bus]
+    moves = moves and band < problem.states.bands  # nothing moves the fall-back
     rise_v = float(hardware.band_v[p, bus, to_band] - hardware.band_v[p, bus, band])
     if not moves or rise_v <= 0:
         return STAYS

@@ -52,6 +52,7 @@ def worst_band(values: FloatArray) -> int:
 def rail_findings(waves: Waves, p: int, rail: int) -> list[Finding]:
     """Return one rail's droop and release in the band where each is worst."""
     droop, budget_v = waves.detail.droop, float(waves.problem.rails.budget_v[rail])
+    names = waves.problem.states.place_names
     out = []
     for name, closed, rises in (
         ("rail droop", droop.droop_percent[p, rail], True), ("rail release", droop.release_percent[p, rail], False),
@@ -61,7 +62,7 @@ def rail_findings(waves: Waves, p: int, rail: int) -> list[Finding]:
         value = 100.0 * (wave.droop_v if rises else wave.release_v) / budget_v
         out.append(
             Finding(
-                p, name, waves.problem.rails.names[rail], f"band {band + 1}", value, float(closed[band]), 100.0,
+                p, name, waves.problem.rails.names[rail], names[band], value, float(closed[band]), 100.0,
                 "% of budget", value <= 100.0 * (1.0 + TOLERANCE),
             )
         )  # fmt: skip
@@ -72,14 +73,15 @@ def dip_finding(waves: Waves, p: int, bus: int) -> Finding:
     """Return a bus's dip at its largest coincident step in the band where it is worst."""
     bound = waves.problem.study.control.bus_dip_percent
     hardware, solution = waves.detail.hardware, waves.detail.solution
-    circuits = [bus_case(waves, p, bus, band) for band in range(waves.problem.states.bands)]
+    circuits = [bus_case(waves, p, bus, band) for band in range(waves.problem.states.places)]
     volts = np.array([circuit.bus_v for circuit in circuits])
     closed = 100.0 * solution.dip_v[p, bus] / np.where(hardware.fixed_ratio[p, bus], volts, hardware.band_v[p, bus])
     band = worst_band(closed)
     wave = bus_wave(replace(circuits[band], limit_a=np.inf), bus_step(waves, p, bus, band))
     value = 100.0 * wave.dip_v / circuits[band].bus_v
     met = wave.survives and value <= bound * (1.0 + TOLERANCE)
-    return Finding(p, "bus dip", BUS_NAMES[bus], f"band {band + 1}", value, float(closed[band]), bound, "% of bus", met)
+    where = waves.problem.states.place_names[band]
+    return Finding(p, "bus dip", BUS_NAMES[bus], where, value, float(closed[band]), bound, "% of bus", met)
 
 
 def jump_findings(waves: Waves, p: int, bus: int) -> list[Finding]:

@@ -13,7 +13,7 @@ import numpy as np
 
 from archopt.inputs.parts import FAMILIES, Part
 from archopt.inputs.resolved import Catalogue, ResolvedStudy
-from archopt.model.states import KIND_NAMES, MIX, StateTable
+from archopt.model.states import FALLBACK, KIND_NAMES, MIX, StateTable
 from equivalence.reference import ORDER, Reference
 
 Data = dict[str, Any]
@@ -43,6 +43,7 @@ def states_of(problem: Data) -> StateTable:
     def by_rail(table: list[Data], key: str) -> Any:
         return np.array([[row[key][name] for name in rails] for row in table])
 
+    rated_a = by_rail(rows, "current_a")[np.flatnonzero(kind == FALLBACK)[0]]
     given = SimpleNamespace(
         name=[row["state"] for row in rows],
         kind=kind,
@@ -55,9 +56,9 @@ def states_of(problem: Data) -> StateTable:
         current_a=by_rail(rows, "current_a"),
         off=off,
         bands=len(bands),
-        mix_a=by_rail(bands, "worst_mix_a"),
-        after_a=by_rail(bands, "after_jump_a"),
-        mix_off=off[np.flatnonzero(kind == MIX)[0::2]],
+        mix_a=np.vstack([by_rail(bands, "worst_mix_a"), rated_a]),
+        after_a=np.vstack([by_rail(bands, "after_jump_a"), rated_a]),
+        mix_off=np.vstack([off[np.flatnonzero(kind == MIX)[0::2]], np.zeros(len(rails), dtype=bool)]),
         transitions_per_year=np.array([row["transitions_per_year"] for row in bands]),
     )
     return cast(StateTable, given)

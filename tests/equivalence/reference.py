@@ -28,7 +28,6 @@ from archopt.inputs.resolved import Catalogue, Rail, ResolvedStudy
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
 from archopt.model.states import ENERGY, FALLBACK, JUMP, MIX, StateTable
-from archopt.physics.copper import sheet_resistance_ohm
 from archopt.physics.transient import bus_dip_v, rail_droop_v
 from equivalence.reference_copper import Copper
 from equivalence.reference_stage import Point, buck_phase, converter_unit, linear_unit
@@ -45,10 +44,10 @@ class Bus:
     row: BusConverter
     units: int
     nominal_v: float
-    volts: list[float]  # by band
-    running: list[int]  # by band
-    square_ohm: float
-    held_f: float  # effective, with the stages' own inputs
+    volts: list[float]  # by band, the fall-back last
+    running: list[int]  # by band, the fall-back last
+    pairs: int
+    held_f: list[float]  # by band, effective at its voltage, with the stages' own inputs
     stored_f: float  # at most
     esr_ohm: float
     rails: list[int]
@@ -67,10 +66,10 @@ class Net:
     row: BuckStage | SingleStage | LinearRegulator
     coil: Inductor | None
     phases: int
-    running: list[int]  # by band
+    running: list[int]  # by band, the fall-back last
     bank_f: float
     bank_ohm: float
-    pour_ohm: float
+    pairs: int
 
 
 @dataclass
@@ -117,9 +116,7 @@ class Reference:
             f for f in cast("list[CopperFoil]", list(self.catalogue.families["copper_foils"].values()))
             if f.copper_oz == stack.copper_oz
         )  # fmt: skip
-        supply = self.study.supply
-        warm = supply.inlet_degc + supply.local_rise_k + self.study.board.copper_rise_k
-        self.sheet_ohm = float(sheet_resistance_ohm(foil.finished_um * 1e-6, warm))
+        self.thick_um = foil.finished_um
         self.copper = Copper(self.study, self.own)
         self.nets = [self.net(rail, k) for k, rail in enumerate(self.own)]
         self.buses = [bus for k, name in enumerate(ORDER[1:]) if (bus := self.bus(name, k))]
@@ -127,7 +124,7 @@ class Reference:
         self.supervisor = self.optional("supervisors", "board.supervisor")
         self.step_ratios: list[list[float]] = []  # by band and rail: power in over out at the worst mix
         self.steps_w = self.largest_steps_w()
-        self.dips_v = {bus.name: [self.dip_v(bus, k) for k in range(self.states.bands)] for bus in self.buses}
+        self.dips_v = {bus.name: [self.dip_v(bus, k) for k in range(self.states.bands + 1)] for bus in self.buses}
         self.results = [self.solve(s) for s in range(len(self.states.name))]
 
     def part(self, family: str, name: str) -> Part:
@@ -161,10 +158,10 @@ class Reference:
             row=cast(BuckStage, row),
             coil=coil,
             phases=int(get("phases")),
-            running=[max(n, 1) for n in self.phases[k]],
+            running=[*(max(n, 1) for n in self.phases[k]), int(get("phases"))],
             bank_f=bank_f,
             bank_ohm=bank_ohm,
-            pour_ohm=self.copper.pour_ohm(rail, self.sheet_ohm, int(get("pairs"))),
+            pairs=int(get("pairs")),
         )
 
     def bus(self, name: str, k: int) -> Bus | None:
@@ -174,15 +171,18 @@ class Reference:
             return None
         row = cast(BusConverter, self.part("bus_converters", get("converter")))
         nominal = float(get("nominal_v"))
-        at_v = row.ratio * self.study.supply.high_v if row.kind == "fixed_ratio" else nominal
-        held, stored, esr = self.capacitor(get("bulk"), int(get("bulk_count")), at_v)
+        volts = [*self.volts[k], nominal]
+        top_v = row.ratio * self.study.supply.high_v
+        biased_v = [top_v if row.kind == "fixed_ratio" else v for v in volts]
+        banks = [self.capacitor(get("bulk"), int(get("bulk_count")), v) for v in biased_v]
+        _, stored, esr = banks[0]
         own = sum(
             getattr(self.nets[r].row, "input_capacitance_uf", 0.0) * 1e-6 * self.nets[r].phases for r in rails
         )
         return Bus(
-            name=name, row=row, units=int(get("count")), nominal_v=nominal, volts=self.volts[k],
-            running=[max(n, 1) for n in self.units[k]], square_ohm=2.0 * self.sheet_ohm / int(get("pairs")),
-            held_f=held + own, stored_f=stored + own, esr_ohm=esr, rails=rails,
+            name=name, row=row, units=int(get("count")), nominal_v=nominal, volts=volts,
+            running=[*(max(n, 1) for n in self.units[k]), int(get("count"))], pairs=int(get("pairs")),
+            held_f=[held + own for held, _, _ in banks], stored_f=stored + own, esr_ohm=esr, rails=rails,
         )  # fmt: skip
 
     def point(self, net: Net, running: int, vin: float, amps: float, ambient: float) -> Point:
@@ -198,13 +198,20 @@ class Reference:
         bank = net.bank_ohm * running * one.square_a2
         return replace(one, loss_w=one.loss_w * running + bank, bias_w=one.bias_w * running)
 
+    def of_kind(self, kind: int) -> list[int]:
+        return [s for s in range(len(self.states.name)) if self.states.kind[s] == kind]
+
     def running_in(self, s: int, net: Net) -> int:
-        return net.phases if self.states.kind[s] == FALLBACK else net.running[int(self.states.band[s])]
+        return net.running[int(self.states.band[s])]
+
+    def pour_ohm(self, s: int, k: int, amps: float) -> float:
+        net = self.nets[k]
+        return self.copper.pour_ohm(net.rail, self.thick_um, net.pairs, amps, float(self.states.ambient_degc[s]))
 
     def stage_in(self, s: int, k: int, vin: float, amps: float) -> tuple[float, float]:
         """Return what a stage draws and what it delivers to its bias, W; nothing when off."""
         net = self.nets[k]
-        pour = amps**2 * net.pour_ohm
+        pour = amps**2 * self.pour_ohm(s, k, amps)
         out = amps * net.rail.voltage_v + (pour if net.rail.remote_sense else 0.0)
         if self.states.off[s, k]:
             return out, 0.0
@@ -224,7 +231,7 @@ class Reference:
     def set_v(self, s: int, bus: Bus) -> float:
         """Return the set bus voltage; where limits are checked with its error, low or high."""
         kind = self.states.kind[s]
-        volts = bus.nominal_v if kind == FALLBACK else bus.volts[int(self.states.band[s])]
+        volts = bus.volts[int(self.states.band[s])]
         if kind not in (MIX, JUMP, FALLBACK) or bus.follows_input:
             return volts
         grid = bus.row.setting_grid_v
@@ -241,7 +248,7 @@ class Reference:
     def largest_steps_w(self) -> dict[str, list[float]]:
         """Return the largest coincident step of each bus in each band, at the mix's power in over out."""
         found: dict[str, list[float]] = {bus.name: [] for bus in self.buses}
-        mixes = [s for s in range(len(self.states.name)) if self.states.kind[s] == MIX][0::2]
+        mixes = [s for kind in (MIX, FALLBACK) for s in self.of_kind(kind)[0::2]]
         for s in mixes:
             amps = self.currents(s)
             step: list[float] = []
@@ -269,9 +276,8 @@ class Reference:
     def standing_w(self, bus: Bus, band: int) -> float:
         """Return what is on the bus before the last step of the largest jump, or in the worst mix if more."""
         found = []
-        for kind in (MIX, JUMP):
-            every = range(len(self.states.name))
-            s = next(s for s in every if self.states.kind[s] == kind and self.states.band[s] == band)
+        for kinds in ((MIX, FALLBACK), (JUMP,)):
+            s = next(s for kind in kinds for s in self.of_kind(kind) if self.states.band[s] == band)
             amps = self.currents(s)
             found.append(sum(self.stage_in(s, k, self.undropped_v(s, self.nets[k]), amps[k])[0] for k in bus.rails))
         return max(found[0], found[1] - self.steps_w[bus.name][band])
@@ -282,7 +288,7 @@ class Reference:
         return float(
             bus_dip_v(
                 self.steps_w[bus.name][band], volts, row.crossover_khz * 1e3 * TWO_PI, row.delay_us * 1e-6,
-                bus.held_f, bus.esr_ohm, self.standing_w(bus, band),
+                bus.held_f[band], bus.esr_ohm, self.standing_w(bus, band),
             )
         )  # fmt: skip
 
@@ -292,7 +298,6 @@ class Reference:
         vin0 = float(states.input_v[s])
         ohm = self.path.resistance_mohm * 1e-3
         ambient, band = float(states.ambient_degc[s]), int(states.band[s])
-        fallback = states.kind[s] == FALLBACK
         amps = self.currents(s)
         node = vin0
         set_v = {bus.name: self.set_v(s, bus) for bus in self.buses}
@@ -330,7 +335,10 @@ class Reference:
                 awake = any(not states.off[s, k] for k in bus.rails)
                 into = {k: out.stage_in_w[k] / out.stage_v[k] for k in bus.rails}
                 plane = 0.0
-                for k, drop_v in self.copper.drops_v(bus.name, bus.square_ohm, into).items():
+                extra = bias_w / bus_v[bus.name] if bus.name == "bus_a" and on_bus and awake else 0.0
+                degc = self.copper.plane_degc(bus.name, into, extra, self.thick_um, bus.pairs, ambient)
+                drops_v = self.copper.drops_v(bus.name, self.thick_um, bus.pairs, into, degc)
+                for k, drop_v in drops_v.items():
                     fresh[k] = drop_v
                     plane += drop_v * into[k]
                 total_a, total_w = sum(into.values()), sum(out.stage_in_w[k] for k in bus.rails) + plane
@@ -340,7 +348,7 @@ class Reference:
                         total_w += bias_w
                     else:
                         out.bias_w = 0.0
-                units = bus.units if fallback else bus.running[band]
+                units = bus.running[band]
                 unit = converter_unit(
                     bus.row, node, bus_v[bus.name], total_a / units, ambient, supply.air_speed_m_s
                 )
@@ -378,7 +386,9 @@ class Reference:
     def useful_w(self, s: int, amps: list[float]) -> float:
         """Return what reaches the loads: no credit for copper behind an unsensed stage or for taps."""
         sag = sum(
-            amps[k] ** 2 * net.pour_ohm for k, net in enumerate(self.nets) if not net.rail.remote_sense
+            amps[k] ** 2 * self.pour_ohm(s, k, amps[k])
+            for k, net in enumerate(self.nets)
+            if not net.rail.remote_sense
         )
         return float(self.states.useful_w[s]) - sag - float(self.states.tap_w[s])
 
@@ -390,8 +400,8 @@ class Reference:
         for bus in self.buses:
             if bus.follows_input:
                 continue
-            for a, low in enumerate(bus.volts):
-                for b, high in enumerate(bus.volts):
+            for a, low in enumerate(bus.volts[:-1]):
+                for b, high in enumerate(bus.volts[:-1]):
                     if high > low:
                         total += float(counts[a, b]) * 0.5 * bus.stored_f * (high**2 - low**2) / 3.6e6
         return total
@@ -399,8 +409,7 @@ class Reference:
     def droop_percent(self) -> float:
         """Return the worst droop or release of any rail in any band, percent of its budget."""
         worst = 0.0
-        jumps = [s for s in range(len(self.results)) if self.states.kind[s] == JUMP]
-        for band, s in enumerate(jumps):
+        for band, s in enumerate(self.of_kind(JUMP)):
             for k, net in enumerate(self.nets):
                 if not self.states.mix_off[band, k]:
                     worst = max(worst, self.deviation_v(s, band, k) / net.rail.droop_budget_v * 100.0)

@@ -130,8 +130,9 @@ class Hand:
         bus = next(b for b in self.reference.buses if b.name == part.split()[0])
         return bus, self.reference.states.name.index(state) if state else -1
 
-    def sensed_drop_v(self, net: Net, amps: float) -> float:
-        return amps * net.pour_ohm if net.rail.remote_sense else 0.0
+    def sensed_drop_v(self, net: Net, amps: float, s: int) -> float:
+        k = self.reference.place[net.rail.name]
+        return amps * self.reference.pour_ohm(s, k, amps) if net.rail.remote_sense else 0.0
 
     def limit_a(self, net: Net) -> float:
         derating = self.study.derating.current
@@ -144,7 +145,7 @@ class Hand:
         result = self.reference.results[s]
         vin, amps = result.stage_v[k], result.current_a[k]
         each = amps / self.reference.running_in(s, net)
-        vout = net.rail.voltage_v + self.sensed_drop_v(net, amps)
+        vout = net.rail.voltage_v + self.sensed_drop_v(net, amps, s)
         row = net.row
         if isinstance(row, SingleStage):
             return (vout + each * row.resistance_mohm * 1e-3) * row.transformer_ratio / vin, net
@@ -161,17 +162,22 @@ class Hand:
         amps = sum(result.stage_in_w[k] / result.stage_v[k] for k in bus.rails)  # type: ignore[attr-defined]
         if bus.name == "bus_a" and self.reference.choices["board.bias_feed"] == "bus_a":  # type: ignore[attr-defined]
             amps += result.bias_w / result.bus_v["bus_a"]
-        units = bus.units if self.reference.states.kind[s] == FALLBACK else bus.running[self.reference.states.band[s]]  # type: ignore[attr-defined]
+        units = bus.running[self.reference.states.band[s]]  # type: ignore[attr-defined]
         return amps, bus, units
 
 
 Found = tuple[float, float]
 
 
+def place_of(hand: Hand, name: str) -> int:
+    """Return which place a limit names: a band, or the fall-back behind the last one."""
+    return len(hand.reference.volts[0]) if name == "fall-back" else int(name.split()[-1]) - 1
+
+
 def hand_droop(hand: Hand, where: str) -> Found:
     part, _, band = where.partition("; ")
     jumps = [s for s, kind in enumerate(hand.reference.states.kind) if kind == 2]
-    k, b = hand.reference.place[part], int(band.split()[-1]) - 1
+    k, b = hand.reference.place[part], place_of(hand, band)
     volts = hand.reference.deviation_v(jumps[b], b, k)
     return 100.0 * volts / hand.reference.nets[k].rail.droop_budget_v, 100.0
 
@@ -179,7 +185,7 @@ def hand_droop(hand: Hand, where: str) -> Found:
 def hand_dip(hand: Hand, where: str) -> Found:
     part, _, band = where.partition("; ")
     bus = next(b for b in hand.reference.buses if b.name == part)
-    b = int(band.split()[-1]) - 1
+    b = place_of(hand, band)
     low = bus.row.ratio * hand.study.supply.low_v if bus.follows_input else bus.volts[b]
     return 100.0 * hand.reference.dips_v[part][b] / low, hand.study.control.bus_dip_percent
 
@@ -218,7 +224,7 @@ def hand_headroom(hand: Hand, where: str) -> Found:
     result, row = hand.reference.results[s], net.row
     assert isinstance(row, LinearRegulator)
     amps = result.current_a[k]
-    left = result.stage_v[k] - net.rail.voltage_v - hand.sensed_drop_v(net, amps)
+    left = result.stage_v[k] - net.rail.voltage_v - hand.sensed_drop_v(net, amps, s)
     return left - row.dropout_mv * 1e-3 * amps / row.phase_current_a, 0.0
 
 
@@ -277,7 +283,8 @@ def hand_rail_drop(hand: Hand, where: str) -> Found:
     amps = hand.reference.results[s].current_a[k]
     share = hand.study.coincidence * hand.study.growth
     taps = [r.tap_mohm * 1e-3 * r.max_current_a * share for r in hand.study.rails if r.tap_of == net.rail.name]
-    return 100.0 * (amps * net.pour_ohm + max(taps, default=0.0)) / net.rail.voltage_v, net.rail.drop_budget_percent
+    drop_v = amps * hand.reference.pour_ohm(s, k, amps) + max(taps, default=0.0)
+    return 100.0 * drop_v / net.rail.voltage_v, net.rail.drop_budget_percent
 
 
 def hand_ampacity(hand: Hand, where: str) -> Found:
@@ -307,6 +314,13 @@ def hand_ampacity(hand: Hand, where: str) -> Found:
             return amps, pairs * min(limit_a / share for share, limit_a in places)
     mil2 = (width_um / 25.4) * (thick_um / 25.4)
     return amps, pairs * 0.024 * board.copper_rise_k**0.44 * mil2**0.725
+
+
+def hand_rise(hand: Hand, where: str) -> Found:
+    """The same form turned round: dT = permitted (I / limit)^(1 / 0.44)."""
+    amps, limit_a = hand_ampacity(hand, where)
+    permitted_k = hand.study.board.copper_rise_k
+    return permitted_k * (amps / limit_a) ** (1.0 / 0.44), permitted_k
 
 
 def hand_layers(hand: Hand, where: str) -> Found:
@@ -404,6 +418,7 @@ BY_HAND: dict[str, Callable[[Hand, str], Found]] = {
     "bus drop": hand_bus_drop,
     "rail drop": hand_rail_drop,
     "copper ampacity": hand_ampacity,
+    "copper temperature rise": hand_rise,
     "layer budget": hand_layers,
     "start-up capacitance": hand_start_up,
     "input current": hand_input_current,

@@ -185,7 +185,7 @@ def test_worst_mix_is_the_highest_current_of_any_moment_of_the_band(study: Resol
             expected = np.maximum(expected, maximum)
         np.testing.assert_allclose(states.mix_a[band], expected * study.growth, rtol=SAME)
     mixes = states.of_kind(MIX)
-    np.testing.assert_allclose(states.current_a[mixes], np.repeat(states.mix_a, 2, axis=0), rtol=SAME)
+    np.testing.assert_allclose(states.current_a[mixes], np.repeat(states.mix_a[:-1], 2, axis=0), rtol=SAME)
     assert set(states.input_v[mixes]) == {study.supply.low_v, study.supply.high_v}
     hottest = study.supply.hottest_inlet_degc + study.supply.local_rise_k
     assert (states.ambient_degc[mixes] == hottest).all()
@@ -228,6 +228,11 @@ def test_rated_and_shown_loads_are_always_there_without_hours(study: ResolvedStu
     maximum = coincident(study)
     fallback, shown = states.of_kind(FALLBACK), states.of_kind(PRINT)
     assert sorted(states.input_v[fallback]) == [study.supply.low_v, study.supply.high_v]
+    np.testing.assert_array_equal(states.band[fallback], states.bands)
+    assert states.place_names[-1] == "fall-back"
+    for currents in (states.mix_a[-1], states.after_a[-1]):
+        np.testing.assert_allclose(currents, maximum * study.growth, rtol=SAME)
+    assert (states.band == states.bands).sum() == 3  # lowest and highest input, and after a step
     for s in fallback:
         np.testing.assert_allclose(states.current_a[s], maximum * study.growth, rtol=SAME)
     assert len(shown) == 3
