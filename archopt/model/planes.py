@@ -8,7 +8,7 @@ sets a resistance is the region the layer budget charges.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from functools import lru_cache
+from functools import cached_property, lru_cache
 
 import numpy as np
 
@@ -74,6 +74,24 @@ class BusPlanes:
     place_names: tuple[tuple[str, ...], tuple[str, ...]]
     reached: BoolArray
 
+    @cached_property
+    def star(self) -> tuple[FloatArray, FloatArray] | None:
+        """Squares shared by all and each rail's own, (2,) and (2, R), where a plane is no more than that."""
+        count = self.squares.shape[1]
+        shared = self.squares[:, 0, -1] if count > 1 else np.zeros(2)
+        own = np.diagonal(self.squares, axis1=1, axis2=2) - shared[:, None]
+        same = np.allclose(self.squares, shared[:, None, None] + own[:, None, :] * np.eye(count), rtol=1e-12, atol=0.0)
+        return (shared, own) if same else None
+
+    def square_drop(self, bus: int, on_a: FloatArray) -> FloatArray:
+        """Return squares times current to every stage of a bus, (..., R), from the currents of its stages (..., R)."""
+        if self.star is None:
+            return np.asarray(np.einsum("...q,rq->...r", on_a, self.squares[bus]))
+        shared, own = self.star
+        part = on_a * own[bus]
+        part += shared[bus] * np.einsum("...r->...", on_a)[..., None]
+        return np.asarray(part)
+
     @property
     def with_vias(self) -> bool:
         """Whether via fields add resistance."""
@@ -81,11 +99,12 @@ class BusPlanes:
 
 
 def copper_degc(study: ResolvedStudy) -> float:
-    """Temperature at which copper is taken to carry its current: local air and the permitted rise, degC.
+    """Temperature (degC) of copper as warm as it may be: hottest local air and the permitted rise.
 
-    Copper that stays within its limit is never hotter, so that its loss is never understated.
+    The resistance the schedule and the choice of pairs are decided by; copper within its limit is never hotter.
+    A solved board has every net at its own temperature (:mod:`archopt.model.copper_heat`).
     """
-    return study.supply.inlet_degc + study.supply.local_rise_k + study.board.copper_rise_k
+    return study.supply.hottest_inlet_degc + study.supply.local_rise_k + study.board.copper_rise_k
 
 
 def perforated(share: float) -> float:
