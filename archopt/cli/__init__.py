@@ -7,13 +7,14 @@ from __future__ import annotations
 
 import io
 import sys
+from collections.abc import Callable
 from typing import Annotated
 
 import typer
 
 from archopt.cli import check, copper, fit, floorplan, leaving, new, parts, show, solve, transient
 
-COMMANDS = {
+COMMANDS: dict[str, Callable[..., None]] = {
     "new": new.new_command,
     "check": check.check_command,
     "solve": solve.solve_command,

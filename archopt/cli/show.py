@@ -27,7 +27,8 @@ def show_command(
 ) -> None:
     """Print a result again, or explain one design of it."""
     from archopt.present import files
-    from archopt.present.front import Front
+    from archopt.present.adaptive_view import with_adaptive_limits
+    from archopt.present.front import Design, Front
     from archopt.present.tables import console_for, put
     from archopt.present.terminal import print_front
 
@@ -43,7 +44,8 @@ def show_command(
         else:
             print_front(console_for(), front.record, directory)
         return
-    chosen = front.design(design)
+    asked = front.design(design)
+    chosen = Design(with_adaptive_limits(asked.data, asked.problem), asked.problem)
     if as_json:
         print_json(chosen.as_dict())
     else:

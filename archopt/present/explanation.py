@@ -8,6 +8,7 @@ from rich.console import RenderableType
 from rich.table import Table
 from rich.text import Text
 
+from archopt.present.adaptive_view import adaptive_sections
 from archopt.present.amounts import NONE, fixed, money, number, of, place_word, real, with_unit
 from archopt.present.losses import loss_table, shown_states, worst_balance
 from archopt.present.power_tree import BUS_WORD, tree_lines
@@ -38,6 +39,7 @@ def explanation(design: Data, problem: Data) -> Iterable[RenderableType]:
             schedule_table(design["bands"]),
             *phases_body(design["bands"]),
         )
+    yield from adaptive_sections(design)
     yield from section("Losses by part and mechanism", loss_table(design))
     states = design_states_table(shown_states(design))
     yield from section("States of the year, and the shown loads", states, balance_line(design))

@@ -7,6 +7,7 @@ from collections.abc import Iterable, Sequence
 from rich.console import RenderableType
 from rich.text import Text
 
+from archopt.present.adaptive_view import adaptive_lines
 from archopt.present.amounts import NONE, counted, fixed, number, of, place_word, real, signed
 from archopt.present.explanation import slack_text
 from archopt.present.power_tree import BUS_WORD
@@ -65,6 +66,7 @@ def front_sections(record: FrontRecord, width: int) -> Iterable[RenderableType]:
     if flat:
         yield from section("How flat the optimum is", Text(flat))
     yield from section("Which limit binds", binding_table([designs[p] for p in chosen.index]))
+    yield from adaptive_lines(designs)
 
 
 def front_table(designs: Sequence[Data], currency: str, width: int) -> WordTable:
