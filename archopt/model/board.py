@@ -114,7 +114,7 @@ def bank_loss_w(problem: Problem, hardware: Hardware, stage_v: FloatArray, curre
     """Return the loss of the output banks in their series resistance, (P, S, R) W; phases add no cancelling."""
     square = ripple_square_a2(
         problem.stages,
-        np.broadcast_to(hardware.stage[:, None, :], stage_v.shape),
+        hardware.stage[:, None, :],
         stage_v,
         problem.rails.voltage_v,
         current_a / hardware.running,

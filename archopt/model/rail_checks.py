@@ -10,7 +10,7 @@ from archopt.model.hardware import Hardware, short_time_a
 from archopt.model.limits import Ledger
 from archopt.model.parameters import BUCK, LINEAR, BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
-from archopt.model.situation import Droop, Situation
+from archopt.model.situation import Droop, Situation, at_states
 from archopt.model.space import BUS_NAMES, FIXED
 from archopt.model.stages import conduction_ratio, headroom_v, output_ripple, ripple_square_a2, thermal_gain
 from archopt.model.states import FALLBACK, JUMP, MIX
@@ -27,12 +27,12 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     ledger.add("rail release", droop.release_percent, 100.0, at_most=True, axes=places)
     steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
     axes = (situation.state_names(steady), names)
-    volts, amps = solution.stage_v[:, steady], solution.current_a[:, steady]
-    running = hardware.running[:, steady]
-    stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
+    volts, amps = at_states(solution.stage_v, steady), at_states(solution.current_a, steady)
+    running = at_states(hardware.running, steady)
+    stage = hardware.stage[:, None, :]
     on = ~states.off[steady]
     per_phase = amps / running
-    drop_v = np.where(rails.remote_sense, amps * solution.pour_ohm[:, steady], 0.0)
+    drop_v = np.where(rails.remote_sense, amps * at_states(solution.pour_ohm, steady), 0.0)
     duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
     frequency = stages.frequency_hz[stage]
     is_buck = stages.kind[stage] == BUCK
@@ -64,7 +64,7 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     )  # fmt: skip
     square = running * ripple_square_a2(stages, stage, volts, rails.voltage_v, per_phase)
     bank_w = hardware.bank_esr_ohm[:, None, :] * square  # warms the bank, not the stage
-    heat = (solution.stage_loss_w[:, steady] - bank_w) / running + hardware.bias_w[:, None, :]
+    heat = (at_states(solution.stage_loss_w, steady) - bank_w) / running + hardware.bias_w[:, None, :]
     temperature = states.ambient_degc[steady][:, None] + stages.thermal_k_per_w[stage] * heat
     junction = problem.study.derating.junction_degc
     ledger.add("stage temperature", temperature, junction, at_most=True, axes=axes, applies=on)
@@ -123,11 +123,11 @@ def output_ripple_v(problem: Problem, hardware: Hardware, solution: Solution, in
 
     With the bank as it is at the end of its life, half of what swings.
     """
-    volts = solution.stage_v[:, index]
-    stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
-    ripple_a, charge_c = output_ripple(
-        problem.stages, stage, hardware.running[:, index], volts, problem.rails.voltage_v, solution.current_a[:, index]
+    volts, amps, running = (
+        at_states(values, index) for values in (solution.stage_v, solution.current_a, hardware.running)
     )
+    stage = hardware.stage[:, None, :]
+    ripple_a, charge_c = output_ripple(problem.stages, stage, running, volts, problem.rails.voltage_v, amps)
     return half_swing_v(ripple_a, charge_c, hardware.bank_f[:, None, :], hardware.bank_esr_ohm[:, None, :])
 
 
@@ -139,10 +139,10 @@ def jump_spare_v(situation: Situation) -> FloatArray:
     problem, hardware = situation.problem, situation.hardware
     solution, stages, rails = situation.solution, problem.stages, problem.rails
     jump = situation.states.of_kind(JUMP)
-    volts, amps = solution.stage_v[:, jump], solution.current_a[:, jump]
-    stage = np.broadcast_to(hardware.stage[:, None, :], volts.shape)
-    per_phase = np.minimum(amps / hardware.running[:, jump], stages.phase_limit_a[stage])
-    drop_v = np.where(rails.remote_sense, amps * solution.pour_ohm[:, jump], 0.0)
+    volts, amps = at_states(solution.stage_v, jump), at_states(solution.current_a, jump)
+    stage = hardware.stage[:, None, :]
+    per_phase = np.minimum(amps / at_states(hardware.running, jump), stages.phase_limit_a[stage])
+    drop_v = np.where(rails.remote_sense, amps * at_states(solution.pour_ohm, jump), 0.0)
     duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
     spare = np.where(stages.kind[stage] == LINEAR, np.inf, volts * (1.0 - duty / stages.max_duty[stage]))
     spare = np.minimum(spare, volts - stages.input_min_v[stage])
@@ -171,7 +171,7 @@ def check_jump(situation: Situation, ledger: Ledger) -> None:
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     solution = situation.solution
     jump = states.of_kind(JUMP)
-    volts = solution.stage_v[:, jump]
+    volts = at_states(solution.stage_v, jump)
     axes = (situation.state_names(jump), situation.rail_names)
     on = ~states.off[jump]
     spare = jump_spare_v(situation)

@@ -38,6 +38,11 @@ class Situation:
         return tuple(self.states.name[int(k)] for k in index)
 
 
+def at_states(values: FloatArray, index: IntArray) -> FloatArray:
+    """Return (P, S, n) values in some states, (P, states, n), states last in memory as they were."""
+    return np.asarray(values.transpose(0, 2, 1)[..., index].transpose(0, 2, 1))
+
+
 @dataclass(frozen=True)
 class Droop:
     """Droop and release of every rail at every place, V, (P, R, B + 1), and as a share of the budget in percent."""
@@ -105,11 +110,11 @@ def droop_terms(situation: Situation) -> DroopTerms:
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     rails, stages = problem.rails, problem.stages
     jump = states.of_kind(JUMP)
-    stage_v = situation.solution.stage_v[:, jump].transpose(0, 2, 1)  # (P, R, B)
-    stage = np.broadcast_to(hardware.stage[..., None], stage_v.shape)
+    stage_v = at_states(situation.solution.stage_v, jump).transpose(0, 2, 1)  # (P, R, B)
+    stage = hardware.stage[..., None]
     running = hardware.running_band
     volts = rails.voltage_v[:, None]
-    extra = np.maximum(situation.solution.current_a[:, jump].transpose(0, 2, 1) - states.after_a.T, 0.0)
+    extra = np.maximum(at_states(situation.solution.current_a, jump).transpose(0, 2, 1) - states.after_a.T, 0.0)
     mix = states.mix_a.T + extra
     step = family_step_a(situation)
     after = np.minimum(mix + step, np.maximum(rails.max_a[:, None] + extra, mix))
