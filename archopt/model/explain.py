@@ -240,8 +240,8 @@ def tolerance_records(problem: Problem, detail: Detail, p: int) -> list[dict[str
     for r, name in enumerate(problem.rails.names):
         rail = rails[name]
         volts_mv = rail.voltage_v * 1e3
-        amps = float(detail.solution.current_a[p, steady, r].max())
-        drop = 0.0 if rail.remote_sense else amps * float(hardware.pour_ohm[p, r]) * 1e3
+        drop_v = (detail.solution.current_a * detail.solution.pour_ohm)[p, steady, r].max()
+        drop = 0.0 if rail.remote_sense else float(drop_v) * 1e3
         droop = float(detail.droop.droop_v[p, r].max()) * 1e3
         release = float(detail.droop.release_v[p, r].max()) * 1e3
         budget = rail.droop_budget_v * 1e3

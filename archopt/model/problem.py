@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -30,6 +31,7 @@ from archopt.model.planes import BusPlanes, bus_planes, copper_degc, with_pours
 from archopt.model.rails import RailArrays, rail_arrays
 from archopt.model.space import BANK_COUNTS, BUS_A, INPUT, PARENT, Layout, Space
 from archopt.model.states import StateTable, own_rails
+from archopt.physics.ampacity import current_limit_a
 from archopt.physics.capacitor import effective_capacitance_f
 from archopt.physics.copper import sheet_resistance_ohm
 
@@ -73,6 +75,18 @@ class Problem:
     def bus_squares(self) -> FloatArray:
         """Port resistance matrix of each bus in squares, one way, (2, R, R)."""
         return self.planes.squares
+
+    @cached_property
+    def pour_limit_a(self) -> FloatArray:
+        """What one pair of each rail's pour may carry on each stack, (stacks, R) A, by IPC-2221."""
+        thickness, rise_k = self.stacks.thickness_m[:, None], self.study.board.copper_rise_k
+        return current_limit_a(self.rails.copper_width_m, thickness, rise_k, inner=True)
+
+    @cached_property
+    def place_limit_a(self) -> FloatArray:
+        """What one pair of each place of the bus planes may carry on each stack, (stacks, 2, K) A, by IPC-2221."""
+        thickness, rise_k = self.stacks.thickness_m[:, None, None], self.study.board.copper_rise_k
+        return current_limit_a(self.planes.place_width_m, thickness, rise_k, inner=True)
 
 
 def voltage_grid(study: ResolvedStudy) -> FloatArray:

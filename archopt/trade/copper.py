@@ -294,7 +294,7 @@ def net_figures(problem: Problem, detail: Detail, p: int) -> list[NetFigures]:
                 rise_k=permitted_k * float(bus_load[bus]) ** (1.0 / RISE_EXPONENT),
             )
         )
-    drop_v = (amps * hardware.pour_ohm[p]).max(axis=0)
+    drop_v = (amps * solution.pour_ohm[p, steady]).max(axis=0)
     loss_kwh = (solution.pour_w[p] * hours[:, None]).sum(axis=0) * 1e-3
     for k, name in enumerate(rails.names):
         found.append(

@@ -26,6 +26,7 @@ from archopt.model.cost import bill, count_pieces
 from archopt.model.evaluator import transition_kwh
 from archopt.model.hardware import unpack
 from archopt.model.parameters import PRICE_STEPS, IntArray
+from archopt.model.planes import copper_degc
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
 from archopt.physics.arrays import FloatArray
@@ -320,7 +321,5 @@ def with_catalogue(problem: Problem, catalogue: Catalogue, number: Number) -> Pr
         power[problem.supervisors.names.index(number.name)] *= number.raised / number.value
         return replace(problem, supervisors=replace(problem.supervisors, power_w=power))
     stacks = tables_of.stack_table(study, catalogue)
-    supply = study.supply
-    warm_degc = supply.inlet_degc + supply.local_rise_k + study.board.copper_rise_k
-    sheet = np.asarray(sheet_resistance_ohm(stacks.thickness_m, warm_degc))
+    sheet = np.asarray(sheet_resistance_ohm(stacks.thickness_m, copper_degc(study)))
     return replace(problem, stacks=stacks, sheet_ohm=sheet)

@@ -24,7 +24,7 @@ def useful_w(evaluator: Evaluator, detail: Detail, p: int, s: int) -> float:
     for r, volts in enumerate(rails.voltage_v):
         total += float(volts * states.current_a[s, r])
         if not rails.remote_sense[r]:
-            total -= float(detail.solution.current_a[p, s, r] ** 2 * detail.hardware.pour_ohm[p, r])
+            total -= float(detail.solution.current_a[p, s, r] ** 2 * detail.solution.pour_ohm[p, s, r])
     return total - float(states.tap_w[s])
 
 

@@ -20,7 +20,7 @@ from archopt.model.planes import copper_degc, net_copper, perforated, solved_net
 from archopt.model.problem import Problem, compile_problem
 from archopt.model.space import BUS_NAMES, Designs
 from archopt.model.states import reduce_load
-from archopt.physics.copper import sheet_resistance_ohm
+from archopt.physics.copper import resistivity_ohm_m, sheet_resistance_ohm
 from archopt.physics.sheet_fields import averaged_density_a_per_m, link_current_a
 
 STUDY = Path(__file__).resolve().parents[2] / "studies" / "compute_sixteen" / "study.toml"
@@ -161,6 +161,8 @@ def test_plane_losses_of_the_board_are_of_that_matrix() -> None:
     square = 2.0 * problem.sheet_ohm[detail.hardware.stack] / detail.designs.bus("pairs")[:, 0]
     expected = square[:, None] * np.einsum("psr,rq,psq->ps", amps, planes.squares[0], amps)
     expected += 2.0 * (planes.source_ohm[0] * amps.sum(axis=2) ** 2 + (planes.own_ohm[0] * amps**2).sum(axis=2))
+    warm = resistivity_ohm_m(problem.states.ambient_degc + solution.plane_rise_k[..., 0])
+    expected *= warm / resistivity_ohm_m(copper_degc(problem.study))
     np.testing.assert_allclose(solution.plane_w[..., 0], expected, rtol=1e-9)
 
 

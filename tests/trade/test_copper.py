@@ -13,6 +13,7 @@ from archopt.errors import OutputError
 from archopt.model.evaluator import Evaluator
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
+from archopt.physics.copper import resistivity_ohm_m
 from archopt.trade.copper import (
     WEIGHT,
     CopperAnswer,
@@ -83,14 +84,18 @@ def test_losses_of_the_nets_are_all_the_copper_there_is() -> None:
 
 
 def test_halving_a_pour_doubles_its_sheet_but_not_its_vias() -> None:
-    # closed form: loop = 2 (squares x sheet / pairs + vias)
+    # closed form: loop = 2 (squares x sheet / pairs + vias), both as warm as the pour
     problem, row = decided()
     k = problem.rails.names.index("core_west")
     stack = int(row[problem.layout.board("stack")])
     sheet_ohm = float(problem.rails.squares[k] * problem.sheet_ohm[stack])
     ohm = [sheet_ohm / pairs + float(problem.rails.pour_via_ohm[k]) for pairs in (2, 4)]
-    two, four = (answer().sweeps()["core_west"][n - 1].drop_percent for n in (2, 4))
-    assert two / four == pytest.approx(ohm[0] / ohm[1], rel=1e-9)
+    points = [answer().sweeps()["core_west"][n - 1] for n in (2, 4)]
+    supply = problem.study.supply
+    warm = [float(resistivity_ohm_m(supply.hottest_inlet_degc + supply.local_rise_k + p.rise_k)) for p in points]
+    assert points[0].rise_k > points[1].rise_k
+    expected = ohm[0] * warm[0] / (ohm[1] * warm[1])
+    assert points[0].drop_percent / points[1].drop_percent == pytest.approx(expected, rel=1e-9)
 
 
 def test_rise_is_the_permitted_one_at_the_limit() -> None:
