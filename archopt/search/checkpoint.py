@@ -157,21 +157,26 @@ class Keeper:
     ----------
     directory : where the result will be; made when the first state is put by
     facts : what a run going on from it must agree in
-    every_s : least time between two states, and before the first
+    every_s : least time between two states, and before the first; 5 s unless given
     clock : seconds that pass
 
     trouble: why the last state could not be written, or nothing; a search goes on without.
     """
 
     def __init__(
-        self, directory: Path, facts: Facts, *, every_s: float = EVERY_S, clock: Callable[[], float] = time.monotonic
+        self,
+        directory: Path,
+        facts: Facts,
+        *,
+        every_s: float | None = None,
+        clock: Callable[[], float] = time.monotonic,
     ) -> None:
         self.directory = Path(os.path.realpath(directory))
         self.facts = facts
-        self.every_s = every_s
+        self.every_s = EVERY_S if every_s is None else every_s
         self.trouble = ""
         self._clock = clock
-        self._due_s = clock() + every_s
+        self._due_s = clock() + self.every_s
 
     def offer(self, reached: Mapping[str, Any], state: Callable[[], State], *, at_once: bool = False) -> bool:
         """Put a state by if it is time, or ``at_once``; return whether it was."""

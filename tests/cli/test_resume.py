@@ -1,0 +1,135 @@
+"""A solve that is killed goes on with ``--resume`` and writes the same bytes; what is in the way is said."""
+
+from __future__ import annotations
+
+import os
+import signal
+import subprocess
+import sys
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+
+from archopt.search import checkpoint
+from tests.search.small_study import FEW_CHOICES, TWO_RAILS
+
+ROOT = Path(__file__).resolve().parents[2]
+Run = Callable[..., tuple[int, str, str]]
+SEARCH = """
+[search]
+evaluations = 220
+population = 16
+"""
+SAME = ("front.csv", "archive.csv", "designs.json", "problem.json")
+
+# Puts by at every generation and kills itself: in the middle of writing a state, or in the generation after it.
+PROGRAM = """
+import os, signal, sys
+from archopt.search import checkpoint
+from archopt.search.driver import Search
+checkpoint.EVERY_S = checkpoint.LEAST_SHARE = 0.0
+when, number, count = sys.argv[1], int(sys.argv[2]), 0
+def counted(whole):
+    def work(*words, **named):
+        global count
+        count += 1
+        if count == number and when == "writing":
+            raise SystemExit(os.kill(os.getpid(), signal.SIGKILL))
+        done = whole(*words, **named)
+        if count == number and when == "searching":
+            os.kill(os.getpid(), signal.SIGKILL)
+        return done
+    return work
+if when == "writing":
+    checkpoint.os.fsync = counted(os.fsync)
+else:
+    Search.evaluate = counted(Search.evaluate)
+from archopt.cli import main
+main(sys.argv[3:])
+"""
+
+
+@pytest.fixture
+def study(tmp_path: Path) -> Path:
+    path = tmp_path / "study.toml"
+    path.write_text(TWO_RAILS + FEW_CHOICES + SEARCH, encoding="utf-8")
+    return path
+
+
+def killed(when: str, number: int, *words: str) -> None:
+    """Run a solve that kills itself; see that it did."""
+    environment = {**os.environ, "PYTHONPATH": str(ROOT)}
+    done = subprocess.run(
+        [sys.executable, "-c", PROGRAM, when, str(number), *words],
+        cwd=ROOT, env=environment, capture_output=True, text=True, check=False,
+    )  # fmt: skip
+    assert done.returncode == -signal.SIGKILL, done.stderr
+
+
+def test_killed_twice_it_ends_with_the_same_bytes(study: Path, run: Run, tmp_path: Path) -> None:
+    solve = ("solve", str(study), "--quiet", "--out")
+    never, place = tmp_path / "never", tmp_path / "killed"
+    assert run(*solve, str(never))[0] == 0
+    killed("searching", 9, *solve, str(place))
+    first = checkpoint.read(place).reached["evaluations"]
+    assert first > 0
+    killed("writing", 5, *solve, str(place), "--resume")
+    assert {entry.name for entry in place.iterdir()} == {checkpoint.NAME, checkpoint.PARTIAL}
+    assert checkpoint.read(place).reached["evaluations"] > first
+
+    code, out, err = run(*solve, str(place))
+    assert (code, out) == (2, "")
+    assert f"of 220 designs tried): go on with it (--resume), or start afresh (--replace)" in err
+    code, out, err = run(*solve, str(place), "--resume", "--seed", "9")
+    assert (code, out) == (2, "")
+    assert "seed is 9, there it is 1" in err
+    assert checkpoint.is_there(place)
+
+    assert run(*solve, str(place), "--resume") == (0, f"{place}\n", "")
+    for name in SAME:
+        assert (place / name).read_bytes() == (never / name).read_bytes(), name
+    assert {entry.name for entry in place.iterdir()} == {entry.name for entry in never.iterdir()}
+
+
+def test_an_interrupted_run_keeps_its_front_and_goes_on(
+    study: Path, run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    from archopt.search.driver import Search
+
+    solve = ("solve", str(study), "--evaluations", "120", "--quiet", "--out")
+    never, place = tmp_path / "never", tmp_path / "interrupted"
+    assert run(*solve, str(never))[0] == 0
+    step = Search.step
+
+    def interrupted(search: Search) -> None:
+        step(search)
+        if search.generation == 3:
+            os.kill(os.getpid(), signal.SIGINT)
+
+    with monkeypatch.context() as patch:
+        patch.setattr(Search, "step", interrupted)
+        assert run(*solve, str(place))[0] == 130
+    assert "--resume goes on where this run was stopped" in run("show", str(place))[1]
+    assert "unfinished run" in run(*solve, str(place))[2]
+    assert run(*solve, str(place), "--resume")[0] == 0
+    for name in SAME:
+        assert (place / name).read_bytes() == (never / name).read_bytes(), name
+    assert not checkpoint.is_there(place)
+    code, _, err = run(*solve, str(place), "--resume")
+    assert code == 2
+    assert "no unfinished run to go on with" in err
+
+
+def test_a_damaged_state_is_told_from_a_fault(study: Path, run: Run, tmp_path: Path) -> None:
+    place = tmp_path / "damaged"
+    place.mkdir()
+    (place / checkpoint.NAME).write_bytes(b"something else")
+    for words in ((), ("--resume",)):
+        code, out, err = run("solve", str(study), "--out", str(place), *words)
+        assert (code, out) == (2, "")
+        assert "--replace" in err
+        assert "Traceback" not in err
+    code, _, err = run("solve", str(study), "--out", str(place), "--resume", "--replace")
+    assert code == 2
+    assert "not both" in err
