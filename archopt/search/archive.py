@@ -205,6 +205,7 @@ class Archive:
         energy_resolution: float = 0.003,
         cost_resolution: float = 0.003,
         droop_step: float = 2.0,
+        preferred: IntArray | None = None,
     ) -> Thinning:
         """Keep one design a box of the declared resolution and the extreme designs of each objective.
 
@@ -219,6 +220,7 @@ class Archive:
         limit : most designs kept, at least 3
         energy_resolution, cost_resolution : relative width of a box
         droop_step : width of a box, percent of the droop budget
+        preferred : rank of each design, shape (designs,); in a box only the highest rank is looked at
 
         Raises
         ------
@@ -242,7 +244,7 @@ class Archive:
 
         def kept(notch: int, step: float) -> IntArray:
             widths = np.log1p(np.array([energy_resolution, cost_resolution]) * _NOTCH**notch)
-            return _one_a_box(values, logs / widths, step, held, extremes)
+            return _one_a_box(values, logs / widths, step, held, extremes, preferred)
 
         step, last = droop_step, _NOTCHES
         while len(kept(last, step)) > limit:
@@ -313,15 +315,17 @@ def _extremes(values: FloatArray) -> IntArray:
 
 
 def _one_a_box(
-    values: FloatArray, scaled: FloatArray, droop_step: float, held: FloatArray, extremes: IntArray
-) -> IntArray:
+    values: FloatArray, scaled: FloatArray, droop_step: float, held: FloatArray, extremes: IntArray,
+    preferred: IntArray | None = None,
+) -> IntArray:  # fmt: skip
     """Positions kept: the extremes, and the best design of every box that holds no extreme."""
     energy_box, cost_box = np.floor(scaled).T
     droop_box = _droop_box(values, droop_step)
     corner = (scaled - np.floor(scaled)).sum(axis=1)
     extreme = np.zeros(len(values), dtype=np.bool_)
     extreme[extremes] = True
-    order = np.lexsort((corner, -held, ~extreme, droop_box, cost_box, energy_box))
+    rank = np.zeros(len(values)) if preferred is None else -preferred
+    order = np.lexsort((corner, -held, rank, ~extreme, droop_box, cost_box, energy_box))
     box = np.column_stack([energy_box, cost_box, droop_box])[order]
     first = np.concatenate([[True], (box[1:] != box[:-1]).any(axis=1)])
     return np.union1d(order[first], extremes)
