@@ -21,6 +21,7 @@ from archopt.model.states import StateTable
 NODES = 32
 CHUNK = 400_000  # operating points worked out at once while tables are made
 HALF, SIXTH, OUTER = np.float32(0.5), np.float32(1.0 / 6.0), np.float32(1.5)
+NEAR = 0.02  # of its input: so far a parent's loss beyond its table stays what it was
 REACH_BELOW_BUS = 0.80  # of the lowest bus voltage: how far drop and dip may pull a stage input
 
 SingleArray = NDArray[np.float32]
@@ -171,7 +172,7 @@ class TableReader:
         self.per_volt = (1.0 / tables.step_v[stage])[..., None].astype(np.float32)
         self.esr_ohm = hardware.bank_esr_ohm[..., None].astype(np.float32)
         self.silent = states.off.T | (base < 0)[..., None] if states.off.any() or (base < 0).any() else None
-        self.parents = np.nonzero(hardware.children)
+        self.parents = ParentLoss(problem, states, hardware) if hardware.children.any() else None
         self.node: SingleArray | None = None
         self.cubic: list[SingleArray] = []
 
@@ -193,8 +194,8 @@ class TableReader:
             if coefficient is not constant:
                 loss *= offset
         out = np.maximum(loss, 0.0, dtype=np.float64)
-        if len(self.parents[0]):
-            self.by_physics(stage_v, current_a, out)
+        if self.parents is not None:
+            self.parents.correct(stage_v, current_a, out)
         if self.silent is not None:
             out[self.silent] = 0.0
         return out.transpose(0, 2, 1)
@@ -223,16 +224,40 @@ class TableReader:
         for kept, fresh in zip(self.cubic, self.gather(self.first.reshape(-1)[outside], node, esr), strict=True):
             kept.reshape(-1)[outside] = fresh
 
-    def by_physics(self, stage_v: FloatArray, current_a: FloatArray, loss: FloatArray) -> None:
-        """Replace the losses of rails with children, in place."""
-        problem, hardware = self.problem, self.hardware
-        p, r = self.parents
-        stage, running = hardware.stage[p, r][:, None], hardware.running[p, :, r]
+
+class ParentLoss:
+    """What rails with children lose beyond their tables, whose current is the state's: by physics, of M rails.
+
+    Found where children draw current and kept while the stage input hardly moves.
+    """
+
+    def __init__(self, problem: Problem, states: StateTable, hardware: Hardware) -> None:
+        self.problem, self.states, self.hardware = problem, states, hardware
+        self.place = p, r = np.nonzero(hardware.children)
+        self.running = hardware.running[p, :, r]  # (M, S)
+        self.amps = states.current_a.T[r]
+        self.volts = np.full(self.amps.shape, np.inf)
+        self.beyond_w = np.zeros(self.amps.shape)
+
+    def correct(self, stage_v: FloatArray, current_a: FloatArray, loss_w: FloatArray) -> None:
+        """Add it to losses read from the tables, (P, R, S), in place."""
+        p, r = self.place
         volts, amps = stage_v[p, :, r], current_a[p, :, r]
-        output_v = problem.rails.voltage_v[r][:, None]
-        point = operate(problem.stages, stage, running, volts, output_v, amps, self.states.ambient_degc)
-        square = ripple_square_a2(problem.stages, stage, volts, output_v, amps / running)
-        loss[p, r] = point.loss_w + hardware.bank_esr_ohm[p, r][:, None] * running * square
+        m, s = np.nonzero((amps != self.amps) | (np.abs(volts - self.volts) > NEAR * self.volts))
+        if len(m):
+            self.volts[m, s], self.amps[m, s] = volts[m, s], amps[m, s]
+            self.beyond_w[m, s] = self.by_physics(m, s) - loss_w[p[m], r[m], s]
+        loss_w[p, r] += self.beyond_w
+
+    def by_physics(self, m: IntArray, s: IntArray) -> FloatArray:
+        """Return the losses of some of the rails in some states, W."""
+        stages, hardware = self.problem.stages, self.hardware
+        p, r = self.place[0][m], self.place[1][m]
+        stage, running = hardware.stage[p, r], self.running[m, s]
+        volts, amps, output_v = self.volts[m, s], self.amps[m, s], self.problem.rails.voltage_v[r]
+        point = operate(stages, stage, running, volts, output_v, amps, self.states.ambient_degc[s])
+        square = ripple_square_a2(stages, stage, volts, output_v, amps / running)
+        return np.asarray(point.loss_w + hardware.bank_esr_ohm[p, r] * running * square)
 
 
 def nearest(place: SingleArray) -> SingleArray:
