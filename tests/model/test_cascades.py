@@ -206,7 +206,7 @@ def test_the_schedule_counts_what_children_draw() -> None:
     )
     found = detail(CASCADE)
     sums = bus_sums(problem, options, option, found.hardware)
-    places = decided.volts[0, 0]
+    places = np.append(decided.volts[0, 0], decided.bus("nominal_v")[0, 0])  # the fall-back last
     childless = replace(found.hardware, parent=np.full_like(decided.rail("feed"), -1))
     alone = bus_sums(problem, options, option, childless)
     for kind, tabled in ((problem.states.of_kind(MIX)[0::2], sums[1]), (problem.states.of_kind(JUMP), sums[2])):
