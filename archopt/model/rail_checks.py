@@ -30,7 +30,7 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     volts, amps = at_states(solution.stage_v, steady), at_states(solution.current_a, steady)
     running = at_states(hardware.running, steady)
     stage = hardware.stage[:, None, :]
-    on = ~states.off[steady]
+    on = np.repeat(~states.off[steady][:, None], len(volts), axis=1).transpose(1, 0, 2)
     per_phase = amps / running
     drop_v = np.where(rails.remote_sense, amps * at_states(solution.pour_ohm, steady), 0.0)
     duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)

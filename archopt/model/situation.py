@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from archopt.model.board import Solution
 from archopt.model.cost import Bill
@@ -38,9 +40,12 @@ class Situation:
         return tuple(self.states.name[int(k)] for k in index)
 
 
-def at_states(values: FloatArray, index: IntArray) -> FloatArray:
-    """Return (P, S, n) values in some states, (P, states, n), states last in memory as they were."""
-    return np.asarray(values.transpose(0, 2, 1)[..., index].transpose(0, 2, 1))
+def at_states(values: NDArray[Any], index: IntArray) -> FloatArray:
+    """Return (P, S, n) values in some states, (P, states, n).
+
+    States come first in memory: what is one number a design and rail then runs along with long stretches of it.
+    """
+    return np.asarray(values.transpose(1, 0, 2)[index], dtype=np.float64).transpose(1, 0, 2)
 
 
 @dataclass(frozen=True)
@@ -112,7 +117,7 @@ def droop_terms(situation: Situation) -> DroopTerms:
     jump = states.of_kind(JUMP)
     stage_v = at_states(situation.solution.stage_v, jump).transpose(0, 2, 1)  # (P, R, B)
     stage = hardware.stage[..., None]
-    running = hardware.running_band
+    running = at_states(hardware.running_band.transpose(0, 2, 1), np.arange(states.places)).transpose(0, 2, 1)
     volts = rails.voltage_v[:, None]
     extra = np.maximum(at_states(situation.solution.current_a, jump).transpose(0, 2, 1) - states.after_a.T, 0.0)
     mix = states.mix_a.T + extra
