@@ -44,6 +44,32 @@ def check_copper(situation: Situation, ledger: Ledger) -> None:
     stack_pairs = problem.stacks.pairs[hardware.stack]
     offered = stack_pairs * board.area_cm2 * board.usable_copper_share
     ledger.add("layer budget", 1e4 * copper_area_m2(problem, situation.designs), offered, at_most=True)
+    check_vias(situation, ledger, steady)
+    if len(problem.overlaps.names):
+        used = hardware.on_bus.any(axis=2)
+        pairs = np.concatenate([hardware.bus_pairs * used, hardware.pairs], axis=1)
+        there = np.einsum("pn,gn->pg", pairs, problem.overlaps.holds)
+        ledger.add("crowding", there, stack_pairs[:, None], at_most=True, axes=(problem.overlaps.names,))
+
+
+def check_vias(situation: Situation, ledger: Ledger, steady: IntArray) -> None:
+    """Check the current of every via field that a floorplan draws: under converters, stage inputs, pours."""
+    problem, solution, on_bus = situation.problem, situation.solution, situation.hardware.on_bus
+    planes, states, names = problem.planes, situation.state_names(steady), situation.rail_names
+    if not (np.isfinite(problem.rails.via_limit_a).any() or np.isfinite(planes.source_limit_a).any()):
+        return
+
+    def add(amps: FloatArray, limit_a: FloatArray, labels: tuple[str, ...]) -> None:
+        known: BoolArray = np.asarray(np.isfinite(limit_a))
+        bound = np.where(known, limit_a, 1.0)
+        ledger.add("via ampacity", amps, bound, at_most=True, axes=(states, labels), applies=known)
+
+    add(solution.current_a[:, steady], problem.rails.via_limit_a, tuple(f"{name} pour" for name in names))
+    rail_a = solution.stage_in_w[:, steady] / solution.stage_v[:, steady]
+    own = np.where(on_bus, planes.own_limit_a, np.inf).min(axis=1)[:, None]
+    add(rail_a, own, tuple(f"{name} input" for name in names))
+    bus_a = np.einsum("psr,pkr->psk", rail_a, on_bus.astype(np.float64))
+    add(bus_a, planes.source_limit_a, tuple(f"{name} converters" for name in BUS_NAMES))
 
 
 def pour_limits_a(situation: Situation) -> FloatArray:

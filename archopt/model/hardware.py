@@ -210,7 +210,7 @@ def place_limits_a(problem: Problem, stack: IntArray, pairs: IntArray) -> FloatA
 
 
 def plane_limit_a(problem: Problem, stack: IntArray, pairs: IntArray, shares: FloatArray) -> FloatArray:
-    """Return what the bus planes may carry in all, (P, 2, B) A, where the rails share it as given.
+    """Return what the bus planes and their vias may carry in all, (P, 2, B) A, where the rails share it as given.
 
     Parameters
     ----------
@@ -218,4 +218,7 @@ def plane_limit_a(problem: Problem, stack: IntArray, pairs: IntArray, shares: Fl
     """
     through = np.einsum("pkbr,kcr->pkbc", shares, problem.planes.place_share)
     limit = place_limits_a(problem, stack, pairs)[:, :, None, :]
-    return np.asarray((limit / np.maximum(through, 1e-9)).min(axis=3))
+    copper_a = (limit / np.maximum(through, 1e-9)).min(axis=3)
+    planes = problem.planes
+    vias_a = (planes.own_limit_a[:, None, :] / np.maximum(shares, 1e-9)).min(axis=3)
+    return np.asarray(np.minimum(copper_a, np.minimum(vias_a, planes.source_limit_a[:, None])))

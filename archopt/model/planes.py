@@ -17,16 +17,15 @@ from archopt.inputs.floorplan_shape import (
     SOURCE,
     Floorplan,
     Region,
-    ViaField,
     net_pitch_m,
     net_sheet,
-    spots_of,
 )
 from archopt.inputs.resolved import ResolvedStudy
 from archopt.model.parameters import BoolArray, FloatArray
 from archopt.model.rails import RailArrays
+from archopt.model.vias import fields_limit_a, fields_ohm, via_field_ohm
 from archopt.physics.ampacity import SECTION_EXPONENT
-from archopt.physics.copper import squares_matrix, via_resistance_ohm
+from archopt.physics.copper import squares_matrix
 from archopt.physics.sheet import SheetSolution, solve
 from archopt.physics.sheet_fields import DISC_M, averaged_density_a_per_m, neck_flow
 from archopt.physics.sheet_grid import copper_share
@@ -61,7 +60,8 @@ class BusPlanes:
 
     squares (2, R, R) one way, symmetric positive definite; source_ohm (2,) and own_ohm (2, R) of via fields, one
     way; area_m2 (2,); place_width_m (2, K), place_share (2, K, R), place_bias (2, K): share of a bias supply's
-    current; reached (2, R): the rails each bus can feed.
+    current; source_limit_a (2,) and own_limit_a (2, R): what the via fields may carry; reached (2, R): the rails each
+    bus can feed.
     """
 
     squares: FloatArray
@@ -71,6 +71,8 @@ class BusPlanes:
     place_width_m: FloatArray
     place_share: FloatArray
     place_bias: FloatArray
+    source_limit_a: FloatArray
+    own_limit_a: FloatArray
     place_names: tuple[tuple[str, ...], tuple[str, ...]]
     reached: BoolArray
 
@@ -113,20 +115,6 @@ def perforated(share: float) -> float:
     (1 + p) / (1 - p): the effective medium of insulating discs in a sheet (Maxwell; Rayleigh 1892 to first order).
     """
     return (1.0 + share) / (1.0 - share)
-
-
-def via_field_ohm(vias: ViaField, temperature_degc: float) -> float:
-    """Resistance (ohm) of a field of vias in parallel at a temperature (degC)."""
-    one = via_resistance_ohm(vias.length_mm * 1e-3, vias.drill_mm * 1e-3, vias.plating_um * 1e-6, temperature_degc)
-    return float(one) / vias.count
-
-
-def fields_ohm(plan: Floorplan, region: Region, temperature_degc: float) -> dict[str, float]:
-    """Resistance (ohm) of the via fields of every port of a net; the pads of a port are in parallel."""
-    siemens: dict[str, float] = {}
-    for port, spot in spots_of(plan, region):
-        siemens[port] = siemens.get(port, 0.0) + 1.0 / via_field_ohm(spot.vias, temperature_degc)
-    return {port: 1.0 / value for port, value in siemens.items()}
 
 
 @lru_cache(maxsize=64)
@@ -213,6 +201,7 @@ def bus_planes(study: ResolvedStudy, names: tuple[str, ...]) -> BusPlanes:
     names : rails with a stage of their own
     """
     nets = [bus_copper(study, bus, names) for bus in BUSES]
+    limits = [bus_vias_limit_a(study, bus, names) for bus in BUSES]
     most = max(len(net.place_width_m) for net, _, _ in nets)
     share = np.zeros((2, most, len(names)))
     width = np.ones((2, most))
@@ -227,6 +216,8 @@ def bus_planes(study: ResolvedStudy, names: tuple[str, ...]) -> BusPlanes:
         place_width_m=width,
         place_share=share,
         place_bias=np.array([[carries_bias] * most for _, _, carries_bias in nets]),
+        source_limit_a=np.array([source for source, _ in limits]),
+        own_limit_a=np.stack([own for _, own in limits]),
         place_names=(nets[0][0].place_names, nets[1][0].place_names),
         reached=np.stack([reached for _, reached, _ in nets]),
     )
@@ -265,6 +256,19 @@ def bus_copper(study: ResolvedStudy, bus: str, names: tuple[str, ...]) -> tuple[
     return replace(found, ports=names, squares=squares_all, own_ohm=own, place_share=share), reached, 0.0
 
 
+def bus_vias_limit_a(study: ResolvedStudy, bus: str, names: tuple[str, ...]) -> tuple[float, FloatArray]:
+    """Return what the vias of a bus's converters and of every rail's stage may carry, A; no end without a floorplan."""
+    plan, own = study.floorplan, np.full(len(names), np.inf)
+    region = None if plan is None else plan.region(bus)
+    if plan is None or region is None:
+        return np.inf, own
+    limits = fields_limit_a(plan, region, study.board.copper_rise_k)
+    for port, limit in limits.items():
+        if port != SOURCE:
+            own[names.index(port)] = limit
+    return limits[SOURCE], own
+
+
 def with_pours(study: ResolvedStudy, rails: RailArrays) -> RailArrays:
     """Return the rails with squares, area, width and vias of the pours that the floorplan draws.
 
@@ -275,7 +279,7 @@ def with_pours(study: ResolvedStudy, rails: RailArrays) -> RailArrays:
     if plan is None:
         return rails
     squares, area_m2, width_m = rails.squares.copy(), rails.copper_area_m2.copy(), rails.copper_width_m.copy()
-    via_ohm = rails.pour_via_ohm.copy()
+    via_ohm, limit_a = rails.pour_via_ohm.copy(), rails.via_limit_a.copy()
     for k, name in enumerate(rails.names):
         region = plan.region(name)
         if region is None:
@@ -283,9 +287,13 @@ def with_pours(study: ResolvedStudy, rails: RailArrays) -> RailArrays:
         net = net_copper(plan, region, copper_degc(study))
         squares[k], area_m2[k] = net.squares[0, 0], net.area_m2
         via_ohm[k] = net.source_ohm + net.own_ohm[0]
+        limit_a[k] = min(fields_limit_a(plan, region, study.board.copper_rise_k).values())
         share = np.maximum(net.place_share[:, 0], LEAST_SHARE)
         width_m[k] = float((net.place_width_m * share ** (-1.0 / SECTION_EXPONENT)).min())
-    return replace(rails, squares=squares, copper_area_m2=area_m2, copper_width_m=width_m, pour_via_ohm=via_ohm)
+    return replace(
+        rails, squares=squares, copper_area_m2=area_m2, copper_width_m=width_m, pour_via_ohm=via_ohm,
+        via_limit_a=limit_a,
+    )  # fmt: skip
 
 
 __all__ = [

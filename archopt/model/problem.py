@@ -12,6 +12,7 @@ from archopt.errors import InputError
 from archopt.inputs.resolved import Catalogue, ResolvedStudy
 from archopt.model import parameters as tables_of
 from archopt.model.offers import Offers, build_space, contradictions, empty_choices, empty_rails
+from archopt.model.overlaps import Overlaps, overlaps
 from archopt.model.parameters import (
     LINEAR,
     SINGLE,
@@ -69,6 +70,7 @@ class Problem:
     bulk_ok: BoolArray
     sheet_ohm: FloatArray  # (stacks,) one layer, warm
     planes: BusPlanes
+    overlaps: Overlaps
     bank_counts: IntArray
 
     @property
@@ -242,5 +244,6 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
         bulk_ok=bulk_ok,
         sheet_ohm=np.asarray(sheet_resistance_ohm(stacks.thickness_m, copper_degc(study))),
         planes=planes,
+        overlaps=overlaps(study.floorplan, rails.names),
         bank_counts=np.array(BANK_COUNTS, dtype=np.int64),
     )

@@ -27,6 +27,7 @@ class RailArrays:
     copper_area_m2: FloatArray
     copper_width_m: FloatArray
     pour_via_ohm: FloatArray  # via fields at both ends, one way, warm
+    via_limit_a: FloatArray  # what the via fields of either end may carry
     drop_budget: FloatArray  # share of the rail voltage
     tap_drop_v: FloatArray  # largest of its taps', at the coincident maximum, grown
     step_group: IntArray
@@ -60,6 +61,7 @@ def rail_arrays(study: ResolvedStudy) -> RailArrays:
         copper_area_m2=np.array([rail.copper_area_cm2 * 1e-4 for rail in rails]),
         copper_width_m=np.array([rail.copper_width_mm * 1e-3 for rail in rails]),
         pour_via_ohm=np.zeros(len(rails)),
+        via_limit_a=np.full(len(rails), np.inf),
         drop_budget=np.array([rail.drop_budget_percent * 0.01 for rail in rails]),
         tap_drop_v=tap_drop,
         step_group=np.array(group, dtype=np.int64),

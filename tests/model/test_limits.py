@@ -18,6 +18,7 @@ from archopt.inputs.parts import BuckStage, Capacitor, CopperFoil, LinearRegulat
 from archopt.model.board import DirectStages
 from archopt.model.evaluator import Detail, evaluate_in
 from archopt.model.limits import INDEX, LIMITS, ROOM
+from archopt.model.overlaps import Overlaps
 from archopt.model.parameters import LINEAR
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
@@ -72,6 +73,11 @@ def stricter(problem: Problem, limit: str) -> Problem:
     if limit == "layer budget":
         thin = replace(board, usable_copper_share=board.usable_copper_share * 0.05)
         return replace(problem, study=replace(problem.study, board=thin))
+    if limit == "via ampacity":
+        return replace(problem, rails=replace(problem.rails, via_limit_a=np.full(len(problem.rails.names), 1e-3)))
+    if limit == "crowding":
+        heap = Overlaps(np.ones((1, 2 + len(problem.rails.names))), ("(1, 2) mm",))
+        return replace(problem, overlaps=heap)
     if limit == "bus output range":
         narrow = np.full(len(problem.converters.names), 1.0)
         return replace(problem, converters=replace(problem.converters, output_max_v=narrow))
@@ -171,7 +177,7 @@ Found = tuple[float, float]
 
 def place_of(hand: Hand, name: str) -> int:
     """Return which place a limit names: a band, or the fall-back behind the last one."""
-    return len(hand.reference.volts[0]) if name == "fall-back" else int(name.split()[-1]) - 1
+    return len(hand.reference.volts[0]) if name == "fall-back" else int(name.rsplit(maxsplit=1)[-1]) - 1
 
 
 def hand_droop(hand: Hand, where: str) -> Found:
