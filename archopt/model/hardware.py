@@ -104,12 +104,12 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
     fixed_ratio = (converter >= 0) & (problem.converters.kind[np.maximum(converter, 0)] == FIXED_RATIO)
     nominal, units = designs.bus("nominal_v"), designs.bus("count")
     band_v = problem.grid_v[np.concatenate([designs.volts, nominal[..., None]], axis=2)]
-    set_v = band_v[:, :, states.band].transpose(0, 2, 1)
+    set_v = band_v.take(states.band, axis=2).transpose(0, 2, 1)
     set_v = set_v + states.setting_side[None, :, None] * setting_error_v(problem, converter[:, None, :], set_v)
     running_band = np.concatenate([designs.running_phases, phases[..., None]], axis=2)
-    running = running_band[:, :, states.band].transpose(0, 2, 1)
+    running = running_band.take(states.band, axis=2).transpose(0, 2, 1)
     units_band = np.concatenate([designs.running_converters, units[..., None]], axis=2)
-    units_running = units_band[:, :, states.band].transpose(0, 2, 1)
+    units_running = units_band.take(states.band, axis=2).transpose(0, 2, 1)
     bulk = designs.bus("bulk")
     bulk_pieces = problem.bank_counts[designs.bus("bulk_count")]
     bias_v = np.where(fixed_ratio[..., None], bus_ratio_v(problem, converter)[..., None], band_v)
