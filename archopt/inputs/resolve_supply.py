@@ -205,6 +205,8 @@ def resolve_control(
         bus_dip_percent=take("limits.bus_dip_percent", limits.bus_dip_percent, 10.0, PLAIN),
         stability_margin=take("limits.stability_margin", limits.stability_margin, 1.5, PLAIN),
         transitions_per_day=transitions,
+        dwell_s=take("control.dwell_s", table.dwell_s, 0.0, PLAIN),
+        deadband_v=take("control.deadband_v", table.deadband_v, 0.0, PLAIN),
         jumps=jump.listed,
     )  # fmt: skip
 

@@ -141,6 +141,8 @@ class Control:
     bus_dip_percent: float  # permitted dip of the bus
     stability_margin: float  # factor on the least capacitance
     transitions_per_day: float  # nan: take from the series
+    dwell_s: float = 0.0  # how long the load stays in a lower band before the bus steps down
+    deadband_v: float = 0.0  # least change of the bus voltage from one band to the next, unless it stays
     jumps: tuple[Jump, ...] = ()  # where there are any, they stand instead of jump_percent
 
 

@@ -105,6 +105,12 @@ class ControlTable(Table):
     transitions_per_day: float | None = Field(
         None, ge=0, le=1e6, description="changes of bus voltage; default from the load series, else 24"
     )
+    dwell_s: float | None = Field(
+        None, ge=0, le=86400, description="how long the load stays in a lower band before the bus steps down; default 0"
+    )
+    deadband_v: float | None = Field(
+        None, ge=0, le=50, description="least change of bus voltage from one band to the next, if any; default 0"
+    )
 
 
 class LimitsTable(Table):

@@ -9,7 +9,7 @@ from archopt.model.hardware import Hardware
 from archopt.model.options import Options, band_hours
 from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
-from archopt.model.states import ENERGY, StateTable
+from archopt.model.states import StateTable
 
 
 def bus_sums(
@@ -87,7 +87,7 @@ def sensed_pours(
     """Return what the pours of rails with remote sense take from each bus, (P, 2, B, 1): kWh, mix W, jump W."""
     ohm = np.where(problem.rails.remote_sense, hardware.pour_ohm, 0.0)
     on_bus = hardware.on_bus * ohm[:, None, :]
-    energy = states.of_kind(ENERGY)
+    energy = states.with_hours
     square_kwh = np.zeros_like(states.mix_a)
     np.add.at(square_kwh, states.band[energy], states.hours[energy, None] * states.current_a[energy] ** 2 * 1e-3)
     found = [np.einsum("pkr,br->pkb", on_bus, square) for square in (square_kwh, states.mix_a**2, states.after_a**2)]

@@ -14,7 +14,7 @@ from archopt.model.hardware import unpack
 from archopt.model.parameters import REGULATED, IntArray
 from archopt.model.problem import Problem, compile_problem
 from archopt.model.space import BUS_A, Designs
-from archopt.model.states import EnergyStates, StateTable, reduce_load
+from archopt.model.states import ENERGY, HELD, EnergyStates, StateTable, reduce_load
 
 SERIES_CHUNK = 512  # moments solved at once: what stays in the processor's cache
 
@@ -119,7 +119,7 @@ def annual_loss_kwh(problem: Problem, row: IntArray, energy: EnergyStates) -> fl
 
 def energy_only(states: StateTable, energy: EnergyStates, study: ResolvedStudy) -> StateTable:
     """Return the states with their energy states exchanged for others."""
-    keep = states.kind != 0
+    keep = (states.kind != ENERGY) & (states.kind != HELD)
     count = len(energy.hours)
     return replace(
         states,

@@ -21,12 +21,12 @@ from archopt.model.hardware import Hardware, bulk_effective_f, plane_limit_a, se
 from archopt.model.options import Options, band_hours, option_index, quiet
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
-from archopt.model.space import FIXED, FOLLOW, TWO_LEVELS, Designs
+from archopt.model.schedule import choose_schedule, deadband_steps
+from archopt.model.space import FIXED, FOLLOW, Designs
 from archopt.model.states import StateTable
 from archopt.physics.stability import least_capacitance_f, regulated_source_h
 from archopt.physics.transient import bus_dip_v
 
-ILLEGAL_KWH = 1e7  # a band at an illegal voltage costs this much: the fewest illegal bands win
 SAFETY_V = 0.003
 SAFETY_SHARE = 0.999  # of the short-time current: stages draw a little more at the dipped bus than tabled
 CHILD_MARGIN = 1.02  # what a child draws beyond its table: the copper of its sensed pour
@@ -183,53 +183,6 @@ def converter_energy(problem: Problem, states: StateTable, hardware: Hardware, e
     return loss.total_w * units * hours * 1e-3
 
 
-def choose_schedule(
-    energy_kwh: FloatArray, legal: BoolArray, lower: IntArray, upper: IntArray, nominal: IntArray,
-    control: IntArray,
-) -> IntArray:  # fmt: skip
-    """Return the schedule, (M, B) grid indices, of M buses from (M, B, G) energies and legal voltages."""
-    grid = np.arange(energy_kwh.shape[2])
-    price = energy_kwh + np.where(legal, 0.0, ILLEGAL_KWH)
-    inside = (grid >= lower[:, None]) & (grid <= upper[:, None])
-    held = np.where(inside[:, None, :], price, np.inf)
-    follow = climb(held)
-    return np.where(
-        (control == FIXED)[:, None],
-        nominal[:, None],
-        np.where((control == TWO_LEVELS)[:, None], two_levels(price, lower, upper), follow),
-    )
-
-
-def climb(price: FloatArray) -> IntArray:
-    """Return the cheapest non-decreasing path through (M, B, G), first on ties, (M, B)."""
-    count, bands, width = price.shape
-    total = price[:, 0].copy()
-    came = np.zeros((count, bands, width), dtype=np.int64)
-    grid = np.arange(width)
-    for band in range(1, bands):
-        least = np.minimum.accumulate(total, axis=1)
-        fresh = np.concatenate([np.ones((count, 1), dtype=bool), total[:, 1:] < least[:, :-1]], axis=1)
-        came[:, band] = np.maximum.accumulate(np.where(fresh, grid, 0), axis=1)
-        total = price[:, band] + least
-    path = np.zeros((count, bands), dtype=np.int64)
-    path[:, -1] = total.argmin(axis=1)
-    for band in range(bands - 1, 0, -1):
-        path[:, band - 1] = came[np.arange(count), band, path[:, band]]
-    return path
-
-
-def two_levels(price: FloatArray, lower: IntArray, upper: IntArray) -> IntArray:
-    """Return the cheapest schedule of lower limit below one threshold and upper limit above, (M, B)."""
-    rows = np.arange(len(price))
-    low = price[rows, :, lower]
-    high = price[rows, :, upper]
-    bands = price.shape[1]
-    below = np.concatenate([np.zeros((len(price), 1)), np.cumsum(low, axis=1)], axis=1)
-    above = np.concatenate([np.zeros((len(price), 1)), np.cumsum(high[:, ::-1], axis=1)], axis=1)[:, ::-1]
-    threshold = (below + above).argmin(axis=1)
-    return np.where(np.arange(bands) < threshold[:, None], lower[:, None], upper[:, None])
-
-
 def raise_for_children(
     problem: Problem, options: Options, designs: Designs, option: IntArray, running: IntArray
 ) -> IntArray:
@@ -300,9 +253,12 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     total = energy + converter_energy(problem, states, hardware, energy)
     count, bands, width = len(designs), states.bands, len(problem.grid_v)
     total, legal = total[:, :, :bands], legal[:, :, :bands]
-    genes = [designs.bus(name).reshape(-1) for name in ("lower_v", "upper_v", "nominal_v", "control")]
+    lower, upper, nominal, control = (
+        designs.bus(name).reshape(-1) for name in ("lower_v", "upper_v", "nominal_v", "control")
+    )
     volts = choose_schedule(
-        total.reshape(2 * count, bands, width), legal.reshape(2 * count, bands, width), *genes
+        total.reshape(2 * count, bands, width), legal.reshape(2 * count, bands, width), lower, upper, nominal, control,
+        deadband_steps(problem.study),
     ).reshape(count, 2, bands)  # fmt: skip
     idle = (hardware.converter < 0) | hardware.fixed_ratio
     volts = np.where(idle[..., None], 0, volts)

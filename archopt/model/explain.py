@@ -17,7 +17,7 @@ from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.rail_checks import output_ripple_v
 from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, PARENT, TWO_LEVELS, Designs
-from archopt.model.states import ENERGY, KIND_NAMES, MIX, PRINT, StateTable
+from archopt.model.states import KIND_NAMES, MIX, PRINT, StateTable
 from archopt.model.thresholds import raise_thresholds_w
 
 CONTROL_TEXT = {FIXED: "fixed", TWO_LEVELS: "two levels", FOLLOW: "follows load"}
@@ -95,7 +95,7 @@ def band_records(problem: Problem, detail: Detail, p: int) -> list[dict[str, Any
                 "load_to_w": float(states.edges_w[band + 1]),
                 "raise_above_input_w": up,
                 "fall_below_input_w": None if up is None else up * (1.0 - hysteresis),
-                "hours": float(states.hours[(states.kind == ENERGY) & (states.band == band)].sum()),
+                "hours": float(states.hours[states.with_hours][states.band[states.with_hours] == band].sum()),
                 "volts": {
                     BUS_NAMES[bus]: float(
                         solution.bus_v[p, mix_low[band], bus]

@@ -23,7 +23,7 @@ from archopt.model.stages import (
     slew_down_a_per_s,
     slew_up_a_per_s,
 )
-from archopt.model.states import ENERGY, JUMP, StateTable
+from archopt.model.states import JUMP, StateTable
 from archopt.model.tables import NODES, LossTables, cubic_weights
 from archopt.physics.output_ripple import half_swing_v
 from archopt.physics.transient import rail_droop_v
@@ -105,7 +105,7 @@ def band_energy(problem: Problem, states: StateTable, tables: LossTables) -> tup
     mix_low = states.mix_low
     weights = states.hours.copy()
     weights[mix_low] = IDLE_HOURS
-    for s in np.concatenate([states.of_kind(ENERGY), mix_low]):
+    for s in np.concatenate([states.with_hours, mix_low]):
         on = ~states.off[s][tables.row_rail]
         useful = voltage * states.current_a[s][tables.row_rail]
         scale = np.where(on, weights[s] * 1e-3, 0.0)
@@ -322,7 +322,7 @@ def quiet(
 def band_hours(states: StateTable) -> FloatArray:
     """Return the hours a year at each place, (B + 1,); none at the fall-back."""
     hours = np.zeros(states.places)
-    energy = states.of_kind(ENERGY)
+    energy = states.with_hours
     np.add.at(hours, states.band[energy], states.hours[energy])
     return hours
 

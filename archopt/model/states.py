@@ -10,11 +10,12 @@ import numpy as np
 
 from archopt.inputs.resolved import LoadTable, Rail, ResolvedStudy
 from archopt.model.clusters import cluster, split_groups
+from archopt.model.dwell import moves_a_year, split_held
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.physics.ampacity import RISE_EXPONENT
 
-ENERGY, MIX, JUMP, FALLBACK, PRINT = 0, 1, 2, 3, 4
-KIND_NAMES = ("energy", "worst mix", "after jump", "rated at nominal", "shown load")
+ENERGY, MIX, JUMP, FALLBACK, PRINT, HELD = 0, 1, 2, 3, 4, 5
+KIND_NAMES = ("energy", "worst mix", "after jump", "rated at nominal", "shown load", "held above its band")
 MAX_BANDS = 8
 MAX_CLUSTERS = 24
 CLUSTER_TOLERANCE = 0.005
@@ -32,7 +33,8 @@ class StateTable:
     mix_off (B + 1, R), transitions_per_year (B, B), cluster_error : share of the plain design's annual loss.
 
     The place behind the last band is the fall-back: the rated load with every bus at its nominal voltage and all
-    phases and converters running. Limits are checked there as in a band; no hours are spent there.
+    phases and converters running. Limits are checked there as in a band; no hours are spent there. States held by the
+    supervisor's dwell have the band of the bus, above that of their load.
     """
 
     name: tuple[str, ...]
@@ -56,6 +58,11 @@ class StateTable:
     def of_kind(self, kind: int) -> IntArray:
         """Return the indices of the states of one kind, in order."""
         return np.flatnonzero(self.kind == kind)
+
+    @property
+    def with_hours(self) -> IntArray:
+        """Return the states that stand for hours of the year."""
+        return np.flatnonzero((self.kind == ENERGY) | (self.kind == HELD))
 
     @cached_property
     def warming(self) -> FloatArray:
@@ -214,6 +221,15 @@ class EnergyStates:
         picked = {field.name: getattr(self, field.name)[index] for field in fields(self) if field.name != "name"}
         return EnergyStates(name=tuple(self.name[int(k)] for k in index), **picked)
 
+    def joined(self, other: EnergyStates) -> EnergyStates:
+        """Return these states followed by others."""
+        both = {
+            field.name: np.concatenate([getattr(self, field.name), getattr(other, field.name)])
+            for field in fields(self)
+            if field.name != "name"
+        }
+        return EnergyStates(name=(*self.name, *other.name), **both)
+
 
 def means(study: ResolvedStudy, moments: Moments, band: IntArray, clusters: list[IntArray]) -> EnergyStates:
     """Return one state a cluster and input level, at its hour-weighted means."""
@@ -297,22 +313,6 @@ def worst_mix(moments: Moments, band: IntArray, bands: int) -> tuple[FloatArray,
     return mix, off
 
 
-def transitions(study: ResolvedStudy, load: LoadTable, band: IntArray, bands: int) -> FloatArray:
-    """Return (B, B) transitions a year from band to band, from the series or as the study states them."""
-    table = np.zeros((bands, bands))
-    stated = study.control.transitions_per_day
-    if np.isfinite(stated):
-        if bands > 1:
-            table[0, -1] = table[-1, 0] = 365.0 * stated / 2
-        return table
-    if load.series and len(load.hours) > 1:
-        moment_band = band[: len(load.hours)]
-        np.add.at(table, (moment_band[:-1], moment_band[1:]), 1.0)
-        np.fill_diagonal(table, 0.0)
-        return table * load.repeats
-    return table
-
-
 def with_maximum(study: ResolvedStudy, moments: Moments) -> Moments:
     """Return the moments with the coincident maximum added for no hours: it is always present."""
     current, tap_w, useful = coincident_maximum(study)
@@ -389,6 +389,12 @@ def assemble(
 ) -> StateTable:
     """Return the energy states followed by the zero-hour states."""
     bands = len(edges) - 1
+    moves, held_h = moves_a_year(study, study.load, band, bands)
+    energy, held = split_held(energy, held_h)
+    spent = energy if held is None else energy.joined(held)
+    kind = np.full(len(spent.name), ENERGY)
+    kind[len(energy.name) :] = HELD
+    energy = spent
     supply = study.supply
     grown = study.growth
     mix, mix_off = worst_mix(moments, band, bands)
@@ -422,7 +428,7 @@ def assemble(
     extra_current = np.array([row[4] for row in extra])
     return StateTable(
         name=(*energy.name, *(row[0] for row in extra)),
-        kind=np.concatenate([np.full(len(energy.name), ENERGY), np.array([row[1] for row in extra])]),
+        kind=np.concatenate([kind, np.array([row[1] for row in extra])]),
         hours=np.concatenate([energy.hours, np.zeros(count)]),
         input_v=np.concatenate([energy.input_v, np.array([row[2] for row in extra])]),
         ambient_degc=np.concatenate([energy.inlet_degc, np.array([row[3] for row in extra])]) + supply.local_rise_k,
@@ -436,6 +442,6 @@ def assemble(
         after_a=np.vstack([after, rated]),
         mix_off=np.vstack([mix_off, nothing_off]),
         rated_a=rated,
-        transitions_per_year=transitions(study, study.load, band, bands),
+        transitions_per_year=moves,
         cluster_error=error,
     )

@@ -42,7 +42,7 @@ def state_rows(problem: Problem) -> list[Data]:
 def band_rows(problem: Problem) -> list[Data]:
     """Return the bands of load power with their worst mix and what a jump makes of it."""
     states = problem.states
-    energy = states.kind == 0
+    energy = np.isin(np.arange(len(states.kind)), states.with_hours)
     return [
         {
             "band": k + 1,

@@ -97,7 +97,13 @@ def control_text(control: Data) -> str:
     jump_text = f"an unannounced jump of {number(control.get('jump_percent'))} % of rated load"
     if jumps:
         jump_text = f"{sudden} unannounced and {len(jumps) - sudden} announced jumps between listed states"
-    return text + f"; survives {jump_text} within {number(control.get('response_ms'))} ms"
+    text += f"; survives {jump_text} within {number(control.get('response_ms'))} ms"
+    if real(control.get("dwell_s"), 0.0) > 0:
+        text += f"; steps down after {number(control.get('dwell_s'))} s of less load"
+        text += " (hours held up are counted from a thousandth of the year on)"
+    if real(control.get("deadband_v"), 0.0) > 0:
+        text += f"; changes by {number(control.get('deadband_v'))} V or not at all"
+    return text
 
 
 def money_text(economics: Data) -> str:

@@ -6,7 +6,6 @@ import numpy as np
 
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_A
-from archopt.model.states import ENERGY
 from archopt.physics.ampacity import current_limit_a
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.conditions import Conditions
@@ -18,7 +17,7 @@ TIGHTER = (1.0, 4.0, 16.0, 64.0, 1e6)  # copper price factors tried until the la
 def square_hours(problem: Problem) -> FloatArray:
     """Return the hour-weighted square of each rail's current, A^2 h / 1000 a year, (R,)."""
     states = problem.states
-    energy = states.of_kind(ENERGY)
+    energy = states.with_hours
     amps = np.where(states.off[energy], 0.0, states.current_a[energy])
     return np.asarray((amps**2 * states.hours[energy][:, None]).sum(axis=0) * 1e-3)
 

@@ -13,7 +13,6 @@ from archopt.model.options import band_energy, row_swing
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import bank_effective_f, bank_esr_ohm
 from archopt.model.space import BANK_COUNTS, BUS_A, INPUT, PARENT
-from archopt.model.states import ENERGY
 from archopt.physics.output_ripple import half_swing_v
 from archopt.search.archive import significant
 
@@ -91,8 +90,8 @@ def make_rail_tables(evaluator: Evaluator) -> tuple[RailTable, ...]:
     """Return the tables of every rail; bank counts are filled when a droop cap is first asked for."""
     problem, tables, states = evaluator.problem, evaluator.tables, evaluator.states
     nodes_kwh, _ = band_energy(problem, states, tables)
-    hours = states.hours.copy()
-    hours[states.kind != ENERGY] = 0.0
+    hours = np.zeros(len(states.hours))
+    hours[states.with_hours] = states.hours[states.with_hours]
     middle = tables.ripple_square.shape[2] // 2
     return tuple(
         make_rail_table(evaluator, r, nodes_kwh, hours, middle)

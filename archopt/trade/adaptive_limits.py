@@ -28,7 +28,6 @@ from archopt.model.limits import LIMITS
 from archopt.model.parameters import IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_NAMES, CONTROL_NAMES, FIXED, TWO_LEVELS, Designs
-from archopt.model.states import ENERGY
 from archopt.trade.rebuilt import detail_of
 from archopt.trade.schedules import regulated_buses
 
@@ -175,7 +174,7 @@ def bus_record(
     two = designs.bus("control")[0, bus] == TWO_LEVELS
     rows = []
     for bands in groups(problem, row, bus):
-        here = (states.kind == ENERGY) & np.isin(states.band, bands)
+        here = states.with_hours[np.isin(states.band[states.with_hours], bands)]
         rows.append(
             {
                 "band": None if two else bands[0] + 1,

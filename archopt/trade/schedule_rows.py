@@ -10,7 +10,6 @@ from archopt.model.evaluator import Detail, Evaluator
 from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_NAMES
-from archopt.model.states import ENERGY
 from archopt.trade.pinned import pinned_problem
 from archopt.trade.rebuilt import detail_of, problem_of, row_of
 from archopt.trade.schedules import best_fixed, regulated_buses
@@ -24,7 +23,7 @@ def band_energy_kwh(problem: Problem, detail: Detail) -> FloatArray:
     out = np.zeros((len(detail.designs), states.bands))
     lost = detail.solution.loss_w * states.hours * 1e-3
     for band in range(states.bands):
-        out[:, band] = lost[:, (states.kind == ENERGY) & (states.band == band)].sum(axis=1)
+        out[:, band] = lost[:, states.with_hours[states.band[states.with_hours] == band]].sum(axis=1)
     return out
 
 

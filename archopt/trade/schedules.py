@@ -15,6 +15,7 @@ import numpy as np
 from archopt.model.evaluator import Evaluation, Evaluator
 from archopt.model.parameters import FIXED_RATIO, IntArray
 from archopt.model.problem import Problem
+from archopt.model.schedule import deadband_steps
 from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, Designs
 from archopt.physics.arrays import FloatArray
 from archopt.trade.pinned import best_row, evaluate_exactly
@@ -236,6 +237,9 @@ def band_moves(problem: Problem, row: IntArray, bus: int, band: int) -> IntArray
     low = own[band - 1] if band > 0 else span[0]
     high = own[band + 1] if band + 1 < len(own) else span[-1]
     volts = np.array([v for v in range(int(low), int(high) + 1) if v != own[band]], dtype=np.int64)
+    least = deadband_steps(problem.study)
+    beside = [own[k] for k in (band - 1, band + 1) if 0 <= k < len(own)]
+    volts = np.array([v for v in volts if all(v == o or abs(v - o) >= least for o in beside)], dtype=np.int64)
     rows = np.repeat(row[None], len(volts), axis=0)
     rows[:, problem.layout.volts.start + bus * problem.layout.bands + band] = volts
     designs = Designs(problem.layout, rows)
@@ -254,3 +258,9 @@ def schedule_v(problem: Problem, row: IntArray) -> dict[str, list[float]]:
         still = all(one == other for one, other in pairwise(volts))
         out[BUS_NAMES[bus]] = volts[:1] if still else volts
     return out
+
+
+def volts_of(problem: Problem, row: IntArray) -> object:
+    """Return the bus voltage of a decided row as a table holds it: a number, a list by band, either by bus, None."""
+    volts = {bus: values[0] if len(values) == 1 else values for bus, values in schedule_v(problem, row).items()}
+    return next(iter(volts.values())) if len(volts) == 1 else volts or None

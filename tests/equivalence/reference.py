@@ -7,6 +7,7 @@ of their own), the names of the choices, and closed forms of the physics room fo
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, field, replace
 from typing import cast
 
@@ -27,10 +28,11 @@ from archopt.inputs.parts import (
 from archopt.inputs.resolved import Catalogue, Rail, ResolvedStudy
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
-from archopt.model.states import ENERGY, FALLBACK, JUMP, MIX, StateTable
+from archopt.model.states import ENERGY, FALLBACK, HELD, JUMP, MIX, StateTable
 from archopt.physics.transient import bus_dip_v, rail_droop_v
 from equivalence.reference_copper import Copper
-from equivalence.reference_stage import Point, buck_phase, converter_unit, linear_unit
+from equivalence.reference_measured import measured_unit
+from equivalence.reference_stage import Point, buck_phase, converter_unit, linear_unit, thermal_k_per_w
 
 TWO_PI = 2.0 * math.pi
 ORDER = ("input", "bus_a", "bus_b")
@@ -189,14 +191,33 @@ class Reference:
         """Return the whole stage with its bank: losses of all running phases."""
         air = self.study.supply.air_speed_m_s
         vout, each = net.rail.voltage_v, amps / running
-        if isinstance(net.row, BuckStage) and net.coil is not None:
-            one = buck_phase(net.row, net.coil, vin, vout, each, ambient, air)
-        elif isinstance(net.row, SingleStage):
-            one = converter_unit(net.row, vin, vout, each, ambient, air)
-        else:
-            one = linear_unit(cast(LinearRegulator, net.row), vin, vout, each, ambient, air)
+
+        def terms(degc: float) -> Point:
+            if isinstance(net.row, BuckStage) and net.coil is not None:
+                return buck_phase(net.row, net.coil, vin, vout, each, degc, air)
+            if isinstance(net.row, SingleStage):
+                return converter_unit(net.row, vin, vout, each, degc, air)
+            return linear_unit(cast(LinearRegulator, net.row), vin, vout, each, degc, air)
+
+        one = self.as_measured(net.row, vin, vout, each, ambient, terms)
         bank = net.bank_ohm * running * one.square_a2
         return replace(one, loss_w=one.loss_w * running + bank, bias_w=one.bias_w * running)
+
+    def converter(self, bus: Bus, vin: float, vout: float, amps: float, ambient: float) -> Point:
+        """Return one unit of a bus converter."""
+        air = self.study.supply.air_speed_m_s
+        terms = lambda degc: converter_unit(bus.row, vin, vout, amps, degc, air)  # noqa: E731
+        return self.as_measured(bus.row, vin, vout, amps, ambient, terms)
+
+    def as_measured(
+        self, row: Part, vin: float, vout: float, amps: float, ambient: float, terms: Callable[[float], Point]
+    ) -> Point:
+        """Return one unit by its own terms at a local air, or as its table says where it was measured."""
+        table = self.catalogue.measured.get(row.name)
+        if table is None:
+            return terms(ambient)
+        k_per_w = thermal_k_per_w(row, self.study.supply.air_speed_m_s)
+        return measured_unit(table, vin, vout, amps, terms(ambient), terms(table.local_degc), ambient, k_per_w)
 
     def of_kind(self, kind: int) -> list[int]:
         return [s for s in range(len(self.states.name)) if self.states.kind[s] == kind]
@@ -349,9 +370,7 @@ class Reference:
                     else:
                         out.bias_w = 0.0
                 units = bus.running[band]
-                unit = converter_unit(
-                    bus.row, node, bus_v[bus.name], total_a / units, ambient, supply.air_speed_m_s
-                )
+                unit = self.converter(bus, node, bus_v[bus.name], total_a / units, ambient)
                 out.plane_w[bus.name] = plane
                 out.converter_w[bus.name] = unit.loss_w * units if awake else 0.0
                 node_w += total_w + out.converter_w[bus.name] if awake else 0.0
@@ -394,7 +413,7 @@ class Reference:
 
     def energy_kwh(self) -> float:
         """Return the energy lost a year."""
-        energy = [s for s in range(len(self.results)) if self.states.kind[s] == ENERGY]
+        energy = [*self.of_kind(ENERGY), *self.of_kind(HELD)]
         total = sum(self.results[s].loss_w * float(self.states.hours[s]) / 1e3 for s in energy)
         counts = self.states.transitions_per_year
         for bus in self.buses:

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from itertools import combinations_with_replacement
+from dataclasses import replace
+from itertools import combinations_with_replacement, pairwise
 
 import numpy as np
 import pytest
@@ -11,8 +12,9 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 
-from archopt.model.decide import choose_schedule, crossing
+from archopt.model.decide import crossing, decide
 from archopt.model.limits import INDEX
+from archopt.model.schedule import choose_schedule, deadband_steps
 from archopt.model.space import FIXED, FOLLOW, TWO_LEVELS, Designs
 
 BANDS, GRID = 4, 6
@@ -68,6 +70,47 @@ def test_two_levels_equal_brute_force() -> None:
         path = tuple(int(k) for k in found[m])
         assert path in every
         assert same(badness(energy[m], legal[m], path), best)
+
+
+@pytest.mark.parametrize("deadband", [0, 1, 2, 3, 5, 6, 9])
+def test_deadbands_are_kept_at_least_cost(deadband: int) -> None:
+    """Brute force over every schedule that rises by the deadband or not at all; 0 and 1 change nothing."""
+    rng = np.random.default_rng(5)
+    energy, legal = random_case(rng, 100)
+    lower, upper = random_limits(rng, 100)
+    plain = choose_schedule(energy, legal, lower, upper, lower, np.full(100, FOLLOW))
+    found = choose_schedule(energy, legal, lower, upper, lower, np.full(100, FOLLOW), deadband)
+    levels = choose_schedule(energy, legal, lower, upper, lower, np.full(100, TWO_LEVELS), deadband)
+    assert deadband > 1 or (found == plain).all()
+    for m in range(100):
+        inside = range(int(lower[m]), int(upper[m]) + 1)
+        every = [
+            p for p in combinations_with_replacement(inside, BANDS)
+            if all(b == a or b - a >= deadband for a, b in pairwise(p))
+        ]  # fmt: skip
+        path = tuple(int(k) for k in found[m])
+        assert path in every
+        assert same(badness(energy[m], legal[m], path), min(badness(energy[m], legal[m], p) for p in every))
+        ends = {int(lower[m]), int(upper[m])}
+        two = [p for p in every if set(p) <= ends]
+        level = tuple(int(k) for k in levels[m])
+        assert level in two
+        assert same(badness(energy[m], legal[m], level), min(badness(energy[m], legal[m], p) for p in two))
+
+
+def test_a_deadband_of_the_study_is_kept_by_stored_schedules() -> None:
+    evaluator = evaluator_of("industrial_ten")
+    problem = evaluator.problem
+    control = replace(problem.study.control, deadband_v=1.1)
+    wide = replace(problem, study=replace(problem.study, control=control))
+    assert deadband_steps(wide.study) == 5
+    rows = near_rows(problem, 60, np.random.default_rng(6))
+    before = decide(problem, evaluator.states, evaluator.options, Designs(problem.layout, rows)).volts
+    volts = decide(wide, evaluator.states, evaluator.options, Designs(problem.layout, rows)).volts
+    steps = np.diff(volts, axis=2)
+    assert ((steps == 0) | (steps >= 5)).all()
+    assert (steps > 0).any()
+    assert ((np.diff(before, axis=2) > 0) & (np.diff(before, axis=2) < 5)).any()
 
 
 def test_fixed_stays_at_the_nominal() -> None:
