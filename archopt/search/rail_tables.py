@@ -252,7 +252,8 @@ class BankCounts:
             pieces = rms[np.arange(len(rms)), :, node][..., None] / permitted
             pieces = np.maximum(pieces, self.quiet_pieces(table, used))
             index = np.searchsorted(np.array(BANK_COUNTS, dtype=np.float64), pieces - 1e-9)
-            self.ripple[table.rail] = index.astype(np.uint8)
+            offered = np.append(np.flatnonzero(table.counts), NO_COUNT)  # pins may leave gaps
+            self.ripple[table.rail] = offered[np.searchsorted(offered, index)].astype(np.uint8)
         return self.ripple[table.rail]
 
 
