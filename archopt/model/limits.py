@@ -154,7 +154,7 @@ class Ledger:
         """Return (P, limits) normalised slack, room where a limit was never checked."""
         out = np.full((self.count, len(LIMITS)), ROOM)
         for name, least in self.least.items():
-            out[:, INDEX[name]] = least
+            out[:, INDEX[name]] = np.nan_to_num(least, nan=-ROOM, posinf=ROOM, neginf=-ROOM)
         for name, worst in self.worst.items():
             out[:, INDEX[name]] = worst.normalised
         return out
@@ -165,16 +165,16 @@ def least_slack(
 ) -> FloatArray:
     """Return the least normalised slack of each design, (P,), and no place: :meth:`Ledger.add` without its records.
 
+    Not finite where nothing applies or nothing can be said.
     A tolerance that is one number divides the least slack alone.
     """
     slack = np.subtract(bound, value) if at_most else np.subtract(value, bound)
     if limit.relative:
         slack = slack / (limit.tolerance * np.maximum(np.abs(bound), 1e-9))
-    if applies is not True:
+    if not np.all(applies):
         slack = np.where(applies, slack, np.inf)
     least = slack.min(axis=tuple(range(1, slack.ndim))) if slack.ndim > 1 else slack
-    scaled = least if limit.relative else least / limit.tolerance
-    return np.nan_to_num(scaled, nan=-ROOM, posinf=ROOM, neginf=-ROOM)
+    return np.asarray(least if limit.relative else least / limit.tolerance)
 
 
 def text_of(axes: tuple[tuple[str, ...], ...], place: int, states: frozenset[str]) -> str:

@@ -19,9 +19,9 @@ from archopt.model.space import BANK_COUNTS
 from archopt.model.stages import (
     conduction_ratio,
     loop_bandwidth_rad_s,
-    output_ripple,
     slew_down_a_per_s,
     slew_up_a_per_s,
+    switching,
 )
 from archopt.model.states import JUMP, StateTable
 from archopt.model.tables import NODES, LossTables, cubic_weights
@@ -253,7 +253,8 @@ def row_swing(
     load = states.mix_a.T[rail][:, :, None]
     at = np.broadcast_to(volts, (len(volts), len(rows))).T[:, None, :]
     stage, running = stage[:, None, None], tables.row_running[rows][:, None, None]
-    return output_ripple(problem.stages, stage, running, at, problem.rails.voltage_v[rail][:, None, None], load)
+    found = switching(problem.stages, stage, running, at, problem.rails.voltage_v[rail][:, None, None], load)
+    return found.ripple_a, found.charge_c
 
 
 def make_options(problem: Problem, states: StateTable, tables: LossTables) -> Options:

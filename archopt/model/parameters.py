@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
-from typing import cast
+from dataclasses import dataclass, fields, replace
+from typing import Any, cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -36,6 +36,7 @@ from archopt.model.part_rows import (
 from archopt.physics.buck import BuckParameters
 from archopt.physics.bus_converter import ConverterParameters
 from archopt.physics.linear import LinearParameters
+from archopt.physics.parameters import Gatherable
 from archopt.physics.thermal import thermal_resistance_at
 
 FloatArray = NDArray[np.float64]
@@ -101,6 +102,20 @@ class StageTable:
     input_capacitance_f: FloatArray
     part: IntArray
     second_part: IntArray  # inductor, -1 where none
+
+    def take(self, index: IntArray | tuple[Any, ...]) -> StageTable:
+        """Return rows of any shape, every number gathered at once; slices reshape what was gathered, without a copy.
+
+        Names and measured tables stay those of the whole table.
+        """
+        gathered: dict[str, Any] = {}
+        for item in fields(self):
+            value = getattr(self, item.name)
+            if isinstance(value, np.ndarray):
+                gathered[item.name] = value[index]
+            elif isinstance(value, Gatherable):
+                gathered[item.name] = value.take(index)
+        return replace(self, **gathered)
     measured: Tables
 
 

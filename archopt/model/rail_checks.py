@@ -12,7 +12,7 @@ from archopt.model.parameters import BUCK, LINEAR, BoolArray, FloatArray, IntArr
 from archopt.model.problem import Problem
 from archopt.model.situation import Droop, Situation, at_states
 from archopt.model.space import BUS_NAMES, FIXED
-from archopt.model.stages import conduction_ratio, headroom_v, output_ripple, ripple_square_a2, thermal_gain
+from archopt.model.stages import Switching, conduction_ratio, headroom_v, switching
 from archopt.model.states import FALLBACK, JUMP, MIX
 from archopt.physics.output_ripple import half_swing_v
 
@@ -20,7 +20,7 @@ from archopt.physics.output_ripple import half_swing_v
 def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     """Check droop, release, duty, times, headroom, input range, current and temperature of every stage."""
     problem, states, hardware = situation.problem, situation.states, situation.hardware
-    solution, stages, rails = situation.solution, problem.stages, problem.rails
+    solution, stages, rails = situation.solution, situation.stages.take(np.s_[:, None]), problem.rails
     names = situation.rail_names
     places = (names, states.place_names)
     ledger.add("rail droop", droop.droop_percent, 100.0, at_most=True, axes=places)
@@ -29,53 +29,52 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     axes = (situation.state_names(steady), names)
     volts, amps = at_states(solution.stage_v, steady), at_states(solution.current_a, steady)
     running = at_states(hardware.running, steady)
-    stage = hardware.stage[:, None, :]
     on = np.repeat(~states.off[steady][:, None], len(volts), axis=1).transpose(1, 0, 2)
     per_phase = amps / running
     drop_v = np.where(rails.remote_sense, amps * at_states(solution.pour_ohm, steady), 0.0)
-    duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
-    frequency = stages.frequency_hz[stage]
-    is_buck = stages.kind[stage] == BUCK
+    duty = conduction_ratio(stages, ..., volts, rails.voltage_v + drop_v, per_phase)
+    frequency = stages.frequency_hz
+    is_buck = stages.kind == BUCK
     ledger.add(
-        "duty", 100.0 * duty, 100.0 * stages.max_duty[stage], at_most=True, axes=axes,
-        applies=on & (stages.kind[stage] != LINEAR),
+        "duty", 100.0 * duty, 100.0 * stages.max_duty, at_most=True, axes=axes,
+        applies=on & (stages.kind != LINEAR),
     )  # fmt: skip
-    idle = conduction_ratio(stages, stage, volts, rails.voltage_v, np.zeros_like(per_phase))  # the shortest on-time
+    idle = conduction_ratio(stages, ..., volts, rails.voltage_v, np.zeros_like(per_phase))  # the shortest on-time
     ledger.add(
-        "on-time", 1e9 * idle / frequency, 1e9 * stages.min_on_s[stage], at_most=False, axes=axes,
+        "on-time", 1e9 * idle / frequency, 1e9 * stages.min_on_s, at_most=False, axes=axes,
         applies=on & is_buck,
     )  # fmt: skip
     ledger.add(
-        "off-time", 1e9 * (1.0 - duty) / frequency, 1e9 * stages.min_off_s[stage], at_most=False, axes=axes,
+        "off-time", 1e9 * (1.0 - duty) / frequency, 1e9 * stages.min_off_s, at_most=False, axes=axes,
         applies=on & is_buck,
     )  # fmt: skip
     ledger.add(
-        "headroom", headroom_v(stages, stage, volts, rails.voltage_v + drop_v, amps), 0.0, at_most=False, axes=axes,
-        applies=on & (stages.kind[stage] == LINEAR),
+        "headroom", headroom_v(stages, ..., volts, rails.voltage_v + drop_v, amps), 0.0, at_most=False, axes=axes,
+        applies=on & (stages.kind == LINEAR),
     )  # fmt: skip
-    ledger.add("stage input range", volts, stages.input_min_v[stage], at_most=False, axes=axes, applies=on)
-    ledger.add("stage input range", volts, stages.input_max_v[stage], at_most=True, axes=axes, applies=on)
-    limit_a = stages.phase_limit_a[stage]
+    ledger.add("stage input range", volts, stages.input_min_v, at_most=False, axes=axes, applies=on)
+    ledger.add("stage input range", volts, stages.input_max_v, at_most=True, axes=axes, applies=on)
+    limit_a = stages.phase_limit_a
     ledger.add("stage current", per_phase, limit_a, at_most=True, axes=axes, applies=on)
     own = family_maximum_a(situation) / hardware.phases
     ledger.add(
-        "stage current", own, stages.phase_limit_a[hardware.stage], at_most=True,
+        "stage current", own, situation.stages.phase_limit_a, at_most=True,
         axes=(tuple(f"{name} at its own maximum" for name in names),),
     )  # fmt: skip
-    square = running * ripple_square_a2(stages, stage, volts, rails.voltage_v, per_phase)
+    moved = switching(stages, ..., running, volts, rails.voltage_v, amps)
+    square = running * moved.square_a2
     bank_w = hardware.bank_esr_ohm[:, None, :] * square  # warms the bank, not the stage
     heat = (at_states(solution.stage_loss_w, steady) - bank_w) / running + hardware.bias_w[:, None, :]
-    temperature = states.ambient_degc[steady][:, None] + stages.thermal_k_per_w[stage] * heat
+    temperature = states.ambient_degc[steady][:, None] + stages.thermal_k_per_w * heat
     junction = problem.study.derating.junction_degc
     ledger.add("stage temperature", temperature, junction, at_most=True, axes=axes, applies=on)
-    gain = thermal_gain(stages, stage, volts, rails.voltage_v, per_phase)
-    ledger.add("thermal gain", gain, 1.0, at_most=True, axes=axes, applies=on)
+    ledger.add("thermal gain", moved.gain, 1.0, at_most=True, axes=axes, applies=on)
     capacitors = problem.capacitors
     bank = situation.designs.rail("bank")
     pieces = problem.bank_counts[situation.designs.rail("bank_count")]
     permitted = pieces * capacitors.ripple_a[bank] * problem.study.derating.current
     ledger.add("capacitor ripple", np.sqrt(square), permitted[:, None, :], at_most=True, axes=axes, applies=on)
-    swing = output_ripple_v(problem, hardware, solution, steady)
+    swing = swing_v(hardware, moved)
     ledger.add(
         "output ripple", 100.0 * swing / rails.voltage_v, 100.0 * rails.ripple_v / rails.voltage_v, at_most=True,
         axes=axes, applies=on,
@@ -85,14 +84,14 @@ def check_rails(situation: Situation, droop: Droop, ledger: Ledger) -> None:
     ledger.add(
         "loop capacitance range",
         1e6 * hardware.bank_f,
-        1e6 * stages.loop_min_f[hardware.stage],
+        1e6 * situation.stages.loop_min_f,
         at_most=False,
         axes=rail_axes,
     )
     ledger.add(
         "loop capacitance range",
         1e6 * hardware.bank_most_f,
-        1e6 * stages.loop_max_f[hardware.stage],
+        1e6 * situation.stages.loop_max_f,
         at_most=True,
         axes=rail_axes,
     )
@@ -127,8 +126,12 @@ def output_ripple_v(problem: Problem, hardware: Hardware, solution: Solution, in
         at_states(values, index) for values in (solution.stage_v, solution.current_a, hardware.running)
     )
     stage = hardware.stage[:, None, :]
-    ripple_a, charge_c = output_ripple(problem.stages, stage, running, volts, problem.rails.voltage_v, amps)
-    return half_swing_v(ripple_a, charge_c, hardware.bank_f[:, None, :], hardware.bank_esr_ohm[:, None, :])
+    return swing_v(hardware, switching(problem.stages, stage, running, volts, problem.rails.voltage_v, amps))
+
+
+def swing_v(hardware: Hardware, moved: Switching) -> FloatArray:
+    """Return half of what the outputs swing, (P, states, R) V, with the banks at the end of their life."""
+    return half_swing_v(moved.ripple_a, moved.charge_c, hardware.bank_f[:, None, :], hardware.bank_esr_ohm[:, None, :])
 
 
 def jump_spare_v(situation: Situation) -> FloatArray:
@@ -137,16 +140,15 @@ def jump_spare_v(situation: Situation) -> FloatArray:
     Its input range, its duty with the drops at what the running phases carry, a linear regulator's dropout.
     """
     problem, hardware = situation.problem, situation.hardware
-    solution, stages, rails = situation.solution, problem.stages, problem.rails
+    solution, stages, rails = situation.solution, situation.stages.take(np.s_[:, None]), problem.rails
     jump = situation.states.of_kind(JUMP)
     volts, amps = at_states(solution.stage_v, jump), at_states(solution.current_a, jump)
-    stage = hardware.stage[:, None, :]
-    per_phase = np.minimum(amps / at_states(hardware.running, jump), stages.phase_limit_a[stage])
+    per_phase = np.minimum(amps / at_states(hardware.running, jump), stages.phase_limit_a)
     drop_v = np.where(rails.remote_sense, amps * at_states(solution.pour_ohm, jump), 0.0)
-    duty = conduction_ratio(stages, stage, volts, rails.voltage_v + drop_v, per_phase)
-    spare = np.where(stages.kind[stage] == LINEAR, np.inf, volts * (1.0 - duty / stages.max_duty[stage]))
-    spare = np.minimum(spare, volts - stages.input_min_v[stage])
-    return np.minimum(spare, headroom_v(stages, stage, volts, rails.voltage_v + drop_v, amps))
+    duty = conduction_ratio(stages, ..., volts, rails.voltage_v + drop_v, per_phase)
+    spare = np.where(stages.kind == LINEAR, np.inf, volts * (1.0 - duty / stages.max_duty))
+    spare = np.minimum(spare, volts - stages.input_min_v)
+    return np.minimum(spare, headroom_v(stages, ..., volts, rails.voltage_v + drop_v, amps))
 
 
 def family_maximum_a(situation: Situation) -> FloatArray:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -11,7 +12,7 @@ from numpy.typing import NDArray
 from archopt.model.board import Solution
 from archopt.model.cost import Bill
 from archopt.model.hardware import Hardware
-from archopt.model.parameters import FloatArray, IntArray
+from archopt.model.parameters import FloatArray, IntArray, StageTable
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
 from archopt.model.stages import loop_bandwidth_rad_s, slew_down_a_per_s, slew_up_a_per_s
@@ -30,6 +31,11 @@ class Situation:
     solution: Solution
     bill: Bill
 
+    @cached_property
+    def stages(self) -> StageTable:
+        """The numbers of every design's stages, (P, R)."""
+        return self.problem.stages.take(self.hardware.stage)
+
     @property
     def rail_names(self) -> tuple[str, ...]:
         """Rails with a stage of their own."""
@@ -37,7 +43,7 @@ class Situation:
 
     def state_names(self, index: IntArray) -> tuple[str, ...]:
         """Names of some states."""
-        return tuple(self.states.name[int(k)] for k in index)
+        return tuple(self.states.labels[index])
 
 
 def at_states(values: NDArray[Any], index: IntArray) -> FloatArray:
@@ -113,20 +119,19 @@ def droop_terms(situation: Situation) -> DroopTerms:
     release ends a step below the mix. Children draw from the rail before and after, and step it with their own steps.
     """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
-    rails, stages = problem.rails, problem.stages
+    rails, stages = problem.rails, situation.stages.take(np.s_[..., None])
     jump = states.of_kind(JUMP)
     stage_v = at_states(situation.solution.stage_v, jump).transpose(0, 2, 1)  # (P, R, B)
-    stage = hardware.stage[..., None]
     running = at_states(hardware.running_band.transpose(0, 2, 1), np.arange(states.places)).transpose(0, 2, 1)
     volts = rails.voltage_v[:, None]
     extra = np.maximum(at_states(situation.solution.current_a, jump).transpose(0, 2, 1) - states.after_a.T, 0.0)
     mix = states.mix_a.T + extra
     step = family_step_a(situation)
     after = np.minimum(mix + step, np.maximum(rails.max_a[:, None] + extra, mix))
-    deficit = np.maximum(after - running * stages.phase_limit_a[stage], 0.0)
+    deficit = np.maximum(after - running * stages.phase_limit_a, 0.0)
     before, left = np.maximum(after - step, 0.0), np.maximum(mix - step, 0.0)
     rise, fall = (
-        loop_bandwidth_rad_s(stages, stage, stage_v, volts, load / running) for load in (before, left)
+        loop_bandwidth_rad_s(stages, ..., stage_v, volts, load / running) for load in (before, left)
     )  # fmt: skip
     return DroopTerms(
         before_a=before,
@@ -134,16 +139,16 @@ def droop_terms(situation: Situation) -> DroopTerms:
         mix_a=mix,
         left_a=left,
         step_a=step,
-        up_a_per_s=slew_up_a_per_s(stages, stage, running, stage_v, volts),
-        down_a_per_s=slew_down_a_per_s(stages, stage, running, volts),
+        up_a_per_s=slew_up_a_per_s(stages, ..., running, stage_v, volts),
+        down_a_per_s=slew_down_a_per_s(stages, ..., running, volts),
         rise_rad_s=rise,
         fall_rad_s=fall,
-        delay_s=stages.delay_s[stage],
+        delay_s=stages.delay_s,
         capacitance_f=hardware.bank_f[..., None],
         esr_ohm=hardware.bank_esr_ohm[..., None],
         load_slew_a_per_s=rails.load_slew_a_per_s[:, None],
         deficit_a=np.where(running < hardware.phases[..., None], deficit, 0.0),
-        wakeup_s=stages.wakeup_s[stage],
+        wakeup_s=stages.wakeup_s,
     )
 
 

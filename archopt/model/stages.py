@@ -6,6 +6,7 @@ Index, running count and operating point broadcast against each other; results h
 from __future__ import annotations
 
 from dataclasses import dataclass
+from types import EllipsisType
 from typing import Any
 
 import numpy as np
@@ -15,9 +16,11 @@ from archopt.model.converter_loss import ConverterLoss, any_measured, is_measure
 from archopt.model.parameters import BUCK, LINEAR, SINGLE, FloatArray, IntArray, StageTable
 from archopt.physics import buck, bus_converter, linear
 from archopt.physics.buck_light_load import crossover_share, pulses
-from archopt.physics.output_ripple import summed_ripple
+from archopt.physics.output_ripple import summed_ripple_at
 from archopt.physics.transient import buck_slew_a_per_s
 
+#: Rows of a table of stages; all of it, as it stands, where it was gathered before.
+Rows = IntArray | EllipsisType
 LINEAR_SLEW_A_PER_S = 1e12  # a linear regulator has no inductor: only its loop limits it
 
 
@@ -166,7 +169,7 @@ def mechanisms(
 
 
 def conduction_ratio(
-    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
+    stages: StageTable, index: Rows, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
 ) -> FloatArray:
     """Return the duty a stage needs, with its drops; 0 for a linear regulator (its headroom is separate)."""
     kind = stages.kind[index]
@@ -182,7 +185,7 @@ def conduction_ratio(
 
 
 def headroom_v(
-    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, current_a: FloatArray
+    stages: StageTable, index: Rows, input_v: FloatArray, output_v: FloatArray, current_a: FloatArray
 ) -> FloatArray:
     """Return the headroom of linear regulators above their dropout, V; inf for other kinds."""
     kind = stages.kind[index]
@@ -191,7 +194,7 @@ def headroom_v(
 
 
 def slew_up_a_per_s(
-    stages: StageTable, index: IntArray, running: NDArray[Any], input_v: FloatArray, output_v: FloatArray
+    stages: StageTable, index: Rows, running: NDArray[Any], input_v: FloatArray, output_v: FloatArray
 ) -> FloatArray:
     """Return how fast the running phases can raise their current, A/s."""
     inductance = stages.inductance_h[index]
@@ -206,7 +209,7 @@ def slew_up_a_per_s(
     return np.where(free, LINEAR_SLEW_A_PER_S, value)
 
 
-def slew_down_a_per_s(stages: StageTable, index: IntArray, running: NDArray[Any], output_v: FloatArray) -> FloatArray:
+def slew_down_a_per_s(stages: StageTable, index: Rows, running: NDArray[Any], output_v: FloatArray) -> FloatArray:
     """Return how fast the running phases can lower their current, A/s."""
     inductance = stages.inductance_h[index]
     free = np.isnan(inductance)
@@ -214,7 +217,7 @@ def slew_down_a_per_s(stages: StageTable, index: IntArray, running: NDArray[Any]
 
 
 def ripple_square_a2(
-    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
+    stages: StageTable, index: Rows, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
 ) -> FloatArray:
     """Return the mean square of the current one phase sends into the output bank, A^2."""
     kind = stages.kind[index]
@@ -223,44 +226,65 @@ def ripple_square_a2(
         value = buck.ripple_square_a2(stages.buck.take(index), input_v, output_v, per_phase_a)
         out = np.where(kind == BUCK, value, out)
     if np.any(kind == SINGLE):
-        duty = np.clip(output_v * stages.turns[index] / np.maximum(input_v, 1e-3), 0.0, 1.0)
-        single = (
-            output_v * (1.0 - duty) / (np.nan_to_num(stages.inductance_h[index], nan=1.0) * stages.frequency_hz[index])
-        )
+        single = single_ripple_a(stages, index, input_v, output_v)
         out = np.where(kind == SINGLE, single * single / 12.0, out)
     return out
 
 
-def output_ripple(
+@dataclass(frozen=True)
+class Switching:
+    """What switching does at an operating point; arrays of one shape.
+
+    square_a2 : mean square of the current one phase sends into the output bank
+    gain : rise of one phase's loss per kelvin times its thermal resistance
+    ripple_a, charge_c : current and charge, peak to peak, the whole stage leaves its output bank to smooth
+    """
+
+    square_a2: FloatArray
+    gain: FloatArray
+    ripple_a: FloatArray
+    charge_c: FloatArray
+
+
+def switching(
     stages: StageTable,
-    index: IntArray,
+    index: Rows,
     running: NDArray[Any],
     input_v: FloatArray,
     output_v: FloatArray,
     current_a: FloatArray,
-) -> tuple[FloatArray, FloatArray]:
-    """Return current (A) and charge (C), peak to peak, that whole stages leave their output bank to smooth.
+) -> Switching:
+    """Return ripple and thermal gain of whole stages; all 0 for linear regulators.
 
-    Buck phases interleave; single stages in parallel are not in step, and at worst add. Linear regulators: none.
+    Buck phases interleave; single stages in parallel are not in step, and at worst add.
     """
     kind = stages.kind[index]
     per_phase_a = current_a / running
     shape = np.broadcast_shapes(kind.shape, np.shape(input_v), np.shape(per_phase_a))
-    ripple, charge = np.zeros(shape), np.zeros(shape)
+    out = [np.zeros(shape) for _ in range(4)]
     if np.any(kind == BUCK):
-        summed, moved = summed_ripple(stages.buck.take(index), input_v, output_v, per_phase_a, running)
-        ripple, charge = np.where(kind == BUCK, summed, ripple), np.where(kind == BUCK, moved, charge)
+        phase = stages.buck.take(index)
+        at = buck.operating_point(phase, input_v, output_v, per_phase_a)
+        found = (buck.ripple_square_at(at), buck.thermal_gain_at(phase, at), *summed_ripple_at(phase, at, running))
+        out = [np.where(kind == BUCK, value, others) for value, others in zip(found, out, strict=True)]
     if np.any(kind == SINGLE):
-        duty = np.clip(output_v * stages.turns[index] / np.maximum(input_v, 1e-3), 0.0, 1.0)
-        frequency = stages.frequency_hz[index]
-        single = running * output_v * (1.0 - duty) / (np.nan_to_num(stages.inductance_h[index], nan=1.0) * frequency)
-        ripple = np.where(kind == SINGLE, single, ripple)
-        charge = np.where(kind == SINGLE, single / (8.0 * frequency), charge)
-    return ripple, charge
+        single_a = single_ripple_a(stages, index, input_v, output_v)
+        gain = bus_converter.thermal_gain(stages.single.take(index), per_phase_a)
+        summed_a = running * single_a
+        found = (single_a * single_a / 12.0, gain, summed_a, summed_a / (8.0 * stages.frequency_hz[index]))
+        out = [np.where(kind == SINGLE, value, others) for value, others in zip(found, out, strict=True)]
+    return Switching(*out)
+
+
+def single_ripple_a(stages: StageTable, index: Rows, input_v: FloatArray, output_v: FloatArray) -> FloatArray:
+    """Return the ripple of the output choke of one single stage, A peak to peak."""
+    duty = np.clip(output_v * stages.turns[index] / np.maximum(input_v, 1e-3), 0.0, 1.0)
+    inductance_h = np.nan_to_num(stages.inductance_h[index], nan=1.0)
+    return np.asarray(output_v * (1.0 - duty) / (inductance_h * stages.frequency_hz[index]))
 
 
 def loop_bandwidth_rad_s(
-    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
+    stages: StageTable, index: Rows, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
 ) -> FloatArray:
     """Return the loop bandwidth at a load of each phase, rad/s: in emulation it falls with the load."""
     full = stages.bandwidth_rad_s[index]
@@ -271,18 +295,3 @@ def loop_bandwidth_rad_s(
     ripple = buck.ripple_a(phase, input_v, output_v, per_phase_a)
     pulse = pulses(phase.emulation, phase.fold_floor_hz, phase.frequency_hz, per_phase_a, ripple)
     return full * crossover_share(folded, pulse.load_share)
-
-
-def thermal_gain(
-    stages: StageTable, index: IntArray, input_v: FloatArray, output_v: FloatArray, per_phase_a: FloatArray
-) -> FloatArray:
-    """Return the rise of one phase's loss per kelvin times its thermal resistance; 0 for linear regulators."""
-    kind = stages.kind[index]
-    out = np.zeros(np.broadcast_shapes(kind.shape, np.shape(input_v), np.shape(per_phase_a)))
-    if np.any(kind == BUCK):
-        value = buck.thermal_gain(stages.buck.take(index), input_v, output_v, per_phase_a)
-        out = np.where(kind == BUCK, value, out)
-    if np.any(kind == SINGLE):
-        value = bus_converter.thermal_gain(stages.single.take(index), per_phase_a)
-        out = np.where(kind == SINGLE, value, out)
-    return out

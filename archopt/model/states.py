@@ -7,6 +7,7 @@ from dataclasses import dataclass, fields
 from functools import cached_property
 
 import numpy as np
+from numpy.typing import NDArray
 
 from archopt.inputs.resolved import LoadTable, Rail, ResolvedStudy
 from archopt.model.clusters import cluster, split_groups
@@ -68,6 +69,11 @@ class StateTable:
     def warming(self) -> FloatArray:
         """How the rise of copper goes with the current of each rail, (S, R): amperes to the power of IPC-2221."""
         return np.asarray(np.where(self.off, 0.0, self.current_a) ** (1.0 / RISE_EXPONENT))
+
+    @cached_property
+    def labels(self) -> NDArray[np.object_]:
+        """The names, (S,), to be picked by index."""
+        return np.array([*self.name, None], dtype=object)[:-1]
 
     @property
     def setting_side(self) -> FloatArray:

@@ -11,7 +11,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from archopt.physics.arrays import FloatArray, FloatLike
+from archopt.physics.arrays import BoolArray, FloatArray, FloatLike
 from archopt.physics.buck_light_load import pulses
 from archopt.physics.parameters import Gatherable
 from archopt.physics.thermal import fixed_point
@@ -186,7 +186,11 @@ def ripple_square_a2(
     Mean square of the inductor current less the square of its mean: ripple^2 / 12 in continuous conduction, more
     in emulation, where the current comes in pulses. Closed form.
     """
-    at = _point(p, input_v, output_v, current_a)
+    return ripple_square_at(operating_point(p, input_v, output_v, current_a))
+
+
+def ripple_square_at(at: Point) -> FloatArray:
+    """Mean square (A^2) of :func:`ripple_square_a2` at an operating point."""
     square: FloatArray = np.maximum(at.rms_square - at.current_a * at.current_a, 0.0)
     return square
 
@@ -198,7 +202,12 @@ def thermal_gain(
 
     Parameters as for :func:`duty`. The same number :func:`losses` reports, without the losses.
     """
-    high_w, low_w, winding_w = _conduction(p, _point(p, input_v, output_v, current_a))
+    return thermal_gain_at(p, operating_point(p, input_v, output_v, current_a))
+
+
+def thermal_gain_at(p: BuckParameters, at: Point) -> FloatArray:
+    """Gain of :func:`thermal_gain` at an operating point."""
+    high_w, low_w, winding_w = _conduction(p, at)
     gain: FloatArray = p.thermal_k_per_w * (p.switch_per_k * (high_w + low_w) + p.winding_per_k * winding_w)
     return gain
 
@@ -239,8 +248,10 @@ def hard_switched_share(p: BuckParameters, input_v: FloatLike, valley_a: FloatLi
     return share
 
 
-class _Point(NamedTuple):
-    """Inductor current of one operating point: duty within its bounds, swing and what follows from it."""
+class Point(NamedTuple):
+    """Inductor current of one operating point: duty within its bounds, swing and what follows from it; see
+    :func:`operating_point`.
+    """
 
     input_v: FloatArray
     output_v: FloatArray
@@ -248,6 +259,7 @@ class _Point(NamedTuple):
     asked: FloatArray
     duty: FloatArray  # share of the conducting time that the high side conducts
     ripple_a: FloatArray  # in continuous conduction
+    stopped: BoolArray  # where the current comes in pulses
     swing_share: FloatArray  # swing of a pulse over that ripple; 1 unless the low side has stopped
     frequency_share: FloatArray  # pulses a second over the stage's frequency
     frequency_hz: FloatArray
@@ -257,7 +269,9 @@ class _Point(NamedTuple):
     rms_square: FloatArray
 
 
-def _point(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike) -> _Point:
+def operating_point(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike) -> Point:
+    """Inductor current of one phase, from which losses, ripple and thermal gain follow. Parameters as for :func:`duty`.
+    """
     current = np.asarray(current_a, dtype=np.float64)
     asked, off_v = _duty_and_off_voltage(p, input_v, output_v, current_a)
     d = np.clip(asked, LEAST_DUTY, 1.0)
@@ -266,20 +280,22 @@ def _point(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a
     valley, peak = current - half, np.maximum(current + half, 0.0)
     rms_square = current * current + ripple * ripple * (1.0 / 12.0)
     swing_share = frequency_share = np.ones(())
+    stopped: BoolArray = np.zeros((), dtype=bool)
     if np.any(p.emulation):
         pulse = pulses(p.emulation, p.fold_floor_hz, p.frequency_hz, current, ripple)
-        swing_share, frequency_share = pulse.swing_share, pulse.frequency_share
+        stopped, swing_share, frequency_share = pulse.stopped, pulse.swing_share, pulse.frequency_share
         swing = ripple * swing_share
-        valley = np.where(pulse.stopped, 0.0, valley)
-        peak = np.where(pulse.stopped, swing, peak)
-        rms_square = np.where(pulse.stopped, pulse.conducting_share * swing * swing * (1.0 / 3.0), rms_square)
-    return _Point(
+        valley = np.where(stopped, 0.0, valley)
+        peak = np.where(stopped, swing, peak)
+        rms_square = np.where(stopped, pulse.conducting_share * swing * swing * (1.0 / 3.0), rms_square)
+    return Point(
         np.asarray(input_v, dtype=np.float64),
         np.asarray(output_v, dtype=np.float64),
         current,
         asked,
         d,
         ripple,
+        stopped,
         swing_share,
         frequency_share,
         p.frequency_hz * frequency_share,
@@ -290,7 +306,7 @@ def _point(p: BuckParameters, input_v: FloatLike, output_v: FloatLike, current_a
     )
 
 
-def _conduction(p: BuckParameters, at: _Point) -> tuple[FloatArray, FloatArray, FloatArray]:
+def _conduction(p: BuckParameters, at: Point) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Loss (W) of high side, low side and winding at 25 degC."""
     # the dead time is a larger part of a shorter pulse
     dead_share = p.dead_s * p.frequency_hz / np.maximum(at.swing_share, TINY)
@@ -299,7 +315,7 @@ def _conduction(p: BuckParameters, at: _Point) -> tuple[FloatArray, FloatArray, 
     return high_w, p.low_side_ohm * off_share * at.rms_square, p.winding_ohm * at.rms_square
 
 
-def _constant(p: BuckParameters, at: _Point) -> tuple[FloatArray, ...]:
+def _constant(p: BuckParameters, at: Point) -> tuple[FloatArray, ...]:
     """Losses (W) that do not depend on temperature, in the order of MECHANISMS from core_w, then bias_w."""
     v, frequency = at.input_v, at.frequency_hz
     vf = v * frequency
@@ -351,7 +367,7 @@ def losses(
     cycle is lost as often as there are pulses. The output charge is then that of a node at 0 V: the ringing
     of the idle node is not followed.
     """
-    at = _point(p, input_v, output_v, current_a)
+    at = operating_point(p, input_v, output_v, current_a)
     high_w, low_w, winding_w = _conduction(p, at)
     constant = _constant(p, at)
     switch_w = high_w + low_w

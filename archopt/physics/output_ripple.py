@@ -6,7 +6,6 @@ import numpy as np
 
 from archopt.physics import buck
 from archopt.physics.arrays import FloatArray, FloatLike
-from archopt.physics.buck_light_load import pulses
 from archopt.physics.capacitor import LEAST_DUTY, interleaved_ripple_a
 
 TINY = 1e-30
@@ -30,17 +29,19 @@ def summed_ripple(
     of which the part above the load, (1 - I / p)^2, is stored. Both are equal where the valley of one phase touches
     zero. Closed form.
     """
-    ripple = buck.ripple_a(p, input_v, output_v, current_a)
-    duty = np.clip(buck.duty(p, input_v, output_v, current_a), LEAST_DUTY, 1.0 - LEAST_DUTY)
-    summed = interleaved_ripple_a(ripple, duty, phases)
+    return summed_ripple_at(p, buck.operating_point(p, input_v, output_v, current_a), phases)
+
+
+def summed_ripple_at(p: buck.BuckParameters, at: buck.Point, phases: FloatLike) -> tuple[FloatArray, FloatArray]:
+    """Ripple and charge of :func:`summed_ripple` at an operating point of one phase."""
+    summed = interleaved_ripple_a(at.ripple_a, np.clip(at.asked, LEAST_DUTY, 1.0 - LEAST_DUTY), phases)
     charge = summed / (8.0 * np.maximum(phases, 1.0) * p.frequency_hz)
-    if np.any(p.emulation):
-        pulse = pulses(p.emulation, p.fold_floor_hz, p.frequency_hz, current_a, ripple)
-        height = np.maximum(ripple * pulse.swing_share, TINY)
-        brought = current_a / np.maximum(p.frequency_hz * pulse.frequency_share, TINY)
-        stored = brought * np.square(np.maximum(1.0 - current_a / height, 0.0))
-        summed = np.where(pulse.stopped, height, summed)
-        charge = np.where(pulse.stopped, stored, charge)
+    if np.any(at.stopped):
+        height = np.maximum(at.ripple_a * at.swing_share, TINY)
+        brought = at.current_a / np.maximum(at.frequency_hz, TINY)
+        stored = brought * np.square(np.maximum(1.0 - at.current_a / height, 0.0))
+        summed = np.where(at.stopped, height, summed)
+        charge = np.where(at.stopped, stored, charge)
     return np.asarray(summed), np.asarray(charge)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import fields
+from types import EllipsisType
 from typing import Any, Self, cast
 
 import numpy as np
@@ -15,12 +16,13 @@ class Gatherable:
 
     __slots__ = ()
 
-    def take(self, index: IntArray) -> Self:
+    def take(self, index: IntArray | EllipsisType | tuple[Any, ...]) -> Self:
         """Gather every field along its first axis.
 
         Parameters
         ----------
-        index : integers of any shape; which entries to take
+        index : integers of any shape; which entries to take. What was gathered before may be reshaped by slices,
+            or by an ellipsis stay as it is, without a copy
 
         Returns
         -------
