@@ -15,6 +15,7 @@ from archopt.physics.arrays import IntArray
 from archopt.search.genome import at_least, at_most
 
 PAIRED_SHARE = 0.5
+BULK_WEIGHT = 3.0
 FOLLOW_ROOM = 4  # grid steps around the used limits of a moving bus that a neighbour's schedule may take
 NEAR_SHARE = 0.8  # ordered choices: share of steps to a next value rather than anywhere
 
@@ -42,6 +43,8 @@ class Neighbours:
             (2.0, self.move_bus_order),
             (1.0, self.move_bus_kind),
             (0.6, self.move_board),
+            (BULK_WEIGHT, self.move_bulk),
+            (0.5, self.move_damper),
             (1.5, self.replace_stage),
             (1.0, self.replace_bank),
         ]
@@ -146,13 +149,17 @@ class Neighbours:
 
     def set_bank(self, row: IntArray, r: int, bank: int, rng: np.random.Generator) -> None:
         """Give a rail a capacitor and a count near the capacitance it had."""
+        self.refill(row, self.column("bank", r), self.column("bank_count", r), bank, rng)
+
+    def refill(self, row: IntArray, column: int, counts: int, bank: int, rng: np.random.Generator) -> None:
+        """Write a capacitor into one column and a count near the capacitance there was into another."""
         size = self.problem.capacitors.capacitance_f
-        old, counts = int(row[self.column("bank", r)]), self.column("bank_count", r)
+        old = int(row[column])
         pieces = self.problem.bank_counts[row[counts]] * size[old] / size[bank]
         values = self.allowed[counts]
         place = int(np.abs(np.log(self.problem.bank_counts[values] / max(pieces, 1e-9))).argmin())
         place += int(rng.integers(-1, 2))
-        row[self.column("bank", r)] = bank
+        row[column] = bank
         row[counts] = values[min(max(place, 0), len(values) - 1)]
 
     def move_count(self, row: IntArray, rng: np.random.Generator) -> None:
@@ -225,6 +232,25 @@ class Neighbours:
         if field == "converter" and row[column] == 0:
             values = self.allowed[column]
             row[column] = values[-1]
+
+    def move_bulk(self, row: IntArray, rng: np.random.Generator) -> None:
+        """Another bulk capacitor of about the same capacitance for a bus, or a larger or smaller bank of the same."""
+        b = self.used_bus(row, rng)
+        column, counts = (self.layout.bus(field).start + b for field in ("bulk", "bulk_count"))
+        values = self.allowed[column][self.allowed[column] != row[column]]
+        if len(values) and rng.random() < 0.5:
+            self.refill(row, column, counts, int(values[rng.integers(len(values))]), rng)
+        else:
+            self.step(counts, row, rng)
+
+    def move_damper(self, row: IntArray, rng: np.random.Generator) -> None:
+        """Another damping bank for a bus, or none; or a larger or smaller one."""
+        b = self.used_bus(row, rng)
+        column, counts = (self.layout.bus(field).start + b for field in ("damper", "damper_count"))
+        if row[column] == 0 or rng.random() < 0.5:
+            self.other(column, row, rng)
+        else:
+            self.step(counts, row, rng)
 
     def move_board(self, row: IntArray, rng: np.random.Generator) -> None:
         """Another stack, bias supply, bias feed or supervisor."""

@@ -29,6 +29,9 @@ from archopt.search.screen import TIE, Screen, decided_cost
 TOGETHER = 8  # designs gone through at a time
 FOLD_MOST = 160  # folded boards evaluated around a few designs
 UNTRIED, SCREENED, CLOSED = 0, 1, 2
+COARSER, LEAST_FRONT = 4, 3
+CONSIDERED_AN_EVALUATION = 40  # changes listed and ruled out in the time of an evaluation
+FOLD_IN_EVALUATIONS = 60
 
 
 @dataclass(frozen=True)
@@ -85,30 +88,42 @@ class Polish:
         self.screen = Screen(self.folding)
         self.status: dict[bytes, int] = {}
         self.known: set[bytes] = set()
+        self.folded: set[bytes] = set()
         self.considered = self.by_cost = self.by_limits = self.screened = self.evaluated = self.improved = 0
 
     def run(self) -> None:
-        """Polish until nothing is found or the budget is spent."""
-        self.fold_around(self.front())
-        while self.evaluated < self.budget:
-            front = self.front()
-            rows = self.record.archive.rows[front]
-            told = np.array([self.status.get(digest(row), UNTRIED) for row in rows])
-            wanted = UNTRIED if (told == UNTRIED).any() else SCREENED
-            if not (told <= wanted).any():
-                return
-            self.go_through(rows[told == wanted], wanted)
+        """Polish until nothing is found or the budget is spent: a coarser front first, which clears much away."""
+        for most in (max(self.most // COARSER, LEAST_FRONT), self.most):
+            self.fold_around(self.front(most))
+            while self.told(most) == UNTRIED and self.spent < self.budget:
+                self.go_through(most, UNTRIED)
+        while (status := self.told(self.most)) < CLOSED and self.spent < self.budget:
+            self.go_through(self.most, status)
 
-    def front(self) -> IntArray:
+    @property
+    def spent(self) -> int:
+        """Evaluations, and what listing changes and folding took, in evaluations."""
+        return self.evaluated + self.considered // CONSIDERED_AN_EVALUATION + len(self.folded) * FOLD_IN_EVALUATIONS
+
+    def status_of(self, rows: IntArray) -> IntArray:
+        """Return how far the changes of decided rows were gone through, (n,)."""
+        return np.array([self.status.get(digest(row), UNTRIED) for row in rows], dtype=np.int64)
+
+    def told(self, most: int) -> int:
+        """Return how far the whole thinned front was gone through."""
+        return int(self.status_of(self.record.archive.rows[self.front(most)]).min(initial=CLOSED))
+
+    def front(self, most: int) -> IntArray:
         """Return the places in the archive of the thinned front; of a box's designs those gone through stay first."""
         archive = self.record.archive
-        told = np.array([self.status.get(digest(row), UNTRIED) for row in archive.rows], dtype=np.int64)
-        return archive.thinning(self.most, preferred=told).indices
+        return archive.thinning(most, preferred=self.status_of(archive.rows)).indices
 
-    def go_through(self, rows: IntArray, status: int) -> None:
-        """Try the changes of designs, a few at a time; those dominated meanwhile are left alone."""
+    def go_through(self, most: int, status: int) -> None:
+        """Try the changes of the designs of the front at a status; those dominated meanwhile are left alone."""
+        rows = self.record.archive.rows[self.front(most)]
+        rows = rows[self.status_of(rows) == status]
         for start in range(0, len(rows), TOGETHER):
-            if self.evaluated >= self.budget:
+            if self.spent >= self.budget:
                 return
             archive = self.record.archive
             held = {digest(row): k for k, row in enumerate(archive.rows)}
@@ -121,9 +136,9 @@ class Polish:
                 self.status[digest(row)] = status + 1
 
     def try_changes(self, rows: IntArray, objectives: FloatArray, *, screened: bool) -> None:
-        """Evaluate the changes of a few designs that are not ruled out."""
+        """Evaluate the changes of a few designs that are not ruled out, then the best of them taken together."""
         seen = self.conditions(rows) if screened else None
-        kept, cost = [], []
+        kept = []
         for k, row in enumerate(rows):
             changed, rail = self.changes.of(row[: self.changes.layout.choices])
             sorted_ = self.screen.sort(
@@ -135,14 +150,30 @@ class Polish:
             self.by_limits += int(sorted_.impossible.sum())
             self.screened += int(sorted_.not_worth.sum())
             kept.append(changed[~out])
-            cost.append(np.full(len(kept[-1]), objectives[k, 1]))
-        choices = np.concatenate(kept)
-        undecided = np.zeros((len(choices), rows.shape[1]), dtype=np.int64)
+        owner = np.repeat(np.arange(len(rows)), [len(each) for each in kept])
+        found = self.try_rows(np.concatenate(kept), objectives[owner])
+        width = self.changes.layout.choices
+        together = [
+            both
+            for k in range(len(rows))
+            if (both := together_of(rows[k, :width], objectives[k], kept[k], found[owner == k])) is not None
+        ]
+        if together:
+            self.try_rows(np.array([each[0] for each in together]), np.array([each[1] for each in together]))
+
+    def try_rows(self, choices: IntArray, objectives: FloatArray) -> FloatArray:
+        """Decide and evaluate choices (n, C) that cost no more than their designs; return objectives (n, 3).
+
+        inf where a row costs more, is infeasible, or was evaluated before.
+        """
+        undecided = np.zeros((len(choices), self.evaluator.problem.layout.width), dtype=np.int64)
         undecided[:, : choices.shape[1]] = choices
         decided = self.decide(undecided)
-        dear = decided_cost(self.screen, decided) > np.concatenate(cost) * (1.0 + TIE)
+        dear = decided_cost(self.screen, decided) > objectives[:, 1] * (1.0 + TIE)
         self.by_cost += int(dear.sum())
-        self.evaluate(decided[~dear])
+        out = np.full((len(choices), 3), np.inf)
+        out[~dear] = self.evaluate(decided[~dear])
+        return out
 
     def decide(self, rows: IntArray) -> IntArray:
         """Return rows decided in batches of one fixed shape."""
@@ -153,20 +184,27 @@ class Polish:
             parts.append(self.evaluator.decide(padded)[: len(real)])
         return np.concatenate(parts) if parts else rows
 
-    def evaluate(self, rows: IntArray) -> None:
-        """Evaluate decided rows not evaluated here before and offer what is feasible to the archive."""
+    def evaluate(self, rows: IntArray) -> FloatArray:
+        """Evaluate decided rows, once each, and offer what is feasible to the archive; return objectives (n, 3).
+
+        inf where a row is infeasible or was evaluated before.
+        """
+        out = np.full((len(rows), 3), np.inf)
         fresh = []
         for k, row in enumerate(rows):
             name = digest(row)
             if name not in self.known:
                 self.known.add(name)
                 fresh.append(k)
-        rows = rows[fresh]
-        for start in range(0, len(rows), self.batch):
-            real = rows[start : start + self.batch]
-            padded = real[np.minimum(np.arange(self.batch), len(real) - 1)]
-            self.improved += self.record.add(self.evaluator.evaluate(padded), len(real))
-        self.evaluated += len(rows)
+        for start in range(0, len(fresh), self.batch):
+            index = np.array(fresh[start : start + self.batch])
+            padded = rows[index[np.minimum(np.arange(self.batch), len(index) - 1)]]
+            found = self.evaluator.evaluate(padded)
+            self.improved += self.record.add(found, len(index))
+            feasible = found.violation[: len(index)] <= 0.0
+            out[index[feasible]] = found.objectives[: len(index)][feasible]
+        self.evaluated += len(fresh)
+        return out
 
     def conditions(self, rows: IntArray) -> Conditions:
         """Return what the rails of decided designs find on their buses."""
@@ -178,10 +216,12 @@ class Polish:
     def fold_around(self, front: IntArray) -> None:
         """Fold around every design of the front, a few at a time, and evaluate what promises to enter the archive."""
         rows, objectives = self.record.archive.rows[front], self.record.archive.objectives[front]
-        for start in range(0, len(rows), TOGETHER):
-            if self.evaluated >= self.budget:
+        fresh = np.flatnonzero([digest(row) not in self.folded for row in rows])
+        for start in range(0, len(fresh), TOGETHER):
+            if self.spent >= self.budget:
                 return
-            some = slice(start, start + TOGETHER)
+            some = fresh[start : start + TOGETHER]
+            self.folded.update(digest(row) for row in rows[some])
             folded, predicted = self.folding.propose(rows[some], objectives[some])
             chosen = promising(predicted, self.record.archive.objectives, FOLD_MOST)
             if len(chosen):
@@ -189,8 +229,8 @@ class Polish:
 
     def statement(self) -> PolishStatement:
         """Return what was done."""
-        rows = self.record.archive.rows[self.front()]
-        remaining = sum(self.status.get(digest(row), UNTRIED) < CLOSED for row in rows)
+        rows = self.record.archive.rows[self.front(self.most)]
+        remaining = int((self.status_of(rows) < CLOSED).sum())
         return PolishStatement(
             designs=len(rows),
             neighbours_considered=self.considered,
@@ -223,7 +263,7 @@ def polished(evaluator: Evaluator, found: SearchResult, *, batch: int, budget: i
     Parameters
     ----------
     batch : designs evaluated at a time
-    budget : evaluations allowed; the batches of the last few designs are still finished
+    budget : evaluations allowed, other work counted as evaluations; the last few designs are still finished
     most : designs published
     """
     problem = evaluator.problem
@@ -238,7 +278,7 @@ def polished(evaluator: Evaluator, found: SearchResult, *, batch: int, budget: i
         except KeyboardInterrupt:
             found = replace(found, ended="interrupted")
     archive = record.archive
-    front = archive.rows[polish.front()] if len(archive) else archive.rows
+    front = archive.rows[polish.front(most)] if len(archive) else archive.rows
     better = replace(
         found,
         rows=archive.rows,
@@ -248,6 +288,24 @@ def polished(evaluator: Evaluator, found: SearchResult, *, batch: int, budget: i
         kinds=dict(sorted(record.kinds.items())),
     )
     return Polished(better, front, polish.statement())
+
+
+def together_of(
+    choices: IntArray, objectives: FloatArray, changed: IntArray, found: FloatArray
+) -> tuple[IntArray, FloatArray] | None:
+    """Return a design (C,) with all its changes (n, C) that dominate it made together, the largest gains first.
+
+    Of changes of one choice the first counts. None where fewer than two can be made.
+    """
+    better = np.flatnonzero((found <= objectives).all(axis=1) & (found < objectives).any(axis=1))
+    gain = ((objectives - found[better]) / objectives).sum(axis=1)
+    row, made = choices.copy(), 0
+    for k in better[np.argsort(-gain, kind="stable")]:
+        differs = changed[k] != choices
+        if (row[differs] == choices[differs]).all():
+            row[differs] = changed[k][differs]
+            made += 1
+    return (row, objectives) if made > 1 else None
 
 
 def digest(row: IntArray) -> bytes:

@@ -16,7 +16,7 @@ from archopt.model.evaluator import stepped_droop
 from archopt.model.hardware import setting_error_v
 from archopt.model.options import option_index
 from archopt.model.parameters import FIXED_RATIO
-from archopt.model.space import BUS_A, INPUT, PARENT, Designs
+from archopt.model.space import BUS_A, FOLLOW, INPUT, PARENT, Designs
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 from archopt.search.changes import choice_layout
 from archopt.search.conditions import Conditions
@@ -137,13 +137,12 @@ class Screen:
         before = np.repeat(base[None], len(on_rail), axis=0)
         change = self.rail_kwh(changed[on_rail], rail[on_rail], seen) - self.rail_kwh(before, rail[on_rail], seen)
         out[on_rail] = ~(change <= ENERGY_MARGIN * energy)
-        start, stop = self.layout.bus("converter").start, self.layout.choices
-        for field in ("nominal_v", "lower_v", "upper_v"):
-            for b in range(2):
-                column = self.layout.bus(field).start + b
-                far = np.abs(changed[:, column] - base[column]) > NEAR_STEPS
-                rest = np.delete(np.arange(start, stop), [column - start])
-                out |= (rail < 0) & far & (changed[:, rest] == base[rest]).all(axis=1)
+        was, after = Designs(self.layout, base[None]), Designs(self.layout, changed)
+        fields = ("nominal_v", "lower_v", "upper_v")
+        moved = np.stack([np.abs(after.bus(field) - was.bus(field)) for field in fields]).max(axis=(0, 2))
+        same = (after.bus("converter") == was.bus("converter")).all(axis=1)
+        follows = (after.bus("control") != was.bus("control")) & (after.bus("control") == FOLLOW)
+        out |= (rail < 0) & same & (moved > NEAR_STEPS) & ~follows.any(axis=1)
         return out
 
     def rail_kwh(self, changed: IntArray, rail: IntArray, seen: Conditions) -> FloatArray:
