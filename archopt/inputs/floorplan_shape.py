@@ -145,20 +145,22 @@ def net_sheet(plan: Floorplan, region: Region) -> Sheet:
 
 
 def net_pitch_m(sheet: Sheet) -> float:
-    """Pitch (m) of the grid a net is solved on: coarser than the solver's own, finer for small pads.
+    """Pitch (m) of the grid a net is solved on: as fine as shows where its current crowds, finer for small pads.
 
-    Two per cent of a resistance are far below what a floorplan knows, and a study has many nets.
+    Two per cent of a resistance are far below what a floorplan knows; the density under a disc of 3 mm needs more.
     """
     span = np.ptp(sheet.outline_m, axis=0)
     box_m2 = float(span[0] * span[1])
     smallest_m = min(pad.least_size_m for pad in sheet.pads)
     cells = min(BUS_CELLS, PORT_CELLS * len(sheet.load_ports))
     finest_m = (box_m2 / MOST_CELLS) ** 0.5
-    return float(max(finest_m, min((box_m2 / cells) ** 0.5, smallest_m / PAD_CELLS)))
+    return float(max(finest_m, min((box_m2 / cells) ** 0.5, smallest_m / PAD_CELLS, DISC_PITCH_M)))
 
 
 #: Cells in the box around a net: for each load port, at most, at most for small pads; and across the smallest pad.
 PORT_CELLS = 4_000
 BUS_CELLS = 16_000
-MOST_CELLS = 40_000
+MOST_CELLS = 100_000
 PAD_CELLS = 3.0
+#: A quarter of the disc the density is averaged over, m.
+DISC_PITCH_M = 0.75e-3

@@ -27,6 +27,7 @@ from archopt.model.vias import fields_limit_a, fields_ohm, via_field_ohm
 from archopt.physics.ampacity import SECTION_EXPONENT
 from archopt.physics.copper import squares_matrix
 from archopt.physics.sheet import SheetSolution, solve
+from archopt.physics.sheet_discs import face_density, worst_disc
 from archopt.physics.sheet_fields import DISC_M, averaged_density_a_per_m, neck_flow
 from archopt.physics.sheet_grid import copper_share
 from archopt.physics.sheet_shape import SheetError, polygon_area_m2
@@ -129,23 +130,27 @@ def solved_net(plan: Floorplan, region: Region) -> SheetSolution:
     return solve(sheet, net_pitch_m(sheet))
 
 
-def port_densities(solution: SheetSolution) -> FloatArray:
+def port_densities(solution: SheetSolution) -> tuple[FloatArray, FloatArray]:
     """Current density averaged over the disc in every copper cell for one ampere at each port, (cells, P) 1/m.
 
     Densities of several ports add up to at least the density of all together (triangle inequality), and to just
-    that where all run the same way, as they do where it crowds.
+    that where all run the same way, as they do where it crowds. Returned with the middles of the cells, (cells, 2) m.
     """
     count = len(solution.ports)
     found = np.stack([averaged_density_a_per_m(solution, np.eye(count)[k]).ravel() for k in range(count)], axis=1)
-    kept: FloatArray = found[~np.isnan(found).any(axis=1)]
-    return kept
+    x_m, y_m = solution.grid.centres_m()
+    middles = np.stack(np.meshgrid(x_m, y_m), axis=2).reshape(-1, 2)
+    kept = ~np.isnan(found).any(axis=1)
+    return found[kept], middles[kept]
 
 
-def crowded(density: FloatArray) -> FloatArray:
-    """The cells of (cells, P) where the sum over ports is greatest for some mix of currents, each once.
+def crowded(solution: SheetSolution) -> tuple[FloatArray, FloatArray]:
+    """The discs where the density summed over ports is greatest for some mix of currents, (K, P) 1/m, (K, 2) m.
 
-    Mixes tried: each port alone, each two alike, all alike.
+    Mixes tried: each port alone, each two alike, all alike. The worst cell of each is looked at closely: the disc
+    moves between cells, so that a finer grid hardly changes what it finds.
     """
+    density, middles = port_densities(solution)
     count = density.shape[1]
     one, other = np.triu_indices(count)
     mixes = np.zeros((len(one) + 1, count))
@@ -153,8 +158,13 @@ def crowded(density: FloatArray) -> FloatArray:
     np.add.at(mixes, (np.arange(len(one)), other), 1.0)
     mixes[-1] = 1.0
     worst = (density @ mixes.T).argmax(axis=0)
-    cells: FloatArray = density[np.unique(worst)]
-    return cells
+    cells = np.unique(worst)
+    field = face_density(solution)
+    found = [
+        worst_disc(solution, field, middles[cell], mixes[worst == cell].mean(axis=0), DISC_M) for cell in cells
+    ]
+    # between the sides of a slot narrower than the grid only the cells tell them apart
+    return np.maximum(np.stack(found), density[cells]), middles[cells]
 
 
 def copper_area_m2(solution: SheetSolution) -> float:
@@ -177,7 +187,8 @@ def net_copper(plan: Floorplan, region: Region, temperature_degc: float) -> NetC
     """
     solution = solved_net(plan, region)
     left = 1.0 - region.perforation_share
-    cells = crowded(port_densities(solution)) * (DISC_M / left)
+    density, middles = crowded(solution)
+    cells = density * (DISC_M / left)
     flows = [neck_flow(solution, neck) for neck in solution.sheet.necks]
     widths = [flow.width_m * left for flow in flows]
     ohm = fields_ohm(plan, region, temperature_degc)
@@ -189,7 +200,10 @@ def net_copper(plan: Floorplan, region: Region, temperature_degc: float) -> NetC
         area_m2=copper_area_m2(solution),
         place_width_m=np.array([*widths, *(DISC_M for _ in cells)]),
         place_share=np.concatenate([np.abs([flow.share for flow in flows]).reshape(-1, len(solution.ports)), cells]),
-        place_names=(*(f"neck {neck.name}" for neck in region.necks), *("3 mm disc" for _ in cells)),
+        place_names=(
+            *(f"neck {neck.name}" for neck in region.necks),
+            *(f"disc at ({1e3 * x:.0f}, {1e3 * y:.0f}) mm" for x, y in middles.tolist()),
+        ),
     )
 
 

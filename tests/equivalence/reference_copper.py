@@ -8,15 +8,11 @@ from __future__ import annotations
 
 import math
 
-import numpy as np
-
 from archopt.inputs.floorplan_shape import Floorplan, Region, spots_of
 from archopt.inputs.resolved import Rail, ResolvedStudy
 from archopt.model.planes import net_copper, solved_net
 from archopt.physics.copper import resistivity_ohm_m
-from archopt.physics.sheet_fields import averaged_density_a_per_m, neck_flow
 
-DISC_MM = 3.0
 RISE_CAP_K = 150.0
 
 
@@ -122,20 +118,10 @@ class Copper:
         return found - sum(polygon_cm2(hole) for hole in region.cutouts_mm if within(hole, region.outline_mm))
 
     def crowding(self, net: str, into_a: dict[str, float], thick_um: float) -> list[tuple[float, float]]:
-        """Return current and IPC-2221 limit of one layer, in every cell's disc and every neck."""
+        """Return current and IPC-2221 limit of one layer, in every neck and disc where it crowds."""
         region = self.region(net)
         assert region is not None
-        assert self.plan is not None
-        solution, left = solved_net(self.plan, region), 1.0 - region.perforation_share
-        amps = np.array([into_a.get(port, 0.0) for port in solution.ports])
-        unit = np.eye(len(amps))
-        density = sum(averaged_density_a_per_m(solution, unit[k]) * amps[k] for k in range(len(amps)))
-        disc = float(np.nanmax(density)) * DISC_MM * 1e-3 / left
-        found = [(disc, self.limit_a(DISC_MM, thick_um))]
-        for neck in solution.sheet.necks:
-            flow = neck_flow(solution, neck)
-            found.append((float(np.abs(flow.share) @ amps), self.limit_a(flow.width_m * 1e3 * left, thick_um)))
-        return found
+        return [(amps, self.limit_a(width_mm, thick_um)) for amps, width_mm in self.tight_places(region, into_a)]
 
     def limit_a(self, width_mm: float, thick_um: float) -> float:
         """IPC-2221: I = 0.024 dT^0.44 A^0.725 with A in square mil, a layer inside."""

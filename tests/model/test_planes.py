@@ -21,7 +21,8 @@ from archopt.model.problem import Problem, compile_problem
 from archopt.model.space import BUS_NAMES, Designs
 from archopt.model.states import reduce_load
 from archopt.physics.copper import resistivity_ohm_m, sheet_resistance_ohm
-from archopt.physics.sheet_fields import averaged_density_a_per_m, link_current_a
+from archopt.physics.sheet_discs import FaceDensity, face_density, worst_disc
+from archopt.physics.sheet_fields import DISC_M, averaged_density_a_per_m, link_current_a
 
 STUDY = Path(__file__).resolve().parents[2] / "studies" / "compute_sixteen" / "study.toml"
 VIAS = ViaField(10, 0.3, 25.0, 1.6)
@@ -199,8 +200,16 @@ def test_crowding_is_never_understated() -> None:
     order = [problem.rails.names.index(port) for port in solution.ports]
     s = int(np.argmax(problem.states.useful_w))
     amps = (detail.solution.stage_in_w[0, s] / detail.solution.stage_v[0, s])[order]
-    true = float(np.nanmax(averaged_density_a_per_m(solution, amps))) * 3e-3 / (1.0 - region.perforation_share)
-    discs = problem.planes.place_width_m[0] == 3e-3
+    alone = face_density(solution)
+    both = FaceDensity((alone.along_x @ amps)[..., None], (alone.along_y @ amps)[..., None], alone.open_x, alone.open_y)
+    density = np.nan_to_num(averaged_density_a_per_m(solution, amps))
+    x_m, y_m = solution.grid.centres_m()
+    true = 0.0
+    for cell in np.argsort(-density.ravel())[:20:4]:
+        row, column = np.divmod(cell, solution.grid.columns)
+        found = worst_disc(solution, both, np.array([x_m[column], y_m[row]]), np.ones(1), DISC_M)[0]
+        true = max(true, found * DISC_M / (1.0 - region.perforation_share))
+    discs = problem.planes.place_width_m[0] == DISC_M
     summed = float((problem.planes.place_share[0][discs][:, order] @ amps).max())
     assert true <= summed * (1.0 + 1e-9)
     assert summed <= 1.15 * true

@@ -26,6 +26,7 @@ MEASURED = "physics/test_physics_measured.py"
 PARAMETERS = "physics/test_physics_parameters.py"
 RIPPLE = "physics/test_output_ripple.py"
 SHAPES = "physics/test_physics_sheet.py"
+DISCS = "physics/test_sheet_discs.py"
 SHEET = "published/test_published_sheet.py"
 THERMAL = "physics/test_physics_thermal.py"
 
@@ -95,6 +96,11 @@ CLAIMS = {
     "sheet.SheetSolution": (SHEET, "test_density_in_a_strip", "closed form"),
     "sheet.solve": (SHEET, "test_van_der_pauw_on_an_irregular_outline", "Philips Res. Rep. 13, 1958"),
     "sheet_cut.cut_along": (SHAPES, "test_a_cut_runs_from_edge_to_edge", "closed form"),
+    "sheet_discs.FaceDensity": (DISCS, "test_an_even_strip_is_one_over_its_width", "closed form"),
+    "sheet_discs.density_at": (DISCS, "test_an_even_strip_is_one_over_its_width", "closed form"),
+    "sheet_discs.face_density": (DISCS, "test_an_even_strip_is_one_over_its_width", "closed form"),
+    "sheet_discs.free_copper": (DISCS, "test_discs_stand_on_free_copper", "closed form"),
+    "sheet_discs.worst_disc": (DISCS, "test_an_even_strip_is_one_over_its_width", "closed form"),
     "sheet_fields.NeckFlow": (SHAPES, "test_neck_runs_from_edge_to_edge_around_its_middle", "closed form"),
     "sheet_fields.averaged_density_a_per_m": (SHEET, "test_averaged_density_in_an_annulus", "closed form"),
     "sheet_fields.density_a_per_m": (SHEET, "test_density_in_a_strip", "closed form"),
