@@ -8,7 +8,7 @@ from rich.console import RenderableType
 from rich.table import Table
 from rich.text import Text
 
-from archopt.present.adaptive_view import adaptive_sections
+from archopt.present.adaptive_view import adaptive_sections, moves
 from archopt.present.amounts import NONE, fixed, money, number, of, place_word, real, with_unit
 from archopt.present.losses import loss_table, shown_states, worst_balance
 from archopt.present.power_tree import BUS_WORD, tree_lines
@@ -35,8 +35,8 @@ def explanation(design: Data, problem: Data) -> Iterable[RenderableType]:
     yield from section("Power tree", HangingLines(tree_lines(design, study)))
     if design.get("bands"):
         yield from section(
-            "Bus voltage by load (thresholds are power at the board input)",
-            schedule_table(design["bands"]),
+            schedule_title(thresholds=thresholds_matter(design)),
+            schedule_table(design["bands"], thresholds=thresholds_matter(design)),
             *phases_body(design["bands"]),
         )
     yield from adaptive_sections(design)
@@ -114,19 +114,35 @@ def binding_text(limit: object) -> str:
     return f"{text}: {slack_text(limit)}"
 
 
-def schedule_table(bands: list[Data]) -> WordTable:
-    """Bus voltage and running converters in each band of load."""
+def thresholds_matter(design: Data) -> bool:
+    """Whether anything is set by band: a bus voltage, or how many of a bus's converters run."""
+    bands = design.get("bands") or []
+    counts = (len({of(band.get("converters"), bus) for band in bands}) for bus in BUS_WORD)
+    return moves(design) or any(count > 1 for count in counts)
+
+
+def schedule_title(*, thresholds: bool) -> str:
+    """What the bands are for; a bus that is held has no thresholds."""
+    if thresholds:
+        return "Bus voltage by load (load is what the rails draw; thresholds are power at the board's input)"
+    return "Bands of load (load is what the rails draw); the bus is held"
+
+
+def schedule_table(bands: list[Data], *, thresholds: bool = True) -> WordTable:
+    """Bus voltage and running converters in each band of load; ``thresholds`` where something is set by them."""
     buses = [bus for bus in BUS_WORD if any(of(band.get("volts"), bus) is not None for band in bands)]
     rows = []
     for band in bands:
         row = [
             number(band.get("band")), fixed(band.get("load_from_w"), 0), fixed(band.get("load_to_w"), 0),
-            fixed(band.get("raise_above_input_w"), 0), fixed(band.get("fall_below_input_w"), 0),
         ]  # fmt: skip
+        if thresholds:
+            row += [fixed(band.get("raise_above_input_w"), 0), fixed(band.get("fall_below_input_w"), 0)]
         for bus in buses:
             row += [fixed(of(band.get("volts"), bus), 2), number(of(band.get("converters"), bus))]
         rows.append(row)
-    headings = ["band", "load from W", "to W", "raise above W", "fall below W"]
+    headings = ["band", "load from W", "load to W"]
+    headings += ["raise above input W", "fall below input W"] if thresholds else []
     for bus in buses:
         headings += [f"{BUS_WORD[bus]} V", "converters"]
     return table(headings, rows)

@@ -31,7 +31,7 @@ ADDED_LATER = ("report.html", "copper_*.csv")
 """Files (patterns) other commands may add to a result; replacing the result may remove them."""
 
 EXTRA_FIELDS = (
-    "incumbent", "baselines", "gains", "losing", "leverage", "not_modelled", "cautions", "merged", "notes",
+    "incumbent", "baselines", "gains", "afresh", "losing", "leverage", "not_modelled", "cautions", "merged", "notes",
 )  # fmt: skip
 
 
@@ -187,7 +187,7 @@ def read(directory: Path, *, archive: bool = True) -> FrontRecord:
         raise OutputError(f"{directory / RUN}: damaged: it does not list the files")
     problem = _json_file(directory / PROBLEM, digests, dict)
     designs = _json_file(directory / DESIGNS, digests, list)
-    extras = _json_file(directory / EXTRAS, digests, dict)
+    extras = {"afresh": {}, **_json_file(directory / EXTRAS, digests, dict)}  # earlier results lack it
     run = head.get("run")
     if not isinstance(run, dict) or not all(name in extras for name in EXTRA_FIELDS):
         raise OutputError(f"{directory}: damaged: parts of the result are missing")

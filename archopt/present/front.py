@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 
 TRADE_NAMES = {
     "design": "design", "energy_loss_kwh_per_year": "kWh a year", "cost_per_board": "cost",
-    "worst_droop_percent": "droop %", "topology": "topology", "bus_a_nominal_v": "bus A V",
+    "worst_droop_percent": "droop, % of budget", "topology": "topology", "bus_a_nominal_v": "bus A V",
     "bus_b_nominal_v": "bus B V", "lifetime_cost": "life cost", "roles": "marked as",
 }  # fmt: skip
 

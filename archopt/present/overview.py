@@ -17,6 +17,8 @@ from archopt.present.telling import COST_CLOSE, LOSS_CLOSE, MarginStep, Telling,
 
 FEWEST_DROOP_VALUES = 5
 WIDE = 150
+DROOP = "droop, % of budget"
+"""Heading of the worst rail's droop or release: a share of that rail's own budget, not of its voltage."""
 
 
 def columns_of(designs: Sequence[Data]) -> tuple[list[float], list[float], list[float]]:
@@ -89,7 +91,7 @@ def front_table(designs: Sequence[Data], currency: str, width: int) -> WordTable
         row.append(", ".join(role_word(str(role), design) for role in design.get("roles") or []))
         rows.append(row)
     money = f", {currency}" if currency else ""
-    headings = ["design", "kWh a year", f"cost{money}", "droop %"]
+    headings = ["design", "kWh a year", f"cost{money}", DROOP]
     headings += [f"life cost{money}", "W at 30 %", "W at 50 %", "W at 100 %"] if wide else []
     words = ["topology", "bus V", *(["bus converter", "stack"] if wide else []), "marked as"]
     return table([*headings, *words], rows, left=["design", *words])
@@ -149,7 +151,7 @@ def margin_body(designs: Sequence[Data], currency: str) -> Iterable[RenderableTy
     first = next((step.index for step in steps if step.index is not None), None)
     rows = [_margin_row(step, designs, (loss, cost, droop, whole), first) for step in steps]
     money = f", {currency}" if currency else ""
-    headings = ["droop at most %", "design", "droop %", "kWh a year", f"cost{money}", "kWh more", "cost more"]
+    headings = [f"{DROOP}, at most", "design", "droop", "kWh a year", f"cost{money}", "kWh more", "cost more"]
     yield table([*headings, "life cost more"], rows, left=["design"])
     values = sorted({round(value, 6) for value in droop})
     if len(values) < FEWEST_DROOP_VALUES:

@@ -9,10 +9,13 @@ from rich.text import Text
 
 from archopt.present.amounts import NONE, fixed, mechanism_word, money, number, place_word, real, signed, with_unit
 from archopt.present.explanation import binding_text, payback
-from archopt.present.overview import bus_text
+from archopt.present.overview import DROOP, bus_text
 from archopt.present.record import Data, FrontRecord
 from archopt.present.tables import HangingLines, section, table
 
+SAME_BASELINE = (
+    "of", "volts", "energy_loss_kwh_per_year", "cost_per_board", "worst_droop_percent", "feasible",
+)  # fmt: skip
 MOST_MECHANISMS = 6
 MOST_LEVERAGE = 5
 MOST_PRICES = 3
@@ -24,6 +27,8 @@ def question_sections(record: FrontRecord) -> Iterable[RenderableType]:
         yield from section("Today's design", *incumbent_body(record.incumbent, record.currency))
     if record.baselines:
         yield from section("The same hardware with another bus voltage", *baseline_body(record))
+    if record.afresh:
+        yield from section("Every choice made again for each bus", *afresh_body(record.afresh, record.currency))
     if record.losing:
         yield from section("Topologies that lost", *losing_body(record.losing, record.currency))
     if record.leverage:
@@ -55,12 +60,83 @@ def baseline_body(record: FrontRecord) -> Iterable[RenderableType]:
             fixed(row.get("worst_droop_percent"), 0), "yes" if row.get("feasible") else "no",
             place_word(row.get("note")) if row.get("note") else "",
         ]
-        for row in record.baselines
+        for row in merged_baselines(record.baselines)
     ]  # fmt: skip
     words = ["bus", "hardware of", "bus V", "meets limits", "remark"]
-    headings = ["bus", "hardware of", "bus V", "kWh a year", "cost", "droop %", "meets limits", "remark"]
+    headings = ["bus", "hardware of", "bus V", "kWh a year", "cost", DROOP, "meets limits", "remark"]
     yield table(headings, rows, left=words)
     yield from gain_lines(record.gains, record.currency)
+
+
+def merged_baselines(baselines: list[Data]) -> list[Data]:
+    """The rows of one hardware that came out the same as one row, its names and remarks joined."""
+    groups: dict[str, list[Data]] = {}
+    for row in baselines:
+        numbers = [row.get(key) for key in SAME_BASELINE]
+        known = row.get("energy_loss_kwh_per_year") is not None
+        groups.setdefault(str(numbers) if known else f"{row.get('baseline')} {numbers}", []).append(row)
+    merged = []
+    for rows in groups.values():
+        notes = [str(row["note"]) for row in rows if row.get("note")]
+        names = joined_names([str(row.get("baseline", NONE)) for row in rows])
+        merged.append({**rows[0], "baseline": names, "note": "; ".join(dict.fromkeys(notes))})
+    return merged
+
+
+def joined_names(names: list[str]) -> str:
+    """Names as one; what stands before their first comma is said once where all begin so."""
+    heads = {name.partition(", ")[0] for name in names}
+    if len(names) < 2 or len(heads) > 1 or not all(", " in name for name in names):
+        return "; ".join(names)
+    return f"{heads.pop()}, {'; '.join(name.partition(', ')[2] for name in names)}"
+
+
+def afresh_body(afresh: Data, currency: str) -> Iterable[RenderableType]:
+    """The best board for each way to run the bus, and the gain against the best board for a fixed one."""
+    rows = [
+        [
+            str(row.get("baseline", NONE)), str(row.get("topology") or NONE), volts_text(row.get("volts")),
+            fixed(row.get("energy_loss_kwh_per_year"), 2), fixed(row.get("cost_per_board"), 2),
+            fixed(row.get("worst_droop_percent"), 0), fixed(row.get("lifetime_cost"), 2),
+            fixed(row.get("least_energy_kwh_per_year"), 2), place_word(row.get("note")) if row.get("note") else "",
+        ]
+        for row in merged_baselines(afresh.get("rows") or [])
+    ]  # fmt: skip
+    unit = f", {currency}" if currency else ""
+    numbers = ["kWh a year", f"cost{unit}", DROOP, f"life cost{unit}", "least kWh a year"]
+    words = ["bus", "topology", "bus V", "remark"]
+    yield table([*words[:3], *numbers, "remark"], rows, left=words)
+    yield Text("Each row is the board of least lifetime cost; beside it the least loss of any board for that bus.")
+    for gain in merged_gains(afresh.get("gains") or []):
+        yield Text(afresh_gain(gain, currency))
+    for note in afresh.get("notes") or []:
+        yield Text(str(note))
+
+
+def merged_gains(gains: list[Data]) -> list[Data]:
+    """The gains that came out the same as one, their names joined."""
+    groups: dict[str, list[Data]] = {}
+    for gain in gains:
+        groups.setdefault(str([value for key, value in gain.items() if key != "of"]), []).append(gain)
+    return [{**same[0], "of": joined_names([str(gain.get("of")) for gain in same])} for same in groups.values()]
+
+
+def afresh_gain(gain: Data, currency: str) -> str:
+    """What a moving bus gains against the best feasible fixed one, over the life and at equal cost."""
+    less, energy, more = (real(gain.get(key)) for key in ("lifetime_cost_less", "energy_less_kwh", "cost_more"))
+    text = (
+        f"{gain.get('of')}: against the best fixed bus {money(abs(less), currency)}"
+        f" {'less' if less >= 0 else 'more'} over the life"
+        f" ({number(abs(energy), 3)} kWh a year {'less' if energy >= 0 else 'more'},"
+        f" {money(abs(more), currency)} a board {'more' if more >= 0 else 'less'})"
+    )
+    reach = gain.get("energy_less_at_equal_cost_percent")
+    if isinstance(reach, list) and len(reach) == 3:
+        median, most = real(reach[1]), real(reach[2])
+        word = "less" if median >= 0 else "more"
+        text += f"; at equal cost {fixed(abs(median), 1)} % {word} energy lost in the median"
+        text += f", {fixed(most, 1)} % less at most" if most > 0 else ""
+    return f"{text}."
 
 
 def volts_text(volts: object) -> str:
@@ -90,7 +166,7 @@ def gain_lines(gains: list[Data], currency: str) -> Iterable[Text]:
             said.append(supervisor_text(gain, currency))
         for key, word in (("all_unannounced", "unannounced"), ("announced", "announced")):
             other = gain.get(f"gain_{key}_kwh_per_year")
-            if other is not None:
+            if other is not None and fixed(other, 2) != fixed(kwh, 2):
                 said.append(f"it would save {fixed(other, 2)} kWh were every jump {word}")
         if any(said):
             yield Text(f"{gain.get('of', 'design')}: {'; '.join(text for text in said if text)}.")

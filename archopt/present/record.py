@@ -33,6 +33,7 @@ class FrontRecord:
     incumbent : today's design, explained, with ``violated`` listing the limits it does not meet; or None
     baselines : the same hardware with its bus voltage held or released, one row each
     gains : for each design of ``baselines`` what following the load gains against the best feasible fixed bus
+    afresh : baselines with every choice made again (``rows``, ``gains``, ``notes``); empty where not asked for
     losing : the best of each topology that does not win, and why
     leverage : the catalogue numbers whose spread moves the knee most
     merged : designs of the archive left out of ``designs`` as too close to one of them
@@ -45,6 +46,7 @@ class FrontRecord:
     incumbent: Data | None = None
     baselines: list[Data] = field(default_factory=list)
     gains: list[Data] = field(default_factory=list)
+    afresh: Data = field(default_factory=dict)
     losing: list[Data] = field(default_factory=list)
     leverage: list[Data] = field(default_factory=list)
     not_modelled: list[str] = field(default_factory=list)
@@ -221,6 +223,7 @@ def summary(record: FrontRecord) -> Data:
         },
         "baselines": record.baselines,
         "gains": record.gains,
+        "afresh": record.afresh,
         "losing": [
             {**row, "best_design": named(row.get("best_design"))} for row in record.losing
         ],

@@ -37,6 +37,7 @@ from archopt.trade.schedules import (
     regulated_buses,
     schedule_v,
     span_of,
+    volts_of,
 )
 
 ALL_UNANNOUNCED, ANNOUNCED = 100.0, 0.0
@@ -154,13 +155,8 @@ def baseline_row(
         remarks.append("does not meet " + "; ".join(unmet[:2]) if unmet else "does not meet every limit")
         if len(unmet) > 2:
             remarks[-1] += f" and {len(unmet) - 2} more"
-    volts = {
-        bus: values[0] if len(values) == 1 else values
-        for bus, values in schedule_v(problem, design.row).items()
-    }
-    if design.row[problem.layout.board("supervisor")] > 0 and not any(
-        isinstance(values, list) for values in volts.values()
-    ):
+    still = all(len(values) == 1 for values in schedule_v(problem, design.row).values())
+    if design.row[problem.layout.board("supervisor")] > 0 and still:
         remarks.append("nothing is gained by moving the bus")
     energy, cost, droop = (float(x) for x in design.objectives)
     return {
@@ -169,7 +165,7 @@ def baseline_row(
         "energy_loss_kwh_per_year": energy,
         "cost_per_board": cost,
         "worst_droop_percent": droop,
-        "volts": next(iter(volts.values())) if len(volts) == 1 else volts or None,
+        "volts": volts_of(problem, design.row),
         "feasible": design.feasible,
         "note": "; ".join(remarks),
     }

@@ -6,6 +6,7 @@ that are stored with a design (schedule, running counts) can be made again under
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -94,9 +95,13 @@ def allowed_columns(problem: Problem, row: IntArray) -> tuple[IntArray, ...]:
 
 def evaluate_exactly(evaluator: Evaluator, rows: IntArray) -> Evaluation:
     """Evaluate many decided rows by direct physics, a batch at a time."""
-    parts = [
-        evaluator.evaluate(rows[start : start + BATCH], exact=True) for start in range(0, len(rows), BATCH)
-    ]
+    return together(
+        [evaluator.evaluate(rows[start : start + BATCH], exact=True) for start in range(0, len(rows), BATCH)]
+    )
+
+
+def together(parts: Sequence[Evaluation]) -> Evaluation:
+    """Return the evaluations of several batches as one."""
     return Evaluation(
         rows=np.concatenate([part.rows for part in parts]),
         objectives=np.concatenate([part.objectives for part in parts]),

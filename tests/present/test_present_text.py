@@ -74,13 +74,13 @@ def test_energy_cost_front_comes_first_and_is_pinned(record: FrontRecord) -> Non
     titles = [line for line in text.splitlines() if line and not line.startswith(" ")]
     assert titles == order
     assert block(text, order[2]) == [
-        "  design  kWh a year  cost, EUR  droop %  life cost, EUR  W at 30 %  W at 50 %  W at 100 %"
+        "  design  kWh a year  cost, EUR  droop, % of budget  life cost, EUR  W at 30 %  W at 50 %  W at 100 %"
         "  topology               bus V    bus converter  stack      marked as",
-        "  D001         52.56     100.00       72          180.94        3.0        6.0        12.0"
+        "  D001         52.56     100.00                  72          180.94        3.0        6.0        12.0"
         "  one bus, follows load  8 to 12  2 x BRICK-8    S12-2x2oz  least loss",
-        "  D003         63.07      80.00       84          177.13        3.6        7.2        14.4"
+        "  D003         63.07      80.00                  84          177.13        3.6        7.2        14.4"
         "  one bus, follows load  8 to 12  2 x BRICK-8    S12-2x2oz  knee",
-        "  D005         94.61      60.00       98          205.70        5.4       10.8        21.6"
+        "  D005         94.61      60.00                  98          205.70        5.4       10.8        21.6"
         "  one bus, fixed         10       2 x BRICK-8    S12-2x2oz  least cost",
         "  4 of 5 designs printed; 1 other within 2 % of loss and 5 % of cost of these.",
     ]
@@ -88,12 +88,12 @@ def test_energy_cost_front_comes_first_and_is_pinned(record: FrontRecord) -> Non
 
 def test_droop_margin_is_priced(record: FrontRecord) -> None:
     assert block(printed(record), "What droop margin costs") == [
-        "  droop at most %  design  droop %  kWh a year  cost, EUR  kWh more  cost more  life cost more",
-        "              100  D003         84       63.07      80.00     +0.00      +0.00           +0.00",
-        "               90  D003         84       63.07      80.00     +0.00      +0.00           +0.00",
-        "               80  D002         80       53.35      98.00     -9.72     +18.00           +3.03",
-        "               70  D004         60       68.33      90.00     +5.26     +10.00          +18.09",
-        "               60  D004         60       68.33      90.00     +5.26     +10.00          +18.09",
+        "  droop, % of budget, at most  design  droop  kWh a year  cost, EUR  kWh more  cost more  life cost more",
+        "                          100  D003       84       63.07      80.00     +0.00      +0.00           +0.00",
+        "                           90  D003       84       63.07      80.00     +0.00      +0.00           +0.00",
+        "                           80  D002       80       53.35      98.00     -9.72     +18.00           +3.03",
+        "                           70  D004       60       68.33      90.00     +5.26     +10.00          +18.09",
+        "                           60  D004       60       68.33      90.00     +5.26     +10.00          +18.09",
     ]
 
 
@@ -258,7 +258,8 @@ def test_an_explained_design_says_everything(record: FrontRecord) -> None:
     titles = [line for line in text.splitlines() if line and not line.startswith(" ")]
     assert titles == [
         "Design D003 (knee): one bus, follows load", "Power tree",
-        "Bus voltage by load (thresholds are power at the board input)", "Losses by part and mechanism",
+        "Bus voltage by load (load is what the rails draw; thresholds are power at the board's input)",
+        "Losses by part and mechanism",
         "States of the year, and the shown loads", "Heat in the hottest case", "Tolerance of each rail, mV",
         "Limits, the worst place of each", "Cost of one board, EUR",
     ]  # fmt: skip
@@ -266,7 +267,7 @@ def test_an_explained_design_says_everything(record: FrontRecord) -> None:
         "input current at low line         3.71 A",
         "worst rail's droop or release     84 % of its budget (exactly 83.45 %)",
         "pays back against today's design  after 1.25 years",
-        "     1           20    60             66             -     8.00           1",
+        "     1           20         60                   66                   -     8.00           1",
         "  core                 1       2",
         "  bus A converter, fixed       21.02       1.20       2.40        4.80       6.00",
         " 45.0        9.0     2.9  4.5   0.0    31.5   26.3     20.0   5.2",
