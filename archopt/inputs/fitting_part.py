@@ -119,7 +119,7 @@ def fit_part(
         raise InputError(notebook.problems)
     start = rows[like] if like is not None else nearest_row(rows, points)
     ranges = range_columns(start, points, input_range_v, output_range_v)
-    base = start.model_copy(update={"name": name, "source": f"measured_{name}", **ranges})
+    base = start.model_copy(update={"name": name, "source": f"measured_{name}", "measured_points": "", **ranges})
     weight = efficiency_weight(points.output_w, points.loss_w)
     fit, candidates, columns = _fit(base, points, losses_of, weight, random, notebook)
     part = _checked(base, columns, notebook)

@@ -16,8 +16,7 @@ import numpy as np
 
 from archopt.errors import InputError, OutputError, Problem
 from archopt.inputs.catalogue import SOURCES
-from archopt.inputs.measured import BENCH_DEGC
-from archopt.inputs.parts import FAMILIES, Part, Source
+from archopt.inputs.parts import FAMILIES, MAY_LACK, Part, Source
 from archopt.inputs.problems import Notebook
 from archopt.inputs.text_files import read_csv
 from archopt.physics.measured import LossTable
@@ -78,8 +77,7 @@ def check_name(name: str, where: str) -> None:
 
 
 def write_part(
-    place: Places, part: Part, title: str, measured_on: date, table: LossTable | None = None,
-    table_degc: float = BENCH_DEGC, replace: bool = False,
+    place: Places, part: Part, title: str, measured_on: date, table: LossTable | None = None, replace: bool = False,
 ) -> tuple[Path, ...]:  # fmt: skip
     """Write the row, its source and, when given, its loss table; return the paths written.
 
@@ -90,7 +88,7 @@ def write_part(
     place : where it goes
     part : the row; its source key gets a row of kind "measured"
     title, measured_on : of the source row
-    table, table_degc : loss table to keep beside the row and the local air it holds at
+    table : loss table to keep beside the row
     replace : replace a row of the same name, source or table that is there
 
     Raises
@@ -105,7 +103,7 @@ def write_part(
     if table is not None:
         if place.table.exists() and not replace:
             raise OutputError(f"{place.table} is there already; replace it by --replace")
-        texts[place.table] = table_text(table, table_degc)
+        texts[place.table] = table_text(table)
     for path, text in texts.items():
         try:
             path.parent.mkdir(parents=True, exist_ok=True)
@@ -126,7 +124,8 @@ def _with_row(path: Path, columns: list[str], values: Mapping[str, Any], key: st
     table = read_csv(path, str(path), "rows", notebook)
     if table is None or notebook.problems:
         raise OutputError("\n".join(str(problem) for problem in notebook.problems))
-    if set(table.header) != set(columns):
+    lacking = [column for column in columns if column not in table.header and column in MAY_LACK]
+    if {*table.header, *lacking} != set(columns):
         raise OutputError(f"{path} is there already with other columns; name another file")
     at = table.header.index(key)
     name = str(values[key])
@@ -134,6 +133,11 @@ def _with_row(path: Path, columns: list[str], values: Mapping[str, Any], key: st
         raise OutputError(f"{path} has '{name}' already; replace it by --replace or give another name")
     kept = [cells for _, cells in table.rows if cells[at] != name]
     ordered = [_cell(values[column]) for column in table.header]
+    lacking = [column for column in lacking if values[column] != ""]
+    if lacking:  # every row gets the column, empty but in the new one
+        blank = [""] * len(lacking)
+        rows = "".join(_line([*cells, *blank]) for cells in kept)
+        return _line([*table.header, *lacking]) + rows + _line([*ordered, *(_cell(values[c]) for c in lacking)])
     if len(kept) == len(table.rows):  # nothing to take out: the file stays as it is, comments too
         text = path.read_bytes().decode("utf-8-sig")
         return text + ("" if text.endswith("\n") else "\n") + _line(ordered)
@@ -154,10 +158,10 @@ def _cell(value: object) -> str:
     return f"{value:.10g}" if isinstance(value, float) else str(value)
 
 
-def table_text(table: LossTable, local_degc: float) -> str:
+def table_text(table: LossTable) -> str:
     """Return a loss table as CSV, one line a point, in the columns of measured points."""
     lines = [_line(TABLE_COLUMNS)]
     for at, loss in np.ndenumerate(table.loss_w):
         axes = (table.input_v[at[0]], table.output_v[at[1]], table.current_a[at[2]])
-        lines.append(_line([f"{value:.6g}" for value in (*axes, loss, local_degc)]))
+        lines.append(_line([f"{value:.6g}" for value in (*axes, loss, table.local_degc)]))
     return "".join(lines)

@@ -10,7 +10,7 @@ import numpy as np
 
 from archopt.errors import InputError, OutputError, Problem
 from archopt.inputs.fitting_part import FittedPart, fit_part
-from archopt.inputs.measured import MeasuredPoints, loss_table, read_points, table_left_out_points
+from archopt.inputs.measured import MeasuredPoints, part_table, read_points, table_left_out_points
 from archopt.inputs.measured_catalogue import read_catalogue
 from archopt.inputs.measured_files import Places, check_name, places, write_part
 from archopt.physics.measured import LossTable, table_loss_w
@@ -80,15 +80,16 @@ def fit_to_files(request: FitRequest) -> FitResult:
     )  # fmt: skip
     if holder is not None and not catalogue.file_of[request.name].startswith(str(own)):
         fitted = replace(fitted, cautions=(*fitted.cautions, f"takes the place of {request.name} of the catalogue"))
-    table = loss_table(points) if request.table else None
+    table = part_table(fitted.part, points) if request.table else None
     if table is not None:
+        named = place.table.relative_to(place.sources.parent).as_posix()
+        fitted = replace(fitted, part=fitted.part.model_copy(update={"measured_points": named}))
         fitted = replace(fitted, cautions=(*fitted.cautions, table_words(points, table)))
     title = (
         f"Loss fitted to {len(points)} measured points of {request.points.name}, worst error "
         f"{fitted.worst_points:.2f} points of efficiency; what was not measured from {fitted.like}"
     )
-    local_degc = float(points.temperature_degc.mean())
-    written = write_part(place, fitted.part, title, date.today(), table, local_degc, request.replace)
+    written = write_part(place, fitted.part, title, date.today(), table, request.replace)
     return FitResult(fitted, place, written)
 
 
@@ -100,5 +101,5 @@ def table_words(points: MeasuredPoints, table: LossTable) -> str:
     between = "" if np.isnan(gap) else f", and inner levels from their neighbours within {gap:.2f}"
     return (
         f"the loss table gives {int(inside.sum())} of {len(points)} points back within {float(error.max()):.2f} "
-        f"points of efficiency{between}; it is kept beside the row, which is what a search reads"
+        f"points of efficiency{between}; a search reads the table, never beyond it, and of the row what no table tells"
     )

@@ -14,6 +14,7 @@ from archopt.inputs.resolved import Catalogue
 from archopt.model.part_rows import buck_parameters, converter_parameters
 from archopt.physics import buck, bus_converter, linear
 from archopt.physics.arrays import FloatArray, FloatLike
+from archopt.physics.measured import table_loss_w
 
 
 class RowLosses:
@@ -55,3 +56,19 @@ class RowLosses:
         c = replace(c, thermal_k_per_w=c.thermal_k_per_w * heat)
         found = bus_converter.losses(c, input_v, output_v, current_a, ambient_degc)
         return {name: getattr(found, name) for name in bus_converter.MECHANISMS}
+
+
+def row_loss_w(
+    catalogue: Catalogue, part: Part, input_v: FloatLike, output_v: FloatLike, current_a: FloatLike,
+    ambient_degc: float,
+) -> FloatArray:  # fmt: skip
+    """Loss (W) of one unit as a search takes it: of a measured part from its table, nan beyond it."""
+    losses_of = RowLosses(catalogue)
+    at = (part, input_v, output_v, current_a)
+    warm = np.asarray(sum(losses_of(*at, ambient_degc).values()))
+    table = catalogue.measured.get(part.name)
+    if table is None:
+        return warm
+    loss, inside = table_loss_w(table, input_v, output_v, current_a)
+    bench = np.asarray(sum(losses_of(*at, table.local_degc).values()))
+    return np.where(inside, loss + warm - bench, np.nan)

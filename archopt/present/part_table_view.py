@@ -57,7 +57,8 @@ def table_sections(catalogue: Catalogue, part: Part, points: MeasuredPoints) -> 
         for volts_in, out in volts
     ]
     worst, rms = float(np.nanmax(np.abs(error))), float(np.sqrt(np.nanmean(error**2)))
-    words = f"worst {fixed(worst, 2)}, rms {fixed(rms, 2)}; a search reads the row, never the table"
+    reads = "the table, never beyond it" if part.name in catalogue.measured else "the row, not the table"
+    words = f"worst {fixed(worst, 2)}, rms {fixed(rms, 2)}; a search reads {reads}"
     heads = ("input V", "output V", *(f"{number(load)} A" for load in loads))
     yield from section("Row less measured table, points of efficiency", words, table(heads, rows))
 

@@ -18,10 +18,9 @@ from archopt.errors import InputError, Problem
 from archopt.inputs.parts import FAMILIES, LinearRegulator, Part
 from archopt.inputs.problems import nearest, shown, unit_of
 from archopt.inputs.resolved import Catalogue
-from archopt.physics.arrays import FloatArray
 from archopt.present.amounts import NONE, fixed, number
 from archopt.present.part_chart import Curve, chart_lines
-from archopt.present.part_losses import RowLosses
+from archopt.present.part_losses import row_loss_w
 from archopt.present.part_table_view import kept_points, table_data, table_sections
 from archopt.present.plain import Plain, plain
 from archopt.present.tables import pairs, section, table
@@ -254,7 +253,7 @@ def efficiency(
     """Efficiency and loss over load at up to three input voltages; empty for parts that convert nothing.
 
     Each entry: input_v, output_v, current_a, efficiency, loss_w (lists over loads); of one unit or phase, local
-    air 40 degC, the separate bias of a buck stage not counted.
+    air 40 degC, the separate bias of a buck stage not counted; nan where a measured part was not measured.
 
     Raises
     ------
@@ -266,12 +265,11 @@ def efficiency(
         return []
     _check_inside(part, values, input_v, output_v)
     inputs = [input_v] if input_v is not None else _inputs(part, values, output_v)
-    losses_of, current = RowLosses(catalogue), np.asarray(loads) * values[column]
+    current = np.asarray(loads) * values[column]
     curves = []
     for volts in inputs:
         out = _output(part, values, volts, output_v)
-        found = losses_of(part, volts, out, current, AMBIENT_DEGC)
-        loss: FloatArray = sum(found.values(), np.zeros(len(current)))
+        loss = row_loss_w(catalogue, part, volts, out, current, AMBIENT_DEGC)
         share = out * current / (out * current + loss)
         curves.append({"input_v": volts, "output_v": out, "current_a": current, "efficiency": share, "loss_w": loss})
     return curves

@@ -69,7 +69,8 @@ class FromFiles(Reference):
 
     def __init__(self, problem: Data, design: Data) -> None:
         self.study = cast(ResolvedStudy, attributes(problem["study"]))
-        self.catalogue = cast(Catalogue, SimpleNamespace(families=parts_of(problem)))
+        measured = {name: attributes(table) for name, table in problem.get("measured", {}).items()}
+        self.catalogue = cast(Catalogue, SimpleNamespace(families=parts_of(problem), measured=measured))
         self.states = states_of(problem)
         self.choices = design["choices"]
         bands = design["bands"]

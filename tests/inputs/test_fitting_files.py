@@ -166,7 +166,7 @@ def test_a_table_holds_for_one_local_air_and_says_which(tmp_path: Path) -> None:
     catalogue = read_catalogue()
     row = catalogue.families["bus_converters"]["trim_bus_150w"]
     warm = measure(catalogue, row, [36, 75], [12], [1.0, 4.0, 12.0], local_degc=(50.0,))
-    text = table_text(loss_table(warm), 50.0)
+    text = table_text(loss_table(warm))
     (tmp_path / "table.csv").write_text(text, encoding="utf-8")
     again = read_points(tmp_path / "table.csv")
     np.testing.assert_allclose(again.loss_w, warm.loss_w, rtol=1e-5)
