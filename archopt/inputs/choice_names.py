@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+from archopt.inputs.parts import Capacitor
 from archopt.inputs.problems import Notebook, brief, nearest, shown
 from archopt.inputs.resolved import Board, Catalogue, Rail
 
@@ -14,7 +15,7 @@ BUSES = ("bus_a", "bus_b")
 RAIL_KEYS = ("feed", "stage", "phases", "fewest", "bank", "bank_count", "pairs")
 BUS_KEYS = (
     "converter", "count", "fewest", "nominal_v", "control", "lower_v", "upper_v", "bulk",
-    "bulk_count", "pairs",
+    "bulk_count", "pairs", "damper", "damper_count",
 )  # fmt: skip
 BOARD_KEYS = ("stack", "bias", "bias_feed", "supervisor")
 
@@ -41,6 +42,12 @@ def flatten(raw: Mapping[str, Any], place: str, notebook: Notebook) -> dict[str,
     for key, value in raw.items():
         add(key, value)
     return flat
+
+
+def lossy_capacitors(catalogue: Catalogue) -> list[str]:
+    """Return the capacitors whose own resistance damps a bus."""
+    rows = catalogue.families["capacitors"].items()
+    return [name for name, row in rows if isinstance(row, Capacitor) and row.kind != "ceramic"]
 
 
 class ChoiceChecker:
@@ -100,7 +107,7 @@ class ChoiceChecker:
             return f"needs a number, found {brief(value)}"
         if key in {"nominal_v", "lower_v", "upper_v"}:
             return "" if 0 < number <= 100 else f"{value} V is out of range; it must be above 0 and at most 100 V"
-        if key in {"bank_count", "bulk_count"}:
+        if key in {"bank_count", "bulk_count", "damper_count"}:
             counts = ", ".join(str(count) for count in BANK_COUNTS)
             return "" if number in BANK_COUNTS else f"{value} is not one of {counts}"
         most = {"phases": 16, "count": 8, "pairs": self._board.max_pairs_per_net if self._board else 10}[key]
@@ -124,6 +131,7 @@ class ChoiceChecker:
             "converter": ["none", *families["bus_converters"]],
             "control": ["fixed", "two_levels", "follow_load"],
             "bulk": list(families["capacitors"]),
+            "damper": ["none", *lossy_capacitors(self._catalogue)],
             "bias": ["none", *families["bias_supplies"]],
             "bias_feed": ["input", "bus_a"],
             "supervisor": ["none", *families["supervisors"]],

@@ -151,13 +151,10 @@ def worst_step_w(problem: Problem, hardware: Hardware, ratio: FloatArray) -> Flo
     onward = np.where(hardware.parent[:, None, :] >= 0, np.take_along_axis(ratio, parent, axis=2), 1.0)
     step_w = rails.step_a * rails.voltage_v * ratio * onward
     reached = hardware.steps_on_bus
-    groups = int(rails.step_group.max()) + 1
-    out = np.zeros((ratio.shape[0], 2, ratio.shape[1]))
-    for bus in range(2):
-        here = step_w * reached[:, bus, None, :]
-        for group in range(groups):
-            out[:, bus] = np.maximum(out[:, bus], here[:, :, rails.step_group == group].sum(axis=2))
-    return out
+    order = np.argsort(rails.step_group, kind="stable")  # rails of a group side by side
+    _, first = np.unique(rails.step_group[order], return_index=True)
+    here = step_w[:, None, :, order] * reached[:, :, None, order]
+    return np.asarray(np.add.reduceat(here, first, axis=3).max(axis=3))
 
 
 def standing_w(hardware: Hardware, mix_in_w: FloatArray, jump_in_w: FloatArray, step_w: FloatArray) -> FloatArray:
@@ -194,38 +191,41 @@ class Feeds:
         self.buses = [bus for bus in range(2) if hardware.on_bus[:, bus].any()]
 
     def stage_v(self, bus_v: FloatArray, node_v: FloatArray, drop_v: FloatArray) -> FloatArray:
-        """Return the stage inputs, (P, S, R) V, from buses (P, S, 2), input node (P, S) and drops (P, S, R)."""
-        sources = np.concatenate([bus_v.transpose(0, 2, 1), node_v[:, None]], axis=1)
+        """Return the stage inputs, (P, S, R) V, from buses (P, 2, S), input node (P, S) and drops (P, S, R)."""
+        sources = np.concatenate([bus_v, node_v[:, None]], axis=1)
         fed_v = sources[np.arange(len(sources))[:, None], self.source]
         stage_v = np.maximum(fed_v - drop_v.transpose(0, 2, 1), LEAST_STAGE_SHARE * fed_v)
         stage_v[self.child] = self.parent_v[:, None]
         return stage_v.transpose(0, 2, 1)
 
     def bus_sum(self, values: FloatArray) -> FloatArray:
-        """Return what the rails of each bus sum to, (P, S, 2), from (P, S, R)."""
+        """Return what the rails of each bus sum to, (P, 2, S), from (P, S, R)."""
         out = np.zeros((len(values), 2, values.shape[1]))
         for bus in self.buses:
             out[:, bus] = np.einsum("psr,pr->ps", values, self.on_bus[:, bus])
-        return out.transpose(0, 2, 1)
+        return out
 
     def plane_drops(self, rail_a: FloatArray, warmth: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Return the drop to every stage, (P, S, R) V, and the loss of both planes, (P, S, 2) W.
+        """Return the drop to every stage, (P, S, R) V, and the loss of both planes, (P, 2, S) W.
 
         rail_a : (P, S, R) stage input currents; warmth : (P, S, 2) resistance over that at the reference
         """
         problem, hardware = self.problem, self.hardware
         drop = np.zeros_like(rail_a)
-        plane_w = np.zeros((len(rail_a), 2, rail_a.shape[1])).transpose(0, 2, 1)
+        plane_w = np.zeros((len(rail_a), 2, rail_a.shape[1]))
         for bus in self.buses:
             on_bus = self.on_bus[:, bus, None]
             on_a = rail_a * on_bus
             part = problem.planes.square_drop(bus, on_a)
-            part *= hardware.plane_ohm[:, bus, None, None]
+            square_ohm = hardware.plane_ohm[:, bus, None]
             if problem.planes.with_vias:
+                part *= square_ohm[..., None]
                 part += via_drop_v(problem, on_a, bus)
-            part *= warmth[..., bus, None]
+                part *= warmth[..., bus, None]
+            else:
+                part *= (square_ohm * warmth[..., bus])[..., None]
             part *= on_bus
-            plane_w[..., bus] = np.einsum("psr,psr->ps", part, on_a)
+            plane_w[:, bus] = np.einsum("psr,psr->ps", part, on_a)
             drop += part
         return drop, plane_w
 
@@ -239,17 +239,20 @@ class BusUnits:
         self.losses = ConverterLoss.of(problem.converters, hardware.converter[self.here][:, None])
 
     def __call__(self, node_v: FloatArray, bus_v: FloatArray, bus_a: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Return loss of all running units, W, and temperature of one, degC, (P, S, 2); local air without one."""
+        """Return loss of all running units, W, and temperature of one, degC, (P, 2, S); local air without one.
+
+        node_v (P, S), bus_v and bus_a (P, 2, S)
+        """
         p, bus = self.here
         running = self.hardware.units_running[p, :, bus]
         found = self.losses(
-            node_v[p], np.maximum(bus_v[p, :, bus], 1e-3), bus_a[p, :, bus] / running, self.states.ambient_degc
+            node_v[p], np.maximum(bus_v[p, bus], 1e-3), bus_a[p, bus] / running, self.states.ambient_degc
         )
         shape = (len(node_v), 2, node_v.shape[1])
         loss_w, degc = np.zeros(shape), np.broadcast_to(self.states.ambient_degc, shape).copy()
         loss_w[p, bus] = found.total_w * running
         degc[p, bus] = found.temperature_degc
-        return loss_w.transpose(0, 2, 1), degc.transpose(0, 2, 1)
+        return loss_w, degc
 
 
 def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: StageLosses, *, exact: bool) -> Solution:
@@ -257,7 +260,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
 
     With ``exact`` the fixed point is iterated until nothing moves by more than 1e-13 relative, else a fixed
     number of passes is made. Never raises on a collapsing design: ``missing_w`` and low voltages say so.
-    Arrays over states and rails are (P, S, R) with states last in memory.
+    Arrays over states and rails are (P, S, R) with states last in memory, those over buses (P, 2, S) in here.
     """
     rails, converters, path = problem.rails, problem.converters, problem.path
     count = len(hardware.stage)
@@ -268,12 +271,12 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
     node_v = np.broadcast_to(states.input_v, (count, len(states.hours))).copy()
     index = np.maximum(hardware.converter, 0)
     has_converter = hardware.converter >= 0
-    alive = (feeds.bus_sum(np.broadcast_to(~states.off, base_a.shape)) > 0) & has_converter[:, None, :]
-    ratio = converters.ratio[index][:, None, :]
-    droop_ohm = converters.output_ohm[index][:, None, :] / hardware.units_running
-    set_v = hardware.set_v
-    fixed_ratio = hardware.fixed_ratio[:, None, :]
-    bus_v = np.where(fixed_ratio, node_v[..., None] * ratio, set_v)
+    alive = (feeds.bus_sum(np.broadcast_to(~states.off, base_a.shape)) > 0) & has_converter[..., None]
+    ratio = converters.ratio[index][..., None]
+    droop_ohm = converters.output_ohm[index][..., None] / hardware.units_running.transpose(0, 2, 1)
+    set_v = hardware.set_v.transpose(0, 2, 1)
+    fixed_ratio = hardware.fixed_ratio[..., None]
+    bus_v = np.where(fixed_ratio, node_v[:, None] * ratio, set_v)
     least_bus_v = LEAST_STAGE_SHARE * np.where(np.isfinite(set_v), set_v, 1.0)
     supervisor_w = np.where(
         hardware.supervisor >= 0, problem.supervisors.power_w[np.maximum(hardware.supervisor, 0)], 0.0
@@ -281,7 +284,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
     bias_out, bias_in = bias_power_w(problem, states, hardware)
     bias_bus = np.where(hardware.bias_on_bus[:, None], bias_in, 0.0)
     bias_node = bias_in - bias_bus
-    bias_bus = np.where(alive[..., 0], bias_bus, 0.0)
+    bias_bus = np.where(alive[:, 0], bias_bus, 0.0)
     dip_v = np.zeros(hardware.band_v.shape)
     step_w = np.zeros(hardware.band_v.shape)
     step_ratio = np.ones((count, states.places, len(rails.names)))
@@ -293,7 +296,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
     heat = CopperHeat(problem, states, hardware)
     pour_rise = heat.pour_rise_k()
     pour_ohm = heat.pour_ohm(pour_rise)
-    pour_w = current**2 * pour_ohm
+    pour_w = current * current * pour_ohm
     delivered = current * rails.voltage_v + pour_w * sensed
     plane_rise, plane_factor = np.zeros((*node_v.shape, 2)), np.ones((*node_v.shape, 2))
     drop = np.zeros_like(pour_w)
@@ -308,7 +311,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
             stage_loss_w = stage_loss(stage_v, current)
             heat.with_children(pour_rise, current)
             pour_ohm = heat.pour_ohm(pour_rise)
-            pour_w = current**2 * pour_ohm
+            pour_w = current * current * pour_ohm
             delivered = current * rails.voltage_v + pour_w * sensed
             stage_in = delivered + stage_loss_w
         if turn == 0:
@@ -318,8 +321,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
             step_ratio = np.minimum(in_over_out, LARGEST_STEP_RATIO)
             step_w = worst_step_w(problem, hardware, step_ratio)
             band_volts = np.where(
-                hardware.fixed_ratio[..., None], (ratio[:, 0] * problem.study.supply.low_v)[..., None],
-                hardware.band_v,
+                fixed_ratio, ratio * problem.study.supply.low_v, hardware.band_v
             )  # fmt: skip
             dip_v = bus_dip_v(
                 step_w,
@@ -327,32 +329,33 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
                 converters.bandwidth_rad_s[index][..., None],
                 converters.delay_s[index][..., None],
                 hardware.bulk_f,
-                hardware.bulk_esr_ohm[..., None],
+                hardware.bulk_esr_ohm,
                 standing_w(hardware, mix_in, jump_in, step_w),
+                hardware.damped_ohm,
             )
             dip_v = np.where(has_converter[..., None], dip_v, 0.0)
         rail_a = stage_in / stage_v
-        bias_a = bias_bus / np.maximum(bus_v[..., 0], 1e-3)
+        bias_a = bias_bus / np.maximum(bus_v[:, 0], 1e-3)
         if exact or turn == passes - 2:  # a pass late is near enough: the drop moves the current by per cents
             plane_rise = heat.plane_rise_k(rail_a, bias_a)
             plane_factor = heat.factor(plane_rise)
         drop, plane_w = feeds.plane_drops(rail_a, plane_factor)
         bus_a, bus_w = feeds.bus_sum(rail_a), feeds.bus_sum(stage_in) + plane_w
-        bus_a[..., 0] += bias_a
-        bus_w[..., 0] += bias_bus
+        bus_a[:, 0] += bias_a
+        bus_w[:, 0] += bias_bus
         if exact or turn != passes - 2:  # a pass late is near enough: it moves the input by a ten-thousandth
             converter_loss, converter_degc = units(node_v, bus_v, bus_a)
             converter_loss = np.where(alive, converter_loss, 0.0)
         converter_in = np.where(alive, bus_w + converter_loss, 0.0)
-        node_w = converter_in.sum(axis=2) + np.einsum("psr,pr->ps", stage_in, feeds.direct)
+        node_w = converter_in.sum(axis=1) + np.einsum("psr,pr->ps", stage_in, feeds.direct)
         node_w += bias_node + supervisor_w[:, None]
         most = states.input_v**2 / (4.0 * max(path.resistance_ohm, 1e-12))
         missing = np.maximum(node_w - most, 0.0)
         root = np.sqrt(np.maximum(states.input_v**2 - 4.0 * path.resistance_ohm * node_w, 0.0))
         node_v = 0.5 * (states.input_v + root)
         input_a = (node_w - missing) / node_v
-        moving = np.where(fixed_ratio, node_v[..., None] * ratio - droop_ohm * bus_a, set_v)
-        moving[:, jump_index] -= dip_v.transpose(0, 2, 1)[:, jump_band]
+        moving = np.where(fixed_ratio, node_v[:, None] * ratio - droop_ohm * bus_a, set_v)
+        moving[..., jump_index] -= dip_v[..., jump_band]
         bus_v = np.maximum(moving, least_bus_v)
         input_w = node_w + path.resistance_ohm * input_a**2 + path.power_w
         if exact:
@@ -370,12 +373,12 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
         pour_w=pour_w,
         pour_ohm=pour_ohm,
         pour_rise_k=pour_rise,
-        bus_v=bus_v,
-        bus_a=bus_a,
-        bus_w=bus_w,
-        converter_loss_w=converter_loss,
-        converter_degc=converter_degc,
-        plane_w=plane_w,
+        bus_v=bus_v.transpose(0, 2, 1),
+        bus_a=bus_a.transpose(0, 2, 1),
+        bus_w=bus_w.transpose(0, 2, 1),
+        converter_loss_w=converter_loss.transpose(0, 2, 1),
+        converter_degc=converter_degc.transpose(0, 2, 1),
+        plane_w=plane_w.transpose(0, 2, 1),
         plane_rise_k=plane_rise,
         node_v=node_v,
         input_a=input_a,

@@ -18,7 +18,8 @@ from archopt.model.parameters import BoolArray, IntArray
 from archopt.model.situation import Situation
 from archopt.model.space import BUS_NAMES
 from archopt.model.states import ENERGY, FALLBACK, JUMP, MIX
-from archopt.physics.stability import least_capacitance_f, regulated_source_h, resistance_limit_ohm
+from archopt.physics.bus_network import stable_conductance_s
+from archopt.physics.stability import regulated_source_h, resistance_limit_ohm
 
 LEAST_BUS_V = 1e-3  # keeps the losses of a collapsed bus finite
 
@@ -104,6 +105,9 @@ def check_buses(situation: Situation, ledger: Ledger) -> None:
     top_v = np.where(hardware.fixed_ratio, converters.ratio[index] * study.supply.high_v, top_v)
     bulk_rated = problem.capacitors.rated_v[situation.designs.bus("bulk")] * study.derating.voltage
     ledger.add("capacitor voltage", top_v, bulk_rated, at_most=True, axes=(BUS_NAMES,), applies=used)
+    damper = situation.designs.bus("damper")
+    rated = problem.capacitors.rated_v[np.maximum(damper - 1, 0)] * study.derating.voltage
+    ledger.add("capacitor voltage", top_v, rated, at_most=True, axes=(BUS_NAMES,), applies=used & (damper > 0))
     check_measured(situation, ledger, index, used)
     check_stability(situation, ledger, index, used)
 
@@ -132,7 +136,10 @@ def check_measured(situation: Situation, ledger: Ledger, index: IntArray, used: 
 
 
 def check_stability(situation: Situation, ledger: Ledger, index: IntArray, used: BoolArray) -> None:
-    """Check the bus capacitance against constant-power loads after a jump, at the dipped voltage."""
+    """Check how many times the power after a jump a bus would stand, at the dipped voltage, before it oscillates.
+
+    The bulk bank's own resistance does not count here; a damping bank's does.
+    """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     converters, path = problem.converters, problem.path
     jump = states.of_kind(JUMP)
@@ -146,9 +153,9 @@ def check_stability(situation: Situation, ledger: Ledger, index: IntArray, used:
     source_ohm = np.where(fixed_ratio, output_ohm + path.resistance_ohm * ratio**2, output_ohm)
     source_h = np.where(fixed_ratio, path.inductance_h * ratio**2, regulated_source_h(output_ohm, bandwidth_hz))
     source_ohm = np.maximum(source_ohm, 1e-6)
-    least = least_capacitance_f(source_ohm, source_h, power, volts)
-    margin = np.minimum(hardware.bulk_f / np.maximum(least, 1e-12), 1e6)
-    resistive = np.minimum(resistance_limit_ohm(power, volts) / source_ohm, 1e6)
+    main_f = hardware.bulk_f - hardware.damper_f
+    most_s = stable_conductance_s(source_ohm, source_h, main_f, hardware.damper_f, hardware.damper_ohm[..., None])
+    margin = np.minimum(most_s * resistance_limit_ohm(power, volts), 1e6)
     bound = problem.study.control.stability_margin
     axes = (BUS_NAMES, situation.state_names(jump))
-    ledger.add("stability", np.minimum(margin, resistive), bound, at_most=False, axes=axes, applies=used[..., None])
+    ledger.add("stability", margin, bound, at_most=False, axes=axes, applies=used[..., None])

@@ -24,7 +24,7 @@ LARGEST_DB = 120.0
 LEAST_W, LEAST_V, LEAST_OHM, LEAST_F = 1e-3, 1e-3, 1e-6, 1e-9
 FOLLOWS_AT_ONCE = 1e12
 
-Impedance = Callable[[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray], FloatArray]
+Impedance = Callable[[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, FloatArray], FloatArray]
 
 
 @dataclass(frozen=True)
@@ -32,7 +32,8 @@ class Sources:
     """Resistance and inductance of each bus's source with the units running in each band, and what is beside it.
 
     Regulated: the output impedance, held up to the bandwidth. Fixed ratio: droop resistance and the input path
-    behind it, referred to the bus. ohm, henry, bulk_f, bus_v, units (P, 2, B + 1); esr_ohm, input_f (P, 2).
+    behind it, referred to the bus. ohm, henry, bulk_f, damper_f, bus_v, units (P, 2, B + 1);
+    esr_ohm, damper_ohm, input_f (P, 2).
     """
 
     ohm: FloatArray
@@ -40,6 +41,8 @@ class Sources:
     bulk_f: FloatArray
     esr_ohm: FloatArray
     input_f: FloatArray
+    damper_f: FloatArray
+    damper_ohm: FloatArray
     bus_v: FloatArray
     units: IntArray
 
@@ -56,7 +59,7 @@ class Sources:
         q, b = p[row], bus[row]
         value = of(
             self.ohm[q, b, place], self.henry[q, b, place], self.bulk_f[q, b, place], self.esr_ohm[q, b],
-            self.input_f[q, b],
+            self.input_f[q, b], self.damper_f[q, b, place], self.damper_ohm[q, b],
         )  # fmt: skip
         out[p, bus] = value[which.reshape(key.shape)]
         return out
@@ -76,8 +79,10 @@ def sources(situation: Situation) -> Sources:
     return Sources(
         ohm=np.maximum(ohm, LEAST_OHM),
         henry=np.asarray(henry),
-        bulk_f=np.maximum(hardware.bulk_f - hardware.input_f[..., None], LEAST_F),
-        esr_ohm=hardware.bulk_esr_ohm,
+        bulk_f=np.maximum(hardware.bulk_f - hardware.damper_f - hardware.input_f[..., None], LEAST_F),
+        esr_ohm=hardware.main_esr_ohm,
+        damper_f=np.broadcast_to(hardware.damper_f, hardware.bulk_f.shape),
+        damper_ohm=hardware.damper_ohm,
         input_f=hardware.input_f,
         bus_v=hardware.band_v,
         units=hardware.units_band,
@@ -95,7 +100,7 @@ def check_impedance(situation: Situation, ledger: Ledger) -> None:
     """Check each bus's impedance margin, what its source can deliver at all, and the input path's margin.
 
     The margin asked for is the study's stability margin in dB: where nothing but the source damps the bus both
-    checks are the same, and the bulk bank's ESR counts as damping here.
+    checks are the same; the bulk bank's ESR counts as damping here, and a damping bank in both.
     """
     problem, states, hardware = situation.problem, situation.states, situation.hardware
     solution, control = situation.solution, problem.study.control

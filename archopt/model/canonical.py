@@ -79,6 +79,7 @@ def tidy_buses(problem: Problem, designs: Designs) -> None:
     table = problem.converters
     if not len(table.names):
         return
+    tidy_dampers(problem, designs, used)
     count, fewest = designs.bus("count"), designs.bus("fewest")
     count[:] = np.where(used, np.clip(count, 1, table.max_parallel[index]), 0)
     fewest[:] = np.where(count <= 1, 0, fewest)
@@ -96,6 +97,18 @@ def tidy_buses(problem: Problem, designs: Designs) -> None:
     least = np.minimum(np.minimum(lower, upper), nominal)
     most = np.maximum(np.maximum(lower, upper), nominal)
     lower[:], upper[:] = np.where(fixed, nominal, least), np.where(fixed, nominal, most)
+
+
+def tidy_dampers(problem: Problem, designs: Designs, used: BoolArray) -> None:
+    """Give a bus in use a damping bank on offer; where it has none, there is nothing to count."""
+    damper, count = designs.bus("damper"), designs.bus("damper_count")
+    for bus in range(2):
+        for values, field in ((damper, "damper"), (count, "damper_count")):
+            options = problem.space.allowed[designs.layout.bus(field).start + bus]
+            if len(options):
+                other = used[:, bus] & ~np.isin(values[:, bus], options)
+                values[other, bus] = options[0]
+    count[:] = np.where(damper > 0, count, 0)
 
 
 def converter_span(problem: Problem, index: IntArray) -> tuple[IntArray, IntArray]:

@@ -56,6 +56,9 @@ def count_pieces(problem: Problem, designs: Designs) -> IntArray:
         add(part, designs.bus("count"), used & (converter >= 0))
     bulk_pieces = problem.bank_counts[designs.bus("bulk_count")]
     add(problem.capacitors.part[designs.bus("bulk")], bulk_pieces, used)
+    damper = designs.bus("damper") - 1
+    damper_pieces = problem.bank_counts[designs.bus("damper_count")]
+    add(problem.capacitors.part[np.maximum(damper, 0)], damper_pieces, used & (damper >= 0))
     one = np.ones(count, dtype=np.int64)
     for column, part_of in (("bias", problem.biases.part), ("supervisor", problem.supervisors.part)):
         chosen = designs.board(column) - 1

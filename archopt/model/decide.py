@@ -17,14 +17,15 @@ from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO, via_drop_v
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
 from archopt.model.converter_loss import ConverterLoss
-from archopt.model.hardware import Hardware, bulk_effective_f, plane_limit_a, setting_error_v, short_time_a, unpack
+from archopt.model.hardware import BusBanks, Hardware, bus_banks, plane_limit_a, setting_error_v, short_time_a, unpack
 from archopt.model.options import Options, band_hours, option_index, quiet
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.schedule import choose_schedule, deadband_steps
 from archopt.model.space import FIXED, FOLLOW, Designs
 from archopt.model.states import StateTable
-from archopt.physics.stability import least_capacitance_f, regulated_source_h
+from archopt.physics.bus_network import stable_conductance_s
+from archopt.physics.stability import regulated_source_h
 from archopt.physics.transient import bus_dip_v
 
 SAFETY_V = 0.003
@@ -76,7 +77,7 @@ def crossing(nodes_v: FloatArray, percent: NDArray[Any], bound: float) -> FloatA
 
 def legal_voltages(
     problem: Problem, designs: Designs, option: IntArray, options: Options, hardware: Hardware,
-    mix_w: FloatArray, jump_w: FloatArray, dip_v: FloatArray, shares: FloatArray,
+    mix_w: FloatArray, jump_w: FloatArray, dip_v: FloatArray, shares: FloatArray, banks: BusBanks,
 ) -> BoolArray:  # fmt: skip
     """Return where a bus voltage is legal for a band, (P, 2, B, G); shares (P, 2, B, R) of its current by rail."""
     converters, study = problem.converters, problem.study
@@ -100,8 +101,9 @@ def legal_voltages(
     legal &= jump_w / dipped + charge <= SAFETY_SHARE * spare * short
     ohm = np.maximum(converters.output_ohm[index] / units, 1e-6)
     henry = regulated_source_h(ohm, converters.bandwidth_rad_s[index] / (2.0 * np.pi))
-    least = least_capacitance_f(ohm, henry, jump_w, dipped)
-    legal &= bulk_on_grid_f(problem, designs, hardware) >= study.control.stability_margin * least
+    main_f, damper_f = (values[:, :, None] for values in (banks.total_f - banks.damper_f, banks.damper_f))
+    most_s = stable_conductance_s(ohm, henry, main_f, damper_f, banks.damper_ohm[..., None, None])
+    legal &= most_s * dipped**2 >= study.control.stability_margin * jump_w
     need, jump, high = rail_windows(problem, options, designs, option)
     middle = len(grid) // 2
     on = hardware.on_bus
@@ -240,16 +242,18 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     hardware = unpack(problem, designs, states)
     step_w = step_power(problem, options, option, hardware, mix_w)
     index = np.maximum(hardware.converter, 0)[..., None, None]
+    banks = bus_banks(problem, designs, hardware.converter, problem.grid_v, hardware.input_f)
     dip = bus_dip_v(
         step_w,
         problem.grid_v,
         problem.converters.bandwidth_rad_s[index],
         problem.converters.delay_s[index],
-        bulk_on_grid_f(problem, designs, hardware),
-        hardware.bulk_esr_ohm[..., None, None],
+        banks.total_f[:, :, None],
+        banks.ohm[:, :, None],
         np.maximum(mix_w, jump_w - step_w),
+        banks.damped_ohm[:, :, None],
     )
-    legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip, shares)
+    legal = legal_voltages(problem, designs, option, options, hardware, mix_w, jump_w, dip, shares, banks)
     total = energy + converter_energy(problem, states, hardware, energy)
     count, bands, width = len(designs), states.bands, len(problem.grid_v)
     total, legal = total[:, :, :bands], legal[:, :, :bands]
@@ -268,11 +272,6 @@ def decide_once(problem: Problem, states: StateTable, options: Options, designs:
     snap_fewest(problem, designs)
     unsettled = (designs.bus("nominal_v") != before).any(axis=1)
     return designs, unsettled | (canonical(problem, designs).rows != designs.rows).any(axis=1)
-
-
-def bulk_on_grid_f(problem: Problem, designs: Designs, hardware: Hardware) -> FloatArray:
-    """Return what holds each bus up at every voltage of the grid, F, (P, 2, 1, G)."""
-    return np.asarray((bulk_effective_f(problem, designs, problem.grid_v) + hardware.input_f[..., None])[:, :, None])
 
 
 def coincident_step_w(problem: Problem, options: Options, option: IntArray, hardware: Hardware) -> FloatArray:

@@ -186,6 +186,9 @@ def part_uses(problem: Problem, detail: Detail, p: int) -> dict[int, list[str]]:
             uses.setdefault(int(problem.converters.part[index]), []).append(f"{BUS_NAMES[bus]} converter")
             bulk = int(problem.capacitors.part[designs.bus("bulk")[p, bus]])
             uses.setdefault(bulk, []).append(f"{BUS_NAMES[bus]} bulk")
+            damper = int(designs.bus("damper")[p, bus])
+            if damper:
+                uses.setdefault(int(problem.capacitors.part[damper - 1]), []).append(f"{BUS_NAMES[bus]} damping")
     if hardware.bias[p] >= 0:
         uses.setdefault(int(problem.biases.part[hardware.bias[p]]), []).append("gate bias")
     if hardware.supervisor[p] >= 0:

@@ -10,6 +10,7 @@ from archopt.model.parameters import FIXED_RATIO, BoolArray, FloatArray, IntArra
 from archopt.model.problem import Problem, bank_effective_f, bank_esr_ohm, bank_most_f
 from archopt.model.space import BUS_A, PARENT, Designs
 from archopt.model.states import StateTable
+from archopt.physics.bus_network import damped_dip_ohm, joined_bank
 from archopt.physics.capacitor import effective_capacitance_f
 
 
@@ -19,9 +20,10 @@ class Hardware:
 
     Rails (P, R): stage, phases, feed, parent (-1 none), bank_f (least), bank_most_f, bank_esr_ohm, pairs,
     pour_ohm (loop). pour_ohm and plane_ohm are those of copper as warm as it may be.
-    Buses (P, 2): converter (-1 none), units, bus_pairs, plane_ohm (loop, a square), esr_ohm, bulk_nominal_f,
-    input_f (stage inputs); by place
-    (P, 2, B + 1): band_v voltage set, bulk_f (with stage inputs, the bank biased at that voltage), units_band.
+    Buses (P, 2): converter (-1 none), units, bus_pairs, plane_ohm (loop, a square), bulk_nominal_f,
+    input_f (stage inputs), main_esr_ohm of the bulk bank; by place (P, 2, B + 1): band_v voltage set, units_band, and
+    with the banks biased at that voltage bulk_f (with stage inputs and damper), bulk_esr_ohm (bulk bank and damper),
+    damper_f; damper_ohm (P, 2).
     on_bus (P, 2, R). running (P, S, R) phases, running_band (P, R, B + 1), units_running (P, S, 2), set_v (P, S, 2)
     bus voltage set, with its setting error where limits are checked (not used for fixed ratio).
     bias, bias_on_bus, supervisor, stack: (P,).
@@ -45,6 +47,10 @@ class Hardware:
     input_f: FloatArray
     bulk_nominal_f: FloatArray
     bulk_esr_ohm: FloatArray
+    main_esr_ohm: FloatArray
+    damper_f: FloatArray
+    damper_ohm: FloatArray
+    damped_ohm: FloatArray
     on_bus: BoolArray
     running: IntArray
     running_band: IntArray
@@ -119,6 +125,10 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
     where, which = np.nonzero(parent >= 0)
     children[where, parent[where, which]] = True
     nominal_f = capacitors.capacitance_f * (1.0 + capacitors.tolerance)
+    damper = designs.bus("damper")
+    damper_nominal_f = np.where(damper > 0, nominal_f[np.maximum(damper - 1, 0)], 0.0)
+    damper_nominal_f = damper_nominal_f * problem.bank_counts[designs.bus("damper_count")]
+    banks = bus_banks(problem, designs, converter, bias_v, input_f)
     pairs, bus_pairs = np.maximum(designs.rail("pairs"), 1), np.maximum(designs.bus("pairs"), 1)
     return Hardware(
         stage=stage,
@@ -135,10 +145,14 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
         units=units,
         bus_pairs=bus_pairs,
         plane_ohm=2.0 * sheet[:, None] / bus_pairs,
-        bulk_f=bulk_effective_f(problem, designs, bias_v) + input_f[..., None],
+        bulk_f=banks.total_f,
         input_f=input_f,
-        bulk_nominal_f=nominal_f[bulk] * bulk_pieces + input_f,
-        bulk_esr_ohm=esr[bulk] / bulk_pieces,
+        bulk_nominal_f=nominal_f[bulk] * bulk_pieces + damper_nominal_f + input_f,
+        bulk_esr_ohm=banks.ohm,
+        main_esr_ohm=banks.main_ohm,
+        damper_f=banks.damper_f,
+        damper_ohm=banks.damper_ohm,
+        damped_ohm=banks.damped_ohm,
         on_bus=on_bus,
         running=np.maximum(running, 1),
         running_band=np.maximum(running_band, 1),
@@ -155,17 +169,63 @@ def unpack(problem: Problem, designs: Designs, states: StateTable) -> Hardware:
     )
 
 
-def bulk_effective_f(problem: Problem, designs: Designs, bias_v: FloatArray) -> FloatArray:
-    """Return each bus's bulk bank at its tolerance, end of life and the voltage on it, F, (P, 2, places or 1).
+@dataclass(frozen=True)
+class BusBanks:
+    """What holds the buses up at given voltages, (P, 2, V); main_ohm, damper_ohm (P, 2).
+
+    total_f, ohm : bulk bank, stage inputs and damper together; damped_ohm : dip for each ampere that sharing between
+    the banks may add, 0 without a damper
+    """
+
+    total_f: FloatArray
+    ohm: FloatArray
+    damper_f: FloatArray
+    damped_ohm: FloatArray
+    main_ohm: FloatArray
+    damper_ohm: FloatArray
+
+
+def bus_banks(
+    problem: Problem, designs: Designs, converter: IntArray, bias_v: FloatArray, input_f: FloatArray
+) -> BusBanks:
+    """Return what holds each bus up, at its tolerance, end of life and the voltages on it.
 
     A ceramic holds less at a higher bus: the voltage set is taken, not the dipped one.
+
+    Parameters
+    ----------
+    converter : (P, 2), -1 where there is none
+    bias_v : (P, 2, V) or (V,)
+    input_f : (P, 2) of the stages
     """
-    table, bulk = problem.capacitors, designs.bus("bulk")[..., None]
-    one_f = effective_capacitance_f(
-        table.capacitance_f[bulk], bias_v, table.half_v[bulk], table.tolerance[bulk],
+    bulk, damper = designs.bus("bulk"), designs.bus("damper") - 1
+    pieces = [problem.bank_counts[designs.bus(name)] for name in ("bulk_count", "damper_count")]
+    esr_ohm = bank_esr_ohm(problem.study, problem.capacitors)
+    main_ohm = esr_ohm[bulk] / pieces[0]
+    main_f = effective_f(problem, bulk, bias_v) * pieces[0][..., None] + input_f[..., None]
+    there = damper >= 0
+    if not there.any():
+        none = np.zeros((*there.shape, 1))
+        return BusBanks(main_f, np.broadcast_to(main_ohm[..., None], main_f.shape), none, none, main_ohm, none[..., 0])
+    index = np.maximum(damper, 0)
+    damper_f = np.where(there[..., None], effective_f(problem, index, bias_v) * pieces[1][..., None], 0.0)
+    damper_ohm = np.where(there, esr_ohm[index] / pieces[1], 0.0)
+    place = np.maximum(converter, 0)[..., None]
+    ohms = (main_ohm[..., None], damper_f, damper_ohm[..., None])
+    total_f, ohm = joined_bank(main_f, *ohms)
+    damped_ohm = damped_dip_ohm(
+        main_f, *ohms, problem.converters.bandwidth_rad_s[place], problem.converters.delay_s[place]
+    )
+    return BusBanks(total_f, np.broadcast_to(ohm, total_f.shape), damper_f, damped_ohm, main_ohm, damper_ohm)
+
+
+def effective_f(problem: Problem, capacitor: IntArray, bias_v: FloatArray) -> FloatArray:
+    """Return one piece of capacitors (P, 2) at its tolerance, end of life and the voltage on it, F, (P, 2, V)."""
+    table, row = problem.capacitors, capacitor[..., None]
+    return effective_capacitance_f(
+        table.capacitance_f[row], bias_v, table.half_v[row], table.tolerance[row],
         problem.study.derating.capacitance_end_of_life,
     )  # fmt: skip
-    return np.asarray(one_f * problem.bank_counts[designs.bus("bulk_count")][..., None])
 
 
 def setting_error_v(problem: Problem, converter: IntArray, set_v: FloatArray) -> FloatArray:

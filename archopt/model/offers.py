@@ -53,6 +53,7 @@ class Offers:
     feed_ok: BoolArray
     capacitor_ok: BoolArray
     bulk_ok: BoolArray
+    damper_ok: BoolArray
     phases_high: IntArray
 
 
@@ -123,6 +124,8 @@ def bus_choices(study: ResolvedStudy, offers: Offers) -> dict[str, Choice]:
         "bulk": (np.flatnonzero(offers.bulk_ok), dict(enumerate(offers.capacitors.names))),
         "bulk_count": (counted(len(BANK_COUNTS)), {k: str(count) for k, count in enumerate(BANK_COUNTS)}),
         "pairs": (counted(study.board.max_pairs_per_net, 1), numbers),
+        "damper": (np.append(0, 1 + np.flatnonzero(offers.damper_ok)), with_none(offers.capacitors.names)),
+        "damper_count": (counted(len(BANK_COUNTS)), {k: str(count) for k, count in enumerate(BANK_COUNTS)}),
     }
 
 

@@ -159,6 +159,7 @@ class CapacitorTable:
     tolerance: FloatArray
     ripple_a: FloatArray
     part: IntArray
+    lossy: BoolArray  # of a kind whose own resistance damps
 
 
 @dataclass(frozen=True)
@@ -377,6 +378,7 @@ def capacitor_table(study: ResolvedStudy, catalogue: Catalogue, parts: PartTable
         tolerance=array(rows, "tolerance_percent", 0.01),
         ripple_a=array(rows, "ripple_a"),
         part=np.array([parts.index(row.name) for row in rows], dtype=np.int64),
+        lossy=np.array([cast(Capacitor, row).kind != "ceramic" for row in rows], dtype=bool),
     )
 
 

@@ -213,6 +213,7 @@ def compile_problem(study: ResolvedStudy, catalogue: Catalogue, states: StateTab
         feed_ok=feed_ok,
         capacitor_ok=capacitor_ok,
         bulk_ok=bulk_ok,
+        damper_ok=bulk_ok & capacitors.lossy,
         phases_high=high,
     )
     space = build_space(study, layout, offers)

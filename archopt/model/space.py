@@ -23,6 +23,7 @@ BANK_COUNTS = (1, 2, 3, 4, 6, 8, 10, 12, 16, 20, 24, 32)
 RAIL_FIELDS = ("feed", "stage", "phases", "fewest", "bank", "bank_count", "pairs")
 BUS_FIELDS = (
     "converter", "count", "fewest", "nominal_v", "control", "lower_v", "upper_v", "bulk", "bulk_count", "pairs",
+    "damper", "damper_count",
 )  # fmt: skip
 BOARD_FIELDS = ("stack", "bias", "bias_feed", "supervisor")
 

@@ -149,6 +149,7 @@ def board_wave(
 
     input_f, bulk_f = max(bus.input_f, LEAST_INPUT_F), max(bus.bulk_f, LEAST_INPUT_F)
     bulk_ohm, source_h = max(bus.bulk_esr_ohm, LEAST_OHM), max(bus.source_h, LEAST_HENRY)
+    damped, damper_ohm = int(bus.damper_f > 0.0), max(bus.damper_ohm, LEAST_OHM)
     start_a = (float((before * volts * ratio).sum()) + other_w) / bus.bus_v
     bus_restoring = bus.restoring * bus.bandwidth_rad_s * bus.capacitance_f
     floor_v = LEAST_VOLT * bus.bus_v
@@ -173,7 +174,7 @@ def board_wave(
 
         def rate(time_s: float, y: FloatArray) -> FloatArray:
             source, bulk_v, bus_v = float(y[0]), float(y[1]), max(float(y[2]), floor_v)
-            amps, caps = y[3 : 3 + count], y[3 + count :]
+            amps, caps = y[3 : 3 + count], y[3 + count : 3 + 2 * count]
             load = load_0 + load_rate * (time_s - start_s)
             stage_v = bus_v - drop_ohm * amps * watts_per_amp / bus_v
             up = np.maximum(per_volt * (seen * stage_v - volts), LEAST_SLEW)
@@ -193,10 +194,14 @@ def board_wave(
             if source >= bus.limit_a:
                 moved = min(moved, 0.0)
             from_bulk = (bulk_v - bus_v) / bulk_ohm
-            out = np.empty(3 + 2 * count)
-            out[0], out[1], out[2] = moved, -from_bulk / bulk_f, (source + from_bulk - drawn) / input_f
+            out = np.empty(3 + 2 * count + damped)
+            from_damper = 0.0
+            if damped:
+                from_damper = (float(y[-1]) - bus_v) / damper_ohm
+                out[-1] = -from_damper / bus.damper_f
+            out[0], out[1], out[2] = moved, -from_bulk / bulk_f, (source + from_bulk + from_damper - drawn) / input_f
             out[3 : 3 + count] = change
-            out[3 + count :] = (amps - load) / farad
+            out[3 + count : 3 + 2 * count] = (amps - load) / farad
             return out
 
         return rate
@@ -209,13 +214,14 @@ def board_wave(
     kinks = [*starts, *(starts + sizes / slews), *(first + delay), *(needs_more + wakeup), bus.delay_s]
     if np.isfinite(command.begins_s):
         kinks += [command.begins_s, command.ends_s(bus.bus_v)]
-    scale = 10.0 * np.concatenate([[max(start_a, 1.0)], [bus.bus_v] * 2, np.maximum(before, 1.0), volts])
-    state = np.concatenate([[start_a, bus.bus_v, bus.bus_v], before, volts])
+    damper_v = [bus.bus_v] * damped
+    scale = 10.0 * np.concatenate([[max(start_a, 1.0)], [bus.bus_v] * 2, np.maximum(before, 1.0), volts, damper_v])
+    state = np.concatenate([[start_a, bus.bus_v, bus.bus_v], before, volts, damper_v])
     time_s, found, lost_s = integrate(
         rate_from, [float(x) for x in state], pieces([float(k) for k in kinks if np.isfinite(k)], end_s),
         [float(x) for x in scale], lost=lost, method="LSODA", samples=40,
     )  # fmt: skip
-    amps, caps = found[:, 3 : 3 + count], found[:, 3 + count :]
+    amps, caps = found[:, 3 : 3 + count], found[:, 3 + count : 3 + 2 * count]
     return BoardWave(
         time_s=time_s,
         bus_v=found[:, 2],

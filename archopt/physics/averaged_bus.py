@@ -38,6 +38,7 @@ class BusCircuit:
     limit_a : most the source carries for a short time (A)
     lockout_v : bus voltage at which the first load stops (V)
     restoring : bandwidth of the voltage's return to its command, as a share of the loop's (1)
+    damper_f, damper_ohm : a damping bank beside the bulk bank (F, ohm); 0 F where there is none
     """
 
     bus_v: float
@@ -52,11 +53,13 @@ class BusCircuit:
     limit_a: float = np.inf
     lockout_v: float = 0.0
     restoring: float = RESTORING
+    damper_f: float = 0.0
+    damper_ohm: float = 0.0
 
     @property
     def capacitance_f(self) -> float:
         """Everything that holds the bus up (F)."""
-        return self.bulk_f + self.input_f
+        return self.bulk_f + self.damper_f + self.input_f
 
     @property
     def response_s(self) -> float:
@@ -171,6 +174,7 @@ def bus_wave(
     input_f, bulk_f = max(circuit.input_f, LEAST_INPUT_F), max(circuit.bulk_f, LEAST_INPUT_F)
     esr = max(circuit.bulk_esr_ohm, LEAST_OHM)
     henry = max(circuit.source_h, LEAST_HENRY)
+    damped, damper_ohm = circuit.damper_f > 0.0, max(circuit.damper_ohm, LEAST_OHM)
     before_a = train.before_w / circuit.bus_v
     w = circuit.bandwidth_rad_s
     restoring_s = circuit.restoring * w * circuit.capacitance_f
@@ -197,26 +201,31 @@ def bus_wave(
             if current_a >= circuit.limit_a:
                 change = min(change, 0.0)
             from_bulk_a = (bulk_v - bus_v) / esr
-            return [change, -from_bulk_a / bulk_f, (current_a + from_bulk_a - drawn_a) / input_f]
+            if not damped:
+                return [change, -from_bulk_a / bulk_f, (current_a + from_bulk_a - drawn_a) / input_f]
+            from_damper_a = (y[3] - bus_v) / damper_ohm
+            bus_rate = (current_a + from_bulk_a + from_damper_a - drawn_a) / input_f
+            return [change, -from_bulk_a / bulk_f, bus_rate, -from_damper_a / circuit.damper_f]
 
         return rate
 
     kinks = [*starts_s, *(starts_s + circuit.delay_s), *((starts_s + train.rise_s) if train.rise_s > 0 else ())]
     if np.isfinite(command.begins_s):
         kinks += [command.begins_s, command.ends_s(circuit.bus_v)]
-    scale = (max(before_a, train.after_w / circuit.bus_v, 1e-3), circuit.bus_v, circuit.bus_v)
+    volts = (circuit.bus_v,) * (3 if damped else 2)
+    scale = (max(before_a, train.after_w / circuit.bus_v, 1e-3), *volts)
     time_s, state, lost_s = integrate(
-        rate_from, (before_a, circuit.bus_v, circuit.bus_v), pieces([float(k) for k in kinks], end_s), scale,
+        rate_from, (before_a, *volts), pieces([float(k) for k in kinks], end_s), scale,
         lost=lambda _, y: float(y[2] - floor_v), method="LSODA",
     )  # fmt: skip
     return BusWave(time_s, state[:, 2], state[:, 0], train.power_w(time_s), lost_s)
 
 
 def bus_eigenvalues(circuit: BusCircuit, power_w: float) -> FloatArray:
-    """Return the real parts of the eigenvalues of a bus linearised at a constant power, (3,) 1/s.
+    """Return the real parts of the eigenvalues of a bus linearised at a constant power, (3,) or (4,) 1/s.
 
-    State: source current, bulk voltage, bus voltage. The loads are the conductance -P/V^2. The dead time is
-    left out: it belongs to the step.
+    State: source current, bulk voltage, bus voltage, and the damping bank's where there is one. The loads are the
+    conductance -P/V^2. The dead time is left out: it belongs to the step.
     """
     gain_s = power_w / circuit.bus_v**2
     input_f, esr = max(circuit.input_f, LEAST_INPUT_F), max(circuit.bulk_esr_ohm, LEAST_OHM)
@@ -234,4 +243,11 @@ def bus_eigenvalues(circuit: BusCircuit, power_w: float) -> FloatArray:
             [1.0 / input_f, 1.0 / (esr * input_f), (gain_s - 1.0 / esr) / input_f],
         ]
     )
+    if circuit.damper_f > 0.0:
+        ohm, small = max(circuit.damper_ohm, LEAST_OHM), matrix
+        matrix = np.zeros((4, 4))
+        matrix[:3, :3] = small
+        matrix[2, 2] -= 1.0 / (ohm * input_f)
+        matrix[2, 3] = 1.0 / (ohm * input_f)
+        matrix[3, 2], matrix[3, 3] = 1.0 / (ohm * circuit.damper_f), -1.0 / (ohm * circuit.damper_f)
     return np.asarray(np.sort(np.linalg.eigvals(matrix).real)[::-1])

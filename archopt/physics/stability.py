@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from archopt.physics.arrays import FloatArray, FloatLike
+from archopt.physics.bus_network import network_rates
 
 #: Least resistance (ohm) and voltage (V) that count; keep results finite.
 LEAST_OHM = 1e-9
@@ -99,25 +100,66 @@ def bank_impedance_ohm(
 
 
 def output_peak_ohm(
-    source_ohm: FloatLike, source_h: FloatLike, bulk_f: FloatLike, bulk_esr_ohm: FloatLike, input_f: FloatLike
-) -> FloatArray:
-    """Largest impedance (ohm) over frequency that a bus shows its loads: source, bulk bank and stage inputs.
+    source_ohm: FloatLike, source_h: FloatLike, bulk_f: FloatLike, bulk_esr_ohm: FloatLike, input_f: FloatLike,
+    damper_f: FloatLike = 0.0, damper_ohm: FloatLike = 0.0,
+) -> FloatArray:  # fmt: skip
+    """Largest impedance (ohm) over frequency that a bus shows its loads: source, banks and stage inputs.
 
     Parameters
     ----------
     source_ohm, source_h : series resistance (ohm) and inductance (H) of the source
-    bulk_f, bulk_esr_ohm, input_f : as for :func:`bank_impedance_ohm`; all broadcast
+    bulk_f, bulk_esr_ohm, input_f : as for :func:`bank_impedance_ohm`
+    damper_f, damper_ohm : a damping bank beside them, 0 F where there is none; all broadcast
 
     Notes
     -----
     Read where the circuit's modes ring, at a tenth of the resonance of the source's inductance with all of the
     capacitance to ten times that with the stages' alone (where a bulk bank of large ESR leaves the stages to
-    ring), and at direct current, where it is R. The bulk bank's own ESR is what damps it: no further branch.
+    ring), and at direct current, where it is R. The bulk bank's own ESR damps it, and the damping bank.
     """
-    ohm, henry, bulk, esr, beside = np.broadcast_arrays(
+    ohm, henry, bulk, esr, beside, damper, lossy = np.broadcast_arrays(
         np.maximum(source_ohm, LEAST_OHM), np.maximum(source_h, LEAST_HENRY), np.maximum(bulk_f, LEAST_FARAD),
-        np.maximum(bulk_esr_ohm, LEAST_OHM), np.maximum(input_f, LEAST_FARAD),
+        np.maximum(bulk_esr_ohm, LEAST_OHM), np.maximum(input_f, LEAST_FARAD), np.asarray(damper_f),
+        np.maximum(damper_ohm, LEAST_OHM),
     )  # fmt: skip
+    found = damper > 0.0
+    if not found.any():
+        return _undamped_peak_ohm(ohm, henry, bulk, esr, beside)
+    out = np.empty(ohm.shape)
+    out[~found] = _undamped_peak_ohm(*(values[~found] for values in (ohm, henry, bulk, esr, beside)))
+    out[found] = _damped_peak_ohm(*(values[found] for values in (ohm, henry, bulk, esr, beside, damper, lossy)))
+    return out
+
+
+def _damped_peak_ohm(
+    ohm: FloatArray, henry: FloatArray, bulk: FloatArray, esr: FloatArray, beside: FloatArray, damper: FloatArray,
+    lossy: FloatArray,
+) -> FloatArray:  # fmt: skip
+    """Largest impedance (ohm) of a bus with a damping bank, (N,)."""
+    rates = network_rates(ohm, henry, bulk, esr, beside, damper, lossy)
+    low = 0.1 / np.sqrt(henry * (bulk + beside + damper))
+    high = 10.0 / np.sqrt(henry * np.maximum(beside, 0.03 * np.minimum(bulk, damper)))
+    share = np.linspace(0.0, 1.0, 2 * PEAK_SAMPLES)
+
+    def impedance(w: FloatArray) -> FloatArray:
+        bank = bank_impedance_ohm(w / (2.0 * np.pi), bulk[:, None], esr[:, None], beside[:, None])
+        source = ohm[:, None] + 1j * w * henry[:, None]
+        branch = lossy[:, None] + 1.0 / (1j * w * damper[:, None])
+        return np.abs(1.0 / (1.0 / bank + 1.0 / source + 1.0 / branch))
+
+    swept = low[:, None] * (high / low)[:, None] ** share
+    ringing = np.maximum(np.abs(np.linalg.eigvals(rates).imag), low[:, None])
+    w = np.concatenate([swept, ringing], axis=1)
+    at_peak = np.take_along_axis(w, impedance(w).argmax(axis=1)[:, None], axis=1)
+    step = (high / low)[:, None] ** (share[1] - share[0])
+    near = at_peak / step * step ** (2.0 * share)  # a second, closer look around the highest
+    return np.asarray(np.maximum(np.maximum(impedance(w).max(axis=1), impedance(near).max(axis=1)), ohm))
+
+
+def _undamped_peak_ohm(
+    ohm: FloatArray, henry: FloatArray, bulk: FloatArray, esr: FloatArray, beside: FloatArray
+) -> FloatArray:
+    """Largest impedance (ohm) of a bus without a damping bank, any shape."""
     low = 0.1 / np.sqrt(henry * (bulk + beside))
     high = 10.0 / np.sqrt(henry * np.maximum(beside, 0.03 * bulk))
     swept = low[..., None] * (high / low)[..., None] ** np.linspace(0.0, 1.0, PEAK_SAMPLES)

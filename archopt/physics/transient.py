@@ -12,6 +12,7 @@ from typing import NamedTuple
 import numpy as np
 
 from archopt.physics.arrays import FloatArray, FloatLike
+from archopt.physics.bus_network import network_rates
 
 #: Bounds that keep every quotient finite: slews in A/s, capacitance in F, bandwidth in rad/s.
 LEAST_SLEW = 1e-3
@@ -266,36 +267,64 @@ def release_v(
 
 
 def source_peak_ohm(
-    source_ohm: FloatLike, source_h: FloatLike, bulk_f: FloatLike, bulk_esr_ohm: FloatLike, input_f: FloatLike
-) -> FloatArray:
+    source_ohm: FloatLike, source_h: FloatLike, bulk_f: FloatLike, bulk_esr_ohm: FloatLike, input_f: FloatLike,
+    damper_f: FloatLike = 0.0, damper_ohm: FloatLike = 0.0,
+) -> FloatArray:  # fmt: skip
     """Largest deviation (V) for each ampere of a step drawn from a bus behind a voltage, R and L.
 
     Parameters
     ----------
     source_ohm, source_h : series resistance (ohm) and inductance (H) of the source
     bulk_f, bulk_esr_ohm : bulk bank (F, ohm)
-    input_f : capacitance without resistance beside it (F); all broadcast
+    input_f : capacitance without resistance beside it (F)
+    damper_f, damper_ohm : a damping bank beside them, 0 F where there is none; all broadcast
 
     Notes
     -----
-    The three modes of the circuit, read at times a tenth apart from the start to the second half period: the
-    crest is missed by less than 0.3 %. It ends at R.
+    The modes of the circuit, three or with a damping bank four, read at times a tenth apart from the start to the
+    second half period: the crest is missed by less than 0.3 %. It ends at R.
     """
-    ohm, henry, bulk, esr, beside = np.broadcast_arrays(
+    ohm, henry, bulk, esr, beside, damper, lossy = np.broadcast_arrays(
         np.maximum(source_ohm, LEAST_SOURCE_OHM), np.maximum(source_h, LEAST_SOURCE_H),
         np.maximum(bulk_f, LEAST_BANK_F), np.maximum(bulk_esr_ohm, LEAST_SOURCE_OHM),
-        np.maximum(input_f, LEAST_BANK_F),
+        np.maximum(input_f, LEAST_BANK_F), np.asarray(damper_f), np.maximum(damper_ohm, LEAST_SOURCE_OHM),
     )  # fmt: skip
+    found = damper > 0.0
+    if not found.any():
+        return _undamped_crest_ohm(ohm, henry, bulk, esr, beside)
+    out = np.empty(ohm.shape)
+    out[~found] = _undamped_crest_ohm(*(values[~found] for values in (ohm, henry, bulk, esr, beside)))
+    ohm, henry, bulk, esr, beside, damper, lossy = (
+        values[found] for values in (ohm, henry, bulk, esr, beside, damper, lossy)
+    )
+    rates = network_rates(ohm, henry, bulk, esr, beside, np.maximum(damper, LEAST_BANK_F), lossy)
+    settled = np.stack([np.ones_like(ohm), ohm, ohm, ohm], axis=-1)
+    slowest_s = 2.0 * np.pi * np.sqrt(henry * (bulk + beside + damper))
+    joined = 1.0 / (1.0 / esr + 1.0 / lossy)
+    out[found] = _crest_ohm(rates, settled, ohm, slowest_s, np.minimum(0.1 * joined * beside, 0.01 * slowest_s))
+    return out
+
+
+def _undamped_crest_ohm(
+    ohm: FloatArray, henry: FloatArray, bulk: FloatArray, esr: FloatArray, beside: FloatArray
+) -> FloatArray:
+    """Largest deviation (V) for each ampere of a step without a damping bank, any shape."""
     rates = np.zeros((*ohm.shape, 3, 3))  # of source current, bulk voltage, bus voltage
     rates[..., 0, 0], rates[..., 0, 2] = -ohm / henry, 1.0 / henry
     rates[..., 1, 1], rates[..., 1, 2] = -1.0 / (esr * bulk), 1.0 / (esr * bulk)
     rates[..., 2, 0] = -1.0 / beside
     rates[..., 2, 1], rates[..., 2, 2] = 1.0 / (esr * beside), -1.0 / (esr * beside)
     settled = np.stack([np.ones_like(ohm), ohm, ohm], axis=-1)
-    pole, mode = np.linalg.eig(rates)
-    share = np.linalg.solve(mode, -settled[..., None].astype(complex))[..., 0] * mode[..., 2, :]
     slowest_s = 2.0 * np.pi * np.sqrt(henry * (bulk + beside))
-    fastest_s = np.minimum(0.1 * esr * beside, 0.01 * slowest_s)
+    return _crest_ohm(rates, settled, ohm, slowest_s, np.minimum(0.1 * esr * beside, 0.01 * slowest_s))
+
+
+def _crest_ohm(
+    rates: FloatArray, settled: FloatArray, ohm: FloatArray, slowest_s: FloatArray, fastest_s: FloatArray
+) -> FloatArray:
+    """Largest deviation (V) of the bus, the last state, for each ampere of a step, from rest to the settled state."""
+    pole, mode = np.linalg.eig(rates)
+    share = np.linalg.solve(mode, -settled[..., None].astype(complex))[..., 0] * mode[..., -1, :]
     at_s = fastest_s[..., None] * (slowest_s / fastest_s)[..., None] ** np.linspace(0.0, 1.0, CREST_SAMPLES)
     deviation = ohm[..., None] + np.einsum("...k,...kt->...t", share, np.exp(pole[..., None] * at_s[..., None, :])).real
     peak: FloatArray = np.maximum(ohm, deviation.max(axis=-1))

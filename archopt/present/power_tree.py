@@ -67,7 +67,10 @@ def bus_line(bus: str, choices: Data) -> str:
         word = "between" if control == "follow_load" else "of"
         lower, upper = (choice_number(choices.get(f"{bus}.{end}_v")) for end in ("lower", "upper"))
         text += f" {word} {number(lower)} and {number(upper)} V"
-    return text + capacitors(choices, f"{bus}.bulk") + copper(choices, bus)
+    text += capacitors(choices, f"{bus}.bulk")
+    if str(choices.get(f"{bus}.damper", "none")) != "none":
+        text += f", damped by {times(choices.get(f'{bus}.damper_count'), choices.get(f'{bus}.damper'))}"
+    return text + copper(choices, bus)
 
 
 def rail_line(name: str, choices: Data, rail: Data | None) -> str:

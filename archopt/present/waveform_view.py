@@ -15,6 +15,7 @@ from archopt.model.bus_stability import LEAST_W
 from archopt.model.parameters import FloatArray
 from archopt.physics.averaged import LoadStep, RailCircuit, RailWave, rail_wave
 from archopt.physics.averaged_bus import BusCircuit, PowerTrain, bus_wave
+from archopt.physics.bus_network import damped_dip_ohm, joined_bank
 from archopt.physics.stability import least_capacitance_f
 from archopt.physics.transient import bus_dip_v, rail_droop_v, source_peak_ohm
 from archopt.present.amounts import fixed, number
@@ -215,9 +216,12 @@ def bus_view(waves: Waves, name: str, bus: int, states: tuple[int, int] | None) 
 def dip_of(circuit: BusCircuit, train: PowerTrain) -> float:
     """The closed form's dip at a train's last step, V."""
     step_w = max(train.after_w - train.before_w, 0.0) / max(train.steps, 1)
-    esr, peak, w, delay_s = circuit.bulk_esr_ohm, 0.0, circuit.bandwidth_rad_s, circuit.delay_s
+    w, delay_s, damper = circuit.bandwidth_rad_s, circuit.delay_s, (circuit.damper_f, circuit.damper_ohm)
+    bank = (circuit.bulk_f + circuit.input_f, circuit.bulk_esr_ohm, *damper)
+    esr, peak = float(joined_bank(*bank)[1]), float(damped_dip_ohm(*bank, w, delay_s))
     if not circuit.follows:
-        peak = float(source_peak_ohm(circuit.source_ohm, circuit.source_h, circuit.bulk_f, esr, circuit.input_f))
+        source = (circuit.source_ohm, circuit.source_h)
+        peak = float(source_peak_ohm(*source, circuit.bulk_f, circuit.bulk_esr_ohm, circuit.input_f, *damper))
         esr, w, delay_s = 0.0, 1e12, 0.0
     return float(
         bus_dip_v(step_w, circuit.bus_v, w, delay_s, circuit.capacitance_f, esr, train.after_w - step_w, peak)
@@ -227,6 +231,8 @@ def dip_of(circuit: BusCircuit, train: PowerTrain) -> float:
 def bank_facts(circuit: BusCircuit) -> tuple[tuple[str, str], ...]:
     """What holds the bus up and what feeds it."""
     bank = f"{number(circuit.bulk_f * 1e6, 4)} uF, {number(circuit.bulk_esr_ohm * 1e3, 3)} mohm"
+    if circuit.damper_f > 0.0:
+        bank += f", damped by {number(circuit.damper_f * 1e6, 4)} uF, {number(circuit.damper_ohm * 1e3, 3)} mohm"
     source = (
         f"follows at {number(circuit.bandwidth_rad_s * 1e-3 / (2 * np.pi), 3)} kHz after"
         f" {number(circuit.delay_s * 1e6, 3)} us"

@@ -121,8 +121,9 @@ def dips(
             converters.bandwidth_rad_s[index],
             converters.delay_s[index],
             hardware.bulk_f,
-            hardware.bulk_esr_ohm[..., None],
+            hardware.bulk_esr_ohm,
             mix_w,
+            hardware.damped_ohm,
         )
     )
 

@@ -253,6 +253,10 @@ class ProductMaker:
                 factors.append(self.pairs(self.layout.bus("pairs").start + bus, stack, feed))
                 bank = grid_of([self.bus_values("bulk", bus), self.bus_values("bulk_count", bus)])
                 factors.append(Factor(self.bus_columns(("bulk", "bulk_count"), bus), bank))
+                fields = ("damper", "damper_count")
+                columns = self.bus_columns(fields, bus)
+                lossy = self.tidied_bus(bus, fields, [self.bus_values(field, bus) for field in fields])
+                factors.append(Factor(columns, lossy))
         return factors
 
     def pairs(self, column: int, stack: int, feed: tuple[int, ...]) -> Factor:

@@ -116,10 +116,13 @@ def bus_case(waves: Waves, p: int, bus: int, band: int) -> BusCircuit:
         henry = ohm / w
         volts = float(hardware.set_v[p, waves.jump_at[band], bus])
     beside = float(hardware.input_f[p, bus])
+    damper_f = float(np.broadcast_to(hardware.damper_f, hardware.bulk_f.shape)[p, bus, band])
     return BusCircuit(
         bus_v=volts,
-        bulk_f=float(hardware.bulk_f[p, bus, band]) - beside,
-        bulk_esr_ohm=float(hardware.bulk_esr_ohm[p, bus]),
+        bulk_f=float(hardware.bulk_f[p, bus, band]) - beside - damper_f,
+        bulk_esr_ohm=float(hardware.main_esr_ohm[p, bus]),
+        damper_f=damper_f,
+        damper_ohm=float(hardware.damper_ohm[p, bus]),
         input_f=beside,
         bandwidth_rad_s=w,
         delay_s=0.0 if fixed else float(converters.delay_s[index]),

@@ -162,6 +162,7 @@ def separable() -> Problem:
         "pin": {
             "bus_a.converter": "wide_bus_600w", "bus_a.count": 1, "bus_a.fewest": "all", "bus_a.nominal_v": 12.0,
             "bus_a.bulk": "polymer_470u_16v_can", "bus_a.bulk_count": 32, "bus_a.pairs": 4,
+            "bus_a.damper": "none",
         },
     }  # fmt: skip
     loaded = loaded_with(content)

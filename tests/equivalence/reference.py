@@ -50,6 +50,8 @@ class Bus:
     running: list[int]  # by band, the fall-back last
     pairs: int
     held_f: list[float]  # by band, effective at its voltage, with the stages' own inputs
+    damper_f: list[float]
+    damper_ohm: float
     stored_f: float  # at most
     esr_ohm: float
     rails: list[int]
@@ -178,13 +180,19 @@ class Reference:
         biased_v = [top_v if row.kind == "fixed_ratio" else v for v in volts]
         banks = [self.capacitor(get("bulk"), int(get("bulk_count")), v) for v in biased_v]
         _, stored, esr = banks[0]
+        damper, damper_ohm = [0.0] * len(volts), 0.0
+        if get("damper") != "none":
+            lossy = [self.capacitor(get("damper"), int(get("damper_count")), v) for v in biased_v]
+            damper, damper_ohm = [held for held, _, _ in lossy], lossy[0][2]
+            stored += lossy[0][1]
         own = sum(
             getattr(self.nets[r].row, "input_capacitance_uf", 0.0) * 1e-6 * self.nets[r].phases for r in rails
         )
         return Bus(
             name=name, row=row, units=int(get("count")), nominal_v=nominal, volts=volts,
             running=[*(max(n, 1) for n in self.units[k]), int(get("count"))], pairs=int(get("pairs")),
-            held_f=[held + own for held, _, _ in banks], stored_f=stored + own, esr_ohm=esr, rails=rails,
+            held_f=[held + own for held, _, _ in banks], damper_f=damper,
+            damper_ohm=damper_ohm, stored_f=stored + own, esr_ohm=esr, rails=rails,
         )  # fmt: skip
 
     def point(self, net: Net, running: int, vin: float, amps: float, ambient: float) -> Point:
@@ -309,13 +317,39 @@ class Reference:
         return float(
             bus_dip_v(
                 self.steps_w[bus.name][band], volts, row.crossover_khz * 1e3 * TWO_PI, row.delay_us * 1e-6,
-                bus.held_f[band], bus.esr_ohm, self.standing_w(bus, band),
+                bus.held_f[band] + bus.damper_f[band], self.joined_ohm(bus, band), self.standing_w(bus, band),
+                self.shared_ohm(bus, band),
             )
         )  # fmt: skip
 
+    def joined_ohm(self, bus: Bus, band: int) -> float:
+        """Return the resistance of bulk bank and damper once they share the current as their capacitances are."""
+        share = bus.damper_f[band] / (bus.held_f[band] + bus.damper_f[band])
+        return bus.esr_ohm * (1.0 - share) ** 2 + bus.damper_ohm * share**2
+
+    def shared_ohm(self, bus: Bus, band: int) -> float:
+        """Return the largest dip an ampere makes at half, once and twice the time the banks have drifted apart in."""
+        main, damper = bus.held_f[band], bus.damper_f[band]
+        if damper == 0.0:
+            return 0.0
+        w, dead = bus.row.crossover_khz * 1e3 * TWO_PI, bus.row.delay_us * 1e-6
+        ohms, end = bus.esr_ohm + bus.damper_ohm, self.joined_ohm(bus, band)
+        rate = (main + damper) / (main * damper * ohms)
+        if abs(rate - w) < 1e-3 * w:
+            rate = 1.001 * w
+        start = bus.esr_ohm * bus.damper_ohm / ohms
+        found = []
+        for times in (0.5, 1.0, 2.0):
+            after = times * math.log(rate / w) / (rate - w)
+            left, gone = math.exp(-w * after), math.exp(-rate * after)
+            apart = gone * math.exp(-rate * dead) - w * (left - gone) / (rate - w)
+            charge = dead + (1.0 - left) / w
+            found.append(charge / (main + damper) + end * left + (start - end) * apart)
+        return max(found)
+
     def solve(self, s: int) -> StateResult:
         """Return the fixed point of one state."""
-        states, supply = self.states, self.study.supply
+        states = self.states
         vin0 = float(states.input_v[s])
         ohm = self.path.resistance_mohm * 1e-3
         ambient, band = float(states.ambient_degc[s]), int(states.band[s])
@@ -511,6 +545,11 @@ class Reference:
                 self.part("capacitors", self.choices[f"{bus.name}.bulk"]),
                 int(self.choices[f"{bus.name}.bulk_count"]),
             )
+            if self.choices[f"{bus.name}.damper"] != "none":
+                add(
+                    self.part("capacitors", self.choices[f"{bus.name}.damper"]),
+                    int(self.choices[f"{bus.name}.damper_count"]),
+                )
         for row in (self.bias, self.supervisor, self.path):
             if row is not None:
                 add(row, 1)
