@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
+from dataclasses import asdict
 from pathlib import Path
 from typing import Protocol
 
@@ -24,15 +25,24 @@ from archopt.present.record import CheckResult, Data, FrontRecord
 from archopt.present.run_record import package_versions, run_record
 from archopt.search import checkpoint
 from archopt.search.checkpoint import Keeper
+from archopt.search.driver import crew_for
 from archopt.search.outcome import Progress, SearchResult
-from archopt.search.published import BATCH, Published, infeasible, publish
+from archopt.search.polish import polished
+from archopt.search.published import BATCH, PUBLISHED, Published, infeasible, publish
 from archopt.search.replicates import EARLY, Settings, facts_of, search_all, spread
 from archopt.trade.adaptive_limits import adaptive_limits
+from archopt.trade.afresh import Boards, search_afresh
 from archopt.trade.answers import question
 from archopt.trade.cautions import NOT_MODELLED, cautions
 from archopt.trade.money import lifetime_costs, payback_years
 from archopt.trade.roles import assign_roles
 from archopt.trade.waveforms import Settled, settled
+
+POLISH_SHARE = 8
+"""Evaluations polishing may take, as a multiple of those of the search; what it does beside counts too."""
+
+LEAST_POLISHED = 2_000
+"""Evaluations below which a search is a first look, not worth polishing."""
 
 SETTLED_GENERATIONS = 60
 """Searches shorter than this are said to be unfinished: the hypervolume still grows by percents."""
@@ -84,10 +94,12 @@ def solve(
     seed: int | None = None,
     evaluations: int | None = None,
     replicates: int = 1,
+    workers: int = 1,
     progress: Told | None = None,
     stop: Callable[[], str] | None = None,
     keep_in: Path | None = None,
     resume: bool = False,
+    afresh: bool = False,
 ) -> Front:
     """Search a study and return its front, recomputed by direct physics and questioned.
 
@@ -96,10 +108,12 @@ def solve(
     loaded : the study
     seed, evaluations : in place of the study's own
     replicates : searches with seeds one after another, merged; each may try that many evaluations
+    workers : processes to search with; what is found is the same for any number
     progress : told how far it is
     stop : asked between generations; why to stop, or nothing
     keep_in : directory in which the run is put by now and then; a result written there takes its place
     resume : go on from the run put by there, if there is one
+    afresh : search every baseline too, each with the same budget
 
     Raises
     ------
@@ -123,22 +137,35 @@ def solve(
     )
     facts = facts_of(problem, settings, package_versions())
     keeper = None if keep_in is None else Keeper(keep_in, facts)
-    searched = search_all(
-        evaluator,
-        settings,
-        seeds_rows=None if today is None else today[None],
-        progress=None if progress is None else lambda state: tell(progress, state),
-        stop=None if stop is None else lambda: bool(stop()),
-        keeper=keeper,
-        resume=unfinished_run(keep_in, facts) if resume and keep_in is not None else None,
-    )
-    found = searched.together
+    with crew_for(evaluator, settings.population, workers) as crew:
+        searched = search_all(
+            evaluator,
+            settings,
+            seeds_rows=None if today is None else today[None],
+            progress=None if progress is None else lambda state: tell(progress, state),
+            stop=None if stop is None else lambda: bool(stop()),
+            keeper=keeper,
+            resume=unfinished_run(keep_in, facts) if resume and keep_in is not None else None,
+            crew=crew,
+        )
+        clock.note("search")
+        found, polish = searched.together, None
+        if len(found.rows) and found.ended not in EARLY and settings.evaluations >= LEAST_POLISHED:
+            say(progress, "polish")
+            polish = polished(
+                crew,
+                found,
+                budget=POLISH_SHARE * settings.evaluations,
+                most=PUBLISHED,
+                stop=None if stop is None else lambda: bool(stop()),
+            )
+            found = polish.found
+            clock.note("polish")
     reason = stop() if stop is not None and found.ended == "stopped" else ""
     if not len(found.rows):
         raise nothing_found(found)
-    clock.note("search")
     say(progress, "direct physics")
-    published = publish(evaluator, found)
+    published = publish(evaluator, found, None if polish is None else polish.rows)
     clock.note("direct physics")
     say(progress, "explaining")
     designs = explain_published(evaluator, published.rows)
@@ -156,6 +183,18 @@ def solve(
     tell_adaptive_limits(problem, published.rows, designs)
     asked = question(evaluator, found, published, designs, today)
     clock.note("questions")
+    compared: Data = {}
+    if afresh:
+        compared = search_afresh(
+            problem,
+            settings,
+            found,
+            Boards(published.rows, published.objectives, found.evaluations),
+            today=today,
+            progress=None if progress is None else lambda name, state: tell(progress, state, name),
+            stop=None if stop is None else lambda: bool(stop()),
+        ).as_dict()
+        clock.note("baselines searched afresh")
     apart = spread(searched, published.rows)
     record = FrontRecord(
         designs=designs,
@@ -174,9 +213,14 @@ def solve(
                 "checked_in_time": len({finding.row for finding in in_time.findings}),
                 "dropped_in_time": len(in_time.failed),
                 "seconds": found.seconds,
+                "jobs_here": crew.counts.here,
+                "jobs_in_other_processes": crew.counts.there,
+                "workers_lost": crew.counts.lost,
             },
             timings_s=clock.times,
             stop_reason=reason or found.ended,
+            workers=workers,
+            polish=None if polish is None else asdict(polish.statement),
             same_bytes=found.ended not in EARLY,
             replicates=None if apart is None else apart.as_dict(),
             interrupted=found.ended == "interrupted" or reason == "interrupted",
@@ -185,6 +229,7 @@ def solve(
         merged=len(found.rows) - published.recomputed,
         baselines=asked.baselines,
         gains=asked.gains,
+        afresh=compared,
         losing=asked.losing,
         leverage=asked.leverage,
         not_modelled=list(NOT_MODELLED),
@@ -193,6 +238,7 @@ def solve(
             *unfinished(found),
             *ended_early(found, reason, keeper),
             *([] if apart is None else [apart.words()]),
+            *([] if polish is None else [polish.statement.sentence()]),
             *asked.notes,
         ],
     )
@@ -266,10 +312,10 @@ def say(progress: Told | None, stage: str) -> None:
         progress(stage=stage)
 
 
-def tell(progress: Told, state: Progress) -> None:
+def tell(progress: Told, state: Progress, name: str = "search") -> None:
     """Pass a search's progress on."""
     progress(
-        stage="search" if state.replicates == 1 else f"search {state.replicate + 1} of {state.replicates}",
+        stage=name if state.replicates == 1 else f"{name} {state.replicate + 1} of {state.replicates}",
         generation=state.generation,
         evaluations=state.evaluations,
         feasible=state.feasible,

@@ -10,24 +10,24 @@ changes of many rails at a time.
 from __future__ import annotations
 
 import hashlib
-from dataclasses import dataclass, replace
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from archopt.model.evaluator import Evaluator
+from archopt.model.cost import bill
 from archopt.model.space import Designs
 from archopt.physics.arrays import FloatArray, IntArray
-from archopt.search.changes import SingleChanges
-from archopt.search.completion import Completion
 from archopt.search.conditions import Conditions, conditions_of, first_conditions
-from archopt.search.fold import Fold, promising
-from archopt.search.genome import Genome, energy_price_scale
+from archopt.search.genome import energy_price_scale
+from archopt.search.jobs import EVALUATION_ARRAYS, Arrays, Desk, evaluated, evaluation_of, folded
 from archopt.search.outcome import SearchResult
 from archopt.search.record import Record
-from archopt.search.screen import TIE, Screen, decided_cost
+from archopt.search.screen import TIE
+from archopt.search.workers import Crew
 
-TOGETHER = 8  # designs gone through at a time
-FOLD_MOST = 160  # folded boards evaluated around a few designs
+TOGETHER, GROUPS = 4, 4  # designs a job, and jobs handed out at a time
+FOLDED_TOGETHER = 2
 UNTRIED, SCREENED, CLOSED = 0, 1, 2
 COARSER, LEAST_FRONT = 4, 3
 CONSIDERED_AN_EVALUATION = 40  # changes listed and ruled out in the time of an evaluation
@@ -56,14 +56,14 @@ class PolishStatement:
         """Return what may be claimed, in a sentence."""
         if self.closed:
             return (
-                f"No single change of one choice of these designs gives a feasible design that is better in every"
-                f" objective: {self.neighbours_considered:,} changes of {self.designs} designs were gone through,"
-                f" {self.evaluated:,} of them evaluated, the others ruled out by their exact cost or limits;"
-                f" {self.to_accuracy}."
+                f"No change of a single choice of these designs gives a feasible design that is better in one objective"
+                f" and no worse in another: in getting there {self.neighbours_considered:,} changes were gone through"
+                f" and {self.evaluated:,} designs evaluated, and in the end every change of the {self.designs} designs"
+                f" that its exact cost or limits do not rule out; {self.to_accuracy}."
             )
         return (
-            f"Single changes of {self.remaining} of {self.designs} designs were not all tried: a change of one choice"
-            f" may still improve those; {self.to_accuracy}."
+            f"Of {self.remaining} of {self.designs} designs not every change of a single choice was tried: one may"
+            f" still better them; {self.to_accuracy}."
         )
 
 
@@ -72,33 +72,40 @@ TO_ACCURACY = "to the accuracy of the loss tables, before direct physics compute
 
 @dataclass
 class Polish:
-    """One polishing in progress. status: digest of a decided row -> how far its changes were gone through."""
+    """One polishing in progress.
 
-    evaluator: Evaluator
+    record: what is known, its archive is what is polished. budget: evaluations allowed. most: designs published.
+    status: digest of a decided row -> how far its changes were gone through. known, folded: rows evaluated, and
+    rows folded around, here. asked_to_stop: asked now and then.
+    """
+
+    crew: Crew
     record: Record
-    batch: int
     budget: int
     most: int
-
-    def __post_init__(self) -> None:
-        self.genome = Genome(self.evaluator.problem)
-        self.completion = Completion(self.evaluator, self.genome)
-        self.folding = Fold(self.completion)
-        self.changes = SingleChanges(self.evaluator.problem)
-        self.screen = Screen(self.folding)
-        self.status: dict[bytes, int] = {}
-        self.known: set[bytes] = set()
-        self.folded: set[bytes] = set()
-        self.considered = self.by_cost = self.by_limits = self.screened = self.evaluated = self.improved = 0
+    asked_to_stop: Callable[[], bool] | None = None
+    status: dict[bytes, int] = field(default_factory=dict)
+    known: set[bytes] = field(default_factory=set)
+    folded: set[bytes] = field(default_factory=set)
+    considered: int = 0
+    by_cost: int = 0
+    by_limits: int = 0
+    screened: int = 0
+    evaluated: int = 0
+    improved: int = 0
 
     def run(self) -> None:
         """Polish until nothing is found or the budget is spent: a coarser front first, which clears much away."""
         for most in (max(self.most // COARSER, LEAST_FRONT), self.most):
-            self.fold_around(self.front(most))
-            while self.told(most) == UNTRIED and self.spent < self.budget:
+            self.fold_around(most)
+            while self.told(most) == UNTRIED and not self.over():
                 self.go_through(most, UNTRIED)
-        while (status := self.told(self.most)) < CLOSED and self.spent < self.budget:
+        while (status := self.told(self.most)) < CLOSED and not self.over():
             self.go_through(self.most, status)
+
+    def over(self) -> bool:
+        """Tell whether the budget is spent, or somebody stops."""
+        return self.spent >= self.budget or (self.asked_to_stop is not None and self.asked_to_stop())
 
     @property
     def spent(self) -> int:
@@ -122,12 +129,12 @@ class Polish:
         """Try the changes of the designs of the front at a status; those dominated meanwhile are left alone."""
         rows = self.record.archive.rows[self.front(most)]
         rows = rows[self.status_of(rows) == status]
-        for start in range(0, len(rows), TOGETHER):
-            if self.spent >= self.budget:
+        for start in range(0, len(rows), TOGETHER * GROUPS):
+            if self.over():
                 return
             archive = self.record.archive
             held = {digest(row): k for k, row in enumerate(archive.rows)}
-            some = [row for row in rows[start : start + TOGETHER] if digest(row) in held]
+            some = [row for row in rows[start : start + TOGETHER * GROUPS] if digest(row) in held]
             if not some:
                 continue
             objectives = archive.objectives[[held[digest(row)] for row in some]]
@@ -137,52 +144,31 @@ class Polish:
 
     def try_changes(self, rows: IntArray, objectives: FloatArray, *, screened: bool) -> None:
         """Evaluate the changes of a few designs that are not ruled out, then the best of them taken together."""
-        seen = self.conditions(rows) if screened else None
-        kept = []
-        for k, row in enumerate(rows):
-            changed, rail = self.changes.of(row[: self.changes.layout.choices])
-            sorted_ = self.screen.sort(
-                row, objectives[k], None if seen is None else one_of(seen, k), changed, rail
-            )
-            out = sorted_.costs_more | sorted_.impossible | sorted_.not_worth
-            self.considered += len(changed)
-            self.by_cost += int(sorted_.costs_more.sum())
-            self.by_limits += int(sorted_.impossible.sum())
-            self.screened += int(sorted_.not_worth.sum())
-            kept.append(changed[~out])
-        owner = np.repeat(np.arange(len(rows)), [len(each) for each in kept])
-        found = self.try_rows(np.concatenate(kept), objectives[owner])
-        width = self.changes.layout.choices
-        together = [
-            both
-            for k in range(len(rows))
-            if (both := together_of(rows[k, :width], objectives[k], kept[k], found[owner == k])) is not None
-        ]
+        how = np.array([int(screened)])
+        parts = [slice(start, start + TOGETHER) for start in range(0, len(rows), TOGETHER)]
+        answers = self.crew.map(changes_left, [(rows[part], objectives[part], how) for part in parts])
+        together = []
+        for part, (decided, choices, owner, counts) in zip(parts, answers, strict=True):
+            self.count(counts)
+            found = self.evaluate(np.asarray(decided, dtype=np.int64))
+            for k in range(len(rows[part])):
+                own = np.flatnonzero(owner == k)
+                changed = np.asarray(choices[own], dtype=np.int64)
+                both = together_of(rows[part][k][: changed.shape[1]], objectives[part][k], changed, found[own])
+                if both is not None:
+                    together.append((both, objectives[part][k, 1]))
         if together:
-            self.try_rows(np.array([each[0] for each in together]), np.array([each[1] for each in together]))
+            given = (np.array([each[0] for each in together]), np.array([each[1] for each in together]))
+            decided, _ = self.crew.take(self.crew.submit(no_dearer, *given))
+            self.evaluate(np.asarray(decided, dtype=np.int64))
 
-    def try_rows(self, choices: IntArray, objectives: FloatArray) -> FloatArray:
-        """Decide and evaluate choices (n, C) that cost no more than their designs; return objectives (n, 3).
-
-        inf where a row costs more, is infeasible, or was evaluated before.
-        """
-        undecided = np.zeros((len(choices), self.evaluator.problem.layout.width), dtype=np.int64)
-        undecided[:, : choices.shape[1]] = choices
-        decided = self.decide(undecided)
-        dear = decided_cost(self.screen, decided) > objectives[:, 1] * (1.0 + TIE)
-        self.by_cost += int(dear.sum())
-        out = np.full((len(choices), 3), np.inf)
-        out[~dear] = self.evaluate(decided[~dear])
-        return out
-
-    def decide(self, rows: IntArray) -> IntArray:
-        """Return rows decided in batches of one fixed shape."""
-        parts = []
-        for start in range(0, len(rows), self.batch):
-            real = rows[start : start + self.batch]
-            padded = real[np.minimum(np.arange(self.batch), len(real) - 1)]
-            parts.append(self.evaluator.decide(padded)[: len(real)])
-        return np.concatenate(parts) if parts else rows
+    def count(self, counts: FloatArray | IntArray) -> None:
+        """Add what a job considered, ruled out by cost and by limits, and screened."""
+        considered, by_cost, by_limits, screened = (int(each) for each in counts)
+        self.considered += considered
+        self.by_cost += by_cost
+        self.by_limits += by_limits
+        self.screened += screened
 
     def evaluate(self, rows: IntArray) -> FloatArray:
         """Evaluate decided rows, once each, and offer what is feasible to the archive; return objectives (n, 3).
@@ -196,36 +182,34 @@ class Polish:
             if name not in self.known:
                 self.known.add(name)
                 fresh.append(k)
-        for start in range(0, len(fresh), self.batch):
-            index = np.array(fresh[start : start + self.batch])
-            padded = rows[index[np.minimum(np.arange(self.batch), len(index) - 1)]]
-            found = self.evaluator.evaluate(padded)
-            self.improved += self.record.add(found, len(index))
-            feasible = found.violation[: len(index)] <= 0.0
-            out[index[feasible]] = found.objectives[: len(index)][feasible]
+        size = self.crew.desk.size
+        parts = [np.array(fresh[start : start + size]) for start in range(0, len(fresh), size)]
+        for part, answer in zip(parts, self.crew.map(evaluated, [(rows[part],) for part in parts]), strict=True):
+            found = evaluation_of(answer)
+            self.improved += self.record.add(found, len(part))
+            out[part[found.feasible]] = found.objectives[found.feasible]
         self.evaluated += len(fresh)
         return out
 
-    def conditions(self, rows: IntArray) -> Conditions:
-        """Return what the rails of decided designs find on their buses."""
-        one = np.ones(len(rows))
-        plan = self.genome.decode(self.genome.encode(rows, one, 0.02 * one, np.zeros(len(rows), dtype=np.int64)))
-        designs = Designs(self.evaluator.problem.layout, rows)
-        return conditions_of(self.evaluator, designs, first_conditions(self.evaluator, plan))
-
-    def fold_around(self, front: IntArray) -> None:
+    def fold_around(self, most: int) -> None:
         """Fold around every design of the front, a few at a time, and evaluate what promises to enter the archive."""
-        rows, objectives = self.record.archive.rows[front], self.record.archive.objectives[front]
+        archive = self.record.archive
+        places = self.front(most)
+        rows, objectives = archive.rows[places], archive.objectives[places]
         fresh = np.flatnonzero([digest(row) not in self.folded for row in rows])
-        for start in range(0, len(fresh), TOGETHER):
-            if self.spent >= self.budget:
+        for start in range(0, len(fresh), FOLDED_TOGETHER * GROUPS):
+            if self.over():
                 return
-            some = fresh[start : start + TOGETHER]
+            some = fresh[start : start + FOLDED_TOGETHER * GROUPS]
             self.folded.update(digest(row) for row in rows[some])
-            folded, predicted = self.folding.propose(rows[some], objectives[some])
-            chosen = promising(predicted, self.record.archive.objectives, FOLD_MOST)
-            if len(chosen):
-                self.evaluate(self.decide(folded[chosen]))
+            parts = [some[k : k + FOLDED_TOGETHER] for k in range(0, len(some), FOLDED_TOGETHER)]
+            there = archive.objectives
+            for answer in self.crew.map(folded, [(rows[part], objectives[part], there) for part in parts]):
+                found = evaluation_of(answer[-EVALUATION_ARRAYS:])
+                if len(found.rows):
+                    self.improved += self.record.add(found, len(found.rows))
+                    self.evaluated += len(found.rows)
+                    self.known.update(digest(row) for row in found.rows)
 
     def statement(self) -> PolishStatement:
         """Return what was done."""
@@ -254,31 +238,35 @@ class Polished:
     statement: PolishStatement
 
 
-def polished(evaluator: Evaluator, found: SearchResult, *, batch: int, budget: int, most: int) -> Polished:
+def polished(
+    crew: Crew, found: SearchResult, *, budget: int, most: int, stop: Callable[[], bool] | None = None
+) -> Polished:
     """Return a search's result polished.
 
-    The same result, batch and budget give the same designs. An interrupt from the keyboard ends polishing and keeps
-    what it found.
+    The same result, desk and budget give the same designs for any number of workers; ``stop`` is outside that promise.
+    An interrupt from the keyboard ends polishing and keeps what it found.
 
     Parameters
     ----------
-    batch : designs evaluated at a time
+    crew : does the jobs
     budget : evaluations allowed, other work counted as evaluations; the last few designs are still finished
     most : designs published
     """
-    problem = evaluator.problem
+    problem = crew.desk.evaluator.problem
     record = Record.of(problem, energy_price_scale(problem))
     record.archive.add(found.rows, found.objectives)
     record.fixed.add(found.fixed_rows, found.fixed_objectives)
     record.kinds = dict(found.kinds)
-    polish = Polish(evaluator, record, batch, budget, most)
+    polish = Polish(crew, record, budget, most, stop)
+    ended = found.ended
     if len(found.rows):
         try:
             polish.run()
+            if stop is not None and polish.spent < budget and stop():
+                ended = "stopped"
         except KeyboardInterrupt:
-            found = replace(found, ended="interrupted")
+            ended = "interrupted"
     archive = record.archive
-    front = archive.rows[polish.front(most)] if len(archive) else archive.rows
     better = replace(
         found,
         rows=archive.rows,
@@ -286,13 +274,59 @@ def polished(evaluator: Evaluator, found: SearchResult, *, batch: int, budget: i
         fixed_rows=record.fixed.rows,
         fixed_objectives=record.fixed.objectives,
         kinds=dict(sorted(record.kinds.items())),
+        ended=ended,
     )
-    return Polished(better, front, polish.statement())
+    return Polished(better, archive.rows[polish.front(most)], polish.statement())
+
+
+def changes_left(desk: Desk, rows: IntArray, objectives: FloatArray, how: IntArray) -> Arrays:
+    """Job: list the changes of a few decided designs that may dominate them, decided.
+
+    how (1,): 1 to screen them to first order too. The answer: decided rows, their choices before, the place of the
+    design each belongs to, and how many were considered, ruled out by cost and by limits, and screened.
+    """
+    width = desk.changes.layout.choices
+    seen = conditions_at(desk, rows) if how[0] else None
+    kept, counts = [], np.zeros(4, dtype=np.int64)
+    for k, row in enumerate(rows):
+        changed, rail = desk.changes.of(row[:width])
+        out = desk.screen.sort(row, objectives[k], None if seen is None else one_of(seen, k), changed, rail)
+        counts += [len(changed), out.costs_more.sum(), out.impossible.sum(), out.not_worth.sum()]
+        kept.append(changed[~(out.costs_more | out.impossible | out.not_worth)])
+    owner = np.repeat(np.arange(len(rows)), [len(each) for each in kept])
+    choices = np.concatenate(kept)
+    decided, place = no_dearer(desk, choices, objectives[owner, 1])
+    counts[1] += len(choices) - len(place)
+    here = np.asarray(place, dtype=np.int64)
+    return decided, choices[here], owner[here], counts
+
+
+def no_dearer(desk: Desk, choices: IntArray, cost: FloatArray) -> Arrays:
+    """Job: decide choices (n, C) and return those rows that cost no more than ``cost`` (n,), and their places."""
+    layout = desk.evaluator.problem.layout
+    parts = []
+    for start in range(0, len(choices), desk.size):
+        index = np.arange(start, min(start + desk.size, len(choices)))
+        padded = index[np.minimum(np.arange(desk.size), len(index) - 1)]
+        undecided = np.zeros((desk.size, layout.width), dtype=np.int64)
+        undecided[:, : choices.shape[1]] = choices[padded]
+        parts.append(desk.evaluator.decide(undecided)[: len(index)])
+    rows = np.concatenate(parts) if parts else np.zeros((0, layout.width), dtype=np.int64)
+    place = np.flatnonzero(bill(desk.evaluator.problem, Designs(layout, rows)).total <= cost * (1.0 + TIE))
+    return rows[place], place
+
+
+def conditions_at(desk: Desk, rows: IntArray) -> Conditions:
+    """Return what the rails of decided designs find on their buses."""
+    one = np.ones(len(rows))
+    plan = desk.genome.decode(desk.genome.encode(rows, one, 0.02 * one, np.zeros(len(rows), dtype=np.int64)))
+    designs = Designs(desk.evaluator.problem.layout, rows)
+    return conditions_of(desk.evaluator, designs, first_conditions(desk.evaluator, plan))
 
 
 def together_of(
     choices: IntArray, objectives: FloatArray, changed: IntArray, found: FloatArray
-) -> tuple[IntArray, FloatArray] | None:
+) -> IntArray | None:
     """Return a design (C,) with all its changes (n, C) that dominate it made together, the largest gains first.
 
     Of changes of one choice the first counts. None where fewer than two can be made.
@@ -305,7 +339,7 @@ def together_of(
         if (row[differs] == choices[differs]).all():
             row[differs] = changed[k][differs]
             made += 1
-    return (row, objectives) if made > 1 else None
+    return row if made > 1 else None
 
 
 def digest(row: IntArray) -> bytes:

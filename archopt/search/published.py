@@ -31,8 +31,10 @@ class Published:
         return replace(self, rows=self.rows[index], objectives=self.objectives[index])
 
 
-def publish(evaluator: Evaluator, found: SearchResult) -> Published:
+def publish(evaluator: Evaluator, found: SearchResult, picked: IntArray | None = None) -> Published:
     """Return the archive thinned, recomputed by direct physics with its stored decisions, and filtered again.
+
+    picked : decided rows that were thinned already, in place of the archive's
 
     Raises
     ------
@@ -40,9 +42,10 @@ def publish(evaluator: Evaluator, found: SearchResult) -> Published:
     """
     if not len(found.rows):
         raise infeasible(found)
-    thinned = Archive(found.rows.shape[1])
-    thinned.add(found.rows, found.objectives)
-    picked = thinned.rows[thinned.thin(limit=PUBLISHED)]
+    if picked is None:
+        thinned = Archive(found.rows.shape[1])
+        thinned.add(found.rows, found.objectives)
+        picked = thinned.rows[thinned.thin(limit=PUBLISHED)]
     exact = Archive(found.rows.shape[1])
     dropped = 0
     for start in range(0, len(picked), BATCH):

@@ -172,8 +172,3 @@ class Screen:
         legal = (grid >= rows.need_v[row, place]) & (grid <= rows.high_v[row, place])
         on_a_bus = (feed >= BUS_A) & (feed < PARENT)
         return np.where(on_a_bus & ~legal.all(axis=1), np.inf, kwh)
-
-
-def decided_cost(screen: Screen, rows: IntArray) -> FloatArray:
-    """Return the exact cost of decided rows, (n,)."""
-    return np.asarray(bill(screen.problem, Designs(screen.problem.layout, rows)).total)
