@@ -63,12 +63,12 @@ class CopperHeat:
     def plane_rise_k(self, rail_a: FloatArray, bias_a: FloatArray) -> FloatArray:
         """Return the rise of both planes, (P, S, 2) K, from stage currents (P, S, R) and the bias supply's (P, S)."""
         planes, on_bus = self.problem.planes, self.hardware.on_bus
-        load = np.zeros((*bias_a.shape, 2))
+        load = np.zeros((len(bias_a), 2, bias_a.shape[1]))
         for bus in range(2):
             if not on_bus[:, bus].any():
                 continue
             through = np.einsum("psr,cr->psc", rail_a * on_bus[:, bus, None], planes.place_share[bus])
             if bus == 0:
                 through += bias_a[..., None] * planes.place_bias[bus]
-            load[..., bus] = (through / np.maximum(self.plane_limit_a[:, None, bus], 1e-12)).max(axis=2)
-        return rise_k(self.problem, load)
+            load[:, bus] = (through / np.maximum(self.plane_limit_a[:, None, bus], 1e-12)).max(axis=2)
+        return rise_k(self.problem, load).transpose(0, 2, 1)
