@@ -6,6 +6,7 @@ import re
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
+from enum import StrEnum
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -20,6 +21,13 @@ if TYPE_CHECKING:
     from archopt.present.front import Front
 
 RUNS = Path("runs")
+
+
+class Baselines(StrEnum):
+    """What a bus that follows the load is compared with."""
+
+    hardware = "hardware"
+    full = "full"
 
 
 def solve_command(
@@ -43,6 +51,17 @@ def solve_command(
     replicates: Annotated[
         int, typer.Option(min=1, max=100, metavar="N", help="Search N times, one seed after another, and merge.")
     ] = 1,
+    baselines: Annotated[
+        Baselines,
+        typer.Option(
+            help="What a moving bus is compared with: the same hardware held at other voltages, or also boards"
+            " searched afresh for each way to run the bus, which takes five to six times as long.",
+        ),
+    ] = Baselines.hardware,
+    workers: Annotated[
+        int | None,
+        typer.Option(min=1, max=64, metavar="N", help="Processes to search with. [default: the processors, 4 at most]"),
+    ] = None,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress, no tables; only the files.")] = False,
     replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier result in DIR.")] = False,
     resume: Annotated[
@@ -59,7 +78,10 @@ def solve_command(
     from archopt.present.progress import SearchProgress
     from archopt.present.tables import console_for
     from archopt.present.terminal import print_front
+    from archopt.search.workers import default_workers
 
+    if baselines is Baselines.full and seconds is not None:
+        raise typer.BadParameter("searches to compare need the same budget: give --evaluations, not --seconds")
     loaded = workflow.load(study)
     place = default_place(loaded.study.name) if out is None else out
     check_place(place, replace=replace, resume=resume)
@@ -70,8 +92,9 @@ def solve_command(
     )
     with stop.on_interrupt(), progress, put_by_only_while_unfinished(place, stop):
         front = workflow.solve(
-            loaded, seed=seed, evaluations=evaluations, replicates=replicates, progress=progress, stop=stop,
-            keep_in=place, resume=resume,
+            loaded, seed=seed, evaluations=evaluations, replicates=replicates, workers=workers or default_workers(),
+            progress=progress, stop=stop,
+            keep_in=place, resume=resume, afresh=baselines is Baselines.full,
         )  # fmt: skip
     place = write_or_aside(front, place, replace=replace, unfinished=not front.record.run.get("same_bytes", True))
     if as_json:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -14,39 +15,78 @@ from archopt.errors import OutputError
 from archopt.model.evaluator import Evaluation, Evaluator
 from archopt.model.space import BUS_FIELDS
 from archopt.physics.arrays import FloatArray, IntArray
-from archopt.search.completion import Completion
-from archopt.search.consolidate import dropped_plans, worth
 from archopt.search.engine import Engine, generator_from_words, generator_words
-from archopt.search.fold import Fold, promising
-from archopt.search.genome import LEAST_COPPER, LEAST_PRICE, MOST_COPPER, MOST_PRICE, Genome, Plan
+from archopt.search.genome import LEAST_COPPER, LEAST_PRICE, MOST_COPPER, MOST_PRICE
 from archopt.search.indicator import Stagnation
+from archopt.search.jobs import (
+    EVALUATION_ARRAYS,
+    Arrays,
+    Desk,
+    completed,
+    consolidated,
+    decided,
+    evaluated,
+    evaluation_of,
+    folded,
+)
 from archopt.search.local import Neighbours
 from archopt.search.outcome import NO_GROWTH, Keep, Progress, SearchResult, progress_of, result_of
 from archopt.search.rail_tables import CAPS
 from archopt.search.record import Record
 from archopt.search.seeds import heuristic_genomes
+from archopt.search.workers import Crew, Job, Ticket
 
 LEAST_POPULATION = 8
 FORGET_SHARE = 0.5  # of genomes that keep only the approved parts they used
 FAN_SHARE = 0.2  # of completed genomes that come from the archive at other prices
 CONSOLIDATE_EVERY = 4
 CONSOLIDATED = 4
-CONSOLIDATE_ROUNDS = 3
 LOCAL_SHARE = 0.34  # batches of neighbours a batch of completed genomes
 FOLD_EVERY = 3
 FOLDED = 2  # archived designs folded around each time
 
+# What errands do, and how many generations later they are taken: consolidation is several batches long.
+ERRANDS: dict[str, tuple[Job, int]] = {
+    "local": (decided, 1),
+    "fold": (folded, 1),
+    "consolidation": (consolidated, 3),
+}
+
+
+@dataclass(frozen=True)
+class Errand:
+    """A job handed in and not yet taken back; ``due`` is the generation that takes it.
+
+    Which process has done it, and when, makes no difference: it is taken at a fixed place.
+    """
+
+    source: str
+    due: int
+    given: Arrays
+    ticket: Ticket
+
 
 class Search:
-    """One search in progress; :func:`search` runs it to its end."""
+    """One search in progress; :func:`search` runs it to its end.
+
+    crew: does the jobs; without one they are all done here, at batches of the population.
+    """
 
     def __init__(
-        self, evaluator: Evaluator, *, population: int, seed: int, seeds_rows: IntArray | None = None
+        self,
+        evaluator: Evaluator,
+        *,
+        population: int,
+        seed: int,
+        seeds_rows: IntArray | None = None,
+        crew: Crew | None = None,
     ) -> None:
         self.evaluator = evaluator
         self.population = max(population, LEAST_POPULATION)
-        self.genome = Genome(evaluator.problem)
-        self.completion = Completion(evaluator, self.genome)
+        self.crew = crew_for(evaluator, population) if crew is None else crew
+        if self.crew.desk.size != self.population:
+            raise ValueError(f"a crew for batches of {self.crew.desk.size} does not fit {self.population} genomes")
+        self.genome = self.crew.desk.genome
         self.record = Record.of(evaluator.problem, self.genome.scale)
         self.rng = np.random.default_rng([seed, 1])
         self.given = np.zeros((0, evaluator.problem.layout.width), dtype=np.int64)
@@ -57,38 +97,31 @@ class Search:
             own = self.genome.encode(self.given, one, 0.02 * one, np.full(len(one), len(CAPS) - 1))
             seeds = np.concatenate([own, seeds])[: self.population]
         self.neighbours = Neighbours(evaluator.problem)
-        self.folding = Fold(self.completion)
         self.engine = Engine(self.genome.genes, self.population, seed, seeds=seeds)
         self.generation = 0
         self.owed = 0.0
         self.credit: dict[str, tuple[int, int]] = {}
+        self.errands: list[Errand] = []
 
-    def evaluate(self, rows: IntArray, source: str) -> Evaluation:
-        """Evaluate decided rows in batches of one fixed shape and keep what they show."""
-        size = self.population
-        parts, entered = [], 0
-        for start in range(0, len(rows), size):
-            real = rows[start : start + size]
-            padded = real[np.minimum(np.arange(size), len(real) - 1)]
-            found = self.evaluator.evaluate(padded)
-            entered += self.record.add(found, len(real))
-            parts.append(first_of(found, len(real)))
+    def note(self, found: Evaluation, source: str) -> None:
+        """Keep what evaluated designs show."""
+        entered = self.record.add(found, len(found.rows)) if len(found.rows) else 0
         tried, won = self.credit.get(source, (0, 0))
-        self.credit[source] = (tried + len(rows), won + entered)
-        return joined(parts)
+        self.credit[source] = (tried + len(found.rows), won + entered)
 
     def step(self) -> None:
-        """Advance by one generation: completed genomes, consolidation of the promising, local search."""
+        """Advance by one generation: completed genomes, and what errands of earlier ones have found."""
         if self.generation == 0 and len(self.given):
-            self.evaluate(self.given, "given")
+            self.note(evaluation_of(self.crew.take(self.crew.submit(evaluated, self.given))), "given")
         genomes = self.fan(self.engine.ask())
-        plan = self.genome.decode(genomes)
-        rows = self.complete(plan)
-        found = self.evaluate(rows, "completion")
-        learned = self.genome.learn(genomes, rows, self.rng.random(len(genomes)) < FORGET_SHARE)
+        found = evaluation_of(self.crew.take(self.crew.submit(completed, genomes)))
+        self.note(found, "completion")
+        learned = self.genome.learn(genomes, found.rows, self.rng.random(len(genomes)) < FORGET_SHARE)
         objectives, violation = found.objectives.copy(), found.violation.copy()
         if self.generation % CONSOLIDATE_EVERY == CONSOLIDATE_EVERY - 1:
-            self.consolidate(rows, objectives, violation, learned, plan)
+            self.consolidate(genomes, learned, found)
+        for errand in self.due(self.generation):
+            self.bring_home(errand, objectives, violation, learned)
         self.engine.tell(objectives, violation, learned)
         if self.generation % FOLD_EVERY == FOLD_EVERY - 1:
             self.fold()
@@ -97,6 +130,36 @@ class Search:
             self.owed -= 1.0
             self.climb()
         self.generation += 1
+
+    def send(self, source: str, *given: FloatArray | IntArray) -> None:
+        """Hand in a job that a later generation takes."""
+        job, later = ERRANDS[source]
+        self.errands.append(Errand(source, self.generation + later, given, self.crew.submit(job, *given)))
+
+    def due(self, generation: int) -> list[Errand]:
+        """Return the errands a generation takes, in the order they were sent; the others stay."""
+        here = [errand for errand in self.errands if errand.due <= generation]
+        self.errands = [errand for errand in self.errands if errand.due > generation]
+        return here
+
+    def bring_home(
+        self, errand: Errand, objectives: FloatArray, violation: FloatArray, learned: FloatArray
+    ) -> None:
+        """Keep what an errand found; genomes it bettered take the places of the worst of this generation."""
+        answer = self.crew.take(errand.ticket)
+        if errand.source != "consolidation":
+            self.note(evaluation_of(answer), errand.source)
+            return
+        (_, genomes, values, excess), rest = answer[:4], answer[-EVALUATION_ARRAYS:]
+        self.note(evaluation_of(rest), errand.source)
+        places = worst_of(objectives, violation)[: len(genomes)]
+        objectives[places], violation[places], learned[places] = values, excess, genomes
+
+    def finish(self) -> None:
+        """Take what errands still have out when no generation will."""
+        for errand in self.due(self.generation + max(later for _, later in ERRANDS.values())):
+            answer = self.crew.take(errand.ticket)
+            self.note(evaluation_of(answer[-EVALUATION_ARRAYS:]), errand.source)
 
     def fan(self, genomes: FloatArray) -> FloatArray:
         """Return genomes of which a share is archived designs at other prices, caps and approved parts."""
@@ -118,14 +181,13 @@ class Search:
         return out
 
     def climb(self) -> None:
-        """Evaluate neighbours of archived designs, the lonely and the new ones first."""
+        """Try neighbours of archived designs, the lonely and the new ones first."""
         archive = self.record.archive
         if not len(archive):
             return
         chance = loneliness(archive.objectives)
         picked = self.rng.choice(len(archive), size=self.population, p=chance)
-        rows = self.evaluator.decide(self.neighbours.draw(archive.rows[picked], self.rng))
-        self.evaluate(rows, "local")
+        self.send("local", self.neighbours.draw(archive.rows[picked], self.rng))
 
     def fold(self) -> None:
         """Fold around a few archived designs of different buses and evaluate what promises to enter the archive."""
@@ -138,53 +200,19 @@ class Search:
         order = self.rng.choice(len(held), size=len(held), replace=False, p=loneliness(objectives))
         _, first = np.unique(buses[order], axis=0, return_index=True)
         picked = order[np.sort(first)[:FOLDED]]
-        rows, predicted = self.folding.propose(held[picked], objectives[picked])
-        chosen = promising(predicted, objectives, self.population)
-        if len(chosen):
-            self.evaluate(self.evaluator.decide(rows[chosen]), "fold")
+        self.send("fold", held[picked], objectives[picked], objectives)
 
-    def consolidate(
-        self, rows: IntArray, objectives: FloatArray, violation: FloatArray,
-        learned: FloatArray, plan: Plan,
-    ) -> None:  # fmt: skip
-        """Drop part numbers of a few promising designs; what is better takes the genome's place, in place."""
-        front = np.flatnonzero(violation <= 0.0)
+    def consolidate(self, genomes: FloatArray, learned: FloatArray, found: Evaluation) -> None:
+        """Drop part numbers of a few promising designs."""
+        front = np.flatnonzero(found.violation <= 0.0)
         if not len(front):
             return
-        front = front[is_nondominated(objectives[front], keep_weakly=True)]
-        places = self.rng.permutation(front)[:CONSOLIDATED]
-        price, cap = plan.price, np.array(CAPS, dtype=np.float64)[plan.cap]
-        score = worth(objectives, violation, price, cap)
-        row = rows.copy()
-        for _ in range(CONSOLIDATE_ROUNDS):
-            if not len(places):
-                return
-            plans, owner = dropped_plans(self.genome, learned[places], row[places])
-            owner = places[owner]
-            tried = self.complete(plans)
-            found = self.evaluate(tried, "consolidation")
-            fresh = worth(found.objectives, found.violation, price[owner], cap[owner])
-            kept = []
-            for k in places:
-                own = np.flatnonzero(owner == k)
-                best = own[fresh[own].argmin()] if len(own) else -1
-                if best < 0 or fresh[best] >= score[k] - 1e-9:
-                    continue
-                score[k], row[k] = fresh[best], tried[best]
-                objectives[k], violation[k] = found.objectives[best], found.violation[best]
-                learned[k] = self.genome.learn(learned[k : k + 1], row[k : k + 1], np.ones(1, dtype=bool))[0]
-                kept.append(int(k))
-            places = np.array(kept, dtype=np.int64)
-
-    def complete(self, plan: Plan) -> IntArray:
-        """Return decided rows of plans, completed in batches of one fixed shape."""
-        size = self.population
-        parts = []
-        for start in range(0, len(plan), size):
-            index = np.arange(start, min(start + size, len(plan)))
-            padded = index[np.minimum(np.arange(size), len(index) - 1)]
-            parts.append(self.completion.complete(plan.take(padded))[: len(index)])
-        return np.concatenate(parts)
+        front = front[is_nondominated(found.objectives[front], keep_weakly=True)]
+        here = self.rng.permutation(front)[:CONSOLIDATED]
+        self.send(
+            "consolidation", genomes[here], learned[here], found.rows[here], found.objectives[here],
+            found.violation[here],
+        )  # fmt: skip
 
     def state(self) -> dict[str, NDArray[Any]]:
         """Everything needed to go on bit for bit between two generations, as plain arrays for :meth:`restore`."""
@@ -196,6 +224,13 @@ class Search:
             "owed": np.array([self.owed]),
             "credit_names": np.array(list(self.credit), dtype=np.str_),
             "credit": np.array(list(self.credit.values()), dtype=np.int64).reshape(-1, 2),
+            "errand_sources": np.array([errand.source for errand in self.errands], dtype=np.str_),
+            "errand_due": np.array([errand.due for errand in self.errands], dtype=np.int64),
+            **{
+                f"errand{number}.{place}": values
+                for number, errand in enumerate(self.errands)
+                for place, values in enumerate(errand.given)
+            },
         }
 
     def restore(self, state: Mapping[str, NDArray[Any]]) -> None:
@@ -212,6 +247,16 @@ class Search:
         self.owed = float(state["owed"][0])
         credit = zip(state["credit_names"], state["credit"], strict=True)
         self.credit = {str(name): (int(tried), int(won)) for name, (tried, won) in credit}
+        self.errands = []
+        for number, (source, due) in enumerate(zip(state["errand_sources"], state["errand_due"], strict=True)):
+            given = tuple(part_of(state, f"errand{number}").values())
+            ticket = self.crew.submit(ERRANDS[str(source)][0], *given)
+            self.errands.append(Errand(str(source), int(due), given, ticket))
+
+
+def crew_for(evaluator: Evaluator, population: int, workers: int = 1) -> Crew:
+    """Return the crew of searches with a population, in so many processes; a context that ends them."""
+    return Crew(Desk.of(evaluator, max(population, LEAST_POPULATION)), workers)
 
 
 def part_of(state: Mapping[str, NDArray[Any]], part: str) -> dict[str, NDArray[Any]]:
@@ -236,18 +281,12 @@ def loneliness(objectives: FloatArray) -> FloatArray:
     return np.asarray(weight / weight.sum())
 
 
-def first_of(found: Evaluation, count: int) -> Evaluation:
-    """Return the first designs of an evaluation."""
-    return Evaluation(
-        found.rows[:count], found.objectives[:count], found.droop_exact[:count], found.slack[:count],
-        found.violation[:count],
-    )  # fmt: skip
-
-
-def joined(parts: list[Evaluation]) -> Evaluation:
-    """Return several evaluations as one."""
-    names = ("rows", "objectives", "droop_exact", "slack", "violation")
-    return Evaluation(*(np.concatenate([getattr(part, name) for part in parts]) for name in names))
+def worst_of(objectives: FloatArray, violation: FloatArray) -> IntArray:
+    """Return places from the worst: the most violated, then dominated ones, then the rest, later ones first."""
+    feasible = np.flatnonzero(violation <= 0.0)
+    score = 2.0 + np.maximum(violation, 0.0)
+    score[feasible] = ~is_nondominated(objectives[feasible], keep_weakly=True) if len(feasible) else 0.0
+    return np.asarray(np.argsort(-score[::-1], kind="stable") * -1 + len(score) - 1)
 
 
 def search(
@@ -263,20 +302,21 @@ def search(
     stop: Callable[[], bool] | None = None,
     keep: Keep | None = None,
     resume: Mapping[str, NDArray[Any]] | None = None,
+    crew: Crew | None = None,
 ) -> SearchResult:
     """Search a problem until the budget is spent, the archive stops growing, or somebody stops it.
 
     The same problem, budget and seed give the same archive; ``seconds`` and ``stop`` are outside that promise.
     An interrupt from the keyboard ends the search and keeps what it found. After each generation ``keep`` is
     offered the state, and told to take it when the search is stopped early; a search that goes on from one
-    (``resume``) ends like one never stopped.
+    (``resume``) ends like one never stopped. A ``crew`` may do the jobs in several processes, with the same result.
 
     Raises
     ------
     OutputError : a state to resume that does not fit this search
     """
     began = time.monotonic()
-    run = Search(evaluator, population=population, seed=seed, seeds_rows=seeds_rows)
+    run = Search(evaluator, population=population, seed=seed, seeds_rows=seeds_rows, crew=crew)
     stagnation = Stagnation(stagnation_generations)
     ended, early, spent_before, tried_before = "", False, 0.0, 0
     if resume is not None:
@@ -296,6 +336,8 @@ def search(
                 ended = NO_GROWTH
             elif run.record.evaluations >= evaluations:
                 ended = "budget spent"
+            if ended:
+                run.finish()
             now = time.monotonic() - began
             if progress is not None:
                 pace = (run.record.evaluations - tried_before) / max(now, 1e-9)
@@ -337,4 +379,4 @@ def restore_search(run: Search, stagnation: Stagnation, state: Mapping[str, NDAr
         raise OutputError(f"the unfinished run does not fit this study ({error}); start afresh") from error
 
 
-__all__ = ["Keep", "Progress", "Search", "SearchResult", "search"]
+__all__ = ["Keep", "Progress", "Search", "SearchResult", "crew_for", "search"]

@@ -18,11 +18,12 @@ from archopt.model.evaluator import Evaluator
 from archopt.model.problem import Problem
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.checkpoint import Checkpoint, Facts, Keeper
-from archopt.search.driver import search
+from archopt.search.driver import crew_for, search
 from archopt.search.genome import energy_price_scale
 from archopt.search.indicator import Scale
 from archopt.search.outcome import NO_GROWTH, Progress, SearchResult, found_again, state_of
 from archopt.search.record import BestOfKind, Record, score_of
+from archopt.search.workers import Crew
 
 
 @dataclass(frozen=True)
@@ -75,15 +76,18 @@ def search_all(
     stop: Callable[[], bool] | None = None,
     keeper: Keeper | None = None,
     resume: Checkpoint | None = None,
+    crew: Crew | None = None,
 ) -> Replicated:
     """Search a problem once for each replicate, one after another, and merge what they find.
 
-    Replicates already done when the state to resume was put by are not repeated.
+    Replicates already done when the state to resume was put by are not repeated. A ``crew`` may do the jobs in
+    several processes.
 
     Raises
     ------
     OutputError : a state that does not fit this problem
     """
+    hands = crew_for(evaluator, settings.population) if crew is None else crew
     done, current = ([], None) if resume is None else taken_up(resume.state)
     while len(done) < settings.replicates and not (done and done[-1].ended in EARLY):
         number = len(done)
@@ -98,6 +102,7 @@ def search_all(
             stop=stop,
             keep=None if keeper is None else Put(keeper, done),
             resume=current,
+            crew=hands,
         )
         current = None
         done.append(found)

@@ -11,14 +11,16 @@ from pathlib import Path
 
 import pytest
 
+from archopt.cli import main
 from archopt.search import checkpoint
+from archopt.search.driver import Search
 from tests.search.small_study import FEW_CHOICES, TWO_RAILS
 
 ROOT = Path(__file__).resolve().parents[2]
 Run = Callable[..., tuple[int, str, str]]
 SEARCH = """
 [search]
-evaluations = 220
+evaluations = 160
 population = 16
 """
 SAME = ("front.csv", "archive.csv", "designs.json", "problem.json")
@@ -44,17 +46,27 @@ def counted(whole):
 if when == "writing":
     checkpoint.os.fsync = counted(os.fsync)
 else:
-    Search.evaluate = counted(Search.evaluate)
+    Search.note = counted(Search.note)
 from archopt.cli import main
 main(sys.argv[3:])
 """
 
 
-@pytest.fixture
-def study(tmp_path: Path) -> Path:
-    path = tmp_path / "study.toml"
+@pytest.fixture(scope="module")
+def study(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    path = tmp_path_factory.mktemp("study") / "study.toml"
     path.write_text(TWO_RAILS + FEW_CHOICES + SEARCH, encoding="utf-8")
     return path
+
+
+@pytest.fixture(scope="module")
+def never(study: Path) -> Path:
+    """The result of a run never stopped."""
+    place = study.parent / "never"
+    with pytest.raises(SystemExit) as left:
+        main(["solve", str(study), "--quiet", "--out", str(place)])
+    assert left.value.code == 0
+    return place
 
 
 def killed(when: str, number: int, *words: str) -> None:
@@ -67,20 +79,19 @@ def killed(when: str, number: int, *words: str) -> None:
     assert done.returncode == -signal.SIGKILL, done.stderr
 
 
-def test_killed_twice_it_ends_with_the_same_bytes(study: Path, run: Run, tmp_path: Path) -> None:
+def test_killed_twice_it_ends_with_the_same_bytes(study: Path, never: Path, run: Run, tmp_path: Path) -> None:
     solve = ("solve", str(study), "--quiet", "--out")
-    never, place = tmp_path / "never", tmp_path / "killed"
-    assert run(*solve, str(never))[0] == 0
-    killed("searching", 9, *solve, str(place))
+    place = tmp_path / "killed"
+    killed("searching", 5, *solve, str(place))
     first = checkpoint.read(place).reached["evaluations"]
     assert first > 0
-    killed("writing", 5, *solve, str(place), "--resume")
+    killed("writing", 4, *solve, str(place), "--resume")
     assert {entry.name for entry in place.iterdir()} == {checkpoint.NAME, checkpoint.PARTIAL}
     assert checkpoint.read(place).reached["evaluations"] > first
 
     code, out, err = run(*solve, str(place))
     assert (code, out) == (2, "")
-    assert f"of 220 designs tried): go on with it (--resume), or start afresh (--replace)" in err
+    assert "of 160 designs tried): go on with it (--resume), or start afresh (--replace)" in err
     code, out, err = run(*solve, str(place), "--resume", "--seed", "9")
     assert (code, out) == (2, "")
     assert "seed is 9, there it is 1" in err
@@ -93,13 +104,10 @@ def test_killed_twice_it_ends_with_the_same_bytes(study: Path, run: Run, tmp_pat
 
 
 def test_an_interrupted_run_keeps_its_front_and_goes_on(
-    study: Path, run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+    study: Path, never: Path, run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    from archopt.search.driver import Search
-
-    solve = ("solve", str(study), "--evaluations", "120", "--quiet", "--out")
-    never, place = tmp_path / "never", tmp_path / "interrupted"
-    assert run(*solve, str(never))[0] == 0
+    solve = ("solve", str(study), "--quiet", "--out")
+    place = tmp_path / "interrupted"
     step = Search.step
 
     def interrupted(search: Search) -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -11,7 +12,7 @@ from archopt.errors import OutputError
 from archopt.model.evaluator import Evaluator
 from archopt.search import checkpoint
 from archopt.search.checkpoint import Keeper
-from archopt.search.driver import Search, search
+from archopt.search.driver import Search, crew_for, search
 from archopt.search.outcome import SearchResult
 from tests.search.small_study import FEW_CHOICES, TWO_RAILS, compiled
 
@@ -41,10 +42,11 @@ def same(one: checkpoint.State, other: checkpoint.State) -> None:
 @pytest.mark.parametrize("steps", [0, 1, 5])
 def test_a_search_goes_on_bit_for_bit(evaluator: Evaluator, steps: int) -> None:
     """Over a consolidation (every fourth), a fold (every third) and local search (every third) after the stop."""
-    whole = Search(evaluator, population=16, seed=4)
+    crew = crew_for(evaluator, 16)
+    whole = Search(evaluator, population=16, seed=4, crew=crew)
     for _ in range(steps):
         whole.step()
-    again = Search(evaluator, population=16, seed=4)
+    again = Search(evaluator, population=16, seed=4, crew=crew)
     again.restore(through_a_file(whole.state()))
     same(whole.state(), again.state())
     for _ in range(5):
@@ -62,7 +64,8 @@ def result_bytes(found: SearchResult) -> list[bytes]:
 
 
 def test_stopped_after_each_generation_it_ends_like_one_never_stopped(evaluator: Evaluator) -> None:
-    settings = {"evaluations": 480, "population": 16, "seed": 3, "stagnation_generations": 50}
+    settings: dict[str, Any] = {"evaluations": 300, "population": 16, "seed": 3, "stagnation_generations": 50}
+    settings["crew"] = crew_for(evaluator, 16)
     never = search(evaluator, **settings)
     kept: list[dict[str, np.ndarray]] = []
     sittings = 0
@@ -82,7 +85,7 @@ def test_stopped_after_each_generation_it_ends_like_one_never_stopped(evaluator:
 
 def test_a_search_that_had_settled_is_not_taken_further(evaluator: Evaluator) -> None:
     kept: list[dict[str, np.ndarray]] = []
-    settings = {"evaluations": 100_000, "population": 16, "seed": 3, "stagnation_generations": 2}
+    settings: dict[str, Any] = {"evaluations": 100_000, "population": 16, "seed": 3, "stagnation_generations": 2}
     found = search(evaluator, **settings, keep=lambda _, state, at_once: kept.append(state()))
     assert found.ended == "no more growth"
     again = search(evaluator, **settings, resume=kept[-1])
