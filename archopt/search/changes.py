@@ -148,8 +148,10 @@ class SingleChanges:
         rows[every, layout.rail("stage").start + r] = with_stage
         held = np.where(with_stage == stage[r], phases[r], np.clip(phases[r], low, high))
         rows[every, layout.rail("phases").start + r] = held
-        self.furnish(rows, choices)
-        return rows, r
+        furnished = rows.copy()
+        self.furnish(furnished, choices)
+        more = (furnished != rows).any(axis=1)
+        return np.concatenate([rows, furnished[more]]), np.concatenate([r, r[more]])
 
     def furnish(self, rows: IntArray, choices: IntArray) -> None:
         """Give a bus no rail was on what the other has, in place, so that it can start."""

@@ -1,4 +1,4 @@
-"""Measure the search on a shipped study: share of a reference front's hypervolume over evaluations and time.
+"""Measure the search on a shipped study or the twelve rails: share of a reference front's hypervolume over evaluations and time.
 
 Run as ``python -m tests.benchmarks.measure_search telecom_six --evaluations 20000 --seeds 1,2``. The reference
 is the union of the runs measured and of a longer one with a seed of its own; its hash is printed.
@@ -23,6 +23,7 @@ from archopt.model.problem import compile_problem
 from archopt.model.states import reduce_load
 from archopt.search.driver import Search
 from archopt.search.indicator import share
+from tests.benchmarks import twelve_rails
 
 FOLDER = Path(__file__).resolve().parents[2] / "studies"
 REFERENCE_SEED = 1009
@@ -44,6 +45,13 @@ def evaluator_of(study: str) -> Evaluator:
     """Compile a shipped study."""
     loaded = load(FOLDER / study / "study.toml")
     return Evaluator(compile_problem(loaded.study, loaded.catalogue, reduce_load(loaded.study)))
+
+
+def studied(name: str) -> Evaluator:
+    """Return the evaluator of a shipped study, of the twelve rails, or of the same without any coupling."""
+    if name == "twelve_rails":
+        return twelve_rails.evaluator()
+    return Evaluator(twelve_rails.separable()) if name == "separable" else evaluator_of(name)
 
 
 def track(evaluator: Evaluator, seed: int, evaluations: int, marks: int) -> Track:
@@ -75,7 +83,7 @@ def main() -> None:
     asked.add_argument("--seeds", default="1,2")
     asked.add_argument("--marks", type=int, default=8)
     given = asked.parse_args()
-    evaluator = evaluator_of(given.study)
+    evaluator = studied(given.study)
     runs = [
         track(evaluator, int(seed), given.evaluations, given.marks) for seed in given.seeds.split(",")
     ]
