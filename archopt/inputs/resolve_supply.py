@@ -69,7 +69,26 @@ def resolve_supply(
         air_speed_m_s=take("input.air_speed_m_s", table.air_speed_m_s, 1.5, PLAIN),
         isolation=isolation,
         path=_path(table, catalogue, forbidden, power_w, notebook),
+        **_filter(table, notebook),
     )
+
+
+def _filter(table: InputTable, notebook: Notebook) -> dict[str, float]:
+    """Return what stands behind the input path, as far as the study says."""
+    if table.filter_capacitance_uf is None:
+        for name in ("filter_esr_mohm", "filter_damper_uf", "filter_damper_mohm"):
+            if getattr(table, name) is not None:
+                notebook.problem(f"input.{name}", "is stated without filter_capacitance_uf")
+        return {}
+    if (table.filter_damper_uf is None) != (table.filter_damper_mohm is None):
+        missing = "filter_damper_mohm" if table.filter_damper_mohm is None else "filter_damper_uf"
+        notebook.problem(f"input.{missing}", "a damping bank needs both its capacitance and its resistance")
+    return {
+        "filter_capacitance_uf": table.filter_capacitance_uf,
+        "filter_esr_mohm": notebook.take("input.filter_esr_mohm", table.filter_esr_mohm, 0.0, "not stated"),
+        "filter_damper_uf": table.filter_damper_uf or 0.0,
+        "filter_damper_mohm": table.filter_damper_mohm or 0.0,
+    }
 
 
 def _nominal(table: InputTable, notebook: Notebook) -> float:

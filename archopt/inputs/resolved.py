@@ -51,6 +51,10 @@ class InputSupply:
     air_speed_m_s: float
     isolation: bool
     path: str  # name in input_paths
+    filter_capacitance_uf: float = 0.0  # behind the path; 0 where the study does not say
+    filter_esr_mohm: float = 0.0
+    filter_damper_uf: float = 0.0  # beside it, with a resistance that damps; 0 where there is none
+    filter_damper_mohm: float = 0.0
 
 
 @dataclass(frozen=True)

@@ -52,6 +52,12 @@ class InputTable(Table):
     air_speed_m_s: float | None = Field(None, gt=0, le=10, description="air over the parts; default 1.5")
     isolation: bool | None = Field(None, description="default: required where high_v is above 60 V")
     path: str | None = Field(None, description="part of input_paths; default the cheapest that is rated for it")
+    filter_capacitance_uf: float | None = Field(
+        None, gt=0, le=1e6, description="capacitance behind the input path, under bias; default not stated"
+    )
+    filter_esr_mohm: float | None = Field(None, ge=0, le=1e5, description="its series resistance; default 0")
+    filter_damper_uf: float | None = Field(None, gt=0, le=1e6, description="damping bank beside it; default none")
+    filter_damper_mohm: float | None = Field(None, gt=0, le=1e6, description="series resistance of the damping bank")
 
 
 class BoardTable(Table):

@@ -9,6 +9,7 @@ import numpy as np
 
 from archopt.model.limits import Ledger
 from archopt.model.parameters import BoolArray, FloatArray, IntArray
+from archopt.model.problem import Problem
 from archopt.model.situation import Situation
 from archopt.model.space import BUS_NAMES
 from archopt.model.states import FALLBACK, JUMP, MIX
@@ -23,6 +24,7 @@ from archopt.physics.transient import bus_dip_v, source_peak_ohm
 LARGEST_DB = 120.0
 LEAST_W, LEAST_V, LEAST_OHM, LEAST_F = 1e-3, 1e-3, 1e-6, 1e-9
 FOLLOWS_AT_ONCE = 1e12
+WITHOUT_ESR = 1e-3  # share of an input filter's capacitance that shows no resistance
 
 Impedance = Callable[[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, FloatArray], FloatArray]
 
@@ -133,17 +135,29 @@ def check_impedance(situation: Situation, ledger: Ledger) -> None:
     )  # fmt: skip
 
 
-def check_input(situation: Situation, ledger: Ledger, bound_db: float) -> None:
-    """Check the input path's resistance against the negative resistance of all that the board draws through it.
+def input_peak_ohm(problem: Problem) -> float:
+    """Return the largest impedance over frequency that the input path and its filter show the converters, ohm."""
+    supply, ohm = problem.study.supply, max(problem.path.resistance_ohm, LEAST_OHM)
+    farad = supply.filter_capacitance_uf * 1e-6
+    if farad <= 0.0 or problem.path.inductance_h <= 0.0:
+        return ohm
+    peak = output_peak_ohm(
+        ohm, problem.path.inductance_h, farad, supply.filter_esr_mohm * 1e-3, WITHOUT_ESR * farad,
+        supply.filter_damper_uf * 1e-6, supply.filter_damper_mohm * 1e-3,
+    )  # fmt: skip
+    return float(peak)
 
-    Above direct current the converters' own input capacitance decides, which is not in the catalogue.
+
+def check_input(situation: Situation, ledger: Ledger, bound_db: float) -> None:
+    """Check the input path's impedance against the negative resistance of all that the board draws through it.
+
+    Where the study says what capacitance stands behind the path, at its peak over frequency; else its resistance,
+    as above direct current the converters' own input capacitance decides, which is not in the catalogue.
     """
     states, solution = situation.states, situation.solution
     heavy = np.concatenate([states.of_kind(MIX), states.of_kind(JUMP), states.of_kind(FALLBACK)])
     node_w = np.maximum(solution.input_w[:, heavy] - solution.path_w[:, heavy], LEAST_W)
-    margin = impedance_margin_db(
-        max(situation.problem.path.resistance_ohm, LEAST_OHM), node_w, solution.node_v[:, heavy]
-    )
+    margin = impedance_margin_db(input_peak_ohm(situation.problem), node_w, solution.node_v[:, heavy])
     ledger.add(
         "input impedance margin", np.minimum(margin, LARGEST_DB), bound_db, at_most=False,
         axes=(situation.state_names(heavy),),

@@ -43,7 +43,12 @@ def supply_text(supply: Data) -> str:
         shares = (f"{number(row['voltage_v'])} V for {number(100 * row['share'], 3)} %" for row in levels)
         text += f"; {', '.join(shares)} of the hours"
     text += "; isolation required" if supply.get("isolation") else "; no isolation required"
-    return text + (f"; through {supply['path']}" if supply.get("path") else "")
+    text += f"; through {supply['path']}" if supply.get("path") else ""
+    if real(supply.get("filter_capacitance_uf"), 0.0) > 0:
+        text += f" into {number(supply.get('filter_capacitance_uf'))} uF"
+    if real(supply.get("filter_damper_uf"), 0.0) > 0:
+        text += f", damped by {number(supply.get('filter_damper_uf'))} uF"
+    return text
 
 
 def rails_text(study: Data) -> str:

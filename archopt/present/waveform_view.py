@@ -250,6 +250,9 @@ def input_words(waves: Waves) -> str:
     path, solution = waves.problem.path, waves.detail.solution
     if path.inductance_h <= 0.0:
         return "the input path has no inductance stated"
+    stated_uf = waves.problem.study.supply.filter_capacitance_uf
+    if stated_uf > 0.0:
+        return f"{number(stated_uf, 4)} uF stated; the limit input impedance margin counts it"
     at = int((solution.input_w[0] / solution.node_v[0]).argmax())
     drawn_w = float(solution.input_w[0, at] - solution.path_w[0, at])
     least = float(least_capacitance_f(path.resistance_ohm, path.inductance_h, drawn_w, float(solution.node_v[0, at])))
