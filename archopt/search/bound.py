@@ -67,6 +67,18 @@ class OuterBound:
             out[mine] = objectives[mine, 0] * (1.0 + ease) < least
         return out
 
+    def gap(self, objectives: FloatArray) -> tuple[float, float]:
+        """Return how far above the bound a front lies in energy, at each design's own cost and droop: median, largest.
+
+        As shares of the designs' energy; 0 where a design lies on the bound.
+        """
+        apart = []
+        for energy, cost, droop in objectives.tolist():
+            steps = self.steps[min(int(np.searchsorted(LEVELS, droop - EASE)), len(self.steps) - 1)]
+            least = float(height(steps, np.array([cost * (1.0 + EASE)]))[0]) if len(steps) else np.inf
+            apart.append(1.0 - max(min(least, energy), 0.0) / energy)
+        return float(np.median(apart)), float(np.max(apart))
+
     def share(self, front_objectives: FloatArray) -> float:
         """Return the hypervolume of a front as a share of the bound's, both on the scale of the front."""
         scale = Scale.of(front_objectives)

@@ -90,13 +90,26 @@ class Comparison:
     worst_droop: float
 
 
+def gaps_in_units(exact: FloatArray, found: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return how far every exact design is from every found one: energy and cost as shares and droop, and in matches.
+
+    Shapes (exact, found, 3) and (exact, found): the largest of the three in units of a match.
+    """
+    gaps = np.abs(found[None] - exact[:, None])
+    gaps[:, :, :2] /= exact[:, None, :2]
+    return gaps, (gaps / np.array([ENERGY_MATCH, COST_MATCH, DROOP_MATCH_PERCENT])).max(axis=2)
+
+
+def nearest_units(exact: FloatArray, found: FloatArray) -> FloatArray:
+    """Return how many matches each exact design is from the nearest found one, (exact,): 0 found, up to 1 matched."""
+    return np.asarray(gaps_in_units(exact, found)[1].min(axis=1))
+
+
 def compare(exact: FloatArray, found: FloatArray) -> Comparison:
     """Return how well a found front stands for the exact front, both (designs, 3) and not empty of exact designs."""
     if not len(found):
         return Comparison(0.0, len(exact), len(exact), len(exact), math.inf, math.inf, math.inf, math.inf)
-    gaps = np.abs(found[None] - exact[:, None])  # (exact, found, 3)
-    gaps[:, :, :2] /= exact[:, None, :2]
-    units = (gaps / np.array([ENERGY_MATCH, COST_MATCH, DROOP_MATCH_PERCENT])).max(axis=2)
+    gaps, units = gaps_in_units(exact, found)
     nearest = units.argmin(axis=1)
     distance = units[np.arange(len(exact)), nearest]
     worst = int(distance.argmax())
@@ -104,7 +117,7 @@ def compare(exact: FloatArray, found: FloatArray) -> Comparison:
     return Comparison(
         share=share(found, exact),
         exact=len(exact),
-        missed=int((distance > 1e-9).sum()),
+        missed=int((distance > 1e-6).sum()),
         far=int((distance > 1.0 + 1e-9).sum()),
         worst=float(distance[worst]),
         worst_energy=energy,
