@@ -85,7 +85,7 @@ def test_killed_twice_it_ends_with_the_same_bytes(study: Path, never: Path, run:
     killed("searching", 5, *solve, str(place))
     first = checkpoint.read(place).reached["evaluations"]
     assert first > 0
-    killed("writing", 4, *solve, str(place), "--resume")
+    killed("writing", 3, *solve, str(place), "--resume")
     assert {entry.name for entry in place.iterdir()} == {checkpoint.NAME, checkpoint.PARTIAL}
     assert checkpoint.read(place).reached["evaluations"] > first
 
