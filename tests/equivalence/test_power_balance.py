@@ -6,7 +6,10 @@ import numpy as np
 import pytest
 
 from archopt.model.evaluator import Detail, Evaluator
+from archopt.model.explain import year_by_mechanism
 from archopt.model.loss_lists import all_losses
+from archopt.model.parameters import FIXED_RATIO
+from archopt.model.space import Designs
 from equivalence.shipped import STUDIES, decided, evaluator_of
 
 BALANCE = 1e-9
@@ -73,3 +76,51 @@ def test_copper_between_bus_and_stages_takes_what_the_drops_say(name: str) -> No
         whole = (floor | ~on).all(axis=2)
         drop_w = np.where(on, (solution.bus_v[..., bus : bus + 1] - solution.stage_v) * amps, 0.0).sum(axis=2)
         np.testing.assert_allclose(drop_w[whole], solution.plane_w[..., bus][whole], rtol=1e-6, atol=1e-9)
+
+
+@pytest.mark.parametrize("name", STUDIES)
+def test_the_year_balances_with_what_moving_the_buses_takes(name: str) -> None:
+    """Input energy of every state with hours and of every move of a bus is load plus all that is listed for the year.
+
+    A move upwards takes C (V2^2 - V1^2) / 2, C of all that hangs on the bus new and at the top of its tolerance.
+    """
+    evaluator = evaluator_of(name)
+    states, problem = evaluator.states, evaluator.problem
+    rows = decided(name, COUNT, SEED)
+    designs = Designs(problem.layout, rows)
+    moving = np.flatnonzero((np.diff(designs.volts, axis=2) > 0).any(axis=(1, 2)))[:6]
+    detail = evaluator.detail(rows[moving], exact=True)
+    table, counts = problem.capacitors, states.transitions_per_year
+    hours = np.where(np.isin(np.arange(len(states.hours)), states.with_hours), states.hours, 0.0)
+    assert float(hours.sum()) == pytest.approx(float(states.hours.sum()), rel=1e-12)
+    moved = 0.0
+    for p, parts in enumerate(all_losses(problem, detail)):
+        joule, one = 0.0, designs.rows[moving[p]]
+        choice = Designs(problem.layout, one[None])
+        for bus in range(2):
+            index = int(detail.hardware.converter[p, bus])
+            if index < 0 or problem.converters.kind[index] == FIXED_RATIO:
+                continue
+            farad = 0.0
+            for r in np.flatnonzero(detail.hardware.on_bus[p, bus]):
+                stage = int(choice.rail("stage")[0, r])
+                farad += float(problem.stages.input_capacitance_f[stage]) * int(choice.rail("phases")[0, r])
+            for kind, first in (("bulk", 0), ("damper", 1)):
+                bank = int(choice.bus(kind)[0, bus]) - first
+                if bank >= 0:
+                    count = int(problem.bank_counts[choice.bus(f"{kind}_count")[0, bus]])
+                    farad += count * float(table.capacitance_f[bank] * (1.0 + table.tolerance[bank]))
+            volts = [float(problem.grid_v[k]) for k in choice.volts[0, bus]]
+            for a, low in enumerate(volts):
+                joule += sum(float(counts[a, b]) * farad * (v**2 - low**2) / 2 for b, v in enumerate(volts) if v > low)
+        transition_kwh = float(detail.transition_kwh[p])
+        assert transition_kwh == pytest.approx(joule / 3.6e6, rel=BALANCE, abs=1e-15)
+        year = year_by_mechanism(parts, states.hours, transition_kwh)
+        listed_kwh = sum(kwh for mechanisms in year.values() for kwh in mechanisms.values())
+        load_kwh = sum(useful_w(evaluator, detail, p, s) * float(hours[s]) * 1e-3 for s in states.with_hours)
+        input_kwh = float(detail.solution.input_w[p] @ hours) * 1e-3 + joule / 3.6e6
+        assert abs(load_kwh + listed_kwh - input_kwh) <= BALANCE * input_kwh
+        assert listed_kwh == pytest.approx(float(detail.evaluation.objectives[p, 0]), rel=BALANCE)
+        moved += joule
+    assert len(moving)
+    assert (moved > 0.0) == bool(counts.any())
