@@ -19,7 +19,9 @@ import numpy as np
 from archopt.inputs.load import LoadedStudy, loaded_from
 from archopt.inputs.problems import Notebook
 from archopt.model.evaluator import Evaluator
+from archopt.model.parameters import IntArray
 from archopt.model.problem import Problem, compile_problem
+from archopt.model.space import BUS_A
 from archopt.model.states import (
     MAX_BANDS,
     StateTable,
@@ -187,3 +189,23 @@ def separable() -> Problem:
 def evaluator(rails: int = RAILS, states: int = STATES) -> Evaluator:
     """Return the evaluator of the standard study, or of one of another size."""
     return Evaluator(problem_of(rails, states))
+
+
+def drawn(evaluator: Evaluator, count: int, seed: int = 1) -> IntArray:
+    """Return decided designs drawn at random: four rails of five on bus A, every other feed, part and count too."""
+    problem, rng = evaluator.problem, np.random.default_rng(seed)
+    layout, space = problem.layout, problem.space
+    rows = np.stack([rng.choice(values, count) for values in space.allowed] + [
+        np.zeros(count, dtype=np.int64) for _ in range(layout.width - len(space.allowed))
+    ], axis=1)  # fmt: skip
+    for r in range(layout.rails):
+        feed, stage, phases, bank = (layout.rail(field).start + r for field in ("feed", "stage", "phases", "bank"))
+        pairs = np.argwhere(problem.feed_ok[r])  # stage, feed
+        weight = np.where(pairs[:, 1] == BUS_A, 4.0 / max((pairs[:, 1] == BUS_A).sum(), 1), 1.0 / len(pairs))
+        pick = rng.choice(len(pairs), count, p=weight / weight.sum())
+        rows[:, stage], rows[:, feed] = pairs[pick].T
+        rows[:, phases] = problem.phases_low[r, rows[:, stage]]
+        rows[:, bank] = rng.choice(np.flatnonzero(problem.capacitor_ok[r]), count)
+    converter = layout.bus("converter").start
+    rows[:, converter] = rng.choice(np.arange(1, len(problem.converters.names) + 1), count)
+    return evaluator.decide(rows)
