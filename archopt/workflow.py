@@ -191,6 +191,8 @@ def solve(
             found,
             Boards(published.rows, published.objectives, found.evaluations),
             today=today,
+            workers=workers,
+            polish_budget=POLISH_SHARE * settings.evaluations if polish is not None else 0,
             progress=None if progress is None else lambda name, state: tell(progress, state, name),
             stop=None if stop is None else lambda: bool(stop()),
         ).as_dict()

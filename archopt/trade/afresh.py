@@ -32,8 +32,10 @@ from archopt.model.parameters import FIXED_RATIO, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_NAMES, CONTROL_NAMES, FIXED, Designs
 from archopt.physics.arrays import BoolArray, FloatArray
+from archopt.search.driver import crew_for
 from archopt.search.outcome import Progress, SearchResult
-from archopt.search.published import publish
+from archopt.search.polish import polished
+from archopt.search.published import PUBLISHED, publish
 from archopt.search.replicates import EARLY, Settings, search_all
 from archopt.trade.baselines import (
     ALL_UNANNOUNCED,
@@ -92,6 +94,8 @@ def search_afresh(
     front: Boards,
     *,
     today: IntArray | None = None,
+    workers: int = 1,
+    polish_budget: int = 0,
     progress: Told | None = None,
     stop: Callable[[], bool] | None = None,
 ) -> Afresh:
@@ -104,6 +108,8 @@ def search_afresh(
     found : what the search found beside the front: designs for a fixed bus that a moving one beats
     front : the published front, the boards of a bus that follows the load with jumps as the study states
     today : (width,) today's design, which seeds every baseline it is a design of
+    workers : processes to search with
+    polish_budget : evaluations that polishing a baseline may take, as for the front; 0 for none
     progress : told the baseline and how far its search is
     stop : asked between generations; a baseline not begun when it says so is left out
     """
@@ -120,7 +126,7 @@ def search_afresh(
         elif stop is not None and stop():
             boards[name] = nothing(problem, "not searched: the run was stopped")
         else:
-            boards[name] = boards_of(other, settings, today, told(progress, name), stop)
+            boards[name] = boards_of(other, settings, today, workers, polish_budget, told(progress, name), stop)
     own = boards[BEST_FIXED]
     kept = [best.row[None] for best in found.kinds.values() if best.violation <= 0]
     pool = pooled([front.rows, found.fixed_rows, *kept, *(searched.rows for searched in boards.values())])
@@ -257,16 +263,25 @@ def boards_of(
     problem: Problem,
     settings: Settings,
     today: IntArray | None,
+    workers: int,
+    polish_budget: int,
     progress: Callable[[Progress], None] | None,
     stop: Callable[[], bool] | None,
 ) -> Boards:
-    """Return the front of one problem, searched with a budget and recomputed by direct physics."""
+    """Return the front of one problem, searched and polished with a budget and recomputed by direct physics."""
     evaluator = Evaluator(problem)
     seeds = today[None] if today is not None and is_of(problem, today) else None
-    found = search_all(evaluator, settings, seeds_rows=seeds, progress=progress, stop=stop).together
+    picked = None
+    with crew_for(evaluator, settings.population, workers) as crew:
+        found = search_all(
+            evaluator, settings, seeds_rows=seeds, progress=progress, stop=stop, crew=crew
+        ).together  # fmt: skip
+        if polish_budget and len(found.rows) and found.ended not in EARLY:
+            polish = polished(crew, found, budget=polish_budget, most=PUBLISHED, stop=stop)
+            found, picked = polish.found, polish.rows
     early = "the run was stopped before the budget was spent" if found.ended in EARLY else ""
     try:
-        published = publish(evaluator, found)
+        published = publish(evaluator, found, picked)
     except InfeasibleError as error:
         return nothing(problem, "; ".join(note for note in (early, *error.limits[:2]) if note), found.evaluations)
     return Boards(published.rows, published.objectives, found.evaluations, early)
