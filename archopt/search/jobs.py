@@ -47,6 +47,10 @@ class Desk:
         changes = SingleChanges(evaluator.problem)
         return cls(evaluator, genome, completion, folding, changes, Screen(folding), size)
 
+    def prepare(self) -> None:
+        """Fill the tables jobs would fill when they first need them, so that who is handed the desk need not."""
+        self.completion.banks.ensure(np.arange(len(CAPS)))
+
     def evaluate(self, rows: IntArray) -> Evaluation:
         """Evaluate decided rows in batches of one fixed shape."""
         parts = []

@@ -25,14 +25,12 @@ from pathlib import Path
 from types import TracebackType
 from typing import IO, Any, Concatenate, Self
 
-import numpy as np
-
 import archopt
 from archopt.search.jobs import Arrays, Desk
-from archopt.search.rail_tables import CAPS
 
 MOST_WORKERS = 4  # more stand idle: a generation waits for the completion of its one batch
 START_AFTER_S = 2.0  # a search that is over by then needs no workers
+PASSES_FILES = os.name == "posix"
 ALIGNED = 64
 LENGTH_BYTES = 8
 ONE_THREAD = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
@@ -169,7 +167,7 @@ class Crew:
         for _ in range(self.workers - 1):
             try:
                 other = _Worker(parcel.start_process())
-            except OSError:
+            except (OSError, TypeError):  # no interpreter to be found, as in a frozen program
                 self.counts.lost += 1
                 continue
             other.thread = threading.Thread(target=self._drive, args=(other, parcel), daemon=True)
@@ -179,6 +177,10 @@ class Crew:
         with shared.changed:
             while wait and shared.ready + self.counts.lost < self.workers - 1:
                 shared.changed.wait()
+
+    def processes(self) -> list[int]:
+        """Return the process numbers of the other workers."""
+        return [other.process.pid for other in self._others]
 
     def close(self) -> None:
         """End the other workers, whatever they are doing."""
@@ -275,8 +277,8 @@ class _Parcel:
 
     @classmethod
     def of(cls, desk: Desk) -> _Parcel:
-        desk.completion.banks.ensure(np.arange(len(CAPS)))  # else every worker would fill its own
-        if os.name != "posix":
+        desk.prepare()
+        if not PASSES_FILES:
             return cls(pickle.dumps(desk, protocol=5), (), None)
         buffers: list[pickle.PickleBuffer] = []
         objects = pickle.dumps(desk, protocol=5, buffer_callback=buffers.append)

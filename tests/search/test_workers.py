@@ -38,6 +38,22 @@ def crew(evaluator: Evaluator) -> Iterator[Crew]:
         yield two
 
 
+@pytest.fixture(autouse=True)
+def jobs_of_this_file(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Let workers import the jobs defined here."""
+    monkeypatch.setenv("PYTHONPATH", str(ROOT))
+
+
+class BareDesk(Desk):
+    """A desk with nothing on it, for jobs that need nothing."""
+
+    def __init__(self) -> None:
+        object.__setattr__(self, "size", SIZE)
+
+    def prepare(self) -> None:
+        pass
+
+
 def genomes_of(desk: Desk, count: int) -> np.ndarray:
     rng = np.random.default_rng(7)
     low, high = (np.array([getattr(gene, end) for gene in desk.genome.genes]) for end in ("low", "high"))
@@ -51,7 +67,7 @@ def same(one: Arrays, other: Arrays) -> None:
 
 
 def test_answers_are_the_same_bits_in_another_process(crew: Crew) -> None:
-    genomes = genomes_of(crew.desk, 6 * SIZE)
+    genomes = genomes_of(crew.desk, 4 * SIZE)
     chunks = [(genomes[k : k + SIZE],) for k in range(0, len(genomes), SIZE)]
     before = crew.counts.there
     found = crew.map(completed, chunks)
@@ -64,7 +80,7 @@ def test_answers_are_the_same_bits_in_another_process(crew: Crew) -> None:
 
 
 def test_a_search_ends_alike_with_one_and_two_processes(evaluator: Evaluator, crew: Crew) -> None:
-    settings: dict[str, Any] = {"evaluations": 300, "population": SIZE, "seed": 3, "stagnation_generations": 50}
+    settings: dict[str, Any] = {"evaluations": 240, "population": SIZE, "seed": 3, "stagnation_generations": 50}
     alone = state_of(search(evaluator, **settings))
     before = crew.counts.there
     together = state_of(search(evaluator, **settings, crew=crew))
@@ -90,9 +106,9 @@ def test_an_error_is_raised_as_it_is(crew: Crew) -> None:
         crew.map(refuses, [(np.zeros(3),)] * 4)
 
 
-def test_a_lost_worker_costs_nothing_but_time(evaluator: Evaluator) -> None:
+def test_a_lost_worker_costs_nothing_but_time() -> None:
     here = np.array([os.getpid()])
-    with Crew(Desk.of(evaluator, SIZE), 2) as crew:
+    with Crew(BareDesk(), 2) as crew:
         crew.start(wait=True)
         for _ in range(20):
             for answer in crew.map(dies_elsewhere, [(here,)] * 8):
@@ -108,6 +124,28 @@ def test_no_worker_is_started_for_a_short_search(evaluator: Evaluator) -> None:
         assert (crew.counts.here, crew.counts.there, crew.counts.lost) == (2, 0, 0)
 
 
+def test_where_files_cannot_be_passed_on_the_desk_goes_by_the_pipe(
+    evaluator: Evaluator, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(workers, "PASSES_FILES", False)
+    with Crew(Desk.of(evaluator, SIZE), 2) as crew:
+        crew.start(wait=True)
+        genomes = genomes_of(crew.desk, SIZE)
+        expected = completed(crew.desk, genomes)
+        for answer in crew.map(completed, [(genomes,)] * 3):
+            same(answer, expected)
+        assert (crew.counts.lost, crew.counts.there > 0) == (0, True)
+
+
+def test_without_an_interpreter_the_search_goes_on_alone(
+    evaluator: Evaluator, monkeypatch: pytest.MonkeyPatch, tmp_path: Path
+) -> None:
+    monkeypatch.setattr(sys, "executable", str(tmp_path / "none"))
+    with Crew(Desk.of(evaluator, SIZE), 3, start_after_s=0.0) as crew:
+        assert len(crew.map(completed, [(genomes_of(crew.desk, SIZE),)] * 2)) == 2
+        assert (crew.counts.here, crew.counts.lost) == (2, 2)
+
+
 def test_a_few_workers_by_default(monkeypatch: pytest.MonkeyPatch) -> None:
     for cores, expected in ((1, 1), (2, 2), (64, 4)):
         monkeypatch.setattr(workers, "usable_cores", lambda cores=cores: cores)
@@ -115,15 +153,11 @@ def test_a_few_workers_by_default(monkeypatch: pytest.MonkeyPatch) -> None:
 
 
 PARENT = """
-import os, sys, time
-from pathlib import Path
-from archopt.search.jobs import Desk
 from archopt.search.workers import Crew
-from tests.search.small_study import FEW_CHOICES, TWO_RAILS, compiled
-from tests.search.test_workers import sleeps
-crew = Crew(Desk.of(compiled(Path(sys.argv[1]), TWO_RAILS + FEW_CHOICES), 16), 3)
+from tests.search.test_workers import BareDesk, sleeps
+crew = Crew(BareDesk(), 3)
 crew.start(wait=True)
-print(*(other.process.pid for other in crew._others), flush=True)
+print(*crew.processes(), flush=True)
 crew.map(sleeps, [(60.0,)] * 3)
 """
 
@@ -141,11 +175,11 @@ def alive(process: int) -> bool:
 
 
 @pytest.mark.parametrize("by", [signal.SIGKILL, signal.SIGINT])
-def test_workers_end_with_the_process_that_started_them(tmp_path: Path, by: signal.Signals) -> None:
+def test_workers_end_with_the_process_that_started_them(by: signal.Signals) -> None:
     """In the middle of a job, whether it is killed or interrupted; the workers themselves see no interrupt."""
     environment = {**os.environ, "PYTHONPATH": str(ROOT)}
     with subprocess.Popen(
-        [sys.executable, "-c", PARENT, str(tmp_path)],
+        [sys.executable, "-c", PARENT],
         cwd=ROOT, env=environment, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, start_new_session=True,
     ) as parent:  # fmt: skip
         assert parent.stdout is not None
