@@ -255,6 +255,20 @@ class BusUnits:
         return loss_w, degc
 
 
+def unregulated(problem: Problem, states: StateTable, hardware: Hardware) -> tuple[FloatArray, FloatArray]:
+    """Return output over input of the converters without load and their droop resistance, (P, 2, S) and ohm.
+
+    Where limits are checked the ratio is off by its accuracy, to the side that is checked, and the lowest bus is that
+    of the units left when the spare ones have failed: those sag more.
+    """
+    converters, index = problem.converters, np.maximum(hardware.converter, 0)
+    off = 1.0 + converters.accuracy[index][..., None] * states.setting_side
+    units = hardware.units_running.transpose(0, 2, 1)
+    left = np.maximum(units - problem.study.derating.spare_converters, 0.5)
+    sharing = np.where(states.setting_side < 0, left, units)
+    return converters.ratio[index][..., None] * off, converters.output_ohm[index][..., None] / sharing
+
+
 def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: StageLosses, *, exact: bool) -> Solution:
     """Solve the board for a batch of designs.
 
@@ -273,10 +287,10 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
     has_converter = hardware.converter >= 0
     alive = (feeds.bus_sum(np.broadcast_to(~states.off, base_a.shape)) > 0) & has_converter[..., None]
     ratio = converters.ratio[index][..., None]
-    droop_ohm = converters.output_ohm[index][..., None] / hardware.units_running.transpose(0, 2, 1)
+    made, droop_ohm = unregulated(problem, states, hardware)
     set_v = hardware.set_v.transpose(0, 2, 1)
     fixed_ratio = hardware.fixed_ratio[..., None]
-    bus_v = np.where(fixed_ratio, node_v[:, None] * ratio, set_v)
+    bus_v = np.where(fixed_ratio, node_v[:, None] * made, set_v)
     least_bus_v = LEAST_STAGE_SHARE * np.where(np.isfinite(set_v), set_v, 1.0)
     supervisor_w = np.where(
         hardware.supervisor >= 0, problem.supervisors.power_w[np.maximum(hardware.supervisor, 0)], 0.0
@@ -354,7 +368,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
         root = np.sqrt(np.maximum(states.input_v**2 - 4.0 * path.resistance_ohm * node_w, 0.0))
         node_v = 0.5 * (states.input_v + root)
         input_a = (node_w - missing) / node_v
-        moving = np.where(fixed_ratio, node_v[:, None] * ratio - droop_ohm * bus_a, set_v)
+        moving = np.where(fixed_ratio, node_v[:, None] * made - droop_ohm * bus_a, set_v)
         moving[..., jump_index] -= dip_v[..., jump_band]
         bus_v = np.maximum(moving, least_bus_v)
         input_w = node_w + path.resistance_ohm * input_a**2 + path.power_w

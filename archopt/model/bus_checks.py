@@ -102,7 +102,8 @@ def check_buses(situation: Situation, ledger: Ledger) -> None:
         at_most=True, axes=(BUS_NAMES,), applies=used,
     )  # fmt: skip
     top_v = high_v + setting_error_v(problem, hardware.converter, high_v)
-    top_v = np.where(hardware.fixed_ratio, converters.ratio[index] * study.supply.high_v, top_v)
+    ratio_v = converters.ratio[index] * study.supply.high_v * (1.0 + converters.accuracy[index])
+    top_v = np.where(hardware.fixed_ratio, ratio_v, top_v)
     bulk_rated = problem.capacitors.rated_v[situation.designs.bus("bulk")] * study.derating.voltage
     ledger.add("capacitor voltage", top_v, bulk_rated, at_most=True, axes=(BUS_NAMES,), applies=used)
     damper = situation.designs.bus("damper")

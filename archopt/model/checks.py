@@ -167,9 +167,11 @@ def bus_a_span_v(situation: Situation) -> tuple[FloatArray, FloatArray]:
     problem, hardware = situation.problem, situation.hardware
     low, high = hardware.band_v[:, 0].min(axis=1), hardware.band_v[:, 0].max(axis=1)
     if len(problem.converters.names):
-        ratio, supply = problem.converters.ratio[np.maximum(hardware.converter[:, 0], 0)], problem.study.supply
+        index, supply = np.maximum(hardware.converter[:, 0], 0), problem.study.supply
+        ratio, off = problem.converters.ratio[index], problem.converters.accuracy[index]
         follows = hardware.fixed_ratio[:, 0]
-        low, high = np.where(follows, ratio * supply.low_v, low), np.where(follows, ratio * supply.high_v, high)
+        low = np.where(follows, ratio * (1.0 - off) * supply.low_v, low)
+        high = np.where(follows, ratio * (1.0 + off) * supply.high_v, high)
     return low - situation.solution.dip_v[:, 0].max(axis=1), high
 
 

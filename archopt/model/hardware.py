@@ -231,7 +231,8 @@ def effective_f(problem: Problem, capacitor: IntArray, bias_v: FloatArray) -> Fl
 def setting_error_v(problem: Problem, converter: IntArray, set_v: FloatArray) -> FloatArray:
     """Return how far a regulated bus may stand from where the study's grid sets it, V; shapes broadcast.
 
-    The accuracy of the setting, and what the converter's own setting grid leaves. A fixed ratio is exact.
+    The accuracy of the setting, and what the converter's own setting grid leaves. Of a fixed ratio, which is not set,
+    the board's solution counts the accuracy.
     """
     table = problem.converters
     if not len(table.names):

@@ -265,13 +265,24 @@ class Reference:
             return volts
         grid = bus.row.setting_grid_v
         error = bus.row.accuracy_percent / 100.0 * volts + (abs(volts - grid * round(volts / grid)) if grid else 0.0)
+        return volts + self.side(s) * error
+
+    def side(self, s: int) -> int:
+        """Return which side of what is set a state is checked on: -1 low, 1 high, 0 where nothing is checked."""
+        kind = self.states.kind[s]
+        if kind not in (MIX, JUMP, FALLBACK):
+            return 0
         same = [k for k in range(len(self.states.name)) if self.states.kind[k] == kind]
-        return volts + error if kind != JUMP and same.index(s) % 2 else volts - error
+        return 1 if kind != JUMP and same.index(s) % 2 else -1
+
+    def ratio(self, s: int, bus: Bus) -> float:
+        """Return output over input of a fixed ratio without load, off by its accuracy where limits are checked."""
+        return bus.row.ratio * (1.0 + self.side(s) * bus.row.accuracy_percent / 100.0)
 
     def undropped_v(self, s: int, net: Net) -> float:
         for bus in self.buses:
             if bus.name == net.feed:
-                return bus.row.ratio * float(self.states.input_v[s]) if bus.follows_input else self.set_v(s, bus)
+                return self.ratio(s, bus) * float(self.states.input_v[s]) if bus.follows_input else self.set_v(s, bus)
         return float(self.states.input_v[s]) if net.feed == "input" else self.own[self.place[net.feed]].voltage_v
 
     def largest_steps_w(self) -> dict[str, list[float]]:
@@ -356,7 +367,7 @@ class Reference:
         amps = self.currents(s)
         node = vin0
         set_v = {bus.name: self.set_v(s, bus) for bus in self.buses}
-        bus_v = {b.name: b.row.ratio * node if b.follows_input else set_v[b.name] for b in self.buses}
+        bus_v = {b.name: self.ratio(s, b) * node if b.follows_input else set_v[b.name] for b in self.buses}
         drops = [0.0] * len(self.nets)
         quiet = 0
         for _ in range(400):
@@ -410,7 +421,8 @@ class Reference:
                 node_w += total_w + out.converter_w[bus.name] if awake else 0.0
                 level = set_v[bus.name]
                 if bus.follows_input:
-                    level = -bus.row.output_mohm * 1e-3 / units * total_a  # the node is added below
+                    sharing = max(units - self.study.derating.spare_converters, 0.5) if self.side(s) < 0 else units
+                    level = -bus.row.output_mohm * 1e-3 / sharing * total_a  # the node is added below
                 moved[bus.name] = level - (self.dips_v[bus.name][band] if states.kind[s] == JUMP else 0.0)
             if on_bus and not any(bus.name == "bus_a" for bus in self.buses):
                 out.bias_w = 0.0
@@ -421,7 +433,7 @@ class Reference:
             most = vin0**2 / (4.0 * ohm)
             node = (vin0 + math.sqrt(max(vin0**2 - 4.0 * ohm * node_w, 0.0))) / 2.0
             for bus in self.buses:
-                level = moved[bus.name] + (bus.row.ratio * node if bus.follows_input else 0.0)
+                level = moved[bus.name] + (self.ratio(s, bus) * node if bus.follows_input else 0.0)
                 bus_v[bus.name] = max(level, 0.3 * set_v[bus.name])
             drops = fresh
             input_a = min(node_w, most) / node

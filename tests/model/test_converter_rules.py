@@ -20,7 +20,7 @@ from archopt.model.part_rows import IDEAL_SHEDDING, NO_SHEDDING, THRESHOLD_SHEDD
 from archopt.model.problem import Problem
 from archopt.model.space import Designs
 from archopt.model.stages import loop_bandwidth_rad_s
-from archopt.model.states import FALLBACK, JUMP, MIX
+from archopt.model.states import ENERGY, FALLBACK, JUMP, MIX
 
 STUDY = "telecom_six"
 COUNT, SEED = 300, 11
@@ -206,18 +206,32 @@ def test_a_shed_converter_must_wake_within_the_overload() -> None:
     assert bound[True, 10.0] < bound[True, 1e-4]
 
 
-def test_a_fixed_ratio_sags_below_the_narrowest_input() -> None:
+@pytest.mark.parametrize("spares", [0, 1])
+def test_a_fixed_ratio_sags_below_the_narrowest_input(spares: int) -> None:
     problem = evaluator_of(STUDY).problem
-    row = on_bus_a(problem, FIXED_RATIO)[:1]
+    derating = replace(problem.study.derating, spare_converters=spares)
+    problem = replace(problem, study=replace(problem.study, derating=derating))
+    row = on_bus_a(problem, FIXED_RATIO, 1 + spares)[:1]
     found = detail_of(problem, row)
     index = int(found.hardware.converter[0, 0])
     low = problem.states.of_kind(MIX)[0::2]
     units = found.hardware.units_running[0, low, 0]
     solution = found.solution
     ratio, ohm = float(problem.converters.ratio[index]), float(problem.converters.output_ohm[index])
-    expected = solution.node_v[0, low] * ratio - ohm / units * solution.bus_a[0, low, 0]
+    off = float(problem.converters.accuracy[index])
+    assert off > 0.0
+    left = np.maximum(units - spares, 0.5)
+    expected = solution.node_v[0, low] * ratio * (1.0 - off) - ohm / left * solution.bus_a[0, low, 0]
     np.testing.assert_allclose(solution.bus_v[0, low, 0], expected, rtol=1e-9)
     assert (expected < ratio * problem.study.supply.low_v).all()
+    high = problem.states.of_kind(MIX)[1::2]
+    above = solution.node_v[0, high] * ratio * (1.0 + off) - ohm / units * solution.bus_a[0, high, 0]
+    np.testing.assert_allclose(solution.bus_v[0, high, 0], above, rtol=1e-9)
+    # a year is counted as the ratio is stated, with all that run
+    counted = problem.states.of_kind(ENERGY)
+    running = found.hardware.units_running[0, counted, 0]
+    stated = solution.node_v[0, counted] * ratio - ohm / running * solution.bus_a[0, counted, 0]
+    np.testing.assert_allclose(solution.bus_v[0, counted, 0], stated, rtol=1e-9)
     # the range check reads the sagged voltage, less the plane's drop
     rails = found.hardware.on_bus[0, 0]
     below = float((solution.stage_v[0, low][:, rails]).min())
