@@ -10,11 +10,12 @@ from archopt.errors import InputError
 from archopt.errors import Problem as InputProblem
 from archopt.inputs.resolved import Catalogue, ResolvedStudy
 from archopt.model.board import DirectStages, solve
+from archopt.model.energy_states import EnergyStates
 from archopt.model.hardware import unpack
 from archopt.model.parameters import REGULATED, IntArray
 from archopt.model.problem import Problem, compile_problem
 from archopt.model.space import BUS_A, Designs
-from archopt.model.states import ENERGY, HELD, EnergyStates, StateTable, reduce_load
+from archopt.model.states import ENERGY, HELD, StateTable, reduce_load
 
 SERIES_CHUNK = 512  # moments solved at once: what stays in the processor's cache
 

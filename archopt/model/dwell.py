@@ -8,15 +8,12 @@ from __future__ import annotations
 
 from collections import deque
 from dataclasses import replace
-from typing import TYPE_CHECKING
 
 import numpy as np
 
 from archopt.inputs.resolved import LoadTable, ResolvedStudy
+from archopt.model.energy_states import EnergyStates
 from archopt.model.parameters import FloatArray, IntArray
-
-if TYPE_CHECKING:
-    from archopt.model.states import EnergyStates
 
 DAYS_PER_YEAR = 365.0
 SECONDS_PER_HOUR = 3600.0
