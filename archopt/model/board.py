@@ -14,7 +14,7 @@ import numpy as np
 from archopt.model.converter_loss import ConverterLoss
 from archopt.model.copper_heat import CopperHeat
 from archopt.model.hardware import Hardware
-from archopt.model.parameters import FloatArray
+from archopt.model.parameters import BoolArray, FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.space import INPUT
 from archopt.model.stages import operate, ripple_square_a2
@@ -175,6 +175,12 @@ def via_drop_v(problem: Problem, rail_a: FloatArray, bus: int) -> FloatArray:
     return np.asarray(2.0 * (shared + planes.own_ohm[bus] * rail_a))
 
 
+def users(on_bus: BoolArray) -> IntArray | slice:
+    """Return which designs of (P, R) have a rail on a bus; all of them without a copy."""
+    here = np.flatnonzero(on_bus.any(axis=1))
+    return slice(None) if len(here) == len(on_bus) else here
+
+
 class Feeds:
     """Where the stages of a batch take their input from: bus A, bus B, the input node or a parent rail.
 
@@ -188,7 +194,7 @@ class Feeds:
         self.parent_v = problem.rails.voltage_v[hardware.parent[self.child]]
         self.direct = (hardware.feed == INPUT).astype(np.float64)
         self.on_bus = hardware.on_bus.astype(np.float64)
-        self.buses = [bus for bus in range(2) if hardware.on_bus[:, bus].any()]
+        self.users = [users(hardware.on_bus[:, bus]) for bus in range(2)]
 
     def stage_v(self, bus_v: FloatArray, node_v: FloatArray, drop_v: FloatArray) -> FloatArray:
         """Return the stage inputs, (P, S, R) V, from buses (P, 2, S), input node (P, S) and drops (P, S, R)."""
@@ -201,8 +207,8 @@ class Feeds:
     def bus_sum(self, values: FloatArray) -> FloatArray:
         """Return what the rails of each bus sum to, (P, 2, S), from (P, S, R)."""
         out = np.zeros((len(values), 2, values.shape[1]))
-        for bus in self.buses:
-            out[:, bus] = np.einsum("psr,pr->ps", values, self.on_bus[:, bus])
+        for bus, here in enumerate(self.users):
+            out[here, bus] = np.einsum("psr,pr->ps", values[here], self.on_bus[here, bus])
         return out
 
     def plane_drops(self, rail_a: FloatArray, warmth: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -213,20 +219,20 @@ class Feeds:
         problem, hardware = self.problem, self.hardware
         drop = np.zeros_like(rail_a)
         plane_w = np.zeros((len(rail_a), 2, rail_a.shape[1]))
-        for bus in self.buses:
-            on_bus = self.on_bus[:, bus, None]
-            on_a = rail_a * on_bus
+        for bus, here in enumerate(self.users):
+            on_bus, warm = self.on_bus[here, bus, None], warmth[here, :, bus]
+            on_a = rail_a[here] * on_bus
             part = problem.planes.square_drop(bus, on_a)
-            square_ohm = hardware.plane_ohm[:, bus, None]
+            square_ohm = hardware.plane_ohm[here, bus, None]
             if problem.planes.with_vias:
                 part *= square_ohm[..., None]
                 part += via_drop_v(problem, on_a, bus)
-                part *= warmth[..., bus, None]
+                part *= warm[..., None]
             else:
-                part *= (square_ohm * warmth[..., bus])[..., None]
+                part *= (square_ohm * warm)[..., None]
             part *= on_bus
-            plane_w[:, bus] = np.einsum("psr,psr->ps", part, on_a)
-            drop += part
+            plane_w[here, bus] = np.einsum("psr,psr->ps", part, on_a)
+            drop[here] += part
         return drop, plane_w
 
 
@@ -285,7 +291,7 @@ def solve(problem: Problem, states: StateTable, hardware: Hardware, stages: Stag
     node_v = np.broadcast_to(states.input_v, (count, len(states.hours))).copy()
     index = np.maximum(hardware.converter, 0)
     has_converter = hardware.converter >= 0
-    alive = (feeds.bus_sum(np.broadcast_to(~states.off, base_a.shape)) > 0) & has_converter[..., None]
+    alive = (np.einsum("pkr,sr->pks", feeds.on_bus, ~states.off * 1.0) > 0) & has_converter[..., None]
     ratio = converters.ratio[index][..., None]
     made, droop_ohm = unregulated(problem, states, hardware)
     set_v = hardware.set_v.transpose(0, 2, 1)

@@ -217,9 +217,8 @@ class TableReader:
     def move(self, outside: IntArray, place: SingleArray) -> None:
         """Gather anew where the operating point has left its nodes."""
         assert self.node is not None
-        shape = place.shape
         node = nearest(place.reshape(-1)[outside])
-        esr = np.broadcast_to(self.esr_ohm, shape).reshape(-1)[outside]
+        esr = self.esr_ohm.reshape(-1)[outside // self.stride]
         self.node.reshape(-1)[outside] = node
         for kept, fresh in zip(self.cubic, self.gather(self.first.reshape(-1)[outside], node, esr), strict=True):
             kept.reshape(-1)[outside] = fresh
