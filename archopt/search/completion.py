@@ -21,6 +21,7 @@ from archopt.search.rail_tables import (
     ILLEGAL_KWH,
     NO_COUNT,
     BankCounts,
+    ByteArray,
     Float32Array,
     RailTable,
     make_rail_tables,
@@ -51,12 +52,22 @@ class Board:
 
 @dataclass(frozen=True)
 class Offer:
-    """The best bank for every option of one rail from one feed: score (P, O), bank place and count (P, O)."""
+    """What one rail can have from one feed: the score of every option with its best bank, (P, O).
+
+    paid, counts (n, K, O): money of every bank and the least index of its count; at (P,): the row of a plan there.
+    """
 
     feed: int
     score: Float32Array
-    bank: IntArray
-    count: IntArray
+    paid: Float32Array
+    counts: ByteArray
+    at: IntArray
+
+    def bank_of(self, plans: IntArray, option: IntArray) -> tuple[IntArray, IntArray]:
+        """Return the place of the best bank and the index of its count for one option of each plan."""
+        row = self.at[plans]
+        bank = self.paid[row, :, option].argmin(axis=1)
+        return bank, self.counts[row, bank, option].astype(np.int64)
 
 
 class Completion:
@@ -157,8 +168,7 @@ class Completion:
             here = every[which == turn]
             option = offer.score[here].argmin(axis=1)
             board.option[here, r] = option
-            board.bank[here, r] = offer.bank[here, option]
-            board.count[here, r] = offer.count[here, option]
+            board.bank[here, r], board.count[here, r] = offer.bank_of(here, option)
             board.feed[here, r] = offer.feed
         board.count[:, r] = np.minimum(board.count[:, r], np.flatnonzero(table.counts)[-1])
         self.put(table, board)
@@ -260,14 +270,13 @@ class Completion:
         score = self.with_banks(
             table, BUS_A + b, price, marginal, counts, bank_cost[here], stage_cost[here] + price * energy, ok
         )
-        full = Offer(
-            BUS_A + b,
-            np.full((len(plan), len(table.option)), 10 * ILLEGAL, np.float32),
-            np.zeros((len(plan), len(table.option)), np.int64),
-            np.zeros((len(plan), len(table.option)), np.int64),
-        )
-        full.score[here], full.bank[here], full.count[here] = score.score, score.bank, score.count
-        return full
+        if len(here) == len(plan):
+            return score
+        full = np.full((len(plan), len(table.option)), 10 * ILLEGAL, np.float32)
+        full[here] = score.score
+        at = np.zeros(len(plan), dtype=np.int64)
+        at[here] = np.arange(len(here))
+        return replace(score, score=full, at=at)
 
     def place_offer(
         self, table: RailTable, k: int, plan: Plan, seen: Conditions, stage_cost: Float32Array,
@@ -288,25 +297,24 @@ class Completion:
         return offer
 
     def with_banks(
-        self, table: RailTable, feed: int, price: Float32Array, marginal: Float32Array, counts: IntArray,
+        self, table: RailTable, feed: int, price: Float32Array, marginal: Float32Array, counts: ByteArray,
         bank_cost: Float32Array, cost: Float32Array, ok: BoolArray,
     ) -> Offer:  # fmt: skip
-        """Return each option with its best bank: cost (P, O) without bank, counts (P, O, K) the least index."""
-        count, banks = counts.shape[0], counts.shape[2]
+        """Return each option with its best bank: cost (P, O) without bank, counts (P, K, O) the least index."""
+        count, banks = counts.shape[:2]
         width = NO_COUNT + 1
-        base = np.arange(banks) * width
+        base = (np.arange(count * banks, dtype=np.int32) * width).reshape(count, banks, 1)
         esr = (self.esr[table.banks, None] / np.maximum(self.pieces, 1.0)).astype(np.float32)
-        # banks are compared at the rail's typical ripple; the option then pays for its own
-        typical = np.float32(np.median(table.ripple))
-        worth = price * marginal
-        money = (bank_cost + (worth * typical)[:, :, None] * esr).reshape(-1)
-        place = counts + (base + (np.arange(count) * banks * width)[:, None, None])
-        paid = money[place]
-        bank = paid.argmin(axis=2)
-        chosen = np.take_along_axis(counts, bank[..., None], 2)[..., 0].astype(np.int64)
-        score = cost + np.take_along_axis(paid, bank[..., None], 2)[..., 0]
-        score += worth * esr[bank, chosen] * (table.ripple - typical)
-        return Offer(feed, np.where(ok, score, score + np.float32(ILLEGAL)), bank, chosen)
+        paid = bank_cost.reshape(-1).take(counts + base, mode="clip")
+        # a bank loses by the ripple of the option it serves
+        lost = esr.reshape(-1).take(counts + base[:1], mode="clip")
+        lost *= table.ripple
+        lost *= (price * marginal)[:, :, None]
+        paid += lost
+        score = cost + paid.min(axis=1)
+        return Offer(
+            feed, np.where(ok, score, score + np.float32(ILLEGAL)), paid, counts, np.arange(count)
+        )
 
     def rows(self, plan: Plan, board: Board, seen: Conditions) -> IntArray:
         """Return undecided design rows of the boards."""

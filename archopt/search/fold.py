@@ -190,10 +190,10 @@ class Fold:
         """Return the least index of bank count under every cap, (caps, O, K)."""
         if BUS_A <= feed < PARENT:
             band = np.arange(table.energy.shape[0])
-            counts = table.bus_counts[:, band, base.seen.dipped[0, feed - BUS_A]].max(axis=1)
-            return np.asarray(counts, dtype=np.int64)
+            counts = table.bus_counts[:, band, base.seen.dipped[0, feed - BUS_A]].max(axis=1)  # (caps, K, O)
+            return np.asarray(counts.transpose(0, 2, 1), dtype=np.int64)
         place = next(k for k, spot in enumerate(table.places) if spot.feed == feed)
-        return np.asarray(table.place_counts[:, place], dtype=np.int64)
+        return np.asarray(table.place_counts[:, place].transpose(0, 2, 1), dtype=np.int64)
 
     def rows(self, base: Base, fronts: list[RailFront], choice: IntArray) -> IntArray:
         """Return undecided rows: the base with every rail's chosen point, choice (n, R)."""

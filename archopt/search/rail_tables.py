@@ -188,29 +188,38 @@ class BankCounts:
         self.ripple: dict[int, ByteArray] = {}
         bands = evaluator.states.places
         for table in tables:
-            shape = (len(table.option), len(table.banks))
+            shape = (len(table.banks), len(table.option))
             table.bus_counts = np.zeros((len(CAPS), bands, len(self.volts), *shape), np.uint8)
             table.place_counts = np.zeros((len(CAPS), max(len(table.places), 1), *shape), np.uint8)
 
     def ensure(self, caps: IntArray) -> None:
         """Fill the tables of the caps (indices of CAPS) not yet filled."""
-        for cap in np.unique(caps):
-            for table in self.tables:
-                if int(cap) not in table.filled:
-                    self.fill(table, int(cap))
-                    table.filled.add(int(cap))
+        for table in self.tables:
+            missing = [int(cap) for cap in np.unique(caps) if int(cap) not in table.filled]
+            if missing:
+                self.fill(table, missing)
+                table.filled.update(missing)
 
-    def fill(self, table: RailTable, cap: int) -> None:
-        """Fill one rail's counts under one cap."""
+    def fill(self, table: RailTable, caps: list[int]) -> None:
+        """Fill one rail's counts under some caps."""
         options = self.evaluator.options
         row = options.row[table.option]
         used, place = np.unique(row, return_inverse=True)
         place = place.reshape(row.shape)
-        bands = np.arange(row.shape[1])
         percent = options.rows.droop_percent[np.ix_(used, table.banks)]  # (U, K, counts, B, nodes)
+        percent = np.ascontiguousarray(np.moveaxis(percent, -1, 0))
         nodes = options.rows.droop_nodes_v[used]
-        least_v = least_voltage(nodes, percent, float(CAPS[cap]), table.counts)  # (U, K, counts, B)
-        least_v = np.maximum(least_v, options.rows.jump_v[used][:, None, None, :])
+        for cap in caps:
+            least_v = least_voltage(nodes, percent, float(CAPS[cap]), table.counts)  # (U, K, counts, B)
+            least_v = np.maximum(least_v, options.rows.jump_v[used][:, None, None, :])
+            self.fill_cap(table, cap, least_v, used, place)
+
+    def fill_cap(self, table: RailTable, cap: int, least_v: FloatArray, used: IntArray, place: IntArray) -> None:
+        """Fill one rail's counts under one cap from the least voltages of its table rows, (U, K, counts, B).
+
+        used (U,): the rows; place (O, B): the row among them of every option.
+        """
+        bands = np.arange(place.shape[1])
         volts = self.volts_of(table)
         order = np.argsort(volts, kind="stable")
         met = np.searchsorted(volts[order], least_v - 1e-9)  # voltages, from the lowest, at which it is not met
@@ -223,9 +232,9 @@ class BankCounts:
             counts += (rank < flat[count]).view(np.uint8)
         counts = np.maximum(counts.reshape(-1, *shape), self.ripple_counts(table, used))
         spread = counts[:, place, bands]  # (V, O, B, K)
-        table.bus_counts[cap] = spread[: len(self.volts)].transpose(2, 0, 1, 3)
+        table.bus_counts[cap] = spread[: len(self.volts)].transpose(2, 0, 3, 1)
         for k in range(len(table.places)):
-            table.place_counts[cap, k] = spread[len(self.volts) + k].max(axis=1)
+            table.place_counts[cap, k] = spread[len(self.volts) + k].max(axis=1).T
 
     def volts_of(self, table: RailTable) -> FloatArray:
         """Return the voltages a rail's counts are tabled at: the dipped grid, then its unmoving supplies."""
@@ -272,15 +281,15 @@ class BankCounts:
 def least_voltage(nodes: FloatArray, percent: Float32Array, cap: float, counts: BoolArray) -> FloatArray:
     """Return the least stage voltage from which droop stays within the cap, (U, K, counts, B); inf if never.
 
-    nodes (U, nodes) rising; percent (U, K, counts, B, nodes) falling with voltage; counts: allowed by pins.
+    nodes (U, nodes) rising; percent (nodes, U, K, counts, B) falling with voltage; counts: allowed by pins.
     """
-    last = percent.shape[-1] - 1
-    above = np.zeros(percent.shape[:-1], dtype=np.int64)
-    for node in range(last + 1):
-        above += percent[..., node] > cap
-    low = np.clip(above - 1, 0, last - 1)
-    flat = np.arange(low.size).reshape(low.shape) * (last + 1) + low
-    p_low, p_high = percent.ravel()[flat], percent.ravel()[flat + 1]
+    last = len(percent) - 1
+    above = np.zeros(percent.shape[1:], dtype=np.int8)
+    for values in percent:
+        above += values > cap
+    low = np.clip(above.astype(np.int64) - 1, 0, last - 1)
+    flat = low * low.size + np.arange(low.size).reshape(low.shape)
+    p_low, p_high = percent.ravel()[flat], percent.ravel()[flat + low.size]
     node_v = np.arange(len(nodes))[:, None, None, None] * (last + 1) + low
     v_low, v_high = nodes.ravel()[node_v], nodes.ravel()[node_v + 1]
     r_low, r_high = 1.0 / np.maximum(p_low, 1e-6), 1.0 / np.maximum(p_high, 1e-6)  # nearly straight in headroom
