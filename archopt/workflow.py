@@ -12,6 +12,7 @@ import numpy as np
 
 from archopt.errors import InfeasibleError
 from archopt.inputs.load import LoadedStudy, load
+from archopt.inputs.resolved import ResolvedStudy
 from archopt.model.compiled import compile_study, incumbent_row
 from archopt.model.evaluator import Evaluator
 from archopt.model.explain import explain_many, topology
@@ -163,7 +164,7 @@ def solve(
             clock.note("polish")
     reason = stop() if stop is not None and found.ended == "stopped" else ""
     if not len(found.rows):
-        raise nothing_found(found)
+        raise nothing_found(found, study)
     say(progress, "direct physics")
     published = publish(evaluator, found, None if polish is None else polish.rows)
     clock.note("direct physics")
@@ -261,9 +262,9 @@ def unfinished_run(directory: Path, facts: checkpoint.Facts) -> checkpoint.Check
     return found
 
 
-def nothing_found(found: SearchResult) -> InfeasibleError:
+def nothing_found(found: SearchResult, study: ResolvedStudy) -> InfeasibleError:
     """Return the error of a search without a feasible design; one stopped early may still find one."""
-    error = infeasible(found)
+    error = infeasible(found, study)
     if found.ended in EARLY:
         return InfeasibleError("stopped before any design met every limit", error.limits)
     return error

@@ -12,13 +12,14 @@ from typing import Annotated
 
 import typer
 
-from archopt.cli import check, copper, enumerate, fit, floorplan, leaving, new, parts, show, solve, transient
+from archopt.cli import check, copper, fit, floorplan, leaving, new, parts, show, solve, transient
+from archopt.cli import enumerate as enumeration
 
 COMMANDS: dict[str, Callable[..., None]] = {
     "new": new.new_command,
     "check": check.check_command,
     "solve": solve.solve_command,
-    "enumerate": enumerate.enumerate_command,
+    "enumerate": enumeration.enumerate_command,
     "show": show.show_command,
     "transient": transient.transient_command,
     "copper": copper.copper_command,

@@ -17,9 +17,15 @@ def parts_command(
         Path | None, typer.Option("--study", metavar="STUDY", help="Count in the study's own parts.")
     ] = None,
     columns: Annotated[bool, typer.Option("--columns", help="Explain the columns of the family.")] = False,
-    input_v: Annotated[float | None, typer.Option("--input-v", metavar="V", help="Takes this input voltage.")] = None,
-    output_v: Annotated[float | None, typer.Option("--output-v", metavar="V", help="Makes this output.")] = None,
-    current_a: Annotated[float | None, typer.Option("--current-a", metavar="A", help="Rated for this.")] = None,
+    input_v: Annotated[
+        float | None, typer.Option("--input-v", min=0.0, metavar="V", help="Takes this input voltage.")
+    ] = None,
+    output_v: Annotated[
+        float | None, typer.Option("--output-v", min=0.0, metavar="V", help="Makes this output.")
+    ] = None,
+    current_a: Annotated[
+        float | None, typer.Option("--current-a", min=0.0, metavar="A", help="Rated for this.")
+    ] = None,
     as_json: JsonOption = False,
 ) -> None:
     """Browse the catalogue: families, rows, one part.

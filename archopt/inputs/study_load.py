@@ -7,7 +7,7 @@ from typing import Annotated, Literal
 from pydantic import BaseModel, ConfigDict, Field, field_validator
 
 Names = Annotated[tuple[str, ...], Field(strict=False)]
-RESERVED_NAMES = ("input", "bus_a", "bus_b", "board", "none")
+RESERVED_NAMES = ("input", "bus", "bus_a", "bus_b", "board", "none", "incumbent")
 
 
 class Row(BaseModel):

@@ -116,8 +116,8 @@ def band_records(problem: Problem, detail: Detail, p: int) -> list[dict[str, Any
     return out
 
 
-def limit_records(detail: Detail, p: int) -> list[dict[str, Any]]:
-    """Return the worst place of every limit checked, tightest first."""
+def limit_records(detail: Detail, p: int, currency: str = "currency") -> list[dict[str, Any]]:
+    """Return the worst place of every limit checked, tightest first; money in ``currency``."""
     out = []
     for limit in LIMITS:
         worst = detail.ledger.worst.get(limit.name)
@@ -133,7 +133,7 @@ def limit_records(detail: Detail, p: int) -> list[dict[str, Any]]:
                 "value": float(worst.value[p]),
                 "bound": float(worst.bound[p]),
                 "slack": float(worst.slack[p]),
-                "unit": limit.unit,
+                "unit": currency if limit.unit == "currency" else limit.unit,
                 "normalised": float(worst.normalised[p]),
             }
         )
@@ -312,7 +312,7 @@ def explain_one(problem: Problem, detail: Detail, p: int, losses: dict[str, dict
     states = problem.states
     energy, cost, droop = (float(x) for x in detail.evaluation.objectives[p])
     records = state_records(problem, detail, p, losses)
-    limits = limit_records(detail, p)
+    limits = limit_records(detail, p, problem.study.economics.currency)
     shown = {states.name[s].replace(" load", ""): float(detail.solution.loss_w[p, s]) for s in states.of_kind(PRINT)}
     steady = states.of_kind(MIX)
     shown["hottest"] = float(detail.solution.loss_w[p, steady].max())

@@ -30,6 +30,8 @@ WRITTEN = (FRONT, ARCHIVE, PROBLEM, DESIGNS, EXTRAS, RUN)
 ADDED_LATER = ("report.html", "copper_*.csv")
 """Files (patterns) other commands may add to a result; replacing the result may remove them."""
 
+REMEDY = "restore it from a copy, or solve the study again"
+
 EXTRA_FIELDS = (
     "incumbent", "baselines", "gains", "afresh", "losing", "leverage", "not_modelled", "cautions", "merged", "notes",
 )  # fmt: skip
@@ -179,18 +181,20 @@ def read(directory: Path, *, archive: bool = True) -> FrontRecord:
     ------
     OutputError : there is no result, it is not ours, of a later version, or damaged; the message says which.
     """
+    if directory.is_file():
+        raise OutputError(f"{directory}: is a file; the directory that holds a result is wanted")
     if not directory.is_dir():
         raise OutputError(f"{directory}: there is no such directory")
     head = _head(directory)
     digests = head.get("files")
     if not isinstance(digests, dict):
-        raise OutputError(f"{directory / RUN}: damaged: it does not list the files")
+        raise OutputError(f"{directory / RUN}: damaged: it does not list the files; {REMEDY}")
     problem = _json_file(directory / PROBLEM, digests, dict)
     designs = _json_file(directory / DESIGNS, digests, list)
     extras = {"afresh": {}, **_json_file(directory / EXTRAS, digests, dict)}  # earlier results lack it
     run = head.get("run")
     if not isinstance(run, dict) or not all(name in extras for name in EXTRA_FIELDS):
-        raise OutputError(f"{directory}: damaged: parts of the result are missing")
+        raise OutputError(f"{directory}: damaged: parts of the result are missing; {REMEDY}")
     numbers = {str(name) for name in extras.get("archive_numbers") or []}
     rows = _csv_rows(_bytes_of(directory / ARCHIVE, digests), numbers) if archive else []
     fields = {name: extras[name] for name in EXTRA_FIELDS}
@@ -225,6 +229,11 @@ def _refuse_unless_ours(shown: Path, target: Path) -> None:
     if set(there) <= set(UNFINISHED):
         return
     if not is_ours(target):
+        if RUN in there:
+            raise OutputError(
+                f"{shown} holds a {RUN} that does not read as one of archopt, damaged or of something else;"
+                " move it away, or choose another directory"
+            )
         raise OutputError(f"{shown} holds something that is no result of archopt; choose another directory")
     ours = (*WRITTEN, *UNFINISHED, *ADDED_LATER)
     foreign = [name for name in there if not any(fnmatchcase(name, pattern) for pattern in ours)]
@@ -287,9 +296,13 @@ def _head(directory: Path) -> Data:
     if not path.is_file():
         raise OutputError(f"{directory}: holds no result of archopt ({RUN} is missing)")
     try:
-        head = json.loads(path.read_bytes())
-    except (OSError, ValueError) as error:
-        raise OutputError(f"{path}: cannot be read: {error}") from error
+        content = path.read_bytes()
+    except OSError as error:
+        raise OutputError(f"{path}: cannot be read: {error.strerror or error}") from error
+    try:
+        head = json.loads(content)
+    except ValueError as error:
+        raise OutputError(f"{path}: damaged: {broken_json(content, error)}; {REMEDY}") from error
     if not isinstance(head, dict) or head.get("format") != FORMAT:
         raise OutputError(f"{directory}: holds no result of archopt ({RUN} is of something else)")
     version = head.get("format_version")
@@ -300,13 +313,24 @@ def _head(directory: Path) -> Data:
     return head
 
 
+def broken_json(content: bytes, error: ValueError) -> str:
+    """What is wrong with a JSON file, and in which line, as far as that can be told."""
+    if not content.strip():
+        return "it is empty"
+    if isinstance(error, json.JSONDecodeError):
+        if error.pos >= len(content.decode(errors="replace").rstrip()) or "Unterminated" in error.msg:
+            return f"it ends in the middle of line {error.lineno}"
+        return f"no JSON from line {error.lineno}, column {error.colno} on"
+    return "it is no text"
+
+
 def _bytes_of(path: Path, digests: dict[str, object]) -> bytes:
     try:
         content = path.read_bytes()
     except OSError as error:
         raise OutputError(f"{path}: cannot be read: {error.strerror or error}") from error
     if hashlib.sha256(content).hexdigest() != digests.get(path.name):
-        raise OutputError(f"{path}: damaged, or changed after it was written; solve again or restore it")
+        raise OutputError(f"{path}: damaged, or changed after it was written; {REMEDY}")
     return content
 
 
@@ -314,9 +338,9 @@ def _json_file(path: Path, digests: dict[str, object], kind: type) -> Any:
     try:
         value = json.loads(_bytes_of(path, digests))
     except ValueError as error:
-        raise OutputError(f"{path}: damaged: {error}") from error
+        raise OutputError(f"{path}: damaged: {error}; {REMEDY}") from error
     if not isinstance(value, kind):
-        raise OutputError(f"{path}: damaged: not what this file holds")
+        raise OutputError(f"{path}: damaged: not what this file holds; {REMEDY}")
     return value
 
 

@@ -376,8 +376,10 @@ def write_png(view: WaveView, path: Path) -> None:
 
     Raises
     ------
-    OutputError : the file cannot be written
+    OutputError : the file is not named as a PNG, or cannot be written
     """
+    if path.suffix.lower() != ".png":
+        raise OutputError(f"{path}: pictures of waveforms are PNG; let the name end in .png")
     from matplotlib.figure import Figure  # noqa: PLC0415 - half a second, and only pictures need it
 
     figure = Figure(figsize=(8.0, 2.6 * len(view.traces)), layout="constrained")

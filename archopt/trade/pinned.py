@@ -123,7 +123,8 @@ def best_row(objectives: FloatArray, violation: FloatArray) -> int:
 def unmet_limits(evaluator: Evaluator, row: IntArray) -> list[str]:
     """Return the limits one decided row does not meet by direct physics, worst first, with their size."""
     detail: Detail = evaluator.detail(row[None], exact=True, explain=True)
-    return [limit_sentence(record) for record in limit_records(detail, 0) if record["slack"] < 0]
+    currency = evaluator.problem.study.economics.currency
+    return [limit_sentence(record) for record in limit_records(detail, 0, currency) if record["slack"] < 0]
 
 
 def limit_sentence(record: dict[str, object]) -> str:

@@ -182,9 +182,18 @@ def test_what_is_no_result_is_said_plainly(record: FrontRecord, tmp_path: Path) 
     (tmp_path / "run.json").write_text("{}")
     with pytest.raises(OutputError, match="something else"):
         files.read(tmp_path)
-    (tmp_path / "run.json").write_text("{")
-    with pytest.raises(OutputError, match="cannot be read"):
-        files.read(tmp_path)
+    with pytest.raises(OutputError, match="is a file; the directory"):
+        files.read(tmp_path / "run.json")
+    for content, said in (
+        (b"", "it is empty"), (b'{"format": "archopt res', "it ends in the middle of line 1"),
+        (b'{\n"format" "x"\n}', "no JSON from line 2, column 10 on"), (b"\xff\xfe", "it is no text"),
+    ):  # fmt: skip
+        (tmp_path / "run.json").write_bytes(content)
+        with pytest.raises(OutputError, match=rf"run\.json: damaged: {said}.*; restore it from a copy, or solve"):
+            files.read(tmp_path)
+    with pytest.raises(OutputError, match=r"run\.json that does not read as one of archopt"):
+        files.check_target(tmp_path, replace=True)
+    (tmp_path / "run.json").unlink()
     place = files.write(record, tmp_path / "a")
     head = json.loads((place / "run.json").read_text())
     (place / "run.json").write_text(json.dumps(head | {"format_version": 99}))
