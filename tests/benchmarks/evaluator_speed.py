@@ -36,7 +36,8 @@ from archopt.model.rail_checks import check_jump, check_rails
 from archopt.model.situation import Situation, rail_droop
 from archopt.model.space import Designs
 from archopt.search.driver import Search
-from tests.benchmarks import twelve_rails
+
+from . import twelve_rails
 
 FOLDER = Path(__file__).resolve().parents[2] / "studies"
 SHIPPED = ("telecom_six", "industrial_ten", "compute_sixteen")
