@@ -72,7 +72,7 @@ def test_stopped_after_each_generation_it_ends_like_one_never_stopped(evaluator:
     while True:
         found = search(
             evaluator, **settings, stop=lambda: True, resume=kept[-1] if kept else None,
-            keep=lambda _, state, at_once: kept.append(through_a_file(state())),
+            keep=lambda evaluations, state, *, at_once=False: kept.append(through_a_file(state())),
         )  # fmt: skip
         sittings += 1
         if found.ended != "stopped":
@@ -86,7 +86,9 @@ def test_stopped_after_each_generation_it_ends_like_one_never_stopped(evaluator:
 def test_a_search_that_had_settled_is_not_taken_further(evaluator: Evaluator) -> None:
     kept: list[dict[str, np.ndarray]] = []
     settings: dict[str, Any] = {"evaluations": 100_000, "population": 16, "seed": 3, "stagnation_generations": 2}
-    found = search(evaluator, **settings, keep=lambda _, state, at_once: kept.append(state()))
+    found = search(
+        evaluator, **settings, keep=lambda evaluations, state, *, at_once=False: kept.append(state())
+    )
     assert found.ended == "no more growth"
     again = search(evaluator, **settings, resume=kept[-1])
     assert result_bytes(again) == result_bytes(found)

@@ -57,7 +57,7 @@ class BareDesk(Desk):
 def genomes_of(desk: Desk, count: int) -> np.ndarray:
     rng = np.random.default_rng(7)
     low, high = (np.array([getattr(gene, end) for gene in desk.genome.genes]) for end in ("low", "high"))
-    return np.rint(low + rng.random((count, len(low))) * (high - low))
+    return np.asarray(np.rint(low + rng.random((count, len(low))) * (high - low)))
 
 
 def same(one: Arrays, other: Arrays) -> None:
