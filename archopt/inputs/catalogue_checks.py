@@ -54,7 +54,8 @@ def _check_buck(part: BuckStage, note: Callable[[str, str], None]) -> None:
             f"gates need {LEAST_GATE_V:g} V from the output, output_min_v is {part.output_min_v:g} V",
         )
     if part.light_load == "emulation" and part.gate_supply == "bias":
-        note("light_load", "emulation needs a gate supply from input or output: a bias is counted at full frequency")
+        why = "what a separate bias delivers is counted at frequency_khz, which emulation leaves at light load"
+        note("light_load", f"emulation needs a gate supply from input or output, else write forced: {why}")
     if part.fold_floor_khz > part.frequency_khz:
         note("fold_floor_khz", f"{part.fold_floor_khz:g} kHz is above frequency_khz {part.frequency_khz:g} kHz")
 
