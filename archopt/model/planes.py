@@ -310,7 +310,17 @@ def with_pours(study: ResolvedStudy, rails: RailArrays) -> RailArrays:
     )  # fmt: skip
 
 
+def pour_place(study: ResolvedStudy, rail: str) -> str:
+    """Return the name of the most crowded place of a rail's pour."""
+    region = None if study.floorplan is None else study.floorplan.region(rail)
+    if study.floorplan is None or region is None:
+        return "width"
+    net = net_copper(study.floorplan, region, copper_degc(study))
+    share = np.maximum(net.place_share[:, 0], LEAST_SHARE)
+    return net.place_names[int((net.place_width_m * share ** (-1.0 / SECTION_EXPONENT)).argmin())]
+
+
 __all__ = [
-    "BusPlanes", "NetCopper", "SheetError", "bus_planes", "copper_degc", "net_copper", "perforated", "solved_net",
-    "via_field_ohm", "with_pours",
+    "BusPlanes", "NetCopper", "SheetError", "bus_planes", "copper_degc", "net_copper", "perforated", "pour_place",
+    "solved_net", "via_field_ohm", "with_pours",
 ]  # fmt: skip

@@ -16,6 +16,7 @@ from archopt.present.part_chart import Curve, chart_lines
 from archopt.present.record import Data
 from archopt.present.tables import HangingLines, section, table
 from archopt.trade.copper import WEIGHT, CopperAnswer, CopperPoint, copper_question, last_worth
+from archopt.trade.copper_again import EVALUATIONS
 from archopt.trade.rebuilt import problem_of, row_of
 
 CHART_WIDTH, CHART_HEIGHT = 56, 10
@@ -30,6 +31,7 @@ class CopperRequest:
     design: str
     net: str | None = None
     reoptimise: bool = False
+    evaluations: int = EVALUATIONS
     replace: bool = False
 
 
@@ -46,7 +48,9 @@ def ask_copper(front: Front, asked: CopperRequest) -> tuple[CopperAnswer, Path]:
         raise OutputError(f"{place} is there already; move it away or replace it (--replace)")
     problem = problem_of(front.record.problem)
     row = row_of(problem, design.data)
-    answer = copper_question(problem, row, design=design.name, net=asked.net, reoptimise=asked.reoptimise)
+    answer = copper_question(
+        problem, row, design=design.name, net=asked.net, reoptimise=asked.reoptimise, evaluations=asked.evaluations
+    )
     return answer, place
 
 
@@ -91,11 +95,12 @@ def copper_sections(answer: CopperAnswer, currency: str) -> Iterable[RenderableT
         (
             net.net, str(net.pairs), number(net.squares, 3), number(net.area_cm2, 3), fixed(net.loss_kwh, 2),
             fixed(net.drop_mv, 1), fixed(net.drop_percent, 2), fixed(net.rise_k, 1),
+            fixed(net.copper_degc, 1), net.place,
         )
         for net in answer.nets
     ]  # fmt: skip
-    heads = ("net", "pairs", "squares", "cm2 a pair", "kWh a year", "drop mV", "drop %", "rise K")
-    yield from section(f"Copper of {answer.design}", table(heads, rows, left=("net",)))
+    heads = ("net", "pairs", "squares", "cm2 a pair", "kWh a year", "drop mV", "drop %", "rise K", "degC", "hottest at")
+    yield from section(f"Copper of {answer.design}", table(heads, rows, left=("net", "hottest at")))
     for sweep, points in answer.sweeps().items():
         if sweep == WEIGHT:
             yield from weight_section(answer, points, currency)
@@ -109,7 +114,7 @@ def copper_sections(answer: CopperAnswer, currency: str) -> Iterable[RenderableT
 
 def weight_section(answer: CopperAnswer, points: Sequence[CopperPoint], currency: str) -> Iterable[RenderableType]:
     """The sweep of copper weight with its curve."""
-    title = "Copper weight" + (", pours shared out anew" if answer.reoptimised else ", everything else as it is")
+    title = "Copper weight" + (", everything else chosen again" if answer.reoptimised else ", everything else as it is")
     bodies: list[RenderableType] = [points_table(points, "oz", currency)]
     if len(points) > 1:
         curve = Curve("all losses", [p.amount for p in points], [p.loss_kwh for p in points])
@@ -220,13 +225,17 @@ def notes(answer: CopperAnswer) -> list[str]:
     """What the figures are."""
     said = [
         "months: until the step from the line above has paid for itself in energy; 0 where it costs nothing.",
-        "Bus voltages, phases and everything else stay as the design has them; every line is direct physics.",
-        "drop and rise are the worst in use: lowest bus, highest load, grown. Copper is taken at local air and the "
-        "permitted rise, so its loss is rather over- than understated.",
-        "rise: IPC-2221 form for a layer inside the board; planes nearby make it less.",
+        "Every line is direct physics; drop and rise are the worst in use: lowest bus, highest load, grown.",
+        "rise: of the most crowded place, IPC-2221 form for a layer inside the board; planes nearby make it less. The "
+        "whole net is taken as warm as that place in every state, so its loss is rather over- than understated.",
     ]
     if answer.reoptimised:
-        said.append("With each weight the layers left by the buses went where one more saves most for its area.")
+        said.append(
+            "At every line all but the swept copper was chosen again among the parts of this result: least lifetime "
+            f"cost with a droop no worse than the design's own; {answer.seconds:.0f} s."
+        )
+        said.append("The line of the design itself may be better than the design: it was chosen again too.")
     else:
+        said.append("Bus voltages, phases and everything else stay as the design has them.")
         said.append("A design that no longer fits its stack moves to the cheapest of the same weight that holds it.")
     return said

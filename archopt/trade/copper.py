@@ -1,10 +1,12 @@
 """The copper question: what the next ounce, and the next layer pair of each net, is worth to one design.
 
-Everything but the copper stays as the design has it, its stored decisions too; every point is direct physics.
+Everything but the copper stays as the design has it, its stored decisions too, or is chosen again at every step of
+a sweep; every point is direct physics.
 """
 
 from __future__ import annotations
 
+import time
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass, replace
 from typing import Any
@@ -13,41 +15,20 @@ import numpy as np
 
 from archopt.errors import OutputError
 from archopt.inputs.problems import nearest
-from archopt.model.checks import crowding, pour_limits_a
 from archopt.model.cost import copper_area_m2
 from archopt.model.evaluator import Detail
 from archopt.model.limits import LIMITS
 from archopt.model.parameters import IntArray
 from archopt.model.problem import Problem
-from archopt.model.situation import Situation
 from archopt.model.space import BUS_NAMES, Designs
-from archopt.model.states import FALLBACK, MIX
 from archopt.physics.ampacity import RISE_EXPONENT
+from archopt.trade.copper_again import EVALUATIONS, Held, chooser_of
+from archopt.trade.copper_nets import NetFigures, net_figures
 from archopt.trade.money import money_per_kwh
 from archopt.trade.rebuilt import detail_of
 
 WEIGHT = "copper weight"
 MONTHS_PER_YEAR = 12.0
-
-
-@dataclass(frozen=True)
-class NetFigures:
-    """One net of one design: a bus plane or a rail's pour.
-
-    squares : one way, power layer; of a bus to its farthest stage
-    loss_kwh : in copper and vias, a year
-    drop_mv, drop_percent : there and back, of the voltage, at the worst mix; a sensed pour's is made up by its stage
-    rise_k : of the most crowded place over the board around it, by the form of IPC-2221
-    """
-
-    net: str
-    pairs: int
-    squares: float
-    area_cm2: float
-    loss_kwh: float
-    drop_mv: float
-    drop_percent: float
-    rise_k: float
 
 
 @dataclass(frozen=True)
@@ -77,6 +58,7 @@ class CopperPoint:
 class CopperAnswer:
     """What the copper of a design is worth: its nets and every sweep.
 
+    reoptimised : whether everything else was chosen again at every point, within ``seconds``
     cheaper_stack : a stack of the same weight that holds the design and costs less by ``cheaper_by``; else empty
     """
 
@@ -87,6 +69,7 @@ class CopperAnswer:
     reoptimised: bool
     cheaper_stack: str
     cheaper_by: float
+    seconds: float = 0.0
 
     def sweeps(self) -> dict[str, list[CopperPoint]]:
         """The points by sweep, in order."""
@@ -101,8 +84,9 @@ class CopperAnswer:
 
 
 def copper_question(
-    problem: Problem, row: IntArray, *, design: str = "", net: str | None = None, reoptimise: bool = False
-) -> CopperAnswer:
+    problem: Problem, row: IntArray, *, design: str = "", net: str | None = None, reoptimise: bool = False,
+    evaluations: int = EVALUATIONS,
+) -> CopperAnswer:  # fmt: skip
     """Sweep copper weight and the pairs of each net around one decided design.
 
     Parameters
@@ -110,8 +94,9 @@ def copper_question(
     row : a decided row, (columns,)
     design : its name
     net : only the pairs of this net (and the weight)
-    reoptimise : with another weight the pours of the rails take other pairs: the layers that are left go to
-        where one more saves most for its area
+    reoptimise : choose everything else again at every point (:mod:`archopt.trade.copper_again`): the weight, or
+        the pairs of the net, are held. Without a net the weight and the buses are swept.
+    evaluations : budget of one point, where everything else is chosen again
 
     Raises
     ------
@@ -120,23 +105,47 @@ def copper_question(
     nets = nets_of(problem, row)
     if net is not None and net not in nets:
         raise OutputError(f"the design has no net '{net}'; {nearest(net, nets, many=40)}")
-    weight = weight_rows(problem, row)
-    if reoptimise:
-        weight = [(amount, spread_pairs(problem, found)) for amount, found in weight]
-    asked = [(WEIGHT, amount, found) for amount, found in weight]
-    for name in nets if net is None else (net,):
+    began = time.monotonic()
+    swept = [name for name in nets if name in BUS_NAMES or not reoptimise] if net is None else [net]
+    asked = [(WEIGHT, amount, found) for amount, found in weight_rows(problem, row)]
+    for name in swept:
         asked += [(name, float(pairs), found) for pairs, found in pair_rows(problem, row, name)]
+    here = [bool(np.array_equal(found, row)) for _, _, found in asked]
+    if reoptimise:
+        choose = chooser_of(problem, row, evaluations)
+        asked = [
+            (sweep, amount, choose((found, spread_pairs(problem, found), row), held_by(problem, sweep, amount)))
+            for sweep, amount, found in asked
+        ]
     detail = detail_of(problem, np.stack([row, *(found for _, _, found in asked)]))
     figures = [net_figures(problem, detail, p) for p in range(len(asked) + 1)]
     points = [
-        point_of(problem, detail, p, sweep, amount, figures[p], bool(np.array_equal(found, row)))
-        for p, (sweep, amount, found) in enumerate(asked, start=1)
+        point_of(problem, detail, p, sweep, amount, figures[p], here[p - 1])
+        for p, (sweep, amount, _) in enumerate(asked, start=1)
     ]
     rate = money_per_kwh(problem.study)
     kept = [figure for figure in figures[0] if net is None or figure.net == net]
     life_months = problem.study.economics.life_years * MONTHS_PER_YEAR
     stack, saved = cheaper_stack(problem, row)
-    return CopperAnswer(design, tuple(kept), tuple(with_months(points, rate)), life_months, reoptimise, stack, saved)
+    return CopperAnswer(
+        design, tuple(kept), tuple(with_months(points, rate)), life_months, reoptimise, stack, saved,
+        time.monotonic() - began if reoptimise else 0.0,
+    )  # fmt: skip
+
+
+def held_by(problem: Problem, sweep: str, amount: float) -> Held:
+    """Return what a point of a sweep holds while everything else is chosen again."""
+    stacks, layout = problem.stacks, problem.layout
+    if sweep == WEIGHT:
+        return {layout.board("stack"): tuple(int(k) for k in np.flatnonzero(stacks.copper_oz == amount))}
+    return {pairs_column(problem, sweep): (int(amount),)}
+
+
+def pairs_column(problem: Problem, net: str) -> int:
+    """Return the column of the pairs of a net."""
+    if net in BUS_NAMES:
+        return problem.layout.bus("pairs").start + BUS_NAMES.index(net)
+    return problem.layout.rail("pairs").start + problem.rails.names.index(net)
 
 
 def nets_of(problem: Problem, row: IntArray) -> list[str]:
@@ -154,6 +163,8 @@ def holds(problem: Problem, row: IntArray) -> bool:
     most = max([int(designs.rail("pairs").max()), *(int(designs.bus("pairs")[0, k]) for k in used)])
     pairs, board = int(problem.stacks.pairs[designs.board("stack")[0]]), problem.study.board
     offered_m2 = pairs * board.area_cm2 * 1e-4 * board.usable_copper_share
+    there = np.concatenate([designs.bus("pairs")[0] * np.isin((0, 1), used), designs.rail("pairs")[0]])
+    most = max(most, int((problem.overlaps.holds @ there).max(initial=0.0)))
     return most <= pairs and float(copper_area_m2(problem, designs)[0]) <= offered_m2 * (1.0 + 1e-9)
 
 
@@ -198,11 +209,7 @@ def pair_rows(problem: Problem, row: IntArray, net: str) -> list[tuple[int, IntA
     pairs no stack holds are left out.
     """
     layout, stacks = problem.layout, problem.stacks
-    column = (
-        layout.bus("pairs").start + BUS_NAMES.index(net)
-        if net in BUS_NAMES
-        else layout.rail("pairs").start + problem.rails.names.index(net)
-    )
+    column = pairs_column(problem, net)
     own = int(row[layout.board("stack")])
     alike = [int(k) for k in np.flatnonzero(stacks.copper_oz == stacks.copper_oz[own])]
     order = [own, *sorted(alike, key=lambda k: (float(stacks.price_per_cm2[k]), k))]
@@ -261,55 +268,6 @@ def asked_pairs(problem: Problem, row: IntArray) -> IntArray:
         for k, name in enumerate(problem.rails.names)
     ]
     return np.maximum(np.ceil(np.array(found) - 1e-9), 1).astype(np.int64)
-
-
-def net_figures(problem: Problem, detail: Detail, p: int) -> list[NetFigures]:
-    """Return every net of one design of a batch by the figures its limits were checked with."""
-    states, rails, solution, hardware = problem.states, problem.rails, detail.solution, detail.hardware
-    steady = np.concatenate([states.of_kind(MIX), states.of_kind(FALLBACK)])
-    permitted_k = problem.study.board.copper_rise_k
-    hours = states.hours
-    situation = Situation(problem, states, detail.designs, hardware, solution, detail.bill)
-    through, limit = crowding(situation, steady)
-    bus_load = (through / np.maximum(limit, 1e-12))[p].max(axis=0)
-    amps = solution.current_a[p, steady]
-    pour_load = amps.max(axis=0) / np.maximum(pour_limits_a(situation)[p], 1e-12)
-    found = []
-    for bus, name in enumerate(BUS_NAMES):
-        on_it = hardware.on_bus[p, bus]
-        if not on_it.any():
-            continue
-        drop_v = solution.bus_v[p, steady, bus][:, None] - solution.stage_v[p, steady]
-        drop_v = np.where(on_it & ~states.off[steady], drop_v, 0.0)
-        percent = 100.0 * drop_v / np.maximum(solution.bus_v[p, steady, bus][:, None], 1e-3)
-        found.append(
-            NetFigures(
-                net=name,
-                pairs=int(detail.designs.bus("pairs")[p, bus]),
-                squares=float(np.diag(problem.bus_squares[bus])[on_it].max()),
-                area_cm2=float(problem.planes.area_m2[bus] * 1e4),
-                loss_kwh=float((solution.plane_w[p, :, bus] * hours).sum() * 1e-3),
-                drop_mv=float(1e3 * drop_v.max()),
-                drop_percent=float(percent.max()),
-                rise_k=permitted_k * float(bus_load[bus]) ** (1.0 / RISE_EXPONENT),
-            )
-        )
-    drop_v = (amps * solution.pour_ohm[p, steady]).max(axis=0)
-    loss_kwh = (solution.pour_w[p] * hours[:, None]).sum(axis=0) * 1e-3
-    for k, name in enumerate(rails.names):
-        found.append(
-            NetFigures(
-                net=name,
-                pairs=int(detail.designs.rail("pairs")[p, k]),
-                squares=float(rails.squares[k]),
-                area_cm2=float(rails.copper_area_m2[k] * 1e4),
-                loss_kwh=float(loss_kwh[k]),
-                drop_mv=float(1e3 * drop_v[k]),
-                drop_percent=float(100.0 * drop_v[k] / rails.voltage_v[k]),
-                rise_k=permitted_k * float(pour_load[k]) ** (1.0 / RISE_EXPONENT),
-            )
-        )
-    return found
 
 
 def point_of(

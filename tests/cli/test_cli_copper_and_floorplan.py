@@ -66,7 +66,8 @@ def test_one_net_and_json(run: Run, place: Path) -> None:
     assert code == 0
     assert "Pairs of bus_a" in out
     assert "serdes" not in out
-    code, out, _ = run("copper", str(place), "D001", "--net", "bus_a", "--replace", "--reoptimise", "--json")
+    again = ("--reoptimise", "--evaluations", "64")
+    code, out, _ = run("copper", str(place), "D001", "--net", "bus_a", "--replace", *again, "--json")
     assert code == 0
     said = json.loads(out)
     assert said["csv"].endswith("copper_D001.csv")
