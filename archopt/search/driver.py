@@ -308,8 +308,8 @@ def search(
 
     The same problem, budget and seed give the same archive; ``seconds`` and ``stop`` are outside that promise.
     An interrupt from the keyboard ends the search and keeps what it found. After each generation ``keep`` is
-    offered the state, and told to take it when the search is stopped early; a search that goes on from one
-    (``resume``) ends like one never stopped. A ``crew`` may do the jobs in several processes, with the same result.
+    offered the state, and told to take it at the end; a search that goes on from one (``resume``) ends like one
+    never stopped. A ``crew`` may do the jobs in several processes, with the same result.
 
     Raises
     ------
@@ -348,7 +348,7 @@ def search(
             if not ended and stop is not None and stop():
                 ended, early = "stopped", True
             if keep is not None:
-                keep(run.record.evaluations, state, at_once=early)
+                keep(run.record.evaluations, state, at_once=bool(ended))
     except KeyboardInterrupt:
         ended = "interrupted"
     return result_of(run.record, run.generation, stagnation.history, spent(), ended)

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from archopt.model.evaluator import Evaluator
 from archopt.model.problem import Problem
-from archopt.physics.arrays import FloatArray, IntArray
+from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 from archopt.search.checkpoint import Checkpoint, Facts, Keeper
 from archopt.search.driver import crew_for, search
 from archopt.search.genome import energy_price_scale
@@ -106,8 +106,6 @@ def search_all(
         )
         current = None
         done.append(found)
-        if keeper is not None and len(done) < settings.replicates and found.ended not in EARLY:
-            Put(keeper, done)(0, dict, at_once=True)
     return Replicated(merged(evaluator, done), tuple(done), tuple(settings.seed + k for k in range(len(done))))
 
 
@@ -140,7 +138,7 @@ class Put:
 
 
 def taken_up(state: Mapping[str, NDArray[Any]]) -> tuple[list[SearchResult], dict[str, NDArray[Any]] | None]:
-    """Return the replicates done, and the state of the one in progress or None between two."""
+    """Return the replicates done, and the state of the one in progress, which may have come to its end."""
     parts: dict[str, dict[str, NDArray[Any]]] = {}
     for name, values in state.items():
         part, _, rest = name.partition(".")
@@ -220,12 +218,13 @@ class Spread:
 
     seeds, hypervolume, published: one a replicate; hypervolume is scaled by the ideal and nadir of all together,
     reference point 1.1 in each, as a share of that of all together; published is the share of the designs of the
-    published front that this replicate had found itself.
+    published front that this replicate had found itself; polished the share none had, which came of polishing.
     """
 
     seeds: tuple[int, ...]
     hypervolume: FloatArray
     published: FloatArray
+    polished: float
 
     def as_dict(self) -> dict[str, Any]:
         """Return plain data for the record of the run."""
@@ -237,6 +236,7 @@ class Spread:
             "hypervolume_share_median": float(middle),
             "hypervolume_share_most": float(high),
             "published_share": [float(value) for value in self.published],
+            "polished_share": self.polished,
         }
 
     def words(self) -> str:
@@ -245,9 +245,11 @@ class Spread:
         shares = ", ".join(
             f"{100.0 * value:.0f} % (seed {seed})" for seed, value in zip(self.seeds, self.published, strict=True)
         )
+        rest = f", and {100.0 * self.polished:.0f} % came of polishing" if self.polished else ""
         return (
             f"{len(self.seeds)} replicates were searched. Alone each reached {low:.2f} % to {high:.2f} % (median"
-            f" {middle:.2f} %) of the hypervolume of all together. Of the published front each had found {shares}."
+            f" {middle:.2f} %) of the hypervolume of all together. Of the published front each had found"
+            f" {shares}{rest}."
         )
 
 
@@ -258,11 +260,13 @@ def spread(replicated: Replicated, published: IntArray) -> Spread | None:
         return None
     scale = Scale.of(together)
     whole = scale.hypervolume(together)
-    volume = [scale.hypervolume(found.objectives) / whole for found in replicated.each]
-    return Spread(replicated.seeds, np.array(volume), np.array([held(found, published) for found in replicated.each]))
+    volume = np.array([scale.hypervolume(found.objectives) / whole for found in replicated.each])
+    own = np.array([held(found, published) for found in replicated.each])  # (replicates, P)
+    share = own.sum(axis=1) / max(len(published), 1)
+    return Spread(replicated.seeds, volume, share, float((~own.any(axis=0)).sum() / max(len(published), 1)))
 
 
-def held(found: SearchResult, rows: IntArray) -> float:
-    """Return the share of design rows that are in a search's archive."""
+def held(found: SearchResult, rows: IntArray) -> BoolArray:
+    """Return which design rows are in a search's archive, (P,)."""
     known = {row.tobytes() for row in found.rows.astype(np.int64)}
-    return sum(row.tobytes() in known for row in rows.astype(np.int64)) / max(len(rows), 1)
+    return np.array([row.tobytes() in known for row in rows.astype(np.int64)], dtype=np.bool_)

@@ -78,6 +78,10 @@ def test_the_spread_is_of_the_union(whole: Replicated) -> None:
         assert share == sum(row.tobytes() in own for row in whole.together.rows) / len(whole.together.rows)
     assert "3 replicates" in found.words()
     assert "(seed 7)" in found.words()
+    assert found.polished == 0.0
+    assert "polishing" not in found.words()
+    foreign = whole.together.rows[:1] + 1
+    assert spread(whole, np.concatenate([whole.together.rows[:3], foreign])).polished == 0.25  # type: ignore[union-attr]
 
 
 def test_hypervolume_of_replicates_by_hand(whole: Replicated) -> None:
@@ -100,6 +104,7 @@ def test_hypervolume_of_replicates_by_hand(whole: Replicated) -> None:
     assert found is not None
     assert found.hypervolume == pytest.approx([0.21 / 0.46, 0.11 / 0.46], rel=1e-9)
     assert found.published.tolist() == [0.0, 0.0]
+    assert found.polished == 1.0
 
 
 def test_replicates_done_are_kept(evaluator: Evaluator, crew: Crew, whole: Replicated, tmp_path: Path) -> None:
