@@ -8,7 +8,6 @@ import numpy as np
 
 from archopt.inputs.resolved import Rail
 from archopt.model.board import bank_loss_w
-from archopt.model.canonical import buses_used
 from archopt.model.cost import unit_price
 from archopt.model.evaluator import Detail, Evaluator
 from archopt.model.limits import INDEX, LIMITS, ROOM
@@ -16,34 +15,10 @@ from archopt.model.loss_lists import all_losses
 from archopt.model.parameters import FloatArray, IntArray
 from archopt.model.problem import Problem
 from archopt.model.rail_checks import output_ripple_v
-from archopt.model.space import BUS_NAMES, FIXED, FOLLOW, PARENT, TWO_LEVELS, Designs
+from archopt.model.space import BUS_NAMES, PARENT, Designs
 from archopt.model.states import KIND_NAMES, MIX, PRINT, StateTable
 from archopt.model.thresholds import raise_thresholds_w
-
-CONTROL_TEXT = {FIXED: "fixed", TWO_LEVELS: "two levels", FOLLOW: "follows load"}
-
-
-def topology(problem: Problem, rows: IntArray) -> list[str]:
-    """Return the topology of each design in words: which feeds, and how the buses are controlled."""
-    designs = Designs(problem.layout, np.atleast_2d(rows))
-    used = buses_used(designs)
-    feed = designs.rail("feed")
-    direct = (feed == 0).any(axis=1)
-    control = designs.bus("control")
-    converter = designs.bus("converter") - 1
-    out = []
-    for p in range(len(designs)):
-        buses = int(used[p].sum())
-        name = ("direct", "one bus", "two buses")[buses]
-        if buses and direct[p]:
-            name += " and direct"
-        words = []
-        for bus in np.flatnonzero(used[p]):
-            ratio = problem.converters.kind[max(int(converter[p, bus]), 0)] == 1
-            words.append("fixed ratio" if ratio else CONTROL_TEXT[int(control[p, bus])])
-        unique = list(dict.fromkeys(words))
-        out.append(", ".join([name, *([" and ".join(unique)] if unique else [])]))
-    return out
+from archopt.model.topology import topology
 
 
 def state_records(

@@ -12,11 +12,10 @@ from numpy.typing import NDArray
 from archopt.model.evaluator import Evaluation
 from archopt.model.limits import LIMITS
 from archopt.model.problem import Problem
-from archopt.model.space import BUS_A, CONTROL_NAMES, INPUT, PARENT, Designs
+from archopt.model.space import PARENT, Designs
+from archopt.model.topology import has_moving_bus, kind_words, topology_kinds
 from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.archive import Archive
-
-FEED_PATTERNS = ("direct", "one bus", "one bus and direct", "two buses", "two buses and direct")
 
 
 @dataclass(frozen=True)
@@ -77,11 +76,11 @@ class Record:
         """Keep the best of every topology in the batch."""
         lifetime = objectives[:, 1] + self.price * objectives[:, 0]
         score = np.where(violation <= 0.0, lifetime, 1e9 + np.minimum(violation, 1e9))
-        kinds = topology(self.problem, rows)
+        kinds = topology_kinds(self.problem, rows)
         for kind in np.unique(kinds):
             here = np.flatnonzero(kinds == kind)
             best = here[score[here].argmin()]
-            name = topology_name(int(kind))
+            name = kind_words(int(kind))
             known = self.kinds.get(name)
             if known is None or score[best] < score_of(known, self.price):
                 self.kinds[name] = BestOfKind(
@@ -142,28 +141,9 @@ def score_of(best: BestOfKind, price: float) -> float:
     return 1e9 + min(best.violation, 1e9)
 
 
-def topology(problem: Problem, rows: IntArray) -> IntArray:
-    """Return the topology of design rows as a number, (P,): feed pattern x the liveliest control."""
-    designs = Designs(problem.layout, rows)
-    feed = designs.rail("feed")
-    used = np.stack([(feed == BUS_A).any(axis=1), (feed == BUS_A + 1).any(axis=1)], axis=1)
-    direct = (feed == INPUT).any(axis=1)
-    buses = used.sum(axis=1)
-    pattern = np.where(buses == 0, 0, 2 * buses - 1 + direct)
-    control = np.where(used, designs.bus("control"), 0).max(axis=1)
-    return np.asarray(pattern * len(CONTROL_NAMES) + control)
-
-
-def topology_name(kind: int) -> str:
-    """Return a topology in words: ``one bus, follows load``."""
-    pattern, control = divmod(kind, len(CONTROL_NAMES))
-    name = FEED_PATTERNS[pattern]
-    return name if pattern == 0 else f"{name}, {('fixed', 'two levels', 'follows load')[control]}"
-
-
 def is_fixed(problem: Problem, rows: IntArray) -> IntArray:
     """Return the positions of designs no bus of which moves."""
-    return np.flatnonzero(topology(problem, rows) % len(CONTROL_NAMES) == 0)
+    return np.flatnonzero(~has_moving_bus(topology_kinds(problem, rows)))
 
 
 def has_parents(problem: Problem, rows: IntArray) -> IntArray:

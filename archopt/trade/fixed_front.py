@@ -11,9 +11,8 @@ from dataclasses import dataclass
 import numpy as np
 from moocore import is_nondominated
 
-from archopt.model.canonical import buses_used
 from archopt.model.problem import Problem
-from archopt.model.space import FIXED, Designs
+from archopt.model.topology import has_moving_bus, topology_kinds
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 from archopt.search.indicator import share
 from archopt.trade.roles import energy_cost_front
@@ -40,9 +39,7 @@ class FixedFront:
 
 def bus_is_fixed(problem: Problem, rows: IntArray) -> BoolArray:
     """Return whether no bus of a design moves by the load, (P,): fixed, fixed ratio, or no bus at all."""
-    designs = Designs(problem.layout, np.atleast_2d(rows))
-    moving = buses_used(designs) & (designs.bus("control") != FIXED)
-    return np.asarray(~moving.any(axis=1))
+    return ~has_moving_bus(topology_kinds(problem, rows))
 
 
 def fixed_front(problem: Problem, rows: IntArray, objectives: FloatArray) -> FixedFront:

@@ -186,7 +186,7 @@ def test_what_is_no_result_is_said_plainly(record: FrontRecord, tmp_path: Path) 
         files.read(tmp_path / "run.json")
     for content, said in (
         (b"", "it is empty"), (b'{"format": "archopt res', "it ends in the middle of line 1"),
-        (b'{\n"format" "x"\n}', "no JSON from line 2, column 10 on"), (b"\xff\xfe", "it is no text"),
+        (b'{\n"format" "x"\n}', "no JSON from line 2, column 10 on"), (b"\x80\x81", "it is no text"),
     ):  # fmt: skip
         (tmp_path / "run.json").write_bytes(content)
         with pytest.raises(OutputError, match=rf"run\.json: damaged: {said}.*; restore it from a copy, or solve"):
