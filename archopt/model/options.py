@@ -7,6 +7,7 @@ decided here once: the count that loses least over the band among those that car
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -33,6 +34,33 @@ LEAST_HEADROOM_V = 0.05  # of the lowest droop node above the voltage at which t
 IDLE_HOURS = 1e-6  # weight of a band's worst mix, so that a band without hours still has a preference
 
 
+NO_BANK_PERCENT = 1e6  # droop with a bank that a rail may not have or a loop does not take
+
+
+@dataclass(frozen=True)
+class BankDroop:
+    """The worse of droop and release by row, bank, count, place and node, percent: indexed as if all banks were there.
+
+    values (rows, banks of a rail and one more, counts, B + 1, nodes); place (rows, K): where each bank stands among
+    those its rail may have, the last for all others. Few banks fit one rail: the whole would be three times as large.
+    """
+
+    values: NDArray[np.float32]
+    place: IntArray
+
+    @property
+    def nbytes(self) -> int:
+        """Memory it takes."""
+        return int(self.values.nbytes + self.place.nbytes)
+
+    def __getitem__(self, index: IntArray | tuple[Any, ...]) -> NDArray[np.float32]:
+        """Return what rows, banks, counts and so on broadcast to; of rows alone all banks."""
+        if isinstance(index, tuple):
+            row, bank, *others = index
+            return np.asarray(self.values[(row, self.place[row, bank], *others)])
+        return np.asarray(self.values[index[..., None], self.place[index]])
+
+
 @dataclass(frozen=True)
 class RowTables:
     """Per table row (rail, stage, running count): kWh and W over the bus grid, and legal windows.
@@ -53,7 +81,7 @@ class RowTables:
     need_v: FloatArray
     jump_v: FloatArray
     high_v: FloatArray
-    droop_percent: NDArray[np.float32]
+    droop_percent: BankDroop
     droop_nodes_v: FloatArray
     child_kwh: FloatArray
     child_mix_w: FloatArray
@@ -177,7 +205,7 @@ def banded_bandwidth(
     return at[:, None, None]
 
 
-def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tuple[NDArray[np.float32], FloatArray]:
+def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tuple[BankDroop, FloatArray]:
     """Return the worse of droop and release in percent of budget for every row and bank, and its nodes.
 
     (rows, K, counts, B, nodes) float32 and (rows, nodes) V, even steps of the logarithm of the headroom: that is
@@ -192,11 +220,10 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
     first = np.maximum(tables.start_v[tables.row_stage] - no_headroom_v, LEAST_HEADROOM_V)
     last = np.maximum(top[tables.row_stage] - no_headroom_v, 2.0 * LEAST_HEADROOM_V)
     nodes_v = no_headroom_v[:, None] + first[:, None] * (last / first)[:, None] ** node
-    out = np.full(
-        (len(tables.row_stage), len(capacitors.names), len(counts), states.places, DROOP_NODES),
-        1e6,
-        np.float32,
-    )
+    fitting = int(problem.capacitor_ok.sum(axis=1).max(initial=0))
+    rank = np.where(problem.capacitor_ok, np.cumsum(problem.capacitor_ok, axis=1) - 1, fitting)
+    shape_of = (len(tables.row_stage), fitting + 1, len(counts), states.places, DROOP_NODES)
+    out = np.full(shape_of, NO_BANK_PERCENT, np.float32)
     esr_piece = bank_esr_ohm(problem.study, capacitors)
     for r in range(problem.layout.rails):
         rows = np.flatnonzero(tables.row_rail == r)
@@ -236,10 +263,10 @@ def droop_tables(problem: Problem, states: StateTable, tables: LossTables) -> tu
         inside = (effective >= stages.loop_min_f[stage][:, None, None]) & (
             most <= stages.loop_max_f[stage][:, None, None]
         )
-        worst = np.where(inside[..., None, None], worst, 1e6)
+        worst = np.where(inside[..., None, None], worst, NO_BANK_PERCENT)
         worst = np.where(states.mix_off[:, r][:, None], 0.0, worst)
-        out[rows[:, None], banks[None, :]] = worst
-    return out, nodes_v
+        out[rows, : len(banks)] = worst
+    return BankDroop(out, rank[tables.row_rail]), nodes_v
 
 
 def row_swing(

@@ -187,7 +187,7 @@ def with_search(rails: int, states: int) -> Speed:
 def table_mb(evaluator: Evaluator) -> float:
     """Return the memory of loss and option tables, MB."""
     rows = evaluator.options.rows
-    return (evaluator.tables.bytes + sum(v.nbytes for v in vars(rows).values() if isinstance(v, np.ndarray))) / 1e6
+    return (evaluator.tables.bytes + sum(int(values.nbytes) for values in vars(rows).values())) / 1e6
 
 
 def peak_mb() -> float:
