@@ -2,10 +2,20 @@
 
 from __future__ import annotations
 
+from typing import Annotated
+
+import typer
+
 from archopt.cli.words import JsonOption, StudyArgument, print_json
 
 
-def check_command(study: StudyArgument, as_json: JsonOption = False) -> None:
+def check_command(
+    study: StudyArgument,
+    everything: Annotated[
+        bool, typer.Option("--all", help="List the states without hours too: worst mixes, jumps, shown loads.")
+    ] = False,
+    as_json: JsonOption = False,
+) -> None:
     """Print how a study is understood; search nothing.
 
     Rails, load states, economics, every assumed value, the size of the space, cautions.
@@ -19,4 +29,4 @@ def check_command(study: StudyArgument, as_json: JsonOption = False) -> None:
     if as_json:
         print_json(plain(result))
     else:
-        print_check(console_for(), result)
+        print_check(console_for(), result, everything=everything)

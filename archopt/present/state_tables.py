@@ -5,11 +5,20 @@ from __future__ import annotations
 import re
 from collections.abc import Iterable, Sequence
 
-from archopt.present.amounts import NONE, fixed, number, of, real
+from archopt.present.amounts import NONE, counted, fixed, number, of, real
 from archopt.present.record import BUSES, Data
 from archopt.present.tables import WordTable, table
 
 HOURS_OF_A_YEAR = 8760.0
+WITHOUT_HOURS = {
+    "energy": ("of no hours", "of no hours"),
+    "worst mix": ("worst mix of a band", "worst mixes of a band"),
+    "after jump": ("after a jump", "after a jump"),
+    "rated at nominal": ("fallen back to the nominal bus", "fallen back to the nominal bus"),
+    "shown load": ("load shown for its watts", "loads shown for their watts"),
+}
+"""Kinds of states without hours, one and many."""
+
 AT_INPUT = re.compile(r" at [0-9.]+ V$")
 
 
@@ -29,6 +38,30 @@ def weighted(states: Sequence[Data], key: str) -> float:
     if whole <= 0:
         return sum(real(state.get(key)) for state in states) / len(states)
     return sum(h * real(state.get(key)) for h, state in zip(hours, states, strict=True)) / whole
+
+
+def beside_the_year(states: Iterable[Data]) -> str:
+    """How many states without hours are looked at beside the year, by what they are; empty where none."""
+    kinds: dict[str, int] = {}
+    for state in states:
+        if not state.get("hours"):
+            kind = str(state.get("kind") or "other")
+            kinds[kind] = kinds.get(kind, 0) + 1
+    return ", ".join(counted(count, *WITHOUT_HOURS.get(kind, (kind, kind))) for kind, count in kinds.items())
+
+
+def jumps_table(jumps: Iterable[Data], states: Iterable[Data]) -> WordTable:
+    """The jumps a study lists: from which load to which, and whether the bus is told and raised before."""
+    load_w = {name: weighted(members, "load_w") for name, members in by_load(states)}
+    rows = [
+        [
+            str(jump.get("before")), str(jump.get("after")), fixed(load_w.get(str(jump.get("before"))), 1),
+            fixed(load_w.get(str(jump.get("after"))), 1), "announced" if jump.get("announced") else "unannounced",
+        ]
+        for jump in jumps
+    ]  # fmt: skip
+    words = ["from", "to", "the bus is told"]
+    return table(["from", "to", "load W", "load after W", "the bus is told"], rows, left=words)
 
 
 def load_states_table(states: Iterable[Data]) -> WordTable:

@@ -28,9 +28,9 @@ def print_front(console: Console, record: FrontRecord, directory: Path | None = 
     put(console, record_sections(record, console.width, directory))
 
 
-def print_check(console: Console, result: CheckResult) -> None:
-    """Print how a study was understood."""
-    put(console, check_sections(result))
+def print_check(console: Console, result: CheckResult, *, everything: bool = False) -> None:
+    """Print how a study was understood; ``everything``: the states looked at beside the year too."""
+    put(console, check_sections(result, everything=everything))
 
 
 def record_sections(record: FrontRecord, width: int, directory: Path | None = None) -> Iterable[RenderableType]:

@@ -12,7 +12,7 @@ from rich.text import Text
 from archopt.present.amounts import NONE, counted, fixed, money, number, of, real, with_unit
 from archopt.present.assumed import assumed_table
 from archopt.present.record import BUSES, CheckResult, Data
-from archopt.present.state_tables import by_load, load_states_table
+from archopt.present.state_tables import beside_the_year, by_load, jumps_table, load_states_table
 from archopt.present.tables import WordTable, pairs, section, table
 
 
@@ -182,8 +182,16 @@ def power_rows(power: Data) -> Iterable[tuple[str, str]]:
             yield word, with_unit(power[key], "W")
 
 
-def check_sections(result: CheckResult) -> Iterable[RenderableType]:
-    """All that ``check`` prints."""
+def states_body(states: list[Data], *, everything: bool) -> Iterable[RenderableType]:
+    """The states of the year, and the others counted, or listed too where everything is wanted."""
+    beside = beside_the_year(states)
+    yield load_states_table(states if everything else [state for state in states if state.get("hours")])
+    if beside and not everything:
+        yield Text(f"Looked at beside the year: {beside} (--all lists them).")
+
+
+def check_sections(result: CheckResult, *, everything: bool = False) -> Iterable[RenderableType]:
+    """All that ``check`` prints; with ``everything`` the states without hours too."""
     problem = result.problem
     study: Data = problem.get("study") or {}
     yield from section("Understood", understood(problem))
@@ -191,7 +199,10 @@ def check_sections(result: CheckResult) -> Iterable[RenderableType]:
         copper: Data = problem.get("copper") or {}
         yield from section("Rails", rails_table(study["rails"], copper.get("pour_squares_one_way") or {}))
     if problem.get("states"):
-        yield from section("States", load_states_table(problem["states"]))
+        yield from section("States", *states_body(problem["states"], everything=everything))
+    jumps = (study.get("control") or {}).get("jumps") or []
+    if jumps:
+        yield from section("Jumps", jumps_table(jumps, problem.get("states") or []))
     if result.power:
         yield from section("Load power", pairs(power_rows(result.power)))
     assumed = problem.get("assumed") or []

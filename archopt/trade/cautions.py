@@ -12,6 +12,7 @@ from typing import Any
 from archopt.inputs.parts import BusConverter, Part
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_NAMES
+from archopt.model.states import ENERGY
 from archopt.trade.leverage import catalogue_row
 
 TOUCH_LIMIT_V = 60.0  # DC; common practice for extra-low voltage that needs no protection against touch
@@ -45,6 +46,7 @@ def cautions(problem: Problem, designs: Sequence[Mapping[str, Any]]) -> list[str
         *energy_hazard(problem, designs),
         *hot_parts(designs),
         ampacity(problem),
+        *idle_load(problem),
         *unproven(problem, designs),
     ]
     return [sentence for sentence in sentences if sentence]
@@ -135,6 +137,27 @@ def ampacity(problem: Problem) -> str:
     return (
         f"Current limits of copper are estimates for a rise of {rise:g} K, in the form of IPC-2221 for single"
         " traces in still air: planes, neighbouring heat and air flow move them either way."
+    )
+
+
+def idle_load(problem: Problem) -> Iterable[str]:
+    """Yield the caution of rails that draw nothing in any hour of the year: a load forgotten looks the same."""
+    states = problem.states
+    energy = states.of_kind(ENERGY)
+    drawn_a = states.current_a[energy][states.hours[energy] > 0]
+    idle = [name for r, name in enumerate(problem.rails.names) if not (drawn_a[:, r] > 0).any()]
+    if not idle:
+        return
+    if len(idle) == len(problem.rails.names):
+        yield (
+            "No rail draws anything in any hour of the year: the energy is that of an idle board. Cost, droop and"
+            " limits still come from the rails' maxima."
+        )
+        return
+    word = "rail draws" if len(idle) == 1 else "rails draw"
+    yield (
+        f"{len(idle)} {word} nothing in any hour of the year ({', '.join(idle[:4])}"
+        f"{f' and {len(idle) - 4} more' if len(idle) > 4 else ''}): the energy is chosen without them."
     )
 
 

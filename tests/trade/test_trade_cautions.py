@@ -96,3 +96,21 @@ def test_what_is_not_modelled_names_the_design_pages_five() -> None:
     text = " ".join(NOT_MODELLED)
     for words in ("first droop", "electromagnetic", "order of switching on", "fault clearing", "hold-up"):
         assert words in text
+
+
+def test_rails_that_never_draw_are_told(card) -> None:
+    problem, _, designs = card
+    assert not said(cautions(problem, designs), "in any hour of the year")
+
+    def with_idle(rails: list[int]):
+        current = problem.states.current_a.copy()
+        current[:, rails] = 0.0
+        return replace(problem, states=replace(problem.states, current_a=current))
+
+    (one,) = said(cautions(with_idle([1]), designs), "in any hour of the year")
+    assert one.startswith(f"1 rail draws nothing in any hour of the year ({problem.rails.names[1]})")
+    every = list(range(len(problem.rails.names)))
+    (many,) = said(cautions(with_idle(every[:-1]), designs), "in any hour of the year")
+    assert many.startswith(f"{len(every) - 1} rails draw nothing")
+    (idle,) = said(cautions(with_idle(every), designs), "in any hour of the year")
+    assert idle.startswith("No rail draws anything")
