@@ -13,11 +13,11 @@ from rich.console import Console
 
 from archopt.errors import OutputError
 from archopt.model.problem import Problem
+from archopt.physics.arrays import FloatArray, IntArray
 from archopt.present.amounts import fixed, number
 from archopt.present.plain import plain, significant
 from archopt.present.record import Data
 from archopt.present.tables import WordTable, put
-from archopt.physics.arrays import FloatArray, IntArray
 from archopt.search.enumerate import COST_MATCH, DROOP_MATCH_PERCENT, ENERGY_MATCH, Enumeration, nearest_units
 from archopt.search.proof import Proof, Room
 from archopt.search.representatives import LIMIT
@@ -129,7 +129,7 @@ def bound_lines(proof: Proof) -> list[str]:
         f"The search tried {number(found.evaluations, 9)} designs; its front has {len(found.rows)}.",
         f"No feasible design lies below the outer bound ({len(bound.objectives)} points, {duration(bound.seconds)}).",
         f"At its own cost and droop a design found loses {fixed(100 * proof.gap[0], 1)} % more energy than the bound in"
-        f" the median, {fixed(100 * proof.gap[1], 1)} % where they are farthest apart; no design can save more than that.",
+        f" the median, {fixed(100 * proof.gap[1], 1)} % where they are farthest apart: no design saves more.",
         f"The front holds {fixed(100 * proof.reached, 1)} % of the hypervolume the bound leaves: its share of the best"
         " front's lies between that and 100 %.",
     ]

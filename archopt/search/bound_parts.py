@@ -44,6 +44,9 @@ def least_unit_cost(problem: Problem) -> FloatArray:
     for bus in buses_offered(problem):
         counts = allowed[layout.bus("bulk_count").start + bus]
         most[problem.capacitors.part[allowed[layout.bus("bulk").start + bus]]] += problem.bank_counts[counts].max()
+        dampers = allowed[layout.bus("damper").start + bus]
+        counts = allowed[layout.bus("damper_count").start + bus]
+        most[problem.capacitors.part[dampers[dampers > 0] - 1]] += problem.bank_counts[counts].max()
         units = allowed[layout.bus("count").start + bus].max()
         most[problem.converters.part] += np.minimum(problem.converters.max_parallel, units)
     most = np.maximum(most, 1.0)

@@ -153,14 +153,14 @@ class RailOptions:
 def sampled_least(values: FloatArray) -> FloatArray:
     """Return a lower bound of curves sampled evenly along the last axis, between the samples too.
 
-    Between two samples a curve dips below both by at most a quarter of the second differences around them: an eighth
-    for one bent evenly, a quarter for one with a corner.
+    Between two samples a curve dips below both by at most half of the larger second difference beside them: an eighth
+    of it where the curve is bent evenly, half where it has one corner.
     """
     bend = np.abs(np.diff(values, n=2, axis=-1))
     wide = np.concatenate([bend[..., :1], bend, bend[..., -1:]], axis=-1)  # around every sample
     around = np.maximum(wide[..., :-1], wide[..., 1:])  # around every gap
     lower = np.minimum(values[..., :-1], values[..., 1:])
-    return np.asarray((lower - 0.25 * around).min(axis=-1))
+    return np.asarray((lower - 0.5 * around).min(axis=-1))
 
 
 def row_losses(evaluator: Evaluator, rows: IntArray, slots: Slots) -> tuple[FloatArray, FloatArray]:
