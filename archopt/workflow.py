@@ -281,7 +281,7 @@ def ended_early(found: SearchResult, reason: str, keeper: checkpoint.Keeper | No
     if keeper is not None and keeper.trouble:
         remarks.append(f"The run could not be put by, so that it cannot be gone on with: {keeper.trouble}.")
     elif keeper is not None and found.ended in EARLY:
-        remarks.append("The same command with --resume goes on where this run was stopped.")
+        remarks.append("The same command with --resume (and without --replace) goes on where this run was stopped.")
     return remarks
 
 

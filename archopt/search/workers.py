@@ -29,7 +29,7 @@ import archopt
 from archopt.search.jobs import Arrays, Desk
 
 MOST_WORKERS = 4  # more stand idle: a generation waits for the completion of its one batch
-START_AFTER_S = 2.0  # a search that is over by then needs no workers
+START_AFTER_S = 5.0  # a search that is over by then needs no workers
 PASSES_FILES = os.name == "posix"
 ALIGNED = 64
 LENGTH_BYTES = 8

@@ -118,7 +118,7 @@ def test_an_interrupted_run_keeps_its_front_and_goes_on(
     with monkeypatch.context() as patch:
         patch.setattr(Search, "step", interrupted)
         assert run(*solve, str(place))[0] == 130
-    assert "--resume goes on where this run was stopped" in run("show", str(place))[1]
+    assert "goes on where this run was stopped" in run("show", str(place))[1]
     assert "unfinished run" in run(*solve, str(place))[2]
     assert run(*solve, str(place), "--resume")[0] == 0
     for name in SAME:
