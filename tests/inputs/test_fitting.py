@@ -60,6 +60,20 @@ def test_a_known_bus_converter_comes_back_from_noisy_points(catalogue: Catalogue
     assert 0.5 * 100 * NOISE <= fitted.rms_points <= 1.5 * 100 * NOISE
 
 
+def test_three_readings_of_each_point_make_up_for_twice_the_noise(catalogue: Catalogue) -> None:
+    """At a tenth of a point of noise the best a fit can do misses 0.1 points somewhere in one of four benches.
+
+    Closed form (covariance of linear least squares with the true form on these 112 points, 20,000 draws): the worst
+    of the points is within 0.1 in 74 of 100, within 0.18 in 99; with three readings of each within 0.1 in 99.
+    """
+    amperes = [12.5 * share for share in SHARES]
+    for local_degc, most in (((25.0,), 0.18), ((25.0, 25.0, 25.0), 0.1)):
+        volts = [36, 48, 60, 75], [9.6, 11, 12, 13.2]
+        points = measure(catalogue, bus(catalogue), *volts, amperes, 2 * NOISE, 6, local_degc)
+        fitted = fit(points, "bus_converters", catalogue, like="trim_bus_100w")
+        assert worst_points(catalogue, bus(catalogue), fitted.part, points) <= most
+
+
 @pytest.mark.parametrize("seed", [1, 2, 3])
 def test_a_known_buck_stage_comes_back_from_noisy_points(catalogue: Catalogue, seed: int) -> None:
     known = changed_stage(catalogue)
