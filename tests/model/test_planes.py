@@ -12,14 +12,17 @@ import pytest
 from archopt.errors import InputError
 from archopt.inputs.floorplan_shape import Floorplan, Region, Spot, ViaField
 from archopt.inputs.load import LoadedStudy, load
+from archopt.model import planes
 from archopt.model.compiled import incumbent_row
 from archopt.model.evaluator import Detail, Evaluator
 from archopt.model.hardware import unpack
+from archopt.model.overlaps import overlaps
 from archopt.model.parameters import FloatArray, IntArray
-from archopt.model.planes import copper_degc, net_copper, perforated, solved_net
+from archopt.model.planes import copper_degc, net_copper, perforated, solved_net, with_pours
 from archopt.model.problem import Problem, compile_problem
 from archopt.model.space import BUS_NAMES, Designs
 from archopt.model.states import reduce_load
+from archopt.model.vias import fields_limit_a, via_field_limit_a
 from archopt.physics.copper import resistivity_ohm_m, sheet_resistance_ohm
 from archopt.physics.sheet_discs import FaceDensity, face_density, worst_disc
 from archopt.physics.sheet_fields import DISC_M, averaged_density_a_per_m, link_current_a
@@ -310,3 +313,95 @@ def test_a_floorplan_of_another_board_is_refused(tmp_path: Path) -> None:
     study.write_text(study.read_text().replace("area_cm2 = 1000.0", "area_cm2 = 900.0"))
     with pytest.raises(InputError, match="the outline encloses 1000 cm2"):
         load(study)
+
+
+def test_a_via_field_carries_what_its_barrels_do() -> None:
+    # closed form: 0.024 dT^0.44 A^0.725, A the ring of 0.3 mm drill and 25 um wall in square mil; ten of them
+    ring_mil2 = np.pi * 25.0 * (300.0 - 25.0) / 25.4**2
+    one = 0.024 * 20.0**0.44 * ring_mil2**0.725
+    assert via_field_limit_a(VIAS, 20.0) == pytest.approx(10.0 * one, rel=1e-12)
+    # a hole filled with copper is a wire of the drill's section
+    filled = ViaField(1, 0.3, 200.0, 1.6)
+    wire = 0.024 * 20.0**0.44 * (np.pi * 150.0**2 / 25.4**2) ** 0.725
+    assert via_field_limit_a(filled, 20.0) == pytest.approx(wire, rel=1e-12)
+
+
+def test_fields_of_one_port_share_as_they_conduct() -> None:
+    """Two alike carry double; a long one beside a short one of the same holes takes its part and no more."""
+    plan, region = strip(50.0)
+    one = fields_limit_a(plan, region, 20.0)
+    assert one["source"] == pytest.approx(via_field_limit_a(VIAS, 20.0), rel=1e-12)
+    long = replace(plan.spots[0], vias=ViaField(10, 0.3, 25.0, 3.2), place="stages.core again")
+    both = fields_limit_a(replace(plan, spots=(*plan.spots, long)), region, 20.0)
+    assert both["source"] == pytest.approx(1.5 * one["source"], rel=1e-9)
+
+
+def test_too_few_vias_are_told_with_their_place() -> None:
+    problem = problem_with(True)
+    plan = problem.study.floorplan
+    assert plan is not None
+    poor = tuple(
+        replace(spot, vias=replace(spot.vias, count=4)) if (spot.kind, spot.of) == ("load", "network_1v0") else spot
+        for spot in plan.spots
+    )
+    rails = with_pours(replace(problem.study, floorplan=replace(plan, spots=poor)), problem.rails)
+    row = details(True).designs.rows[:1]
+    worst = Evaluator(replace(problem, rails=rails)).detail(row, exact=True, explain=True).ledger.worst["via ampacity"]
+    assert worst.where is not None
+    assert worst.where[0].startswith("network_1v0 pour; ")
+    assert float(worst.bound[0]) == pytest.approx(via_field_limit_a(replace(VIAS, count=4), 20.0), rel=1e-9)
+    assert worst.slack[0] < 0.0
+    sound = details(True).ledger.worst["via ampacity"]
+    assert sound.slack[0] >= 0.0
+
+
+def test_nets_above_one_another_share_the_pairs_of_the_place() -> None:
+    """Bus A and bus B lie on the same ground: three pairs each do not fit into five, whatever area is left."""
+    problem = problem_with(True)
+    assert problem.overlaps.holds.tolist() == [[1.0, 1.0, *[0.0] * 16]]
+    row = details(True).designs.rows[:1].copy()
+    designs = Designs(problem.layout, row)
+    designs.rail("feed")[0, problem.rails.names.index("memory_2v5")] = 2
+    designs.bus("converter")[0, 1] = designs.bus("converter")[0, 0]
+    designs.bus("pairs")[0] = 3, 3
+    ledger = Evaluator(problem).detail(row, exact=True, explain=True).ledger.worst
+    assert float(ledger["layer budget"].slack[0]) > 0.0
+    crowd = ledger["crowding"]
+    assert (float(crowd.value[0]), float(crowd.bound[0])) == (6.0, 5.0)
+    assert crowd.where is not None
+    assert crowd.where[0].startswith("(10, 6) mm")
+    assert details(True).ledger.worst["crowding"].slack[0] == 3.0
+
+
+def test_overlaps_are_the_places_with_most_nets() -> None:
+    outline = rectangle(0.0, 0.0, 100.0, 50.0)
+    hole = rectangle(40.0, 0.0, 60.0, 50.0)
+    regions = (
+        Region("bus_a", rectangle(0.0, 0.0, 60.0, 50.0), (), 0, 0.0, (), ("core", "io")),
+        Region("core", rectangle(20.0, 0.0, 90.0, 25.0), (hole,), 0, 0.0, (), ("core",)),
+        Region("io", rectangle(30.0, 10.0, 100.0, 50.0), (), 0, 0.0, (), ("io",)),
+    )
+    found = overlaps(Floorplan("floorplan.toml", outline, (), regions, ()), ("core", "io", "aux"))
+    assert found.holds.tolist() == [[1.0, 0.0, 1.0, 1.0, 0.0]]
+    x, y = (float(part) for part in found.names[0].strip("() m").split(","))
+    assert 29.0 <= x <= 41.0
+    assert 9.0 <= y <= 26.0
+    assert overlaps(None, ("core",)).names == ()
+
+
+def test_no_field_is_solved_once_a_problem_is_compiled(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Decisions, tables, direct physics and the checks only scale what was found: the sheets are never touched."""
+    problem = problem_with(True)
+    rows = details(True).designs.rows
+
+    def refuse(*_: object, **__: object) -> None:
+        raise AssertionError("a field was solved")
+
+    for name in ("solve", "solved_net", "net_copper", "crowded"):
+        monkeypatch.setattr(planes, name, refuse)
+    evaluator = Evaluator(problem)
+    decided = evaluator.decide(rows)
+    assert np.isfinite(evaluator.evaluate(decided).objectives).all()
+    assert np.isfinite(evaluator.evaluate(decided, exact=True).objectives).all()
+    with pytest.raises(AssertionError, match="a field was solved"):
+        planes.bus_planes(problem.study, problem.rails.names)
