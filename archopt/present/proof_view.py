@@ -49,9 +49,11 @@ def size_lines(room: Room, seconds: float) -> list[str]:
     """What is said before anything is gone through."""
     lines = [f"{power_of_ten(room.combinations)} combinations of the values on offer."]
     if room.designs is not None:
-        lines = [f"{lines[0][:-1]}, {power_of_ten(room.designs)} of them different designs not ruled out on sight."]
+        lines = [f"{lines[0][:-1]}, {power_of_ten(room.designs)} of them different designs."]
+    if room.possible is not None:
+        lines.append(f"In {power_of_ten(room.possible)} of these every rail may meet its own limits.")
     if room.small:
-        return [*lines, f"Going through all of them takes about {duration(seconds)}."]
+        return [*lines, f"Going through these takes about {duration(seconds)}."]
     lines.append(f"That is more than the {number(LIMIT, 9)} that can be gone through; the front is bracketed instead.")
     if room.pins:
         lines.append(
@@ -74,6 +76,7 @@ def summary(proof: Proof) -> Data:
     return {
         "combinations": str(room.combinations),
         "designs": room.designs,
+        "designs_possible": room.possible,
         "pins_that_would_help": list(room.pins),
         "enumeration": None if known is None else {
             "complete": known.complete, "covered": known.covered, "of": known.total, "ruled_out": known.hopeless,

@@ -131,13 +131,15 @@ class RailOptions:
 
     loss_w, square (O, S, K): least loss and least mean square of ripple in each energy state at each slot, 0 when off.
     most_w (S,): more than any option loses in a state at any slot.
-    legal (O, B, K): may stand there at all; B counts the fall-back. option, bank, esr_ohm, cost (M,): cost without
-    new part numbers, at the best price step. level (M, B, groups): number of the least droop level, NEVER where none.
-    stage, phases (O,); run (O, B): fewest phases running.
+    legal (O, B, K): may stand there at all; B counts the fall-back. option, bank, count, esr_ohm, cost (M,): cost
+    without new part numbers, at the best price step. level (M, B, groups): number of the least droop level, NEVER
+    where none.
+    stage, phases, fewest (O,); run (O, B): fewest phases running.
     """
 
     stage: IntArray
     phases: IntArray
+    fewest: IntArray
     run: IntArray
     loss_w: FloatArray
     square: FloatArray
@@ -145,9 +147,21 @@ class RailOptions:
     legal: BoolArray
     option: IntArray
     bank: IntArray
+    count: IntArray
     esr_ohm: FloatArray
     cost: FloatArray
     level: IntArray
+
+    def possible(self, slots: Slots, feeding: BoolArray) -> BoolArray:
+        """Return which choices meet their own limits in every band and the fall-back at some slot of a feed, (M,).
+
+        feeding (K,): the slots of the feed. What meets them nowhere breaks a limit on any board.
+        """
+        fits = np.zeros(self.level.shape[:2], dtype=bool)
+        for group in np.unique(slots.group[feeding]):
+            legal = self.legal[:, :, feeding & (slots.group == group)].any(axis=2)
+            fits |= legal[self.option] & (self.level[:, :, group] < len(LEVELS))
+        return np.asarray(fits.all(axis=1))
 
 
 def sampled_least(values: FloatArray) -> FloatArray:
@@ -335,6 +349,7 @@ class RailMaker:
         return RailOptions(
             stage=stage,
             phases=options.phases[mine],
+            fewest=options.fewest[mine],
             run=run,
             loss_w=loss_o,
             square=square_o,
@@ -342,6 +357,7 @@ class RailMaker:
             legal=legal_o,
             option=o,
             bank=k,
+            count=n,
             esr_ohm=esr,
             cost=cost[o] + self.unit_cost[problem.capacitors.part[k]] * problem.bank_counts[n],
             level=np.where(quiet, level, NEVER),

@@ -21,11 +21,13 @@ from moocore import is_nondominated
 
 from archopt.model.evaluator import Evaluator
 from archopt.model.problem import Problem
-from archopt.model.space import FIXED, Designs
+from archopt.model.space import FIXED, INPUT, PARENT, Designs
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 from archopt.search.archive import Archive, significant
+from archopt.search.bound_parts import least_unit_cost
+from archopt.search.bound_rails import DIRECT, RAIL, RailMaker, make_slots
 from archopt.search.indicator import share
-from archopt.search.representatives import Representatives, hopeless, representatives
+from archopt.search.representatives import Possible, Representatives, hopeless
 
 BLOCK = 4096
 BATCH = 512
@@ -227,6 +229,38 @@ def on_offer(problem: Problem, rows: IntArray) -> BoolArray:
     return out
 
 
+def possible_choices(evaluator: Evaluator) -> Possible:
+    """Return which choices of a rail may meet their own limits: duty, droop, output ripple at some voltage of a feed.
+
+    Told by the lower bounds of the outer bound, which hold on any board; the rest breaks a limit on every one.
+    """
+    problem = evaluator.problem
+    slots = make_slots(evaluator)
+    maker = RailMaker(evaluator, slots, least_unit_cost(problem))
+    sizes = (64, 2, len(problem.capacitors.names), len(problem.bank_counts))
+
+    def numbered(columns: tuple[IntArray, ...]) -> IntArray:
+        out = columns[0].astype(np.int64)
+        for column, size in zip(columns[1:], sizes, strict=True):
+            out = out * size + column
+        return out
+
+    rails = [maker.options(r) for r in range(problem.layout.rails)]
+    numbers = [
+        numbered((r.stage[r.option], r.phases[r.option], r.fewest[r.option], r.bank, r.count)) for r in rails
+    ]
+
+    def possible(r: int, feed: int, choices: IntArray) -> BoolArray:
+        if feed >= PARENT:
+            feeding = (slots.kind == RAIL) & (slots.of == feed - PARENT)
+        else:
+            feeding = slots.kind == DIRECT if feed == INPUT else slots.on_bus
+        kept = numbers[r][rails[r].possible(slots, feeding)]
+        return np.isin(numbered(tuple(choices.T)), kept)
+
+    return possible
+
+
 @dataclass
 class Seat:
     """What a worker process holds between blocks."""
@@ -238,10 +272,10 @@ class Seat:
 _SEAT = Seat()
 
 
-def take_seat(evaluator: Evaluator) -> None:
+def take_seat(evaluator: Evaluator, designs: Representatives) -> None:
     """Prepare a worker process: it holds the tables and leaves interrupts to the process that asked."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
-    _SEAT.evaluator, _SEAT.designs = evaluator, representatives(evaluator.problem)
+    _SEAT.evaluator, _SEAT.designs = evaluator, designs
 
 
 def seated_block(number: int) -> Block:
@@ -258,7 +292,7 @@ def blocks(evaluator: Evaluator, designs: Representatives, numbers: IntArray, wo
             yield run_block(evaluator, designs, int(number))
         return
     context = multiprocessing.get_context("spawn")
-    pool = ProcessPoolExecutor(workers, context, initializer=take_seat, initargs=(evaluator,))
+    pool = ProcessPoolExecutor(workers, context, initializer=take_seat, initargs=(evaluator, designs))
     waiting: deque[Future[Block]] = deque()
     ahead = iter(numbers)
     try:

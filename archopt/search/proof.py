@@ -12,31 +12,42 @@ from archopt.model.space import BOARD_FIELDS, BUS_FIELDS, RAIL_FIELDS
 from archopt.physics.arrays import IntArray
 from archopt.search.bound import OuterBound, outer_bound
 from archopt.search.driver import Progress, crew_for, search
-from archopt.search.enumerate import Comparison, Enumeration, compare, enumerate_designs, timed_sample
+from archopt.search.enumerate import (
+    Comparison,
+    Enumeration,
+    compare,
+    enumerate_designs,
+    possible_choices,
+    timed_sample,
+)
 from archopt.search.outcome import SearchResult
 from archopt.search.polish import polished
 from archopt.search.published import PUBLISHED
 from archopt.search.replicates import EARLY
 from archopt.search.representatives import LIMIT, Representatives, combinations, representatives
 
+HOPED = 100  # ruling out leaves at best this share of a space, where it is worth trying
+
 
 @dataclass(frozen=True)
 class Room:
     """The size of a space: combinations of allowed values, distinct designs (None: not counted), and pins to shrink it.
 
+    possible: designs left when what meets its limits at no voltage is ruled out, None where not worked out.
     pins: choices by their field, widest first, that pinned to one value each leave no more combinations than can be
     gone through; left: what they leave.
     """
 
     combinations: int
     designs: int | None
+    possible: int | None
     pins: tuple[str, ...]
     left: int
 
     @property
     def small(self) -> bool:
         """Whether every design can be gone through."""
-        return self.designs is not None and self.designs <= LIMIT
+        return self.possible is not None and self.possible <= LIMIT
 
 
 @dataclass(frozen=True)
@@ -67,13 +78,16 @@ class Proof:
     gap: tuple[float, float]
 
 
-def room_of(problem: Problem) -> tuple[Room, Representatives | None]:
-    """Return the size of a space, and its representatives where they can be laid out."""
+def room_of(evaluator: Evaluator) -> tuple[Room, Representatives | None]:
+    """Return the size of a space, and the representatives to go through where that can be done."""
+    problem = evaluator.problem
     laid = representatives(problem)
     whole = combinations(problem)
     pins, left = pins_that_help(problem)
-    designs = None if laid is None else len(laid)
-    return Room(whole, designs, pins, left), laid
+    if laid is None or len(laid) > HOPED * LIMIT:
+        return Room(whole, None if laid is None else len(laid), None, pins, left), None
+    kept = representatives(problem, possible_choices(evaluator))
+    return Room(whole, len(laid), None if kept is None else len(kept), pins, left), kept
 
 
 def pins_that_help(problem: Problem) -> tuple[tuple[str, ...], int]:
@@ -120,7 +134,7 @@ def put_to_proof(
     estimated, covered, searched : told the size and the seconds expected, the enumeration's and the search's progress
     stop : asked between blocks and generations
     """
-    room, laid = room_of(evaluator.problem)
+    room, laid = room_of(evaluator)
     if laid is None or not room.small:
         if estimated is not None:
             estimated(room, math.nan)

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import itertools
 import math
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -24,6 +24,10 @@ LIMIT = 20_000_000
 MOST_PRODUCTS = 100_000
 MOST_VOLTAGES = 1_000_000
 SET_FIELDS = ("nominal_v", "control", "lower_v", "upper_v")
+
+
+Possible = Callable[[int, int, IntArray], BoolArray]
+"""Told a rail, a feed and choices (N, 5) of stage, phases, fewest, bank and its count: which may be legal, (N,)."""
 
 
 @dataclass(frozen=True)
@@ -88,9 +92,12 @@ def combinations(problem: Problem) -> int:
     return math.prod(max(len(values), 1) for values in problem.space.allowed)
 
 
-def representatives(problem: Problem) -> Representatives | None:
-    """Return the representatives of a space, None where it is too large even to be counted this way."""
-    makers = ProductMaker(problem)
+def representatives(problem: Problem, possible: Possible | None = None) -> Representatives | None:
+    """Return the representatives of a space, None where it is too large even to be counted this way.
+
+    possible : which choices of a rail may meet their own limits at all; all where not told
+    """
+    makers = ProductMaker(problem, possible)
     feeds = math.prod(len(makers.rail_values("feed", r)) for r in range(problem.layout.rails))
     if feeds * len(makers.board_values("stack")) > MOST_PRODUCTS:
         return None
@@ -114,8 +121,9 @@ def grid_of(values: list[IntArray]) -> IntArray:
 class ProductMaker:
     """Makes the products of a problem: one for each feeding of the rails, stack, need of a bias and control."""
 
-    def __init__(self, problem: Problem) -> None:
+    def __init__(self, problem: Problem, possible: Possible | None = None) -> None:
         self.problem = problem
+        self.possible = possible
         self.layout = problem.layout
         self.allowed = problem.space.allowed
         self.rail_tables: dict[tuple[int, int], Factor] = {}
@@ -212,6 +220,8 @@ class ProductMaker:
         fits &= (1e6 * (self.most_f[r, banks[:, 0]] * pieces))[None, :] <= (1e6 * high)[:, None]
         a, b = np.nonzero(fits)
         values = np.concatenate([np.full((len(a), 1), feed), first[a], banks[b]], axis=1)
+        if self.possible is not None and len(values):
+            values = values[self.possible(r, feed, values[:, 1:])]
         table = Factor(self.rail_columns(("feed", *fields, "bank", "bank_count"), r), values)
         self.rail_tables[r, feed] = table
         return table

@@ -23,6 +23,7 @@ from archopt.search.enumerate import (
     distinct,
     enumerate_designs,
     on_offer,
+    possible_choices,
 )
 from archopt.search.representatives import Representatives, combinations, hopeless, representatives
 from tests.search.enumerable_small import EVERY_FEED, TOLD_APART, every_design
@@ -65,14 +66,18 @@ def stands_among(laid: Representatives, row: Rows) -> bool:
 def test_every_feasible_design_of_every_combination_is_gone_through(apart: Evaluator) -> None:
     """Plain enumeration of every combination finds the same feasible designs in number and the same front."""
     laid = laid_out(apart)
-    found = enumerate_designs(apart, laid, workers=1)
+    kept = representatives(apart.problem, possible_choices(apart))
+    assert kept is not None
+    found, ruled = enumerate_designs(apart, laid, workers=1), enumerate_designs(apart, kept, workers=1)
     designs = every_design(apart)
     parts = [apart.evaluate(designs[k : k + BATCH]) for k in range(0, len(designs), BATCH)]
     plain = np.concatenate([part.objectives[part.feasible] for part in parts])
     front = np.unique(significant(plain[is_nondominated(plain)]), axis=0)
     assert combinations(apart.problem) > len(designs) > len(laid) > 100
     assert found.complete
-    assert found.feasible == len(plain) > 50
+    assert found.feasible == ruled.feasible == len(plain) > 50
+    assert len(kept) <= len(laid)
+    np.testing.assert_array_equal(ruled.objectives, found.objectives)
     np.testing.assert_allclose(np.unique(found.objectives, axis=0), front, rtol=1e-9)
 
 
@@ -99,6 +104,19 @@ def test_a_feasible_design_drawn_anywhere_is_a_representative(tmp_path: Path) ->
     feed = good[:, problem.layout.rail("feed")]
     assert {0, 1, 2} <= set(np.unique(feed).tolist())
     assert all(stands_among(laid, row[: problem.layout.choices]) for row in good)
+
+
+def test_what_no_voltage_makes_legal_breaks_a_limit(two_rails: Evaluator) -> None:
+    """Of two rails' designs most are ruled out so, and none of them is feasible."""
+    laid = laid_out(two_rails)
+    kept = representatives(two_rails.problem, possible_choices(two_rails))
+    assert kept is not None
+    rng = np.random.default_rng(11)
+    rows = np.concatenate([laid.rows(int(k), int(k) + 1) for k in rng.integers(len(laid), size=1500)])
+    choices = two_rails.problem.layout.choices
+    gone = np.array([not stands_among(kept, row[:choices]) for row in rows])
+    assert 0.2 < gone.mean() < 0.95
+    assert (two_rails.evaluate(two_rails.decide(rows[gone])).violation > 0.0).all()
 
 
 def test_what_is_ruled_out_on_sight_breaks_a_limit(tmp_path: Path) -> None:
