@@ -130,9 +130,14 @@ def droop_terms(situation: Situation) -> DroopTerms:
     after = np.minimum(mix + step, np.maximum(rails.max_a[:, None] + extra, mix))
     deficit = np.maximum(after - running * stages.phase_limit_a, 0.0)
     before, left = np.maximum(after - step, 0.0), np.maximum(mix - step, 0.0)
-    rise, fall = (
-        loop_bandwidth_rad_s(stages, ..., stage_v, volts, load / running) for load in (before, left)
-    )  # fmt: skip
+    p, r = np.nonzero(stages.folded_share[..., 0] < 1.0)  # the others are as fast at any load
+    folding, at_v, output_v = stages.take((p, r)), stage_v[p, r], rails.voltage_v[r][:, None]
+
+    def bandwidth(load_a: FloatArray) -> FloatArray:
+        found = stages.bandwidth_rad_s * np.ones_like(stage_v)
+        found[p, r] = loop_bandwidth_rad_s(folding, ..., at_v, output_v, load_a[p, r] / running[p, r])
+        return found
+
     return DroopTerms(
         before_a=before,
         after_a=after,
@@ -141,8 +146,8 @@ def droop_terms(situation: Situation) -> DroopTerms:
         step_a=step,
         up_a_per_s=slew_up_a_per_s(stages, ..., running, stage_v, volts),
         down_a_per_s=slew_down_a_per_s(stages, ..., running, volts),
-        rise_rad_s=rise,
-        fall_rad_s=fall,
+        rise_rad_s=bandwidth(before),
+        fall_rad_s=bandwidth(left),
         delay_s=stages.delay_s,
         capacitance_f=hardware.bank_f[..., None],
         esr_ohm=hardware.bank_esr_ohm[..., None],
