@@ -20,7 +20,7 @@ SHEDDING = (
 
 MEASURED_POINTS = (
     "CSV of measured points, path from this catalogue folder; losses are then read from these points, between them and "
-    "never beyond. Empty, or no such column: losses follow from the row's own numbers"
+    "never beyond: points at 0 A carry it to light load. Empty, or no such column: losses follow from the row's numbers"
 )
 #: Columns a file need not have.
 MAY_LACK = ("measured_points",)

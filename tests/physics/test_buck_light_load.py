@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from archopt.physics import buck
-from archopt.physics.buck import BuckParameters
+from archopt.physics.buck import BuckParameters, Point, operating_point, ripple_square_at, thermal_gain_at
 from archopt.physics.buck_light_load import Pulses, crossover_share, pulses
 
 STAGE = BuckParameters(
@@ -121,12 +121,17 @@ def test_output_ripple_is_a_twelfth_in_continuous_conduction() -> None:
     # closed form: a triangle of height r has the mean square r^2 / 12
     ripple = float(buck.ripple_a(STAGE, 12.0, 1.2, 6.0))
     assert buck.ripple_square_a2(STAGE, 12.0, 1.2, 6.0) == pytest.approx(ripple**2 / 12.0, rel=1e-12)
+    point: Point = operating_point(STAGE, 12.0, 1.2, 6.0)
+    assert point.ripple_a == pytest.approx(ripple, rel=1e-12)
+    assert ripple_square_at(point) == pytest.approx(ripple**2 / 12.0, rel=1e-12)
 
 
 def test_thermal_gain_is_that_of_the_losses() -> None:
     current_a = np.array([0.1, 0.9, 6.0, 60.0])
     expected = buck.losses(STAGE, 12.0, 1.2, current_a, 50.0).thermal_gain
     np.testing.assert_allclose(buck.thermal_gain(STAGE, 12.0, 1.2, current_a), expected, rtol=1e-6)
+    at = operating_point(STAGE, 12.0, 1.2, current_a)
+    np.testing.assert_allclose(thermal_gain_at(STAGE, at), expected, rtol=1e-6)
     assert expected[-1] > 1.0
 
 

@@ -9,7 +9,8 @@ import pytest
 from numpy.typing import NDArray
 
 from archopt.physics import buck
-from archopt.physics.output_ripple import half_swing_v, summed_ripple
+from archopt.physics.buck import operating_point
+from archopt.physics.output_ripple import half_swing_v, summed_ripple, summed_ripple_at
 
 FREQUENCY_HZ, HENRY = 500e3, 0.68e-6
 POINTS = 20_000
@@ -41,8 +42,11 @@ def triangles(input_v: float, output_v: float, phases: int) -> tuple[NDArray[np.
 @pytest.mark.parametrize("input_v", [5.0, 8.0, 12.0])
 def test_ripple_and_charge_are_those_of_the_waveform(phases: int, input_v: float) -> None:
     time, current = triangles(input_v, 1.0, phases)
-    found = summed_ripple(phase(), np.array([input_v]), np.ones(1), np.full(1, 20.0), phases)
+    point = (np.array([input_v]), np.ones(1), np.full(1, 20.0))
+    found = summed_ripple(phase(), *point, phases)
     swing, charge = (float(x[0]) for x in found)
+    at = summed_ripple_at(phase(), operating_point(phase(), *point), phases)
+    assert [float(x[0]) for x in at] == pytest.approx([swing, charge], rel=1e-12)
     scale = float(np.ptp(triangles(input_v, 1.0, 1)[1]))
     assert swing == pytest.approx(np.ptp(current), abs=2e-3 * scale)
     moved = np.cumsum(current) * (time[1] - time[0])

@@ -87,6 +87,7 @@ CLAIMS = {
     "linear.headroom_v": (PARAMETERS, "test_linear_by_hand", "closed form"),
     "linear.losses": (PARAMETERS, "test_linear_by_hand", "closed form"),
     "measured.LossTable": (MEASURED, "test_equals_scipy_inside", "scipy RegularGridInterpolator"),
+    "measured.beyond_table": (MEASURED, "test_how_far_beyond_the_table_is_a_share_of_its_end", "closed form"),
     "measured.table_loss_w": (MEASURED, "test_exact_for_products_of_linear_functions", "closed form"),
     "output_ripple.half_swing_v": (RIPPLE, "test_half_the_swing_is_never_optimistic", "numerical integration"),
     "output_ripple.summed_ripple": (RIPPLE, "test_ripple_and_charge_are_those_of_the_waveform", "waveform"),

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy.interpolate import RegularGridInterpolator
 
-from archopt.physics.measured import LossTable, table_loss_w
+from archopt.physics.measured import LossTable, beyond_table, table_loss_w
 
 INPUT_V, OUTPUT_V, CURRENT_A = np.array([36.0, 48.0, 75.0]), np.array([9.6, 12.0]), np.array([0.0, 2.0, 5.0, 10.0])
 
@@ -40,6 +42,17 @@ def test_outside_is_marked_and_held(table: LossTable) -> None:
     assert inside.tolist() == [False, True, False, True, True]
     held, _ = table_loss_w(table, [36.0, 48.0, 48.0, 48.0, 75.0], 12.0, [5.0, 5.0, 10.0, 10.0, 10.0])
     np.testing.assert_allclose(loss, held, rtol=1e-12)
+
+
+def test_how_far_beyond_the_table_is_a_share_of_its_end(table: LossTable) -> None:
+    # closed form: 75 V is the highest input, 9.6 V the lowest output, 10 A the highest current, 0 A no end at all
+    beyond = beyond_table(table, [90.0, 48.0, 48.0], [12.0, 8.0, 12.0], [5.0, 5.0, 0.0])
+    assert beyond[0, 0] == pytest.approx(90.0 / 75.0 - 1.0, rel=1e-12)
+    assert beyond[1, 1] == pytest.approx(1.0 - 8.0 / 9.6, rel=1e-12)
+    assert beyond[2, 2] == pytest.approx(-1.0, rel=1e-12)
+    assert (beyond[2] <= 0.0).all()
+    followed = replace(table, output_follows=True)
+    assert beyond_table(followed, 48.0, 100.0, 5.0)[1] == pytest.approx(-1.0, rel=1e-12)
 
 
 def test_one_level_on_an_axis() -> None:
