@@ -1,4 +1,4 @@
-"""Measure the search on a shipped study or the twelve rails: share of a reference front's hypervolume over evaluations and time.
+"""Measure the search on a study: share of a reference front's hypervolume over evaluations and time.
 
 Run as ``python -m tests.benchmarks.measure_search telecom_six --evaluations 20000 --seeds 1,2``. The reference
 is the union of the runs measured and of a longer one with a seed of its own; its hash is printed.

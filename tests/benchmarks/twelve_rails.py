@@ -141,14 +141,14 @@ def problem_of(rails: int = RAILS, states: int = STATES) -> Problem:
     return compile_problem(loaded.study, loaded.catalogue, unreduced(loaded))
 
 
-def separable() -> Problem:
-    """Return the twelve rails with every coupling off: energy and cost are sums over rails, droop a maximum.
+def separable(rails: int = RAILS, states: int = STATES, pins: dict[str, Any] | None = None) -> Problem:
+    """Return the rails with every coupling off: energy and cost are sums over rails, droop a maximum.
 
     One bus fixed at 12 V from one pinned converter whose loss is a line in its current, without dip or droop of its
     own and without a limit; no shared copper, no input resistance; no separate bias, no supervisor; one price a part
     whatever the quantity and no cost of a new part number. Copper, stack and bulk are pinned.
     """
-    content = content_of(RAILS, STATES, MAX_BANDS)
+    content = content_of(rails, states, MAX_BANDS if states == STATES else FEW_BANDS)
     content["name"] = "separable"
     for row in content["rails"]:
         row.pop("step_group", None)
@@ -165,6 +165,7 @@ def separable() -> Problem:
             "bus_a.converter": "wide_bus_600w", "bus_a.count": 1, "bus_a.fewest": "all", "bus_a.nominal_v": 12.0,
             "bus_a.bulk": "polymer_470u_16v_can", "bus_a.bulk_count": 32, "bus_a.pairs": 4,
             "bus_a.damper": "none",
+            **(pins or {}),
         },
     }  # fmt: skip
     loaded = loaded_with(content)
