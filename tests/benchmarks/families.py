@@ -1,7 +1,7 @@
 """Which families and rows of the catalogue the published fronts of the shipped studies use, and which they never do.
 
-Run from the repository as ``python -m tests.benchmarks.families``; ``--results DIR ...`` reads result directories, named
-as the studies they are of, instead of solving; ``--evaluations 800`` tries the command. A family or row that every
+Run from the repository as ``python -m tests.benchmarks.families``; ``--results DIR ...`` reads result directories,
+named as the studies they are of, instead of solving; ``--evaluations 800`` tries the command. A family or row that every
 design uses may be a free lunch, one that none does may be useless: the table says where to look, not which it is.
 """
 
@@ -103,8 +103,10 @@ def lines(catalogue: Catalogue, problem: Problem, designs: Sequence[Mapping[str,
         out.append(f"  {family}: {by_family[family]} of {count} designs")
         out += [f"      used   {shares}"] if shares else []
         out += [f"      never  {never}"] if never else []
-    out.append(f"  two buses: {sum({'bus_a', 'bus_b'} <= set(d['feeds'].values()) for d in designs)} of {count} designs")
-    out.append(f"  straight from the input: {sum('input' in d['feeds'].values() for d in designs)} of {count} designs")
+    feeds = [set(design["feeds"].values()) for design in designs]
+    out.append(f"  two buses: {sum({'bus_a', 'bus_b'} <= fed for fed in feeds)} of {count} designs")
+    out.append(f"  straight from the input: {sum('input' in fed for fed in feeds)} of {count} designs")
+    out.append(f"  a rail from a rail: {sum(bool(fed - {'input', 'bus_a', 'bus_b'}) for fed in feeds)} of {count} designs")
     return out
 
 
