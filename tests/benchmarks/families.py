@@ -1,8 +1,8 @@
 """Which families and rows of the catalogue the published fronts of the shipped studies use, and which they never do.
 
 Run from the repository as ``python -m tests.benchmarks.families``; ``--results DIR ...`` reads result directories,
-named as the studies they are of, instead of solving; ``--evaluations 800`` tries the command. A family or row that every
-design uses may be a free lunch, one that none does may be useless: the table says where to look, not which it is.
+named as the studies they are of, instead of solving; ``--evaluations 800`` tries the command. A family or row that
+every design uses may be a free lunch, one that none does may be useless: the table says where to look.
 """
 
 from __future__ import annotations
@@ -106,7 +106,8 @@ def lines(catalogue: Catalogue, problem: Problem, designs: Sequence[Mapping[str,
     feeds = [set(design["feeds"].values()) for design in designs]
     out.append(f"  two buses: {sum({'bus_a', 'bus_b'} <= fed for fed in feeds)} of {count} designs")
     out.append(f"  straight from the input: {sum('input' in fed for fed in feeds)} of {count} designs")
-    out.append(f"  a rail from a rail: {sum(bool(fed - {'input', 'bus_a', 'bus_b'}) for fed in feeds)} of {count} designs")
+    cascades = sum(bool(fed - {"input", "bus_a", "bus_b"}) for fed in feeds)
+    out.append(f"  a rail from a rail: {cascades} of {count} designs")
     return out
 
 
