@@ -144,8 +144,8 @@ def held_by(problem: Problem, sweep: str, amount: float) -> Held:
 def pairs_column(problem: Problem, net: str) -> int:
     """Return the column of the pairs of a net."""
     if net in BUS_NAMES:
-        return problem.layout.bus("pairs").start + BUS_NAMES.index(net)
-    return problem.layout.rail("pairs").start + problem.rails.names.index(net)
+        return int(problem.layout.bus("pairs").start + BUS_NAMES.index(net))
+    return int(problem.layout.rail("pairs").start + problem.rails.names.index(net))
 
 
 def nets_of(problem: Problem, row: IntArray) -> list[str]:

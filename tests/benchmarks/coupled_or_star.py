@@ -133,8 +133,9 @@ def main(evaluations: int) -> None:
         rank = float(spearmanr(own.objectives[:, 0], other.objectives[:, 0]).statistic)
         share = float((other.violation <= 0.0).mean())
         more = other.objectives[:, 0] / own.objectives[:, 0] - 1.0
-        print(f"designs kept with {name}, in the other model: rank correlation of loss {rank:.5f}, loss differs"
-              f" by {100 * more.min():+.2f} to {100 * more.max():+.2f} %, {100 * share:.0f} % meet every limit")  # fmt: skip
+        span = f"{100 * more.min():+.2f} to {100 * more.max():+.2f} %"
+        print(f"designs kept with {name}, in the other model: rank correlation of loss {rank:.5f},"
+              f" loss differs by {span}, {100 * share:.0f} % meet every limit")  # fmt: skip
     batch = np.resize(archives["coupled"], (BATCH, archives["coupled"].shape[1]))
     took = seconds_of(models, batch)
     print(f"{BATCH} designs by the tables: " + ", ".join(f"{name} {1e3 * s:.1f} ms" for name, s in took.items())
