@@ -137,6 +137,9 @@ def explain(error: Mapping[str, Any], key: str, model: type[BaseModel]) -> str:
         return f"{brief(given)} is not one of {allowed}"
     if kind == "value_error":
         return str(context["error"])
+    if kind == "too_short" and "min_length" in context:
+        count = context.get("actual_length", 0)
+        return f"needs at least {context['min_length']} entries, found {count}"
     if kind == "string_too_short":
         return "is empty"
     if kind == "string_pattern_mismatch":

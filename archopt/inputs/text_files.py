@@ -26,7 +26,7 @@ def read_text(path: Path, shown_path: str, what: str, notebook: Notebook) -> str
     except FileNotFoundError:
         notebook.problem("", f"no such file ({what})", shown_path)
     except IsADirectoryError:
-        notebook.problem("", f"is a folder; {what} is wanted", shown_path)
+        notebook.problem("", f"is a folder where {what} should be", shown_path)
     except UnicodeDecodeError as error:
         notebook.problem(f"byte {error.start}", "is not UTF-8 text; save it as UTF-8", shown_path)
     except (OSError, ValueError) as error:
@@ -88,7 +88,7 @@ def read_csv(path: Path, shown_path: str, what: str, notebook: Notebook) -> CsvR
         notebook.problem(f"row {reader.line_num}", f"is not CSV: {error}", shown_path)
         return None
     if header is None:
-        notebook.problem("", f"is empty; {what} is wanted, first row the column names", shown_path)
+        notebook.problem("", f"is empty where {what} should be, first row the column names", shown_path)
         return None
     for mark, named in ((";", "';'"), ("\t", "tabs")):
         if len(header) == 1 and mark in header[0]:

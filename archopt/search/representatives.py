@@ -22,6 +22,7 @@ from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 
 LIMIT = 20_000_000
 MOST_PRODUCTS = 100_000
+MOST_NUMBERED = 2**62  # representatives are numbered in 64 bits
 MOST_VOLTAGES = 1_000_000
 SET_FIELDS = ("nominal_v", "control", "lower_v", "upper_v")
 
@@ -105,10 +106,12 @@ def representatives(problem: Problem, possible: Possible | None = None) -> Repre
         if math.prod(len(makers.bus_values(field, bus)) for field in SET_FIELDS) > MOST_VOLTAGES:
             return None
     products = []
+    total = 0
     for product in makers.products():
         if product.size:
             products.append(product)
-        if len(products) > MOST_PRODUCTS:
+            total += product.size
+        if len(products) > MOST_PRODUCTS or total > MOST_NUMBERED:
             return None
     return Representatives(problem, products)
 
