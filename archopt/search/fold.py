@@ -14,6 +14,7 @@ from moocore import is_nondominated
 
 from archopt.model.canonical import canonical
 from archopt.model.cost import bill, count_pieces, unit_price
+from archopt.model.hardware import bias_per_phase_w
 from archopt.model.options import option_index
 from archopt.model.space import BUS_A, PARENT, Designs
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
@@ -66,6 +67,7 @@ class Fold:
         self.evaluator = completion.evaluator
         self.problem = completion.problem
         self.layout = completion.layout
+        self.bias_w = bias_per_phase_w(self.problem)
         self.places = [option_places(completion, table) for table in completion.tables]
 
     def propose(self, rows: IntArray, objectives: FloatArray) -> tuple[IntArray, FloatArray]:
@@ -112,9 +114,25 @@ class Fold:
         if not rows:
             return np.zeros((0, self.layout.width), dtype=np.int64), np.zeros((0, 3))
         every = np.concatenate(rows)
+        self.supply_gates(every)
         kwh = base.objectives[0] + np.concatenate(energy) - self.energy_of(base)
         money = bill(self.problem, canonical(self.problem, Designs(self.layout, every))).total
         return every, np.column_stack([kwh, money, np.concatenate(cap)])
+
+    def supply_gates(self, rows: IntArray) -> None:
+        """Give boards whose gates take more than their bias supply has the cheapest that has enough, in place."""
+        biases, designs = self.problem.biases, Designs(self.layout, rows)
+        offered = self.completion.genome.allowed_board("bias")
+        offered = offered[offered > 0]
+        if not len(offered):
+            return
+        gates_w = (self.bias_w[designs.rail("stage")] * designs.rail("phases")).sum(axis=1)
+        chosen = designs.board("bias")
+        short = (chosen > 0) & (gates_w > biases.max_power_w[np.maximum(chosen, 1) - 1])
+        price = self.problem.parts.price[biases.part[offered - 1], 1]
+        for value in offered[np.argsort(-price, kind="stable")]:  # the cheapest that fits is written last
+            fits = short & (gates_w <= biases.max_power_w[value - 1])
+            chosen[fits] = value
 
     def energy_of(self, base: Base) -> float:
         """Return what the rails of the base itself draw by the tables, kWh at the board input."""
