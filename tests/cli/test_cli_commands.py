@@ -220,3 +220,30 @@ def test_new_writes_a_study_and_never_over_one(workflow: Workflow, run: Run) -> 
     assert (code, out) == (2, "")
     assert "is there already" in err
     assert Path("board/study.toml").read_bytes() == before
+
+
+def test_baselines_are_searched_afresh_where_asked(workflow: Workflow, run: Run) -> None:
+    assert run("solve", "board.toml", "-q", "-o", "plain")[0] == 0
+    assert workflow.asked["afresh"] is False
+    assert run("solve", "board.toml", "-q", "-o", "full", "--baselines", "full")[0] == 0
+    assert workflow.asked["afresh"] is True
+    code, _, err = run("solve", "board.toml", "--baselines", "full", "--seconds", "5")
+    assert code == 2
+    assert "need the same budget: give --evaluations, not --seconds" in err
+    code, _, err = run("solve", "board.toml", "--baselines", "all")
+    assert code == 2
+    assert "full" in err
+
+
+def test_the_help_says_what_searching_baselines_takes(run: Run) -> None:
+    assert "five to six times as long" in " ".join(run("solve", "--help")[1].split())
+
+
+def test_a_check_lists_everything_where_asked(workflow: Workflow, run: Run) -> None:
+    workflow.record.problem["states"].append(
+        {"state": "band 1 worst mix", "kind": "worst mix", "hours": 0.0, "input_v": 36.0, "load_w": 70.0}
+    )
+    short, long = run("check", "board.toml")[1], run("check", "board.toml", "--all")[1]
+    assert "Looked at beside the year: 1 worst mix of a band (--all lists them)." in short
+    assert "  band 1 worst mix" not in short
+    assert "  band 1 worst mix" in long
