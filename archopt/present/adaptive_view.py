@@ -15,6 +15,8 @@ from archopt.present.tables import HangingLines, section, table
 
 SIDE_WORD = {"lower": "lower", "upper": "higher"}
 END_WORD = {"lower": "lowest", "upper": "highest"}
+LEAST_SAID_KWH = 0.001
+"""A change of the year below this is not told by its size."""
 UNITLESS = ("ratio", "choices")
 FIRST_SAID = ("knee", "least lifetime cost")
 """Marks whose adaptive limits are said beside the front."""
@@ -91,7 +93,9 @@ def step_text(step: object, side: str, control: str = "") -> str:
     if reason == "limit":
         more = int(real(step.get("more_limits"), 0.0))
         text = _limit_text(step.get("limit")) + (f", and {more} more" if more else "")
-        return text + (f" (would save {number(-change, 2)} kWh a year)" if change < 0 else "")
+        return text + (f" (would save {number(-change, 2)} kWh a year)" if change < -LEAST_SAID_KWH else "")
+    if reason in ("waste", "left") and abs(change) < LEAST_SAID_KWH:
+        return f"no limit: within {number(LEAST_SAID_KWH)} kWh a year of this voltage"
     if reason == "waste":
         return f"no limit: it would waste {number(change, 2)} kWh a year more"
     if reason == "order":

@@ -89,6 +89,8 @@ def payback(years: object) -> str:
     """Years until the saving has paid for the difference in cost."""
     if not isinstance(years, int | float):
         return NONE
+    if 0 < years < 1:
+        return f"after {number(12 * years, 2)} months"
     return "at once" if years <= 0 else f"after {number(years, 3)} years"
 
 

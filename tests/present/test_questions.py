@@ -9,7 +9,7 @@ from plain_print import plain_text
 from rich.console import Group
 from synthetic_result import design
 
-from archopt.present.explanation import schedule_table, schedule_title, thresholds_matter
+from archopt.present.explanation import payback, schedule_table, schedule_title, thresholds_matter
 from archopt.present.front import Front
 from archopt.present.questions import (
     afresh_body,
@@ -42,6 +42,14 @@ def test_baselines_of_one_hardware_that_are_equal_take_one_row() -> None:
         ("follows the load, every jump unannounced; jumps as the study states", "knee", "jump of 100 % of rated load"),
         ("follows the load, every jump unannounced", "incumbent", ""),
     ]
+
+
+@pytest.mark.parametrize(
+    ("years", "expected"),
+    [(1.25, "after 1.25 years"), (0.0254, "after 0.3 months"), (0.0, "at once"), (None, "-")],
+)
+def test_payback_is_said_in_what_suits_it(years: float | None, expected: str) -> None:
+    assert payback(years) == expected
 
 
 def test_baselines_that_do_not_apply_keep_their_rows() -> None:
