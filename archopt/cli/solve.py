@@ -125,7 +125,9 @@ def check_place(place: Path, *, replace: bool, resume: bool) -> None:
     if replace and resume:
         raise typer.BadParameter("go on with the unfinished run or replace it, not both", param_hint="--resume")
     files.check_target(place, replace=replace, go_on=resume)
-    if resume and not checkpoint.is_there(place):
+    if resume and checkpoint.is_there(place):
+        checkpoint.read(place)  # one that is damaged is told at once
+    elif resume:
         print(f"{place} holds no unfinished run; starting at the beginning.", file=sys.stderr)
 
 

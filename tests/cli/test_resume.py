@@ -20,7 +20,7 @@ ROOT = Path(__file__).resolve().parents[2]
 Run = Callable[..., tuple[int, str, str]]
 SEARCH = """
 [search]
-evaluations = 160
+evaluations = 128
 population = 16
 """
 SAME = ("front.csv", "archive.csv", "designs.json", "problem.json")
@@ -79,54 +79,55 @@ def killed(when: str, number: int, *words: str) -> None:
     assert done.returncode == -signal.SIGKILL, done.stderr
 
 
-def test_killed_twice_it_ends_with_the_same_bytes(study: Path, never: Path, run: Run, tmp_path: Path) -> None:
-    solve = ("solve", str(study), "--quiet", "--out")
+def test_killed_twice_and_interrupted_it_ends_with_the_same_bytes(
+    study: Path, never: Path, run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     place = tmp_path / "killed"
-    killed("searching", 5, *solve, str(place))
+    solve = ("solve", str(study), "--quiet", "--out", str(place))
+    killed("searching", 5, *solve)
     first = checkpoint.read(place).reached["evaluations"]
     assert first > 0
-    killed("writing", 3, *solve, str(place), "--resume")
+    killed("writing", 3, *solve, "--resume")
     assert {entry.name for entry in place.iterdir()} == {checkpoint.NAME, checkpoint.PARTIAL}
-    assert checkpoint.read(place).reached["evaluations"] > first
+    second = checkpoint.read(place).reached["evaluations"]
+    assert second > first
+    refused_unless_resumed(run, solve)
 
-    code, out, err = run(*solve, str(place))
-    assert (code, out) == (2, "")
-    assert "of 160 designs tried): go on with it (--resume), or start afresh (--replace)" in err
-    code, out, err = run(*solve, str(place), "--resume", "--seed", "9")
-    assert (code, out) == (2, "")
-    assert "seed is 9, there it is 1" in err
-    assert checkpoint.is_there(place)
+    with monkeypatch.context() as patch:
+        patch.setattr(Search, "step", interrupting(Search.step))
+        assert run(*solve, "--resume")[0] == 130
+    assert {entry.name for entry in never.iterdir()} | {checkpoint.NAME} == {entry.name for entry in place.iterdir()}
+    assert checkpoint.read(place).reached["evaluations"] > second
+    assert "goes on where this run was stopped" in run("show", str(place))[1]
+    refused_unless_resumed(run, solve)
 
-    assert run(*solve, str(place), "--resume") == (0, f"{place}\n", "")
+    assert run(*solve, "--resume") == (0, f"{place}\n", "")
     for name in SAME:
         assert (place / name).read_bytes() == (never / name).read_bytes(), name
     assert {entry.name for entry in place.iterdir()} == {entry.name for entry in never.iterdir()}
+    code, _, err = run(*solve, "--resume")
+    assert code == 2
+    assert "no unfinished run to go on with" in err
 
 
-def test_an_interrupted_run_keeps_its_front_and_goes_on(
-    study: Path, never: Path, run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    solve = ("solve", str(study), "--quiet", "--out")
-    place = tmp_path / "interrupted"
-    step = Search.step
+def interrupting(step: Callable[[Search], None]) -> Callable[[Search], None]:
+    """Return a generation in which somebody presses the keys to interrupt."""
 
     def interrupted(search: Search) -> None:
         step(search)
-        if search.generation == 3:
-            os.kill(os.getpid(), signal.SIGINT)
+        os.kill(os.getpid(), signal.SIGINT)
 
-    with monkeypatch.context() as patch:
-        patch.setattr(Search, "step", interrupted)
-        assert run(*solve, str(place))[0] == 130
-    assert "goes on where this run was stopped" in run("show", str(place))[1]
-    assert "unfinished run" in run(*solve, str(place))[2]
-    assert run(*solve, str(place), "--resume")[0] == 0
-    for name in SAME:
-        assert (place / name).read_bytes() == (never / name).read_bytes(), name
-    assert not checkpoint.is_there(place)
-    code, _, err = run(*solve, str(place), "--resume")
-    assert code == 2
-    assert "no unfinished run to go on with" in err
+    return interrupted
+
+
+def refused_unless_resumed(run: Run, solve: tuple[str, ...]) -> None:
+    """See that nothing put by is lost by starting again, and that another run does not go on from it."""
+    code, out, err = run(*solve)
+    assert (code, out) == (2, "")
+    assert "of 128 designs tried): go on with it (--resume), or start afresh (--replace)" in err
+    code, out, err = run(*solve, "--resume", "--seed", "9")
+    assert (code, out) == (2, "")
+    assert "seed is 9, there it is 1" in err
 
 
 def test_a_damaged_state_is_told_from_a_fault(study: Path, run: Run, tmp_path: Path) -> None:

@@ -64,7 +64,7 @@ def result_bytes(found: SearchResult) -> list[bytes]:
 
 
 def test_stopped_after_each_generation_it_ends_like_one_never_stopped(evaluator: Evaluator) -> None:
-    settings: dict[str, Any] = {"evaluations": 300, "population": 16, "seed": 3, "stagnation_generations": 50}
+    settings: dict[str, Any] = {"evaluations": 240, "population": 16, "seed": 3, "stagnation_generations": 50}
     settings["crew"] = crew_for(evaluator, 16)
     never = search(evaluator, **settings)
     kept: list[dict[str, np.ndarray]] = []
@@ -94,12 +94,21 @@ def test_a_search_that_had_settled_is_not_taken_further(evaluator: Evaluator) ->
     assert result_bytes(again) == result_bytes(found)
 
 
-def test_another_problem_s_state_is_refused(evaluator: Evaluator, tmp_path: Path) -> None:
-    other = Search(compiled(tmp_path, TWO_RAILS), population=16, seed=4)
-    other.step()
-    for run in (Search(evaluator, population=16, seed=4), Search(other.evaluator, population=20, seed=4)):
+def test_another_problem_s_state_is_refused(evaluator: Evaluator) -> None:
+    crew = crew_for(evaluator, 16)
+    run = Search(evaluator, population=16, seed=4, crew=crew)
+    run.step()
+    state = run.state()
+    other = state | {f"record.{name}": state[f"record.{name}"][:, 1:] for name in ("kind_rows", "least_row")}
+    for changed in (other, state | {"engine.genomes": state["engine.genomes"][1:]}):
+        again = Search(evaluator, population=16, seed=4, crew=crew)
         with pytest.raises(ValueError, match="fit"):
-            run.restore(other.state())
+            again.restore(changed)
+        whole = {f"search.{name}": values for name, values in changed.items()}
+        with pytest.raises(OutputError, match="start afresh"):
+            search(
+                evaluator, evaluations=90, population=16, seed=4, stagnation_generations=9, crew=crew, resume=whole
+            )
 
 
 class Clock:
