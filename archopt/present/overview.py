@@ -10,7 +10,7 @@ from rich.text import Text
 from archopt.present.adaptive_view import adaptive_lines
 from archopt.present.amounts import NONE, counted, fixed, number, of, place_word, real, signed
 from archopt.present.explanation import slack_text
-from archopt.present.power_tree import BUS_WORD
+from archopt.present.power_tree import BUS_WORD, followed_v
 from archopt.present.record import BUSES, Data, FrontRecord, choice_number
 from archopt.present.tables import WordTable, section, table
 from archopt.present.telling import COST_CLOSE, LOSS_CLOSE, MarginStep, Telling, margin_steps, telling
@@ -109,6 +109,10 @@ def bus_text(design: Data) -> str:
     for bus in BUSES:
         if str(choices.get(f"{bus}.converter", "none")) == "none":
             continue
+        followed = followed_v(design, bus)
+        if followed is not None:
+            texts.append(" to ".join(number(volts, 3) for volts in followed))
+            continue
         nominal, lower, upper = (
             number(choice_number(choices.get(f"{bus}.{end}_v"))) for end in ("nominal", "lower", "upper")
         )
@@ -168,7 +172,7 @@ def flat_band(designs: Sequence[Data]) -> str:
     volts: list[float] = []
     for design in near:
         choices = design.get("choices") or {}
-        if str(choices.get("bus_a.converter", "none")) != "none":
+        if str(choices.get("bus_a.converter", "none")) != "none" and followed_v(design, "bus_a") is None:
             volts.append(real(choice_number(choices.get("bus_a.nominal_v"))))
     if not volts or len(near) < 2:
         return ""

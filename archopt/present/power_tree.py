@@ -9,6 +9,7 @@ from archopt.present.record import BUSES, Data, choice_number
 
 BUS_WORD = {"bus_a": "bus A", "bus_b": "bus B"}
 CONTROL_WORD = {"fixed": "fixed", "two_levels": "two levels", "follow_load": "follows the load"}
+FOLLOWS = 1.1  # a bus that is set stays closer to its voltage than this ratio, in whatever state
 
 
 def tree_lines(design: Data, study: Data) -> list[str]:
@@ -31,7 +32,7 @@ def tree_lines(design: Data, study: Data) -> list[str]:
     lines += fed_from("input", 1, choices, feeds, rails)
     for bus in BUSES:
         if str(choices.get(f"{bus}.converter", "none")) != "none":
-            lines.append(f"  {bus_line(bus, choices)}")
+            lines.append(f"  {bus_line(bus, choices, followed_v(design, bus))}")
             lines += fed_from(bus, 2, choices, feeds, rails)
     lines += board_lines(choices)
     return lines
@@ -56,13 +57,25 @@ def fed_from(feed: str, level: int, choices: Data, feeds: dict[str, str], rails:
         yield from fed_from(name, level + 1, choices, others, rails)
 
 
-def bus_line(bus: str, choices: Data) -> str:
-    """One bus: its converters, its voltage, its bulk capacitors and its copper."""
+def followed_v(design: Data, bus: str) -> tuple[float, float] | None:
+    """Lowest and highest voltage over all states of a bus that follows the input; None where it is set."""
+    control = str((design.get("choices") or {}).get(f"{bus}.control", "fixed"))
+    if "fixed ratio" not in str(design.get("topology")) or control != "fixed":
+        return None
+    volts = [float(state["volts"][bus]) for state in design.get("states") or [] if bus in (state.get("volts") or {})]
+    return (min(volts), max(volts)) if volts and max(volts) > FOLLOWS * min(volts) else None
+
+
+def bus_line(bus: str, choices: Data, followed: tuple[float, float] | None = None) -> str:
+    """One bus: its converters, its voltage (or the span in which it follows the input), its capacitors and copper."""
     control = str(choices.get(f"{bus}.control", "fixed"))
     text = f"{BUS_WORD[bus]}: {times(choices.get(f'{bus}.count'), choices.get(f'{bus}.converter'))}"
     text += fewest(choices, bus, "count")
-    text += f"; {with_unit(choice_number(choices.get(f'{bus}.nominal_v')), 'V')} nominal"
-    text += f", {CONTROL_WORD.get(control, control)}"
+    if followed is not None:
+        text += f"; {number(followed[0], 3)} to {number(followed[1], 3)} V, follows the input"
+    else:
+        text += f"; {with_unit(choice_number(choices.get(f'{bus}.nominal_v')), 'V')} nominal"
+        text += f", {CONTROL_WORD.get(control, control)}"
     if control != "fixed":
         word = "between" if control == "follow_load" else "of"
         lower, upper = (choice_number(choices.get(f"{bus}.{end}_v")) for end in ("lower", "upper"))
