@@ -35,7 +35,8 @@ def refuse_what_cannot_be_fitted(
     """Note every reason why the points support no row, or not in the range asked for."""
     distinct = int(settings(points).max()) + 1
     if distinct < LEAST_POINTS:
-        message = f"has {distinct} different {'point' if distinct == 1 else 'points'}; at least {LEAST_POINTS} are needed, one more than terms"
+        found = f"{distinct} different {'point' if distinct == 1 else 'points'}"
+        message = f"has {found}; at least {LEAST_POINTS} are needed, one more than terms"
         notebook.problem("", message)
     if len(level_means(points.current_a)) < 2:
         notebook.problem("column current_a", "has one current; loss over load cannot be told from it")

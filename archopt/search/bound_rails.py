@@ -159,7 +159,7 @@ class RailOptions:
         """
         fits = np.zeros(self.level.shape[:2], dtype=bool)
         for group in np.unique(slots.group[feeding]):
-            legal = self.legal[:, :, feeding & (slots.group == group)].any(axis=2)
+            legal: BoolArray = np.asarray(self.legal[:, :, feeding & (slots.group == group)].any(axis=2))
             fits |= legal[self.option] & (self.level[:, :, group] < len(LEVELS))
         return np.asarray(fits.all(axis=1))
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from itertools import pairwise
 
 import numpy as np
 from equivalence.shipped import evaluator_of
@@ -45,7 +46,7 @@ def test_longer_dwells_never_move_more(moments: list[tuple[int, float]]) -> None
     # a rise past bands costs what rising band by band does: charge is counted by the square of the voltage
     volts = np.square([5.0, 7.0, 8.0, 12.0])
     energy = [(climb * (volts[None, :] - volts[:, None])).sum() for climb in climbs]
-    assert all(after <= before + 1e-9 for before, after in zip(energy[:-1], energy[1:], strict=True))
+    assert all(after <= before + 1e-9 for before, after in pairwise(energy))
     assert np.triu(climbs[-1], 1).sum() <= BANDS
 
 
