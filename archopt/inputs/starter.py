@@ -65,6 +65,8 @@ def write_starter(directory: str | Path) -> tuple[Path, ...]:
     """
     folder = Path(directory)
     files = {folder / "study.toml": STUDY, folder / "profile.csv": PROFILE}
+    if folder.is_file():
+        raise OutputError(f"{folder}: a file of that name is in the way; name another folder")
     for path in files:
         if path.exists():
             raise OutputError(f"{path} is there already; name another folder")

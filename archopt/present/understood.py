@@ -37,7 +37,8 @@ def supply_text(supply: Data) -> str:
     """The range of the input and the levels it spends its hours at."""
     if not supply:
         return NONE
-    text = f"{number(supply.get('low_v'))} to {number(supply.get('high_v'))} V"
+    low, high = number(supply.get("low_v")), number(supply.get("high_v"))
+    text = f"{low} V" if low == high else f"{low} to {high} V"
     levels = supply.get("levels") or []
     if levels:
         shares = (f"{number(row['voltage_v'])} V for {number(100 * row['share'], 3)} %" for row in levels)

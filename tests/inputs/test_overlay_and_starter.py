@@ -112,6 +112,8 @@ def test_starter_cannot_be_written_into_a_file(tmp_path: Path) -> None:
     (tmp_path / "file").write_text("x")
     with pytest.raises(OutputError, match="cannot be written"):
         write_starter(tmp_path / "file" / "folder")
+    with pytest.raises(OutputError, match="a file of that name is in the way"):
+        write_starter(tmp_path / "file")
 
 
 def test_same_bytes_same_hash(desk: Desk, study_text: str) -> None:
