@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
 from numpy.typing import NDArray
 
+from archopt import workflow
+from archopt.inputs.load import load
 from archopt.model.evaluator import Evaluator
 from archopt.search.changes import SingleChanges
 from archopt.search.driver import crew_for, search
@@ -105,6 +108,19 @@ def test_a_spent_budget_is_said(pinned: Evaluator, found: SearchResult) -> None:
     stopped = polished(crew_for(pinned, 24), found, budget=20_000, most=40, stop=lambda: True)
     assert stopped.found.ended == "stopped"
     assert not stopped.statement.closed
+
+
+def test_a_solve_says_what_polishing_did(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The run record holds the counts, the front the sentence."""
+    path = tmp_path / "study.toml"
+    path.write_text(TWO_RAILS + FEW_CHOICES, encoding="utf-8")
+    loaded = load(path)
+    monkeypatch.setattr(workflow, "LEAST_POLISHED", 24)
+    record = workflow.solve(loaded, evaluations=24).record
+    told = record.run["polish"]
+    assert told["designs"] >= len(record.designs)
+    assert sum("change of a single choice" in note for note in record.notes) == 1
+    assert told["closed"] == any(note.startswith("No change of a single choice") for note in record.notes)
 
 
 def test_counts_add_up(done: Polished) -> None:
