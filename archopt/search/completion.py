@@ -345,5 +345,5 @@ class Completion:
             if not len(low) or not len(high):
                 continue
             lower, upper = designs.bus("lower_v")[:, b], designs.bus("upper_v")[:, b]
-            lower[:] = np.where(follow, at_least(low, lower - ROOM_STEPS), lower)
-            upper[:] = np.where(follow, at_most(high, upper + ROOM_STEPS), upper)
+            lower[:] = np.where(follow, at_most(low, lower - ROOM_STEPS), lower)
+            upper[:] = np.where(follow, at_least(high, upper + ROOM_STEPS), upper)

@@ -74,8 +74,8 @@ class Neighbours:
             if control != FOLLOW:
                 continue
             low, high = (self.layout.bus(field).start + b for field in ("lower_v", "upper_v"))
-            row[low] = at_least(self.allowed[low], row[low] - FOLLOW_ROOM)
-            row[high] = at_most(self.allowed[high], row[high] + FOLLOW_ROOM)
+            row[low] = at_most(self.allowed[low], row[low] - FOLLOW_ROOM)
+            row[high] = at_least(self.allowed[high], row[high] + FOLLOW_ROOM)
 
     def column(self, field: str, r: int) -> int:
         """Return the column of a rail choice."""
