@@ -9,20 +9,13 @@ from archopt.model.evaluator import Evaluator
 from archopt.search.driver import search
 from archopt.search.indicator import share
 from tests.benchmarks import twelve_rails
-from tests.benchmarks.separable_front import calm_board, exact_front
-
-BANKS = ["polymer_560u_2v5_can", "polymer_820u_2v5_can"]
+from tests.benchmarks.separable_front import calm_board, exact_front, few_pins
 
 
 @pytest.fixture(scope="module")
 def few() -> Evaluator:
     """Six rails with a few banks and counts to choose from, so that every choice of a rail can be evaluated."""
-    pins: dict[str, object] = {}
-    for row in twelve_rails.rail_rows(6):
-        name = row["name"]
-        pins |= {f"{name}.bank": BANKS, f"{name}.bank_count": [4, 8, 16, 32], f"{name}.pairs": 4}
-        pins |= {f"{name}.fewest": "one", f"{name}.phases": [1, 2, 3, 4]}
-    return Evaluator(twelve_rails.separable(6, 24, pins))
+    return Evaluator(twelve_rails.separable(6, 24, few_pins(6)))
 
 
 def test_a_search_finds_the_exact_front_of_boards_without_coupling(few: Evaluator) -> None:
