@@ -117,6 +117,7 @@ def print_proof(console: Console, proof: Proof, directory: Path) -> None:
             f"The exact design it missed by most lies {fixed(100 * told.worst_energy, 2)} % in energy,"
             f" {fixed(100 * told.worst_cost, 2)} % in cost and {fixed(told.worst_droop, 0)} % of droop budget from the"
             " nearest design found.",
+            f"Some design found is as good as any exact one but for {fixed(told.behind, 2)} times those {MATCH}.",
         ])  # fmt: skip
     if proof.bound is not None and found is not None:
         put(console, bound_lines(proof))

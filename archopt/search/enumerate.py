@@ -34,6 +34,7 @@ BATCH = 512
 SAMPLE_BLOCKS = 3
 GOLDEN = 0.6180339887498949
 ENERGY_MATCH, COST_MATCH, DROOP_MATCH_PERCENT = 0.003, 0.003, 2.0
+MATCH_OF_EACH = np.array([ENERGY_MATCH, COST_MATCH, DROOP_MATCH_PERCENT])
 
 
 @dataclass(frozen=True)
@@ -79,7 +80,8 @@ class Comparison:
     share: hypervolume, scaled by the exact front; missed: exact designs not found to the digit; far: those that no
     found design matches; worst: the largest of the three distances of any exact design to the found design nearest
     to it, in units of a match (0.3 % of energy, 0.3 % of cost, one droop step), and energy, cost (shares) and droop
-    (% of budget) of that distance.
+    (% of budget) of that distance. behind: the most any exact design is better, in all objectives, than the found
+    design that comes nearest to being as good, in matches: up to 1, some found design is as good within a match.
     """
 
     share: float
@@ -90,6 +92,7 @@ class Comparison:
     worst_energy: float
     worst_cost: float
     worst_droop: float
+    behind: float
 
 
 def gaps_in_units(exact: FloatArray, found: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -99,7 +102,7 @@ def gaps_in_units(exact: FloatArray, found: FloatArray) -> tuple[FloatArray, Flo
     """
     gaps = np.abs(found[None] - exact[:, None])
     gaps[:, :, :2] /= exact[:, None, :2]
-    return gaps, (gaps / np.array([ENERGY_MATCH, COST_MATCH, DROOP_MATCH_PERCENT])).max(axis=2)
+    return gaps, (gaps / MATCH_OF_EACH).max(axis=2)
 
 
 def nearest_units(exact: FloatArray, found: FloatArray) -> FloatArray:
@@ -110,8 +113,9 @@ def nearest_units(exact: FloatArray, found: FloatArray) -> FloatArray:
 def compare(exact: FloatArray, found: FloatArray) -> Comparison:
     """Return how well a found front stands for the exact front, both (designs, 3) and not empty of exact designs."""
     if not len(found):
-        return Comparison(0.0, len(exact), len(exact), len(exact), math.inf, math.inf, math.inf, math.inf)
+        return Comparison(0.0, len(exact), len(exact), len(exact), math.inf, math.inf, math.inf, math.inf, math.inf)
     gaps, units = gaps_in_units(exact, found)
+    lacking = np.where(found[None] > exact[:, None], gaps / MATCH_OF_EACH, 0.0)
     nearest = units.argmin(axis=1)
     distance = units[np.arange(len(exact)), nearest]
     worst = int(distance.argmax())
@@ -125,6 +129,7 @@ def compare(exact: FloatArray, found: FloatArray) -> Comparison:
         worst_energy=energy,
         worst_cost=cost,
         worst_droop=droop,
+        behind=float(lacking.max(axis=2).min(axis=1).max()),
     )
 
 

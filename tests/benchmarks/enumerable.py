@@ -121,12 +121,13 @@ def main() -> None:
                 f"  seed {seed:2d}: {evaluations:6d} evaluations ({100 * evaluations / truth.designs:.2f} %),"
                 f" {seconds:5.1f} s, share {100 * told.share:.4f} %, missed {told.missed}, far {told.far}, worst"
                 f" {told.worst:.2f} matches ({100 * told.worst_energy:.3f} % of energy,"
-                f" {100 * told.worst_cost:.3f} % of cost, {told.worst_droop:.0f} % droop)",
+                f" {100 * told.worst_cost:.3f} % of cost, {told.worst_droop:.0f} % droop), behind by {told.behind:.2f}",
                 flush=True,
             )
         print(
             f"  worst of {len(runs)}: share {100 * min(told.share for told, _, _ in runs):.4f} %, far"
-            f" {max(told.far for told, _, _ in runs)}, {max(told.worst for told, _, _ in runs):.2f} matches"
+            f" {max(told.far for told, _, _ in runs)}, {max(told.worst for told, _, _ in runs):.2f} matches, behind by"
+            f" {max(told.behind for told, _, _ in runs):.2f}"
         )
 
 

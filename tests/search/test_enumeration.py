@@ -160,7 +160,7 @@ def test_blocks_are_all_taken_once_and_scattered(total: int) -> None:
 def test_a_comparison_measures_in_matches() -> None:
     exact = np.array([[100.0, 50.0, 60.0], [90.0, 60.0, 62.0]])
     same = compare(exact, exact)
-    assert (same.missed, same.far, same.worst) == (0, 0, 0.0)
+    assert (same.missed, same.far, same.worst, same.behind) == (0, 0, 0.0, 0.0)
     assert same.share == pytest.approx(1.0, rel=1e-12)
     near = compare(exact, np.array([[100.2, 50.0, 60.0], [90.0, 60.0, 62.0]]))
     assert (near.missed, near.far) == (1, 0)
@@ -169,6 +169,8 @@ def test_a_comparison_measures_in_matches() -> None:
     assert (far.missed, far.far) == (1, 1)
     assert far.worst_cost == pytest.approx(1.0 / 6.0, rel=1e-9)
     assert far.worst_droop == pytest.approx(2.0, rel=1e-9)
+    assert far.behind == pytest.approx((10.0 / 90.0) / 0.003, rel=1e-9)  # dearer in energy; cheaper, less droop
+    assert compare(exact, exact - np.array([0.0, 1.0, 0.0])).behind == 0.0
 
 
 def test_search_finds_the_front_of_a_space_that_can_be_enumerated(two_rails: Evaluator) -> None:
