@@ -115,8 +115,10 @@ def main() -> None:
             f" {100 * gap[0]:.2f} % median, {100 * gap[1]:.2f} % largest;"
             f" {int(bound.violated(truth.front).sum())} designs below it"
         )
-        runs = [measured(evaluator, truth, seed, given.share) for seed in range(1, given.seeds + 1)]
-        for seed, (told, evaluations, seconds) in enumerate(runs, 1):
+        runs = []
+        for seed in range(1, given.seeds + 1):
+            runs.append(measured(evaluator, truth, seed, given.share))
+            told, evaluations, seconds = runs[-1]
             print(
                 f"  seed {seed:2d}: {evaluations:6d} evaluations ({100 * evaluations / truth.designs:.2f} %),"
                 f" {seconds:5.1f} s, share {100 * told.share:.4f} %, missed {told.missed}, far {told.far}, worst"
