@@ -33,15 +33,17 @@ from archopt.search.local import Neighbours
 from archopt.search.outcome import NO_GROWTH, Keep, Progress, SearchResult, progress_of, result_of
 from archopt.search.rail_tables import CAPS
 from archopt.search.record import Record
-from archopt.search.seeds import heuristic_genomes
+from archopt.search.seeds import converters_by_kind, give_other_converter, heuristic_genomes
 from archopt.search.workers import Crew, Job, Ticket
 
 LEAST_POPULATION = 8
 FORGET_SHARE = 0.5  # of genomes that keep only the approved parts they used
+OTHER_SHARE = 0.25  # of those get another bus converter
+SUITED_OF_A_KIND = 4
 FAN_SHARE = 0.2  # of completed genomes that come from the archive at other prices
 CONSOLIDATE_EVERY = 4
 CONSOLIDATED = 4
-LOCAL_SHARE = 0.34  # batches of neighbours a batch of completed genomes
+LOCAL_SHARE = 0.2  # batches of neighbours a batch of completed genomes
 FOLD_EVERY = 3
 FOLDED = 2  # archived designs folded around each time
 
@@ -98,6 +100,7 @@ class Search:
             seeds = np.concatenate([own, seeds])[: self.population]
         self.neighbours = Neighbours(evaluator.problem)
         self.engine = Engine(self.genome.genes, self.population, seed, seeds=seeds)
+        self.kinds = converters_by_kind(self.genome, SUITED_OF_A_KIND)
         self.generation = 0
         self.owed = 0.0
         self.credit: dict[str, tuple[int, int]] = {}
@@ -176,8 +179,12 @@ class Search:
         chance = np.where(rng.random((count, 1)) < 0.5, 1.0, 0.1)
         for places in (genome.stage_place, genome.capacitor_place):
             fanned[:, places] = np.maximum(fanned[:, places], rng.random((count, len(places))) < chance)
+        fanned = self.engine.operators.mutate(fanned, rng)
+        if self.kinds:
+            for seed in fanned[: int(OTHER_SHARE * count)]:
+                give_other_converter(genome, seed, self.kinds, rng)
         out = genomes.copy()
-        out[-count:] = self.engine.operators.mutate(fanned, rng)
+        out[-count:] = fanned
         return out
 
     def climb(self) -> None:
