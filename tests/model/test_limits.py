@@ -89,7 +89,11 @@ def stricter(problem: Problem, limit: str) -> Problem:
     return problem
 
 
-@pytest.mark.parametrize("limit", [limit.name for limit in LIMITS])
+# no shipped part is a measured one: tests/model/test_measured_parts.py breaks this limit on a part of its own
+ELSEWHERE = {"measured range"}
+
+
+@pytest.mark.parametrize("limit", [limit.name for limit in LIMITS if limit.name not in ELSEWHERE])
 def test_every_limit_can_be_broken_and_has_its_size(limit: str) -> None:
     """Slack is bound less value or value less bound, in the limit's unit; scaled by its tolerance."""
     problem = evaluator_of("industrial_ten").problem

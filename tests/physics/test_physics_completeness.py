@@ -26,6 +26,7 @@ MEASURED = "physics/test_physics_measured.py"
 PARAMETERS = "physics/test_physics_parameters.py"
 RIPPLE = "physics/test_output_ripple.py"
 SHAPES = "physics/test_physics_sheet.py"
+DAMPING = "published/test_published_damping.py"
 DISCS = "physics/test_sheet_discs.py"
 SHEET = "published/test_published_sheet.py"
 THERMAL = "physics/test_physics_thermal.py"
@@ -75,6 +76,14 @@ CLAIMS = {
     "capacitor.effective_capacitance_f": (CAPACITOR, "test_bias_halves_at_its_voltage", "closed form"),
     "capacitor.esr_loss_w": (BUCK, "test_input_capacitor_1_92_a_and_88_8_mw", "SNVS276G p. 26"),
     "capacitor.interleaved_ripple_a": (CAPACITOR, "test_interleaved_ripple", "sampled waveform"),
+    "bus_network.damped_dip_ohm": (DAMPING, "test_dip_of_a_damped_bus_in_time", "integrated in time"),
+    "bus_network.joined_bank": (DAMPING, "test_no_damping_bank_changes_nothing", "limit case"),
+    "bus_network.network_rates": (
+        DAMPING, "test_rates_of_the_network_are_where_its_admittance_vanishes", "closed form",
+    ),
+    "bus_network.stable_conductance_s": (
+        DAMPING, "test_stability_with_a_damping_bank_against_eigenvalues", "eigenvalues",
+    ),
     "copper.conductor_resistance_ohm": (COPPER, "test_wire_table", "HyperPhysics after Floyd; NEC chapter 9"),
     "copper.foil_thickness_m": (COPPER, "test_finished_thickness", "IPC-6012 minima as quoted"),
     "copper.resistivity_ohm_m": (COPPER, "test_annealed_copper", "IEC 60028, NBS Handbook 100"),

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from archopt.physics.averaged_bus import BusCircuit, PowerTrain, bus_eigenvalues, bus_wave
-from archopt.physics.bus_network import damped_dip_ohm, joined_bank, stable_conductance_s
+from archopt.physics.bus_network import damped_dip_ohm, joined_bank, network_rates, stable_conductance_s
 from archopt.physics.stability import output_peak_ohm
 from archopt.physics.transient import bus_dip_v, source_peak_ohm
 
@@ -63,6 +63,18 @@ def test_stability_with_a_damping_bank_against_eigenvalues() -> None:
         )
         damped += most_w > 1.05 * plain * alone.bus_v**2
     assert damped > 50
+
+
+def test_rates_of_the_network_are_where_its_admittance_vanishes() -> None:
+    """Closed form: the branches' admittances add up to nothing at every natural frequency."""
+    ohm, henry, bulk, esr, beside, damper, lossy = 4e-3, 60e-9, 300e-6, 2e-3, 20e-6, 500e-6, 15e-3
+    rates = network_rates(*(np.array([x]) for x in (ohm, henry, bulk, esr, beside, damper, lossy)))[0]
+    s = np.linalg.eigvals(rates)
+    parts = np.array([
+        1.0 / (ohm + s * henry), 1.0 / (esr + 1.0 / (s * bulk)), s * beside, 1.0 / (lossy + 1.0 / (s * damper)),
+    ])  # fmt: skip
+    assert len(s) == 4
+    assert np.all(np.abs(parts.sum(axis=0)) <= 1e-6 * np.abs(parts).sum(axis=0))
 
 
 def test_peak_of_a_damped_bus_against_a_fine_sweep() -> None:
