@@ -79,6 +79,7 @@ def _filter(table: InputTable, notebook: Notebook) -> dict[str, float]:
         for name in ("filter_esr_mohm", "filter_damper_uf", "filter_damper_mohm"):
             if getattr(table, name) is not None:
                 notebook.problem(f"input.{name}", "is stated without filter_capacitance_uf")
+        notebook.assume("input.filter_capacitance_uf", 0.0, "no filter stated: only the path's resistance is checked")
         return {}
     if (table.filter_damper_uf is None) != (table.filter_damper_mohm is None):
         missing = "filter_damper_mohm" if table.filter_damper_mohm is None else "filter_damper_uf"

@@ -55,7 +55,7 @@ class InputTable(Table):
     filter_capacitance_uf: float | None = Field(
         None, gt=0, le=1e6, description="capacitance behind the input path, under bias; default not stated"
     )
-    filter_esr_mohm: float | None = Field(None, ge=0, le=1e5, description="its series resistance; default 0")
+    filter_esr_mohm: float | None = Field(None, ge=0, le=1e5, description="its series resistance; 0 when not stated")
     filter_damper_uf: float | None = Field(None, gt=0, le=1e6, description="damping bank beside it; default none")
     filter_damper_mohm: float | None = Field(None, gt=0, le=1e6, description="series resistance of the damping bank")
 

@@ -43,6 +43,7 @@ def test_every_key_of_every_table_is_stated_or_assumed(desk: Desk) -> None:
         "limits.area_cap_cm2", "limits.cost_cap", "choices.forbidden_families", "choices.parts",
         "choices.forbidden_parts", "choices.preferred_parts", "choices.pin", "load.profile", "load.covers",
         "input.low_v", "input.high_v", "board.area_cm2", "control.jumps", "control.jumps_from_series",
+            "input.filter_esr_mohm", "input.filter_damper_uf", "input.filter_damper_mohm",
     }  # fmt: skip
     for table, model in TABLES.items():
         for key in model.model_fields:

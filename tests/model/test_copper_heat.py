@@ -115,9 +115,10 @@ def test_what_is_decided_by_is_never_too_cold() -> None:
 
 def test_the_fast_path_is_as_warm() -> None:
     """One pass late is near enough: the plane's rise within a tenth of a kelvin or two per cent."""
-    fast = evaluator_of(NAME).detail(rows(), exact=False).solution
-    exact = detail().solution
-    sound = (exact.plane_rise_k <= evaluator_of(NAME).problem.study.board.copper_rise_k) & (exact.plane_w > 0.0)
+    found = evaluator_of(NAME).detail(rows(), exact=False)
+    fast, exact = found.solution, detail().solution
+    runs = found.evaluation.slack[:, INDEX["stage input range"]] >= 0.0  # beyond it the tables hold no loss
+    sound = runs[:, None, None] & (exact.plane_rise_k <= evaluator_of(NAME).problem.study.board.copper_rise_k) & (exact.plane_w > 0.0)
     assert sound.sum() > 100
     np.testing.assert_allclose(fast.plane_rise_k[sound], exact.plane_rise_k[sound], rtol=2e-2, atol=0.1)
     np.testing.assert_allclose(fast.plane_w[sound], exact.plane_w[sound], rtol=1e-2)

@@ -84,7 +84,9 @@ TYPICAL = BuckParameters(
 
 
 def every_field(result: object) -> dict[str, np.ndarray]:
-    return {field.name: np.asarray(getattr(result, field.name)) for field in fields(result)}  # type: ignore[arg-type]
+    """Every array a result holds; what only a measured part has is left out."""
+    values = {field.name: getattr(result, field.name) for field in fields(result)}  # type: ignore[arg-type]
+    return {name: np.asarray(value) for name, value in values.items() if value is not None}
 
 
 class TestBuck:
