@@ -11,7 +11,7 @@ import pytest
 
 ROOT = Path(__file__).resolve().parent.parent
 PACKAGE = ROOT / "archopt"
-FLOORS = ("physics", "inputs", "model", "search", "trade", "present", "workflow", "cli")
+FLOORS = ("physics", "inputs", "model", "search", "proof", "trade", "present", "workflow", "cli")
 ANYWHERE = ("errors",)
 TOP_LEVEL = {"README.md", "DEVELOPERS.md", "pyproject.toml", "archopt", "catalog", "tests", "studies"}
 GROUND_FLOOR_PACKAGES = {"numpy", "scipy", "archopt", "__future__", *sys.stdlib_module_names}

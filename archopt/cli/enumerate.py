@@ -14,8 +14,8 @@ from archopt.cli.stopping import StopRequest
 from archopt.cli.words import JsonOption, StudyArgument, print_json
 
 if TYPE_CHECKING:
-    from archopt.search.enumerate import Enumeration
-    from archopt.search.proof import Room
+    from archopt.proof.answer import Room
+    from archopt.proof.enumerate import Enumeration
 
 
 def enumerate_command(
@@ -49,7 +49,7 @@ def enumerate_command(
     from archopt.present import proof_view
     from archopt.present.plain import plain
     from archopt.present.tables import console_for
-    from archopt.search.proof import Budget, put_to_proof
+    from archopt.proof.answer import Budget, put_to_proof
     from archopt.search.workers import default_workers
 
     loaded = workflow.load(study)

@@ -18,9 +18,9 @@ from archopt.present.amounts import fixed, number
 from archopt.present.plain import plain, significant
 from archopt.present.record import Data
 from archopt.present.tables import WordTable, put
-from archopt.search.enumerate import COST_MATCH, DROOP_MATCH_PERCENT, ENERGY_MATCH, Enumeration, nearest_units
-from archopt.search.proof import Proof, Room
-from archopt.search.representatives import LIMIT
+from archopt.proof.answer import Proof, Room
+from archopt.proof.enumerate import COST_MATCH, DROOP_MATCH_PERCENT, ENERGY_MATCH, Enumeration, nearest_units
+from archopt.proof.representatives import LIMIT
 
 EXACT, FOUND, BOUND, SUMMARY = "exact_front.csv", "found_front.csv", "bound.csv", "proof.json"
 CSV_DIGITS = 9

@@ -22,11 +22,11 @@ from numpy.typing import NDArray
 from archopt.inputs.load import load
 from archopt.model.compiled import compile_study
 from archopt.model.evaluator import Evaluator
+from archopt.proof.bound import outer_bound
+from archopt.proof.enumerate import Comparison, compare, enumerate_designs, possible_choices
+from archopt.proof.representatives import Representatives, combinations, representatives
 from archopt.search.archive import significant
-from archopt.search.bound import outer_bound
 from archopt.search.driver import search
-from archopt.search.enumerate import Comparison, compare, enumerate_designs, possible_choices
-from archopt.search.representatives import Representatives, combinations, representatives
 
 HERE = Path(__file__).resolve().parent
 REFERENCE = HERE / "reference"

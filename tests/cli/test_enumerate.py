@@ -44,7 +44,7 @@ def written(folder: Path, text: str) -> Path:
 
 def test_a_small_space_is_gone_through(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     study, out = written(tmp_path, TWO_RAILS + FEWER), tmp_path / "proof"
-    assert run(str(study), "--out", str(out), "--evaluations", "300", "--workers", "1") == 0
+    assert run(str(study), "--out", str(out), "--evaluations", "600", "--workers", "1") == 0
     said = capsys.readouterr()
     assert "different designs" in said.err
     assert "takes about" in said.err

@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 from archopt.model.canonical import canonical
 from archopt.model.evaluator import Evaluator
 from archopt.model.space import Designs
-from archopt.search.enumerate import BATCH, distinct
+from archopt.proof.enumerate import BATCH, distinct
 from tests.search.small_study import every_combination
 
 EVERY_FEED = """

@@ -23,11 +23,11 @@ from archopt.model.evaluator import Evaluator
 from archopt.model.problem import Problem
 from archopt.model.space import FIXED, INPUT, PARENT, Designs
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
+from archopt.proof.bound_parts import least_unit_cost
+from archopt.proof.bound_rails import DIRECT, RAIL, RailMaker, make_slots
+from archopt.proof.representatives import Possible, Representatives, hopeless
 from archopt.search.archive import Archive, significant
-from archopt.search.bound_parts import least_unit_cost
-from archopt.search.bound_rails import DIRECT, RAIL, RailMaker, make_slots
 from archopt.search.indicator import share
-from archopt.search.representatives import Possible, Representatives, hopeless
 
 BLOCK = 4096
 BATCH = 512

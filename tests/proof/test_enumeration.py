@@ -12,9 +12,7 @@ from numpy.typing import NDArray
 from archopt.model.canonical import canonical
 from archopt.model.evaluator import Evaluator
 from archopt.model.space import Designs
-from archopt.search.archive import significant
-from archopt.search.driver import search
-from archopt.search.enumerate import (
+from archopt.proof.enumerate import (
     BATCH,
     BLOCK,
     Enumeration,
@@ -25,8 +23,10 @@ from archopt.search.enumerate import (
     on_offer,
     possible_choices,
 )
-from archopt.search.representatives import Representatives, combinations, hopeless, representatives
-from tests.search.enumerable_small import EVERY_FEED, TOLD_APART, every_design
+from archopt.proof.representatives import Representatives, combinations, hopeless, representatives
+from archopt.search.archive import significant
+from archopt.search.driver import search
+from tests.proof.enumerable_small import EVERY_FEED, TOLD_APART, every_design
 from tests.search.small_study import FEW_CHOICES, TWO_RAILS, compiled
 
 Rows = NDArray[np.int64]

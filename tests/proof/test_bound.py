@@ -9,13 +9,13 @@ import pytest
 from numpy.typing import NDArray
 
 from archopt.model.evaluator import Evaluator
-from archopt.search.bound import OuterBound, Relaxation, outer_bound
-from archopt.search.bound_fold import added, coarser, crossed, front, height, joined
-from archopt.search.bound_parts import charges, least_copper, new_part_cost
-from archopt.search.bound_rails import LEVELS, sampled_least
-from archopt.search.enumerate import BATCH
-from archopt.search.representatives import representatives
-from tests.search.enumerable_small import EVERY_FEED
+from archopt.proof.bound import OuterBound, Relaxation, outer_bound
+from archopt.proof.bound_fold import added, coarser, crossed, front, height, joined
+from archopt.proof.bound_parts import charges, least_copper, new_part_cost
+from archopt.proof.bound_rails import LEVELS, sampled_least
+from archopt.proof.enumerate import BATCH
+from archopt.proof.representatives import representatives
+from tests.proof.enumerable_small import EVERY_FEED
 from tests.search.small_study import FEW_CHOICES, TWO_RAILS, compiled
 
 Points = NDArray[np.float64]

@@ -10,9 +10,8 @@ from archopt.model.evaluator import Evaluator
 from archopt.model.problem import Problem
 from archopt.model.space import BOARD_FIELDS, BUS_FIELDS, RAIL_FIELDS
 from archopt.physics.arrays import IntArray
-from archopt.search.bound import OuterBound, outer_bound
-from archopt.search.driver import Progress, crew_for, search
-from archopt.search.enumerate import (
+from archopt.proof.bound import OuterBound, outer_bound
+from archopt.proof.enumerate import (
     Comparison,
     Enumeration,
     compare,
@@ -20,11 +19,12 @@ from archopt.search.enumerate import (
     possible_choices,
     timed_sample,
 )
+from archopt.proof.representatives import LIMIT, Representatives, combinations, representatives
+from archopt.search.driver import Progress, crew_for, search
 from archopt.search.outcome import SearchResult
 from archopt.search.polish import polished
 from archopt.search.published import PUBLISHED
 from archopt.search.replicates import EARLY
-from archopt.search.representatives import LIMIT, Representatives, combinations, representatives
 
 HOPED = 100  # ruling out leaves at best this share of a space, where it is worth trying
 

@@ -4,7 +4,7 @@ Designs are sorted into classes (one bus that stays, one that moves, one of fixe
 input, two buses, none). In each, what couples the rails is relaxed, always in the designs' favour:
 
 - losses upstream (input path, converter) are charged by a slope a watt, with what remains put to the converter, see
-  :mod:`archopt.search.bound_parts`; each stage may choose the drop of its plane, and pays for that drop only;
+  :mod:`archopt.proof.bound_parts`; each stage may choose the drop of its plane, and pays for that drop only;
 - a part number's cost is shared out between the rails in fixed shares, every price step a board could reach is granted;
 - every rail, and the converter, may choose the bus voltage for itself, in every band. What one gains by not standing
   where the others stand is taken back by multipliers that sum to nothing over the board: at any common voltage they
@@ -27,9 +27,9 @@ from archopt.model.hardware import bias_per_phase_w
 from archopt.model.space import PARENT
 from archopt.model.states import ENERGY
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
-from archopt.search.bound_fold import RAIL_STEPS, added, coarser, crossed, front, height, joined
-from archopt.search.bound_kinds import Kind, kinds_of
-from archopt.search.bound_parts import (
+from archopt.proof.bound_fold import RAIL_STEPS, added, coarser, crossed, front, height, joined
+from archopt.proof.bound_kinds import Kind, kinds_of
+from archopt.proof.bound_parts import (
     Agent,
     charges,
     converter_agents,
@@ -38,7 +38,7 @@ from archopt.search.bound_parts import (
     new_part_cost,
     stack_agents,
 )
-from archopt.search.bound_rails import DIRECT, EASE, GRID, LEVELS, RAIL, RailMaker, make_slots
+from archopt.proof.bound_rails import DIRECT, EASE, GRID, LEVELS, RAIL, RailMaker, make_slots
 from archopt.search.genome import energy_price_scale
 from archopt.search.indicator import Scale
 

@@ -9,8 +9,8 @@ import numpy as np
 from archopt.model.problem import Problem
 from archopt.model.space import BUS_A, INPUT
 from archopt.physics.arrays import BoolArray
-from archopt.search.bound_parts import buses_offered
-from archopt.search.bound_rails import DIRECT, GRID, RAIL, RATIO, Slots
+from archopt.proof.bound_parts import buses_offered
+from archopt.proof.bound_rails import DIRECT, GRID, RAIL, RATIO, Slots
 
 FEW_VOLTAGES = 6
 

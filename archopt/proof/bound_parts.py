@@ -16,7 +16,7 @@ from archopt.model.space import BUS_A
 from archopt.model.states import ENERGY
 from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 from archopt.physics.copper import RESISTIVITY_DEGC, RESISTIVITY_PER_K
-from archopt.search.bound_rails import EASE, GRID, RATIO, RailOptions, Slots, sampled_least
+from archopt.proof.bound_rails import EASE, GRID, RATIO, RailOptions, Slots, sampled_least
 
 POWERS = 40
 LARGEST = 1.0 + 1e-9
