@@ -20,7 +20,7 @@ from archopt.present.record import Data, FrontRecord
 from archopt.search import checkpoint
 
 FORMAT = "archopt result"
-FORMAT_VERSION = 1
+FORMAT_VERSION = 2
 CSV_DIGITS = 9
 """Significant digits of a number in a CSV file: results are the same bytes for the same study and seed."""
 
