@@ -30,13 +30,13 @@ from archopt.physics.arrays import BoolArray, FloatArray, IntArray
 from archopt.proof.bound_fold import RAIL_STEPS, added, coarser, crossed, front, height, joined
 from archopt.proof.bound_kinds import Kind, kinds_of
 from archopt.proof.bound_parts import (
-    Agent,
+    Outfit,
     charges,
-    converter_agents,
+    converter_outfits,
     least_unit_cost,
     make_slopes,
     new_part_cost,
-    stack_agents,
+    stack_outfits,
 )
 from archopt.proof.bound_rails import DIRECT, EASE, GRID, LEVELS, RAIL, RailMaker, make_slots
 from archopt.search.genome import energy_price_scale
@@ -112,7 +112,7 @@ class Relaxation:
         self.alone_energy, self.free_energy = ([self.band_energy(r, alone=alone) for r in range(len(self.rails))]
                                                for alone in (True, False))  # fmt: skip
         self.bias_cost = self.least_bias()
-        self.agents_known: dict[tuple[bool, int], list[Agent]] = {}
+        self.outfits_known: dict[tuple[bool, int], list[Outfit]] = {}
 
     def band_energy(self, r: int, *, alone: bool) -> tuple[FloatArray, FloatArray]:
         """Return energy (O, B, K) and that of an ohm of bank (O, B, K), kWh, with what it costs upstream.
@@ -177,7 +177,7 @@ class Relaxation:
         level = rail.level.max(axis=1, keepdims=True) if kind.fixed else rail.level
         return kwh[rail.option] + rail.esr_ohm[:, None, None] * ohm[rail.option], level
 
-    def settle(self, kind: Kind, agents: list[Agent], price: float) -> Settled:
+    def settle(self, kind: Kind, outfits: list[Outfit], price: float) -> Settled:
         """Return shares and multipliers that serve a price of energy, from the designs the relaxation itself picks."""
         count = len(self.rails)
         shape = (count, self.evaluator.states.mix_a.shape[0], len(self.slots.kind))
@@ -191,10 +191,10 @@ class Relaxation:
                 return settled
             settled.charge, picked = charges(self.problem, self.rails, found, price)
             if turn == 0 and kind.coupled:
-                settled.multiplier = self.multipliers(kind, agents, [int(place) for place in picked], price)
+                settled.multiplier = self.multipliers(kind, outfits, [int(place) for place in picked], price)
         return settled
 
-    def multipliers(self, kind: Kind, agents: list[Agent], picked: list[int], price: float) -> FloatArray:
+    def multipliers(self, kind: Kind, outfits: list[Outfit], picked: list[int], price: float) -> FloatArray:
         """Return what each rail's picked choice loses more at each grid voltage than where all stand best, (R, B, K).
 
         Rails that may hang on another rail get none: where they do, theirs would not cancel.
@@ -207,7 +207,7 @@ class Relaxation:
             curve = kwh[option] + rail.esr_ohm[place] * ohm[option]
             legal = rail.legal[option] & (rail.level[place][:, self.slots.group] < len(LEVELS))
             curves.append(np.where(grid, np.where(legal, curve, curve + 1e9), 0.0))
-        best = min(agents, key=lambda agent: agent.cost + price * best_energy(agent, grid))
+        best = min(outfits, key=lambda outfit: outfit.cost + price * best_energy(outfit, grid))
         total = np.sum(curves, axis=0) + np.where(np.isfinite(best.energy_kwh), best.energy_kwh, 1e9)
         if kind.fixed:
             total = np.broadcast_to(total.sum(axis=0), total.shape)
@@ -222,24 +222,24 @@ class Relaxation:
             out[r] = np.where(grid, curve - curve[np.arange(len(curve)), stand][:, None], 0.0)
         return out
 
-    def agents(self, kind: Kind) -> list[Agent]:
+    def outfits(self, kind: Kind) -> list[Outfit]:
         """Return what may furnish a bus in a class."""
         most_w = np.sum([rail.most_w for rail in self.rails], axis=0)
-        known = self.agents_known.setdefault((kind.alone, kind.buses), [])
+        known = self.outfits_known.setdefault((kind.alone, kind.buses), [])
         if not known and kind.buses:
-            known += converter_agents(
+            known += converter_outfits(
                 self.evaluator, self.slots, self.slopes, self.unit_cost, most_w, alone=kind.alone, buses=kind.buses
             )
         return known
 
-    def agents_front(self, kind: Kind, agents: list[Agent], settled: Settled) -> FloatArray:
+    def outfits_front(self, kind: Kind, outfits: list[Outfit], settled: Settled) -> FloatArray:
         """Return the staircase of what furnishes one bus: cost and energy with the multipliers given back."""
         back = settled.multiplier.sum(axis=0) if kind.coupled else 0.0
         points = []
-        for agent in agents:
-            energy = np.where(kind.slots, agent.energy_kwh + back, np.inf)
+        for outfit in outfits:
+            energy = np.where(kind.slots, outfit.energy_kwh + back, np.inf)
             least = energy.sum(axis=0).min() if kind.fixed else energy.min(axis=1).sum()
-            points.append((agent.cost, float(least)))
+            points.append((outfit.cost, float(least)))
         found = np.array(points).reshape(-1, 2)
         return front(found[:, 0], found[:, 1])
 
@@ -260,12 +260,12 @@ class Relaxation:
             kwh += float(problem.supervisors.power_w[offered].min() * slopes.node.sum())
         return cost, kwh
 
-    def staircases(self, kind: Kind, agents: list[Agent], settled: Settled) -> list[FloatArray]:
+    def staircases(self, kind: Kind, outfits: list[Outfit], settled: Settled) -> list[FloatArray]:
         """Return the class's staircase at each droop level, nothing where it has no design."""
         cost, kwh = self.standing(kind)
-        board = added(np.array([[cost, kwh]]), front(*stack_agents(self.evaluator, self.slopes, kind.buses).T))
+        board = added(np.array([[cost, kwh]]), front(*stack_outfits(self.evaluator, self.slopes, kind.buses).T))
         for _ in range(kind.buses):
-            board = added(board, self.agents_front(kind, agents, settled))
+            board = added(board, self.outfits_front(kind, outfits, settled))
         rails = [self.rail_fronts(r, kind, settled) for r in range(len(self.rails))]
         out: list[FloatArray] = []
         for level in range(len(LEVELS)):
@@ -300,15 +300,15 @@ class Relaxation:
         shared: dict[float, Settled] = {}
         lead = next((kind for kind in kinds if kind.coupled and not kind.fixed), kinds[0])
         for kind in kinds:
-            agents = self.agents(kind)
+            outfits = self.outfits(kind)
             best: list[FloatArray] | None = None
             for price in PRICES:
                 if kind.coupled or kind is lead or price not in shared:
-                    settled = self.settle(kind, agents, price * self.scale)
+                    settled = self.settle(kind, outfits, price * self.scale)
                     shared.setdefault(price, settled)
                 else:
                     settled = shared[price]
-                found = self.staircases(kind, agents, settled)
+                found = self.staircases(kind, outfits, settled)
                 best = found if best is None else [crossed(a, b) for a, b in zip(best, found, strict=True)]
             for level, steps in enumerate(best or []):
                 total[level].append(steps)
@@ -339,9 +339,9 @@ def level_fronts(cost: FloatArray, energy: FloatArray, level: IntArray) -> list[
     return out
 
 
-def best_energy(agent: Agent, grid: BoolArray) -> float:
-    """Return an agent's least energy over some slots, kWh; large where it has none."""
-    least = np.where(grid, agent.energy_kwh, np.inf).min(axis=1).sum()
+def best_energy(outfit: Outfit, grid: BoolArray) -> float:
+    """Return an outfit's least energy over some slots, kWh; large where it has none."""
+    least = np.where(grid, outfit.energy_kwh, np.inf).min(axis=1).sum()
     return float(least) if np.isfinite(least) else 1e12
 
 

@@ -92,7 +92,7 @@ def make_slopes(evaluator: Evaluator) -> Slopes:
     """Return the slopes: the path's at the useful power, which is its least; a converter's at about its load.
 
     The loss of the path, R I^2 at the least current the node's power can mean, is convex in that power: its tangent at
-    the useful power lies below it. Any slope serves for the converters, see :func:`converter_agents`; one near their
+    the useful power lies below it. Any slope serves for the converters, see :func:`converter_outfits`; one near their
     real slope serves best.
     """
     problem, states = evaluator.problem, evaluator.states
@@ -136,7 +136,7 @@ def unit_losses(
 
 
 @dataclass(frozen=True)
-class Agent:
+class Outfit:
     """One way to furnish a bus: cost, converter row, and energy (B, K) beyond the slope's share; inf where illegal."""
 
     cost: float
@@ -144,15 +144,15 @@ class Agent:
     energy_kwh: FloatArray
 
 
-def converter_agents(
+def converter_outfits(
     evaluator: Evaluator, slots: Slots, slopes: Slopes, unit_cost: FloatArray, most_w: FloatArray, *,
     alone: bool, buses: int,
-) -> list[Agent]:  # fmt: skip
+) -> list[Outfit]:  # fmt: skip
     """Return every converter and count that may furnish a bus, with its cheapest bulk bank.
 
     A converter's loss less slope x power is least somewhere between the power it must and the power it can carry,
     which is no more than useful power and the most the rails can lose (most_w (S,)): that least, which no design goes
-    below, is the agent's own energy, and slope x power is charged to what the bus feeds. As many units run as lose
+    below, is the outfit's own energy, and slope x power is charged to what the bus feeds. As many units run as lose
     least. With ``alone`` the bus carries every rail, so at least all useful power, and the converters must carry the
     worst mixes; the node is anywhere between the input and what the path may take.
     """
@@ -177,7 +177,7 @@ def converter_agents(
         pieces = problem.bank_counts[allowed[layout.bus("bulk_count").start + bus]]
         alien = np.where(np.isin(banks, shared), 0.0, fresh[banks] / buses)
         bulk = min(bulk, float((unit_cost[banks] * pieces.min() + alien).min()))
-    agents = []
+    outfits = []
     for c, n in sorted(pairs):
         carrying = max(n - problem.study.derating.spare_converters, 0.5)
         places = np.flatnonzero(slots_of(problem, slots, c))
@@ -207,8 +207,8 @@ def converter_agents(
             own[:, places] = np.where(amps <= carrying * converters.limit_a[c] * LARGEST, own[:, places], np.inf)
         part = converters.part[c]
         price = n * piece_cost(problem, part, n * buses if buses > 1 else n)
-        agents.append(Agent(float(price + fresh[part] / buses + bulk), c, own))
-    return agents
+        outfits.append(Outfit(float(price + fresh[part] / buses + bulk), c, own))
+    return outfits
 
 
 def piece_cost(problem: Problem, part: int, pieces: int) -> float:
@@ -227,7 +227,7 @@ def slots_of(problem: Problem, slots: Slots, converter: int) -> BoolArray:
     return np.asarray((slots.kind == GRID) & (slots.need_v >= low) & (slots.need_v <= high))
 
 
-def stack_agents(evaluator: Evaluator, slopes: Slopes, planes: int) -> FloatArray:
+def stack_outfits(evaluator: Evaluator, slopes: Slopes, planes: int) -> FloatArray:
     """Return cost and least pour energy of every stack that can hold the rails' pours and planes, (stacks, 2).
 
     Pours share the layer budget. The least of their losses is bounded by the Lagrangian dual of that share: at any
@@ -243,7 +243,7 @@ def stack_agents(evaluator: Evaluator, slopes: Slopes, planes: int) -> FloatArra
     mix = states.mix_low
     column = problem.layout.rail("pairs").start
     plane_area = float(np.sort(np.broadcast_to(problem.planes.area_m2, (2,)))[:planes].sum())
-    agents = []
+    outfits = []
     for stack in problem.space.allowed[problem.layout.board("stack")]:
         offered = problem.stacks.pairs[stack] * board.area_cm2 * board.usable_copper_share * 1e-4 * LARGEST - plane_area
         losses, areas = [], []
@@ -257,8 +257,8 @@ def stack_agents(evaluator: Evaluator, slopes: Slopes, planes: int) -> FloatArra
             areas.append(pairs * rails.copper_area_m2[r])
         value = least_copper(losses, areas, offered)
         if np.isfinite(value):
-            agents.append((float(problem.stacks.price_per_cm2[stack] * board.area_cm2), value))
-    return np.array(agents).reshape(-1, 2)
+            outfits.append((float(problem.stacks.price_per_cm2[stack] * board.area_cm2), value))
+    return np.array(outfits).reshape(-1, 2)
 
 
 def least_copper(losses: list[FloatArray], areas: list[FloatArray], offered: float) -> float:
