@@ -13,10 +13,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO, via_drop_v
+from archopt.model.board import LARGEST_STEP_RATIO, STEP_POWER_RATIO
 from archopt.model.bus_power import bus_sums, rail_shares, with_bus_losses
 from archopt.model.canonical import canonical
 from archopt.model.converter_loss import ConverterLoss
+from archopt.model.feeds import via_drop_v
 from archopt.model.hardware import BusBanks, Hardware, bus_banks, plane_limit_a, setting_error_v, short_time_a, unpack
 from archopt.model.options import Options, band_hours, option_index, quiet
 from archopt.model.parameters import BoolArray, FloatArray, IntArray

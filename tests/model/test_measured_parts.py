@@ -156,7 +156,7 @@ def test_a_measured_part_does_as_the_row_it_was_measured_on(names: dict[str, str
     assert (by_terms.designs.rows != by_table.designs.rows).any()
     # energy to what a line between measured currents misses; cost and droop exactly
     energy = by_table.evaluation.objectives[0, 0] / by_terms.evaluation.objectives[0, 0]
-    assert energy == pytest.approx(1.0, abs=0.01)
+    assert energy == pytest.approx(1.0, rel=0.01)
     assert energy != 1.0
     np.testing.assert_allclose(by_table.evaluation.objectives[0, 1], by_terms.evaluation.objectives[0, 1], rtol=1e-12)
     np.testing.assert_allclose(by_table.evaluation.droop_exact, by_terms.evaluation.droop_exact, rtol=1e-3)
